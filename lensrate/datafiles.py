@@ -1,0 +1,147 @@
+"""Find a shipped parameter set or table, check that it is undamaged, and give its references."""
+
+import hashlib
+import os
+import tomllib
+from functools import cache
+from pathlib import Path
+
+from .errors import DataFileError, InputError, one_of
+
+__all__ = ["data_folder", "find", "names", "parse_toml", "read_set"]
+
+_LIMIT = 4_000_000  # bytes; the largest text file we ship is far smaller
+
+
+@cache
+def data_folder():
+    """Return the folder of shipped data.
+
+    Returns
+    -------
+    Path
+        ``$LENSRATE_DATA``, the installed package's own, or the checkout's ``data``, in this order.
+
+    Raises
+    ------
+    DataFileError
+        None of them exists.
+    """
+    package = Path(__file__).parent
+    given = os.environ.get("LENSRATE_DATA")
+    if given:
+        if not Path(given).is_dir():
+            raise DataFileError(f"$LENSRATE_DATA: no folder '{given}'; unset it or point it at a copy of lensrate's data")
+        return Path(given)
+    if (package / "_data").is_dir():
+        return package / "_data"
+    project = package.parent / "pyproject.toml"
+    if project.is_file() and 'name = "lensrate"' in project.read_text() and (package.parent / "data").is_dir():
+        return package.parent / "data"
+    raise DataFileError(f"data: not in $LENSRATE_DATA, {package / '_data'} or {package.parent / 'data'}; reinstall lensrate")
+
+
+@cache
+def checksums():
+    """Return {relative path: sha256} of every shipped file, from ``SHA256SUMS``."""
+    rows = (data_folder() / "SHA256SUMS").read_text().splitlines()
+    return {name.strip(): digest for digest, name in (row.split("  ", 1) for row in rows if row)}
+
+
+def find(relative):
+    """Return the path of a shipped file after checking its sha256.
+
+    Parameters
+    ----------
+    relative : str
+        Path below the data folder, with forward slashes.
+
+    Returns
+    -------
+    Path
+
+    Raises
+    ------
+    DataFileError
+        Missing, not listed in SHA256SUMS, or changed since it was shipped.
+    """
+    path = data_folder() / relative
+    if not path.is_file():
+        raise DataFileError(f"{relative}: missing from {data_folder()}; reinstall lensrate")
+    listed = checksums().get(relative)
+    if listed is None:
+        raise DataFileError(f"{relative}: not listed in SHA256SUMS of {data_folder()}")
+    if hashlib.sha256(path.read_bytes()).hexdigest() != listed:
+        raise DataFileError(f"{relative}: its sha256 differs from the shipped one; reinstall lensrate, or keep your own copy under another name")
+    return path
+
+
+def names(kind):
+    """Return the sorted names of the shipped sets of one kind ("galaxy", "kicks", ...)."""
+    return sorted(p.stem for p in (data_folder() / kind).glob("*.toml"))
+
+
+def parse_toml(path, limit=_LIMIT):
+    """Read a TOML file with complaints a user can act on.
+
+    Parameters
+    ----------
+    path : str or Path
+        File to read.
+    limit : int
+        Largest accepted size in bytes.
+
+    Returns
+    -------
+    dict
+
+    Raises
+    ------
+    InputError
+        Missing, unreadable, too large, not UTF-8 or not TOML.
+    """
+    path = Path(path)
+    try:
+        size = path.stat().st_size
+        if size > limit:
+            raise InputError(f"{path}: {size} bytes, at most {limit} expected of a TOML file")
+        return tomllib.loads(path.read_text(encoding="utf-8"))
+    except FileNotFoundError:
+        raise InputError(f"{path}: no such file") from None
+    except IsADirectoryError:
+        raise InputError(f"{path}: is a folder, a file is needed") from None
+    except OSError as error:
+        raise InputError(f"{path}: cannot be read ({error.strerror})") from None
+    except (UnicodeDecodeError, tomllib.TOMLDecodeError, RecursionError) as error:
+        raise InputError(f"{path}: not a valid TOML file ({str(error)[:120]})") from None
+
+
+@cache
+def _shipped(relative):
+    return parse_toml(find(relative))
+
+
+def read_set(kind, name):
+    """Read a shipped parameter set by name, or a user's file by path.
+
+    Parameters
+    ----------
+    kind : str
+        Folder below the data folder: "galaxy", "kicks", "remnants", "sources", "scenarios".
+    name : str
+        Name of a shipped set, or a path ending in ``.toml``.
+
+    Returns
+    -------
+    dict
+        Shared between callers: do not change it.
+
+    Raises
+    ------
+    InputError
+        Unknown name (with the nearest known one), or a user's file that is not TOML.
+    """
+    if str(name).endswith(".toml"):
+        return parse_toml(name)
+    one_of(kind, str(name), names(kind))
+    return _shipped(f"{kind}/{name}.toml")

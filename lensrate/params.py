@@ -1,0 +1,108 @@
+"""Declared parameters: a frozen record states unit and meaning of each number once."""
+
+from dataclasses import dataclass, field, fields
+
+import astropy.units as u
+import numpy as np
+
+from .errors import InputError, did_you_mean
+
+__all__ = ["Params", "param"]
+
+
+def param(unit, doc, **kwargs):
+    """Declare one field of a `Params` record.
+
+    Parameters
+    ----------
+    unit : str
+        Internal unit, "" for a pure number.
+    doc : str
+        One line of meaning.
+    **kwargs
+        Passed to `dataclasses.field`, for example ``default``.
+
+    Returns
+    -------
+    dataclasses.Field
+    """
+    return field(metadata={"unit": u.Unit(unit), "doc": doc}, **kwargs)
+
+
+@dataclass(frozen=True)
+class Params:
+    """Frozen record whose fields are declared with `param`; values are kept as Quantities.
+
+    A bare number is accepted and taken in the declared unit, since that unit stands beside the name.
+    """
+
+    def __post_init__(self):
+        for f in fields(self):
+            if "unit" not in f.metadata:
+                continue
+            try:
+                value = u.Quantity(getattr(self, f.name), f.metadata["unit"], dtype=float)
+            except u.UnitConversionError as error:
+                raise InputError(f"{type(self).__name__}.{f.name}: {error}") from None
+            except (TypeError, ValueError):
+                raise InputError(f"{type(self).__name__}.{f.name}: {getattr(self, f.name)!r} is not a number") from None
+            if not np.isfinite(value.value):
+                raise InputError(f"{type(self).__name__}.{f.name}: {value} is not finite")
+            object.__setattr__(self, f.name, value)
+
+    def pack(self):
+        """Return the declared values in field order, in declared units.
+
+        Returns
+        -------
+        ndarray, shape (n,)
+        """
+        return np.array([getattr(self, f.name).to_value(f.metadata["unit"]) for f in fields(self) if "unit" in f.metadata])
+
+    @classmethod
+    def from_table(cls, table, where):
+        """Build from a mapping of key to number or {value, unit, source} tables.
+
+        Parameters
+        ----------
+        table : dict
+            As read from a parameter file.
+        where : str
+            Named in complaints.
+
+        Returns
+        -------
+        Params
+
+        Raises
+        ------
+        InputError
+            Unknown or missing key, or a unit that does not fit.
+        """
+        known = {f.name: f for f in fields(cls) if "unit" in f.metadata}
+        values = {}
+        for key, entry in table.items():
+            if key not in known:
+                raise InputError(f"{where}.{key}: not a parameter of {cls.__name__}{did_you_mean(key, known)} (known: {', '.join(known)})")
+            values[key] = _quantity(entry, f"{where}.{key}", known[key].metadata["unit"])
+        missing = [f for f, d in known.items() if f not in values and d.default is d.default_factory]
+        if missing:
+            raise InputError(f"{where}: {cls.__name__} needs {', '.join(missing)}")
+        return cls(**values)
+
+
+def _quantity(entry, where, unit):
+    if isinstance(entry, dict):
+        if "value" not in entry:
+            raise InputError(f"{where}: a table needs 'value' (and 'unit', 'source')")
+        value, given = entry["value"], entry.get("unit", "")
+    else:
+        value, given = entry, None
+    if isinstance(value, bool) or not isinstance(value, (int, float)):
+        raise InputError(f"{where}: {value!r} is not a number")
+    try:
+        return float(value) * (unit if given is None else u.Unit(given))
+    except (ValueError, TypeError):
+        raise InputError(f"{where}: unit '{given}' is not known to astropy") from None
+    except OverflowError:
+        raise InputError(f"{where}: {value} is too large") from None
