@@ -1,0 +1,68 @@
+"""Density and motion of stellar components at given distances along one sightline.
+
+A profile is an array (6, rows, n): density [Msun/kpc^3], mu_l, mu_b [mas/yr], C_ll, C_lb, C_bb [(mas/yr)^2].
+Rows are Gaussians of the velocity distribution; several rows may belong to one element. The rate kernels
+know nothing else of the Galaxy.
+"""
+
+import numpy as np
+
+from ._jit import kernel
+from .density import density_at
+from .kinematics import project, velocity_at
+
+
+@kernel
+def stellar_profile(D, origin, axes, v_sun, k, d_kind, d_par, v_kind, v_par, rot, out):
+    """Fill out (6, n_components, n).
+
+    D: distances [kpc], (n,); origin: the Sun's place (3,); axes: unit vectors of the sightline, of l and of b, (3, 3);
+    d_*, v_*: codes (m,) and parameters (m, p) of density and kinematics.
+    """
+    vel = np.empty(9)
+    mu = np.empty(5)
+    sky = axes[1:]
+    for i in range(D.size):
+        d = D[i]
+        x = origin[0] + d * axes[0, 0]
+        y = origin[1] + d * axes[0, 1]
+        z = origin[2] + d * axes[0, 2]
+        for c in range(d_kind.size):
+            out[0, c, i] = density_at(d_kind[c], d_par[c], x, y, z)
+            velocity_at(v_kind[c], v_par[c], rot, x, y, z, vel)
+            project(d, sky, v_sun, k, vel, mu)
+            for j in range(5):
+                out[1 + j, c, i] = mu[j]
+
+
+@kernel
+def merge_rows(src, group, out):
+    """Moment-match rows of a profile into groups: out (6, n_groups, n) keeps weight, mean and covariance."""
+    n = src.shape[2]
+    n_groups = out.shape[1]
+    for i in range(n):
+        for g in range(n_groups):
+            w = ml = mb = 0.0
+            for s in range(src.shape[1]):
+                if group[s] == g:
+                    w += src[0, s, i]
+                    ml += src[0, s, i] * src[1, s, i]
+                    mb += src[0, s, i] * src[2, s, i]
+            out[0, g, i] = w
+            if w > 0.0:
+                ml /= w
+                mb /= w
+            c0 = c1 = c2 = 0.0
+            for s in range(src.shape[1]):
+                if group[s] == g:
+                    dl = src[1, s, i] - ml
+                    db = src[2, s, i] - mb
+                    c0 += src[0, s, i] * (src[3, s, i] + dl * dl)
+                    c1 += src[0, s, i] * (src[4, s, i] + dl * db)
+                    c2 += src[0, s, i] * (src[5, s, i] + db * db)
+            f = 1.0 / w if w > 0.0 else 0.0
+            out[1, g, i] = ml
+            out[2, g, i] = mb
+            out[3, g, i] = c0 * f
+            out[4, g, i] = c1 * f
+            out[5, g, i] = c2 * f

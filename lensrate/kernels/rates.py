@@ -1,0 +1,247 @@
+"""Optical depth, event rate and rate densities of one sightline, for lenses of 1 Msun and density in Msun/kpc^3.
+
+Everything here takes profiles (see profile.py): `lens` (6, rows, ...) and `src` (6, rows, ...), where src[0]
+already carries the normalised source weight. `element` (lens rows,) tells which element a Gaussian row adds to.
+Distances kpc, angles mas, proper motions mas/yr, rates per source and year. A mass M multiplies rates by sqrt(M)
+per lens (number, not mass, of lenses) and shifts the logarithms of t_E, theta_E and pi_E.
+"""
+
+import math
+
+import numpy as np
+
+from ._jit import kernel
+from .maths import fexp, mean_abs
+
+
+@kernel
+def mean_speed(ml, mb, cll, clb, cbb, cos, sin):
+    """Mean length of a 2-D Gaussian vector: half-circle trapezoid over the mean |projection|, spectrally exact."""
+    n = cos.size
+    total = 0.0
+    for i in range(n):
+        c, s = cos[i], sin[i]
+        sig = math.sqrt(max(cll * c * c + 2.0 * clb * c * s + cbb * s * s, 1e-30))
+        total += sig * mean_abs((ml * c + mb * s) / sig)
+    # E|v| = (1/4) oint E|v.e| dphi, and the integrand has period pi
+    return total * 0.5 * math.pi / n
+
+
+@kernel
+def moments(D_S, src, D_L, w_L, lens, element, four_g_c2, kappa, mas, n_dir, tau, gamma, distance):
+    """Optical depth and rate by element and source row.
+
+    D_S (J,), src (6, S, J), D_L and w_L (J, I) nodes and quadrature weights [kpc], lens (6, L, J, I);
+    fills tau (E, S), gamma (E, S) [1/yr] and distance (E,): rate-weighted sum of D_L.
+    """
+    cos = np.empty(n_dir)
+    sin = np.empty(n_dir)
+    for i in range(n_dir):
+        cos[i] = math.cos(math.pi * i / n_dir)
+        sin[i] = math.sin(math.pi * i / n_dir)
+    tau[:] = 0.0
+    gamma[:] = 0.0
+    distance[:] = 0.0
+    for j in range(D_S.size):
+        for i in range(D_L.shape[1]):
+            d = D_L[j, i]
+            pi_rel = 1.0 / d - 1.0 / D_S[j]
+            if pi_rel <= 0.0:
+                continue
+            g_tau = w_L[j, i] * math.pi * four_g_c2 * d * d * pi_rel
+            g_rate = w_L[j, i] * 2.0 * d * d * math.sqrt(kappa * pi_rel) * mas * mas
+            for r in range(element.size):
+                n = lens[0, r, j, i]
+                if n <= 0.0:
+                    continue
+                e = element[r]
+                for s in range(src.shape[1]):
+                    w = src[0, s, j]
+                    if w <= 0.0:
+                        continue
+                    tau[e, s] += g_tau * w * n
+                    g = g_rate * w * n * mean_speed(
+                        lens[1, r, j, i] - src[1, s, j],
+                        lens[2, r, j, i] - src[2, s, j],
+                        lens[3, r, j, i] + src[3, s, j],
+                        lens[4, r, j, i] + src[4, s, j],
+                        lens[5, r, j, i] + src[5, s, j],
+                        cos,
+                        sin,
+                    )
+                    gamma[e, s] += g
+                    distance[e] += g * d
+
+
+@kernel
+def _add_directions(weight, ml, mb, ixx, ixy, iyy, log_norm, first, step, n_dir, mu, ka, kb, q_max, out):
+    """Add weight * N2(mu e_phi) summed over n_dir directions from angle `first`, for mu[ka:kb]."""
+    target = out[ka:kb]
+    x = mu[ka:kb]
+    if x.size == 0:
+        return
+    lo, hi = x[0], x[x.size - 1]
+    for i in range(n_dir):
+        phi = first + step * i
+        c, s = math.cos(phi), math.sin(phi)
+        a = 0.5 * (ixx * c * c + 2.0 * ixy * c * s + iyy * s * s)
+        b = (ixx * ml + ixy * mb) * c + (ixy * ml + iyy * mb) * s
+        c0 = 0.5 * (ixx * ml * ml + 2.0 * ixy * ml * mb + iyy * mb * mb)
+        # mu with a mu^2 - b mu + c0 < q_max
+        disc = b * b - 4.0 * a * (c0 - q_max)
+        if disc <= 0.0:
+            continue
+        root = math.sqrt(disc)
+        top = (b + root) / (2.0 * a)
+        bottom = (b - root) / (2.0 * a)
+        if top <= lo or bottom >= hi:
+            continue
+        k0, k1 = 0, x.size
+        ratio = x[1] / x[0] if x.size > 1 else 2.0
+        if bottom > lo:
+            k0 = int(math.log(bottom / lo) / math.log(ratio))
+        if top < hi:
+            k1 = min(x.size, int(math.log(top / lo) / math.log(ratio)) + 2)
+        t = target[k0:k1]
+        y = x[k0:k1]
+        shift = c0 - log_norm
+        for k in range(t.size):
+            t[k] += weight * fexp(b * y[k] - a * y[k] * y[k] - shift)
+
+
+@kernel
+def _gaussian(lens, src, r, s, p):
+    """Mean, inverse covariance, log of normalisation, smallest and largest dispersion of lens row r minus source row s."""
+    ml = lens[1, r, p] - src[1, s, p]
+    mb = lens[2, r, p] - src[2, s, p]
+    cxx = lens[3, r, p] + src[3, s, p]
+    cxy = lens[4, r, p] + src[4, s, p]
+    cyy = lens[5, r, p] + src[5, s, p]
+    det = cxx * cyy - cxy * cxy
+    half = 0.5 * (cxx + cyy)
+    spread = math.sqrt(max(half * half - det, 0.0))
+    s_max = math.sqrt(half + spread)
+    s_min = math.sqrt(max(det, 1e-60)) / s_max
+    return ml, mb, cyy / det, -cxy / det, cxx / det, -math.log(2.0 * math.pi) - 0.5 * math.log(det), s_min, s_max
+
+
+@kernel
+def n_directions(ml, mb, s_min, s_max, density):
+    """Directions that resolve the Gaussian on every circle, a multiple of 8."""
+    n = 8 * int(math.ceil(density * (math.sqrt(ml * ml + mb * mb) + 3.0 * s_max) / s_min / 8.0))
+    return min(max(n, 8), 4096)
+
+
+@kernel
+def node_weights(pi, row, D_S, kappa, mas, out):
+    """Fill out (N,) with D_L^4 pi 2 sqrt(kappa pi) mas^2, the mass-free rate weight of a node (per d ln pi)."""
+    for p in range(D_S.size):
+        x = pi[row[p]]
+        d = 1.0 / (x + 1.0 / D_S[p])
+        out[p] = d**4 * x * 2.0 * math.sqrt(kappa * x) * mas * mas
+
+
+@kernel
+def rate_density(pi, row, geometry, src, lens, element, mu, directions, q_max, w_cut, T):
+    """Mass-free rate density per ln pi_rel and ln mu_rel.
+
+    pi (P,), row (N,): index of the pi row of each node; geometry (N,) from node_weights; src (6, S, N) with
+    weights that sum to one over the nodes of a row; lens (6, L, N); mu (K,) uniform in the logarithm.
+    Fills T (E, P, K). Nodes below w_cut of an element's largest weight are dropped.
+    """
+    T[:] = 0.0
+    K = mu.size
+    peak = np.zeros(T.shape[0])
+    for r in range(element.size):
+        for p in range(row.size):
+            w_s = 0.0
+            for s in range(src.shape[1]):
+                w_s += src[0, s, p]
+            w = geometry[p] * lens[0, r, p] * w_s
+            if w > peak[element[r]]:
+                peak[element[r]] = w
+    tmp = np.empty(K)
+    step_mu = math.log(mu[1] / mu[0])
+    for r in range(element.size):
+        e = element[r]
+        for p in range(row.size):
+            g = geometry[p] * lens[0, r, p]
+            if g <= 0.0:
+                continue
+            tmp[:] = 0.0
+            used = False
+            for s in range(src.shape[1]):
+                w = g * src[0, s, p]
+                if w <= w_cut * peak[e]:
+                    continue
+                used = True
+                ml, mb, ixx, ixy, iyy, log_norm, s_min, s_max = _gaussian(lens, src, r, s, p)
+                n = n_directions(ml, mb, s_min, s_max, directions)
+                # on small circles the exponent hardly varies: 8 directions are exact below mu_low
+                bx, by = ixx * ml + ixy * mb, ixy * ml + iyy * mb
+                mu_low = min(1.2 / max(math.sqrt(bx * bx + by * by), 1e-30), s_min)
+                k_low = min(max(int(math.log(mu_low / mu[0]) / step_mu), 0), K)
+                dphi = 2.0 * math.pi / 8
+                _add_directions(w * dphi, ml, mb, ixx, ixy, iyy, log_norm, 0.0, dphi, 8, mu, 0, k_low, q_max, tmp)
+                dphi = 2.0 * math.pi / n
+                _add_directions(w * dphi, ml, mb, ixx, ixy, iyy, log_norm, 0.0, dphi, n, mu, k_low, K, q_max, tmp)
+            if used:
+                out = T[e, row[p]]
+                for k in range(K):
+                    out[k] += tmp[k] * mu[k] * mu[k] * mu[k]
+
+
+@kernel
+def event_rate_density(pi, row, cell, geometry, src, lens, row_weight, mu, n_phi, directions, q_max, R):
+    """The finer density, before the sums over source distance and direction of motion.
+
+    cell (N,): source-distance cell of each node, negative to skip; row_weight (L,): factor of each lens row
+    (kick law and history enter here, linearly). Direction cells are [2 pi j / n_phi, 2 pi (j+1) / n_phi), the angle
+    counted from +l toward +b. Adds to R (P, C, n_phi, K) float32: rate per ln pi_rel, ln mu_rel, integrated over cells.
+    """
+    K = mu.size
+    tmp = np.empty((n_phi, K))
+    for p in range(row.size):
+        c = cell[p]
+        if c < 0:
+            continue
+        tmp[:] = 0.0
+        used = False
+        for r in range(row_weight.size):
+            g = geometry[p] * lens[0, r, p] * row_weight[r]
+            if g <= 0.0:
+                continue
+            for s in range(src.shape[1]):
+                w = g * src[0, s, p]
+                if w <= 0.0:
+                    continue
+                used = True
+                ml, mb, ixx, ixy, iyy, log_norm, s_min, s_max = _gaussian(lens, src, r, s, p)
+                n = n_directions(ml, mb, s_min, s_max, directions)
+                per_cell = max(2, (n + n_phi - 1) // n_phi)
+                dphi = 2.0 * math.pi / (per_cell * n_phi)
+                for j in range(n_phi):
+                    first = (j * per_cell + 0.5) * dphi
+                    _add_directions(
+                        w * dphi, ml, mb, ixx, ixy, iyy, log_norm, first, dphi, per_cell, mu, 0, K, q_max, tmp[j]
+                    )
+        if used:
+            for j in range(n_phi):
+                out = R[row[p], c, j]
+                for k in range(K):
+                    out[k] += np.float32(tmp[j, k] * mu[k] * mu[k] * mu[k])
+
+
+@kernel
+def shear_timescale(T, first, out):
+    """Sum T (E, P, K) at constant ln t_E: out (E, n) at index first + i - k, for steps h in ln mu and 2h in ln pi.
+
+    Multiply by the step of ln pi to get the rate per ln t_E of 1 Msun lenses.
+    """
+    out[:] = 0.0
+    for e in range(T.shape[0]):
+        for i in range(T.shape[1]):
+            for k in range(T.shape[2]):
+                j = first + i - k
+                if 0 <= j < out.shape[1]:
+                    out[e, j] += T[e, i, k]
