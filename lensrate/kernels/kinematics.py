@@ -91,14 +91,15 @@ def project(D, axes, v_sun, k, vel, out):
     out: mu_l, mu_b, C_ll, C_lb, C_bb in mas/yr and (mas/yr)^2.
     """
     s = 1.0 / (k * D)
-    for j in range(2):
-        a = axes[j]
-        out[j] = s * (a[0] * (vel[0] - v_sun[0]) + a[1] * (vel[1] - v_sun[1]) + a[2] * (vel[2] - v_sun[2]))
+    vx, vy, vz = vel[0] - v_sun[0], vel[1] - v_sun[1], vel[2] - v_sun[2]
+    u0, u1, u2 = axes[0, 0], axes[0, 1], axes[0, 2]
+    w0, w1, w2 = axes[1, 0], axes[1, 1], axes[1, 2]
+    out[0] = s * (u0 * vx + u1 * vy + u2 * vz)
+    out[1] = s * (w0 * vx + w1 * vy + w2 * vz)
     s2 = s * s
-    u, w = axes[0], axes[1]
     xx, yy, zz, xy, xz, yz = vel[3], vel[4], vel[5], vel[6], vel[7], vel[8]
-    ux, uy, uz = xx * u[0] + xy * u[1] + xz * u[2], xy * u[0] + yy * u[1] + yz * u[2], xz * u[0] + yz * u[1] + zz * u[2]
-    wx, wy, wz = xx * w[0] + xy * w[1] + xz * w[2], xy * w[0] + yy * w[1] + yz * w[2], xz * w[0] + yz * w[1] + zz * w[2]
-    out[2] = s2 * (ux * u[0] + uy * u[1] + uz * u[2])
-    out[3] = s2 * (wx * u[0] + wy * u[1] + wz * u[2])
-    out[4] = s2 * (wx * w[0] + wy * w[1] + wz * w[2])
+    ux, uy, uz = xx * u0 + xy * u1 + xz * u2, xy * u0 + yy * u1 + yz * u2, xz * u0 + yz * u1 + zz * u2
+    wx, wy, wz = xx * w0 + xy * w1 + xz * w2, xy * w0 + yy * w1 + yz * w2, xz * w0 + yz * w1 + zz * w2
+    out[2] = s2 * (ux * u0 + uy * u1 + uz * u2)
+    out[3] = s2 * (wx * u0 + wy * u1 + wz * u2)
+    out[4] = s2 * (wx * w0 + wy * w1 + wz * w2)

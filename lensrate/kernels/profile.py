@@ -22,14 +22,18 @@ def stellar_profile(D, origin, axes, v_sun, k, d_kind, d_par, v_kind, v_par, rot
     vel = np.empty(9)
     mu = np.empty(5)
     sky = axes[1:]
-    for i in range(D.size):
-        d = D[i]
-        x = origin[0] + d * axes[0, 0]
-        y = origin[1] + d * axes[0, 1]
-        z = origin[2] + d * axes[0, 2]
-        for c in range(d_kind.size):
-            out[0, c, i] = density_at(d_kind[c], d_par[c], x, y, z)
-            velocity_at(v_kind[c], v_par[c], rot, x, y, z, vel)
+    o0, o1, o2 = origin[0], origin[1], origin[2]
+    n0, n1, n2 = axes[0, 0], axes[0, 1], axes[0, 2]
+    for c in range(d_kind.size):
+        dk, vk = d_kind[c], v_kind[c]
+        dp, vp = d_par[c], v_par[c]
+        for i in range(D.size):
+            d = D[i]
+            x = o0 + d * n0
+            y = o1 + d * n1
+            z = o2 + d * n2
+            out[0, c, i] = density_at(dk, dp, x, y, z)
+            velocity_at(vk, vp, rot, x, y, z, vel)
             project(d, sky, v_sun, k, vel, mu)
             for j in range(5):
                 out[1 + j, c, i] = mu[j]
