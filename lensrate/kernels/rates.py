@@ -28,49 +28,46 @@ def mean_speed(ml, mb, cll, clb, cbb, cos, sin):
 
 
 @kernel
-def moments(D_S, src, D_L, w_L, lens, element, four_g_c2, kappa, mas, n_dir, tau, gamma, distance):
+def moments(outer, D_S, src, D_L, w_L, lens, element, four_g_c2, kappa, mas, n_dir, tau, gamma, distance):
     """Optical depth and rate by element and source row.
 
-    D_S (J,), src (6, S, J), D_L and w_L (J, I) nodes and quadrature weights [kpc], lens (6, L, J, I);
-    fills tau (E, S), gamma (E, S) [1/yr] and distance (E,): rate-weighted sum of D_L.
+    D_S (J,), src (6, S, J); pairs: outer (N,) index into D_S, D_L and w_L (N,) nodes and quadrature weights [kpc],
+    lens (6, L, N). Adds to tau (E, S), gamma (E, S) [1/yr] and distance (E,), the rate-weighted sum of D_L.
     """
     cos = np.empty(n_dir)
     sin = np.empty(n_dir)
     for i in range(n_dir):
         cos[i] = math.cos(math.pi * i / n_dir)
         sin[i] = math.sin(math.pi * i / n_dir)
-    tau[:] = 0.0
-    gamma[:] = 0.0
-    distance[:] = 0.0
-    for j in range(D_S.size):
-        for i in range(D_L.shape[1]):
-            d = D_L[j, i]
-            pi_rel = 1.0 / d - 1.0 / D_S[j]
-            if pi_rel <= 0.0:
+    for p in range(outer.size):
+        j = outer[p]
+        d = D_L[p]
+        pi_rel = 1.0 / d - 1.0 / D_S[j]
+        if pi_rel <= 0.0:
+            continue
+        g_tau = w_L[p] * math.pi * four_g_c2 * d * d * pi_rel
+        g_rate = w_L[p] * 2.0 * d * d * math.sqrt(kappa * pi_rel) * mas * mas
+        for r in range(element.size):
+            n = lens[0, r, p]
+            if n <= 0.0:
                 continue
-            g_tau = w_L[j, i] * math.pi * four_g_c2 * d * d * pi_rel
-            g_rate = w_L[j, i] * 2.0 * d * d * math.sqrt(kappa * pi_rel) * mas * mas
-            for r in range(element.size):
-                n = lens[0, r, j, i]
-                if n <= 0.0:
+            e = element[r]
+            for s in range(src.shape[1]):
+                w = src[0, s, j]
+                if w <= 0.0:
                     continue
-                e = element[r]
-                for s in range(src.shape[1]):
-                    w = src[0, s, j]
-                    if w <= 0.0:
-                        continue
-                    tau[e, s] += g_tau * w * n
-                    g = g_rate * w * n * mean_speed(
-                        lens[1, r, j, i] - src[1, s, j],
-                        lens[2, r, j, i] - src[2, s, j],
-                        lens[3, r, j, i] + src[3, s, j],
-                        lens[4, r, j, i] + src[4, s, j],
-                        lens[5, r, j, i] + src[5, s, j],
-                        cos,
-                        sin,
-                    )
-                    gamma[e, s] += g
-                    distance[e] += g * d
+                tau[e, s] += g_tau * w * n
+                g = g_rate * w * n * mean_speed(
+                    lens[1, r, p] - src[1, s, j],
+                    lens[2, r, p] - src[2, s, j],
+                    lens[3, r, p] + src[3, s, j],
+                    lens[4, r, p] + src[4, s, j],
+                    lens[5, r, p] + src[5, s, j],
+                    cos,
+                    sin,
+                )
+                gamma[e, s] += g
+                distance[e] += g * d
 
 
 @kernel
