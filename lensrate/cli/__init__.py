@@ -1,0 +1,66 @@
+"""The command line: one file a command, each importing only click until it runs."""
+
+import os
+import sys
+
+import click
+
+from .._version import __version__
+from ..errors import InputError, LensrateError
+from .base import Group
+from .scenario import scenario
+from .sightline import sightline
+from .verify import verify
+
+__all__ = ["cli", "main"]
+
+
+@click.group(cls=Group, context_settings={"help_option_names": ["-h", "--help"]})
+@click.version_option(__version__, prog_name="lensrate", message="%(prog)s %(version)s")
+def cli():
+    """Microlensing optical depths, event rates and timescales of stars and dark remnants.
+
+    \b
+    Examples:
+      lensrate sightline 1.0 -3.9
+      lensrate sightline 1.0 -2.9 --extinction I=1.25 --plot m01.png
+      lensrate scenario default
+    """
+
+
+for command in (sightline, scenario, verify):
+    cli.add_command(command)
+
+
+def main(args=None):
+    """Run the command line; exit code 0 done, 1 failed run, 2 wrong input, 130 interrupted."""
+    try:
+        cli.main(args=args, prog_name="lensrate", standalone_mode=False)
+    except click.exceptions.Exit as done:
+        sys.exit(done.exit_code)
+    except click.ClickException as error:
+        error.show(sys.stderr)
+        sys.exit(error.exit_code)
+    except (click.Abort, KeyboardInterrupt):
+        _complain("interrupted; nothing half written was left")
+        sys.exit(130)
+    except BrokenPipeError:
+        # the reader of our output went away, as `head` does
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        sys.exit(0)
+    except InputError as error:
+        _complain(error)
+        sys.exit(2)
+    except LensrateError as error:
+        _complain(error)
+        sys.exit(1)
+    except MemoryError:
+        _complain("not enough memory for this run; take fewer sightlines at a time or a larger step_dex")
+        sys.exit(1)
+    sys.exit(0)
+
+
+def _complain(text):
+    line = " ".join(str(text).split())
+    # names from files may hold control characters: a terminal must not obey them
+    click.echo("lensrate: " + "".join(c if c.isprintable() else f"\\x{ord(c):02x}" for c in line), err=True)

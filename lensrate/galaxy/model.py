@@ -35,7 +35,7 @@ class Component:
     age: tuple = (10.0, 10.0)  # Gyr, youngest and oldest
     efold: float = float("inf")  # Gyr; star formation ~ exp(age / efold)
     counts: str = "total"
-    lenses: bool = True
+    stars: bool = True  # made of stars and their remnants; otherwise only lens classes that ride on it count
     sources: bool = True
     bulge: bool = False  # counts as bulge for the clump rule; the rest is 'disc' in the share of disc sources
     group: int = 0  # source rows of one group are merged for the finer densities
@@ -58,7 +58,7 @@ class Galaxy:
     rotation: LinearRotation
     references: tuple = ()
     potential: str = ""
-    remnants: dict = field(default_factory=dict)  # a set may fix its own lifetimes and initial-final mass relation
+    lens_class: dict = field(default_factory=dict)  # lens classes that belong to the set, see remnants/classes.py
     notes: tuple = ()
 
     @classmethod
@@ -101,7 +101,7 @@ class Galaxy:
         InputError
             See `read`.
         """
-        known = ("name", "title", "references", "notes", "retrieved", "potential", "remnants", "sun", "rotation", "component")
+        known = ("name", "title", "references", "notes", "retrieved", "potential", "lens_class", "sun", "rotation", "component")
         for key in table:
             if key not in known:
                 raise InputError(f"{where}: unknown key '{key}'{did_you_mean(key, known)} (known: {', '.join(known)})")
@@ -127,7 +127,7 @@ class Galaxy:
             rotation=rotation,
             references=tuple(table.get("references", ())),
             potential=table.get("potential", ""),
-            remnants=table.get("remnants", {}),
+            lens_class=table.get("lens_class", {}),
             notes=tuple(table.get("notes", ())),
         )
 
@@ -244,7 +244,7 @@ def _bar(rest, profile, where):
 
 
 def _component(row, where):
-    known = ("name", "element", "density", "kinematics", "imf", "age", "efold", "counts", "lenses", "sources", "bulge", "group")
+    known = ("name", "element", "density", "kinematics", "imf", "age", "efold", "counts", "stars", "sources", "bulge", "group")
     if not isinstance(row, dict):
         raise InputError(f"{where}: must be a table")
     for key in row:
@@ -266,7 +266,7 @@ def _component(row, where):
         age=(float(age[0]), float(age[1])),
         efold=float(row.get("efold", "inf")),
         counts=row.get("counts", "total"),
-        lenses=bool(row.get("lenses", True)),
+        stars=bool(row.get("stars", True)),
         sources=bool(row.get("sources", True)),
         bulge=bool(row.get("bulge", False)),
         group=int(row.get("group", 0)),

@@ -1,0 +1,33 @@
+"""Microlensing forecasts for stars and dark remnants: optical depth, event rates, timescales toward any sightline.
+
+Names are loaded on first use, so that ``lensrate --help`` stays instant.
+"""
+
+from ._version import __version__
+
+_WHERE = {
+    "ConvergenceError": "errors",
+    "DataFileError": "errors",
+    "Galaxy": "galaxy.model",
+    "InputError": "errors",
+    "LensrateError": "errors",
+    "Scenario": "scenario.record",
+    "Sightline": "lensing.sightline",
+    "sightline": "lensing.sightline",
+}
+
+__all__ = ["__version__", *_WHERE]  # noqa: PLE0604
+
+
+def __getattr__(name):
+    if name not in _WHERE:
+        raise AttributeError(f"module 'lensrate' has no attribute '{name}' (known: {', '.join(sorted(__all__))})")
+    from importlib import import_module
+
+    value = getattr(import_module(f"lensrate.{_WHERE[name]}"), name)
+    globals()[name] = value
+    return value
+
+
+def __dir__():
+    return sorted(__all__)

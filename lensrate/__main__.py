@@ -1,0 +1,5 @@
+"""``python -m lensrate``."""
+
+from .cli import main
+
+main()

@@ -1,0 +1,182 @@
+"""``lensrate sightline``: one direction, or a table of many."""
+
+import click
+
+from .base import Command, announce
+from .options import assumptions, output, read_scenario
+from .text import columns, number, safe, wrap
+
+_PICTURES = ("overview", "timescales", "stacked", "depth", "pi_E", "theta_E")
+
+
+@click.command(cls=Command)
+@click.argument("lon", metavar="[L B]", required=False)
+@click.argument("lat", metavar="", required=False)
+@click.option("--table", "table_file", metavar="FILE", help="Many sightlines: columns l, b (or ra, dec), optionally A_I etc.")
+@click.option("--icrs", is_flag=True, help="Take RA Dec (degrees, or hh:mm:ss dd:mm:ss) instead of l b.")
+@assumptions
+@click.option("--t-E-range", "t_E_range", type=float, nargs=2, metavar="LOW HIGH", help="Limit what is reported to these timescales in days.")
+@click.option("--by", type=click.Choice(["class", "component", "element"]), default="class", show_default=True, help="Rows of the table.")
+@click.option("--plot", metavar="FILE", help="Draw a picture: .png .pdf .svg.")
+@click.option("--picture", type=click.Choice(_PICTURES), default="overview", show_default=True, help="What --plot draws.")
+@click.option("--jobs", type=click.IntRange(1, 256), default=1, show_default=True, help="Threads for --table.")
+@output
+def sightline(lon, lat, table_file, icrs, t_E_range, by, plot, picture, jobs, save, as_json, overwrite, quiet, **choices):  # fmt: skip
+    """Optical depth, event rate and timescales by lens class toward L B (degrees).
+
+    \b
+    Examples:
+      lensrate sightline 1.0 -3.9
+      lensrate sightline 1.0 -2.9 --extinction I=1.25 --t-E-range 0.5 300
+      lensrate sightline --icrs 17:51:40 -29:53:26 --json
+      lensrate sightline 280.46 -32.89 --scenario griest1991
+      lensrate sightline --table fields.csv --save rates.ecsv --jobs 2
+    """
+    from ..errors import InputError
+    from ..io import PICTURES, TABLES, check_target
+
+    if (table_file is None) == (lon is None):
+        raise click.UsageError("give either L B or --table FILE")
+    if lon is not None and lat is None:
+        raise click.UsageError("two numbers are needed: L B (or RA Dec with --icrs)")
+    if save:
+        check_target(save, TABLES, overwrite)
+    if plot:
+        check_target(plot, PICTURES, overwrite, "--plot")
+        if table_file:
+            raise InputError("--plot: draws one sightline; leave out --table, or --plot")
+    scenario = read_scenario(**choices)
+    announce(quiet)
+    if table_file:
+        _many(table_file, icrs, scenario, t_E_range, jobs, save, as_json, overwrite, quiet)
+        return
+    import astropy.units as u
+
+    from ..lensing.sightline import sightline as forecast
+
+    l, b = direction(lon, lat, icrs)
+    result = forecast(l, b, scenario, t_E_range=tuple(t_E_range) * u.day if t_E_range else None)
+    if plot:
+        from ..plots import save_picture
+
+        save_picture(result, plot, picture, overwrite)
+    if save:
+        from ..io import write_table
+
+        write_table(result.to_table(by), save, overwrite, payload=result.to_dict())
+    if as_json:
+        from ..io import dump_json
+
+        click.echo(dump_json(result.to_dict()))
+    else:
+        click.echo(report(result, by))
+    if not quiet:
+        for warning in result.warnings:
+            click.echo(wrap(f"note: {warning}"), err=True)
+
+
+def direction(lon, lat, icrs):
+    """Turn typed coordinates into Galactic ones, Quantity."""
+    import astropy.units as u
+
+    from ..galaxy.frames import galactic_from_icrs
+
+    if icrs:
+        return galactic_from_icrs(_angle("ra", lon, 15.0) * u.deg, _angle("dec", lat, 1.0) * u.deg)
+    return _angle("l", lon, None) * u.deg, _angle("b", lat, None) * u.deg
+
+
+def _angle(name, text, per_unit):
+    """Read degrees, or sexagesimal hours (15 degrees each) and degrees where allowed."""
+    from ..errors import InputError
+
+    text = str(text)
+    try:
+        if per_unit is not None and ":" in text:
+            parts = [float(p) for p in text.lstrip("+-").split(":")]
+            if len(parts) > 3 or any(not 0 <= p < 60 for p in parts[1:]):
+                raise ValueError
+            value = sum(p / 60**i for i, p in enumerate(parts)) * per_unit
+            return -value if text.startswith("-") else value
+        return float(text)
+    except ValueError:
+        how = "degrees" if per_unit is None else "degrees or a:b:c"
+        raise InputError(f"{name}: '{safe(text)}' is not a number of {how}") from None
+
+
+def report(result, by):
+    """Return the table for people."""
+    import astropy.units as u
+
+    from ..remnants.classes import LABELS
+
+    s = result.sources
+    head = [
+        f"lensrate {result.version}   l = {result.l.to_value(u.deg):.4f}, b = {result.b.to_value(u.deg):.4f} deg   "
+        f"scenario {safe(result.scenario.name)} ({result.scenario.hash})",
+        result.header(),
+    ]
+    where = f"mean distance {s['mean_distance_kpc']:.2f} kpc"
+    if s["disc_share"] is not None:
+        where += f", disc share {s['disc_share']:.2f}"
+    if s["source_density_per_arcmin2"] is not None:
+        where += f", {number(s['source_density_per_arcmin2'], 4)} per arcmin2"
+    head.append(f"sources: {where}")
+    if result.mass_note:
+        head.append(wrap(f"mass of {result.mass_note}"))
+    if by == "class":
+        titles = ["lens", "tau [1e-6]", "rate [1e-6/yr]", "mean t_E [d]", "median t_E [d]", "share of events", "field"]
+        rows = []
+        for name, lens in result.lenses.items():
+            label = LABELS.get(name, name.replace("_", " "))
+            rows.append(
+                [label, number(lens.optical_depth * 1e6), number(lens.rate * 1e6), number(lens.mean_t_E), number(lens.median_t_E),
+                 f"{lens.share_of_events:.4f}" if lens.share_of_events == lens.share_of_events else "-", lens.kinematics]
+            )  # fmt: skip
+    else:
+        parts = result.components if by == "component" else result.elements
+        total = result.lenses["all"]
+        titles = [by, "tau [1e-6]", "rate [1e-6/yr]", "share of events"]
+        rows = [
+            [n, number(p.optical_depth * 1e6), number(p.rate * 1e6), f"{p.rate / total.rate:.4f}" if total.rate > 0 else "-"]
+            for n, p in parts.items()
+        ]
+        rows.append(["all", number(total.optical_depth * 1e6), number(total.rate * 1e6), "1.0000"])
+    return "\n".join([*head, "", columns(titles, rows)])
+
+
+def _many(table_file, icrs, scenario, t_E_range, jobs, save, as_json, overwrite, quiet):
+    import astropy.units as u
+
+    from ..io import dump_json, read_rows, write_table
+    from ..lensing.many import directions_of, sightlines
+
+    rows = read_rows(table_file, "--table")
+    l, b, measured = directions_of(rows, icrs)
+    table = sightlines(
+        l, b, scenario, extinction=measured, t_E_range=tuple(t_E_range) * u.day if t_E_range else None,
+        jobs=jobs, progress=None if quiet else "sightlines",
+    )  # fmt: skip
+    if save:
+        write_table(table, save, overwrite, payload={"sightlines": [dict(r) for r in table.meta["rows"]]})
+    if as_json:
+        click.echo(dump_json(table.meta["rows"]))
+        return
+    meta = table.meta
+    click.echo(f"lensrate {meta['version']}   {len(table)} sightlines   scenario {safe(meta['scenario'])} ({meta['scenario_hash']})")
+    click.echo(meta["header"])
+    click.echo("")
+    titles = ["l", "b", "tau [1e-6]", "rate [1e-6/yr]", "mean t_E [d]", "NS share", "BH share", "D_S [kpc]", "per arcmin2"]
+    body = []
+    for r in table.meta["rows"]:
+        lens = r["lenses"]
+        body.append(
+            [f"{r['l_deg']:.3f}", f"{r['b_deg']:.3f}", number(lens["all"]["optical_depth"] * 1e6),
+             number(lens["all"]["rate_per_star_per_yr"] * 1e6), number(lens["all"]["mean_t_E_d"]),
+             number(lens["neutron_star"]["share_of_events"]), number(lens["black_hole"]["share_of_events"]),
+             f"{r['sources']['mean_distance_kpc']:.2f}", number(r["sources"]["source_density_per_arcmin2"], 4)]
+        )  # fmt: skip
+    click.echo(columns(titles, body, left=0))
+    if not quiet:
+        for warning in meta["warnings"]:
+            click.echo(wrap(f"note: {warning}"), err=True)

@@ -1,0 +1,58 @@
+"""``lensrate verify``: published values recomputed, computed beside published."""
+
+import click
+
+from .base import Command, announce
+from .text import columns, number, wrap
+
+
+@click.command(cls=Command)
+@click.option("--group", metavar="NAME", help="One group only: lensing, galaxy, remnants, sources, surveys.")
+@click.option("--json", "as_json", is_flag=True, help="Print JSON.")
+@click.option("--save", metavar="FILE", help="Write a table: .ecsv .csv .fits .vot .json.")
+@click.option("--overwrite", is_flag=True, help="Replace an existing file.")
+@click.option("--quiet", "-q", is_flag=True, help="No messages on stderr.")
+def verify(group, as_json, save, overwrite, quiet):
+    """Recompute published values and show them beside what was published.
+
+    Exit code 1 if one differs that should agree.
+
+    \b
+    Examples:
+      lensrate verify
+      lensrate verify --group lensing --json
+    """
+    from ..io import TABLES, check_target, dump_json, write_table
+
+    if save:
+        check_target(save, TABLES, overwrite)
+    announce(quiet)
+    from ..verify import checks, to_table
+
+    rows = checks(group)
+    if save:
+        write_table(to_table(rows), save, overwrite, payload={"checks": [r.to_dict() for r in rows]})
+    if as_json:
+        click.echo(dump_json([r.to_dict() for r in rows]))
+    else:
+        _print(rows)
+    if any(r.failed for r in rows):
+        raise click.exceptions.Exit(1)
+
+
+def _print(rows):
+    for name in dict.fromkeys(r.group for r in rows):
+        click.echo(f"\n{name}")
+        body = [
+            [r.quantity[:44], number(r.published, 5), number(r.computed, 5), r.unit, r.verdict, r.source[:24]]
+            for r in rows
+            if r.group == name
+        ]
+        click.echo(columns(["quantity", "published", "computed", "unit", "verdict", "source"], body))
+    tuned = sum(r.used_in_tuning for r in rows)
+    bad = sum(r.failed for r in rows)
+    click.echo("")
+    click.echo(wrap(f"{len(rows)} checks, {bad} that should agree and do not; {tuned} were in view when the default Galaxy was chosen (*) and are no test of it."))
+    for r in rows:
+        if r.note and not r.agrees:
+            click.echo(wrap(f"{r.quantity}: {r.note}"))

@@ -1,0 +1,198 @@
+"""From the mass-free rate density to distributions of t_E, theta_E and pi_E: mass shifts, sums, quantiles.
+
+On the isogrid (steps h in ln mu_rel and ln t_E, 2h in ln pi_rel and ln M) a mass moves every observable by whole cells:
+ln t_E = (ln kappa M pi_rel) / 2 - ln mu_rel, ln theta_E = (ln kappa M pi_rel) / 2, ln pi_E = (ln pi_rel / kappa M) / 2.
+"""
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from ..kernels import rates as kernels
+from ..units import DAYS_PER_YEAR, KAPPA
+
+__all__ = ["MassGrid", "Quantiles", "joint", "timescale_grid", "timescales", "unit_timescales"]
+
+
+@dataclass(frozen=True)
+class MassGrid:
+    """Mass spectra laid on masses exp(2 h k), k0 <= k < k0 + n: number times sqrt(M) per stated Msun."""
+
+    k0: int
+    weight: np.ndarray  # (classes, elements, n)
+
+    @classmethod
+    def deposit(cls, h, spectra):
+        """Lay spectra down with 4-point Lagrange weights, which keep moments up to the third power of ln M.
+
+        Parameters
+        ----------
+        h : float
+            Step of ln t_E; masses are 2h apart in ln M.
+        spectra : list of list of MassSpectrum or None
+            [class][element]; None where a class does not ride on an element.
+
+        Returns
+        -------
+        MassGrid
+        """
+        masses = [s.mass for row in spectra for s in row if s is not None and s.mass.size]
+        if not masses:
+            return cls(0, np.zeros((len(spectra), len(spectra[0]) if spectra else 0, 4)))
+        low, high = min(m.min() for m in masses), max(m.max() for m in masses)
+        k0 = int(np.floor(np.log(low) / (2 * h))) - 1
+        n = int(np.floor(np.log(high) / (2 * h))) + 3 - k0
+        weight = np.zeros((len(spectra), len(spectra[0]), n))
+        for c, row in enumerate(spectra):
+            for e, s in enumerate(row):
+                if s is None or not s.mass.size:
+                    continue
+                x = np.log(s.mass) / (2 * h)
+                i = np.floor(x).astype(int)
+                t = x - i
+                lagrange = (
+                    -t * (t - 1) * (t - 2) / 6,
+                    (t + 1) * (t - 1) * (t - 2) / 2,
+                    -(t + 1) * t * (t - 2) / 2,
+                    (t + 1) * t * (t - 1) / 6,
+                )
+                w = s.number * np.sqrt(s.mass)
+                for j, a in enumerate(lagrange):
+                    np.add.at(weight[c, e], i - 1 + j - k0, w * a)
+        return cls(k0, weight)
+
+
+def timescale_grid(grid):
+    """Return t_E [d] of 1 Msun lenses for each anti-diagonal of the isogrid, shape (P + K - 1,)."""
+    P, K = grid.pi.size, grid.mu.size
+    i = np.arange(P + K - 1) - (K - 1)
+    return DAYS_PER_YEAR * np.sqrt(KAPPA * grid.pi[0]) / grid.mu[0] * np.exp(grid.h * i)
+
+
+def unit_timescales(grid, T):
+    """Return the rate per ln t_E of 1 Msun lenses by element, (E, P + K - 1), on `timescale_grid`."""
+    out = np.empty((T.shape[0], grid.pi.size + grid.mu.size - 1))
+    kernels.shear_timescale(T, grid.mu.size - 1, out)
+    return out * 2 * grid.h
+
+
+def timescales(grid, unit, masses):
+    """Return t_E [d] (n,) and the rate per ln t_E by class and element (classes, elements, n).
+
+    Parameters
+    ----------
+    grid : Isogrid
+        The grid of `unit`.
+    unit : ndarray, shape (E, m)
+        From `unit_timescales`.
+    masses : MassGrid
+        Mass spectra.
+
+    Returns
+    -------
+    t_E, pdf : ndarray
+        Days; events per source, year and unit ln t_E.
+    """
+    n = masses.weight.shape[2]
+    size = unit.shape[1] + n - 1
+    t = timescale_grid(grid)[0] * np.exp(grid.h * (np.arange(size) + masses.k0))
+    length = 1 << (size - 1).bit_length()
+    spectrum = np.fft.rfft(unit, length)[None] * np.fft.rfft(masses.weight, length)
+    pdf = np.fft.irfft(spectrum, length)[..., :size]
+    # the convolution is positive but for rounding and the Lagrange weights' undershoot at sharp mass edges
+    return t, np.maximum(pdf, 0.0)
+
+
+def joint(grid, T, masses, which):
+    """Return a two-dimensional rate density by class.
+
+    Parameters
+    ----------
+    grid : Isogrid
+        The grid of T.
+    T : ndarray, shape (E, P, K)
+        Mass-free rate density.
+    masses : MassGrid
+        Mass spectra.
+    which : str
+        "pi_E" for (t_E, pi_E), "theta_E" for (t_E, theta_E).
+
+    Returns
+    -------
+    t_E, y, density : ndarray, (n,), (m,), (classes, n, m)
+        Days, the other observable (pure number or mas), events per source, year, unit ln t_E and unit ln y.
+    """
+    P, K = grid.pi.size, grid.mu.size
+    n = masses.weight.shape[2]
+    n_t, n_y = P + K - 1 + n - 1, P + n - 1
+    t = timescale_grid(grid)[0] * np.exp(grid.h * (np.arange(n_t) + masses.k0))
+    out = np.zeros((masses.weight.shape[0], n_t, n_y))
+    i, k = np.arange(P)[:, None], np.arange(K)[None, :]
+    for m in range(n):
+        # ln theta_E rises with the mass, ln pi_E falls
+        row = i - k + K - 1 + m
+        column = i + m if which == "theta_E" else i - m + n - 1
+        w = masses.weight[:, :, m]
+        if np.any(w):
+            out[:, row, column] += np.tensordot(w, T, axes=1)
+    if which == "theta_E":
+        y = np.sqrt(KAPPA * grid.pi[0]) * np.exp(grid.h * (np.arange(n_y) + masses.k0))
+    else:
+        y = np.sqrt(grid.pi[0] / KAPPA) * np.exp(grid.h * (np.arange(n_y) - (n - 1) - masses.k0))
+    # d ln pi d ln mu = 2 d ln t_E d ln y at fixed mass
+    return t, y, np.maximum(2.0 * out, 0.0)
+
+
+class Quantiles:
+    """Cumulative distribution of a rate per ln t_E, for quantiles, means and rates inside a range.
+
+    Parameters
+    ----------
+    t : ndarray, shape (n,)
+        t_E [d], uniform in the logarithm.
+    pdf : ndarray, shape (n,)
+        Rate per ln t_E.
+    fine : int
+        Refinement by cubic interpolation.
+    """
+
+    def __init__(self, t, pdf, fine=8):
+        x = np.log(t)
+        h = x[1] - x[0]
+        padded = np.concatenate([[0.0], pdf, [0.0]])
+        slope = 0.5 * (padded[2:] - padded[:-2])
+        s = np.arange(fine) / fine
+        f0, f1, d0, d1 = pdf[:-1, None], pdf[1:, None], slope[:-1, None], slope[1:, None]
+        f = f0 + s * (d0 + s * (3 * (f1 - f0) - 2 * d0 - d1 + s * (2 * (f0 - f1) + d0 + d1)))
+        self._x = np.append((x[:-1, None] + s * h).ravel(), x[-1])
+        self._f = np.maximum(np.append(f.ravel(), pdf[-1]), 0.0)
+        step = h / fine
+        self._cum = np.concatenate([[0.0], np.cumsum(0.5 * step * (self._f[1:] + self._f[:-1]))])
+        tf = np.exp(self._x) * self._f
+        self._cum_t = np.concatenate([[0.0], np.cumsum(0.5 * step * (tf[1:] + tf[:-1]))])
+
+    def rate(self, low=None, high=None):
+        """Return the rate between two timescales [d]."""
+        a, b = self._range(low, high)
+        return float(np.interp(b, self._x, self._cum) - np.interp(a, self._x, self._cum))
+
+    def mean(self, low=None, high=None):
+        """Return the mean t_E [d] between two timescales, NaN where there are no events."""
+        a, b = self._range(low, high)
+        rate = self.rate(low, high)
+        return float((np.interp(b, self._x, self._cum_t) - np.interp(a, self._x, self._cum_t)) / rate) if rate > 0 else np.nan
+
+    def quantile(self, q, low=None, high=None):
+        """Return t_E [d] below which the share q of the events lies, NaN where there are no events."""
+        a, b = self._range(low, high)
+        ca, cb = np.interp(a, self._x, self._cum), np.interp(b, self._x, self._cum)
+        if not cb > ca:
+            return np.nan
+        # the cumulative may have flat ends: keep its rising part
+        keep = np.concatenate([[True], np.diff(self._cum) > 0])
+        return float(np.exp(np.interp(ca + q * (cb - ca), self._cum[keep], self._x[keep])))
+
+    def _range(self, low, high):
+        a = self._x[0] if low is None else np.log(max(low, 1e-300))
+        b = self._x[-1] if high is None else np.log(high)
+        return a, b

@@ -1,0 +1,217 @@
+"""Rates of one sightline by element: the product rule for optical depth and rate, the isogrid for everything finer."""
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from ..errors import ConvergenceError
+from ..kernels import profile as profiles
+from ..kernels import rates as kernels
+from ..units import FOUR_G_C2, KAPPA, KMS_PER_MASYR_KPC, MAS
+from .quadrature import Isogrid, lens_pairs, panel_edges, panel_nodes, row_nodes
+
+__all__ = ["Line", "event_rate_density", "moments", "prepare", "rate_density"]
+
+_ARCMIN2 = (np.pi / 10800.0) ** 2  # sr
+
+
+@dataclass(frozen=True, eq=False)
+class Line:
+    """A sightline made ready: panels, source nodes and weights, normalisation.
+
+    Source rows are the Galaxy's components in order (weight 0 where one does not count); src[0] sums to one.
+    """
+
+    model: object
+    line: object  # Sightline3D
+    sources: object  # LineSources: weight of each component against distance
+    numerics: object
+    edges: np.ndarray
+    kinks: np.ndarray
+    D_S: np.ndarray  # (J,) kpc
+    src: np.ndarray  # (6, S, J)
+    norm: float  # sum of source weights before normalisation: sources per sr, where the rule counts them
+
+    @property
+    def elements(self):
+        """Element names, in the order of lens rows."""
+        return [c.element for c in self.model.galaxy.components]
+
+    def mean_distance(self):
+        """Return the mean source distance [kpc]."""
+        return float(np.sum(self.src[0] * self.D_S))
+
+    def source_shares(self):
+        """Return the share of sources by component, (S,)."""
+        return self.src[0].sum(axis=1)
+
+    def per_arcmin2(self):
+        """Return sources per square arcminute."""
+        return self.norm * _ARCMIN2
+
+
+def prepare(model, line, sources, numerics):
+    """Evaluate the source mixture along a sightline.
+
+    Parameters
+    ----------
+    model : Model
+        Resolved scenario.
+    line : Sightline3D
+        Direction.
+    sources : LineSources
+        Source weights against distance.
+    numerics : Numerics
+        Steps.
+
+    Returns
+    -------
+    Line
+
+    Raises
+    ------
+    ConvergenceError
+        No star passes the source rule.
+    """
+    radii = [r for c in model.galaxy.components for r in c.density.kink_radii()]
+    fixed = sources.fixed_distance
+    D_max = fixed if fixed else numerics.D_max
+    edges, kinks = panel_edges(line, radii, D_max, sources.kinks())
+    if fixed:
+        D, w = np.array([fixed]), np.ones(1)
+    else:
+        D, w = panel_nodes(edges, numerics.nodes)
+    src = _source_rows(model, line, sources, D)
+    src[0] *= w
+    norm = float(src[0].sum())
+    if not (np.isfinite(norm) and norm > 0):
+        raise ConvergenceError(
+            f"sources: no star passes '{sources.rule.text}' on this sightline; "
+            "take a fainter limit, a smaller extinction or 'distance:D'"
+        )
+    src[0] /= norm
+    return Line(model, line, sources, numerics, edges, kinks, D, src, norm)
+
+
+def _source_rows(model, line, sources, D):
+    """Source weight and motion by component, (6, S, n); one row at rest in a Galaxy without source stars."""
+    if any(c.sources for c in model.galaxy.components):
+        src = model.galaxy.profile(line, D)
+        src[0] = sources.weights(D, src[0])
+        return src
+    src = np.zeros((6, 1, D.size))
+    src[0] = 1.0
+    src[1:3] = -(line.axes[1:] @ line.v_sun)[:, None, None] / (KMS_PER_MASYR_KPC * D)
+    return src
+
+
+def moments(ready):
+    """Return optical depth and rate of 1 Msun lenses by element and source row.
+
+    Parameters
+    ----------
+    ready : Line
+        From `prepare`.
+
+    Returns
+    -------
+    tau, gamma : ndarray, shape (E, S)
+        Per stated Msun/kpc^3 of each element; gamma [1/yr], u_0 < 1.
+    distance : ndarray, shape (E,)
+        Rate-weighted mean lens distance [kpc].
+    """
+    outer, D_L, w_L = lens_pairs(ready.D_S, ready.edges, ready.numerics.nodes)
+    lens = ready.model.galaxy.profile(ready.line, D_L)
+    E, S = lens.shape[1], ready.src.shape[1]
+    tau, gamma, distance = np.zeros((E, S)), np.zeros((E, S)), np.zeros(E)
+    kernels.moments(
+        outer, ready.D_S, ready.src, D_L, w_L, lens, np.arange(E), FOUR_G_C2, KAPPA, MAS, int(ready.numerics.half_circle),
+        tau, gamma, distance,
+    )  # fmt: skip
+    total = gamma.sum(axis=1)
+    return tau, gamma, np.divide(distance, total, out=np.full(E, np.nan), where=total > 0)
+
+
+def _nodes(ready):
+    """Isogrid, node rows and distances, source rows (merged if asked) and lens profile at the nodes."""
+    numerics = ready.numerics
+    fixed = ready.sources.fixed_distance
+    if fixed:
+        # one source distance: nothing averages over the kinks of the lens density, so the rows are finer
+        grid = Isogrid.make(numerics.step_dex, fixed, fixed, fine=4)
+        row, D, w = np.arange(grid.pi.size), np.full(grid.pi.size, fixed), np.ones(grid.pi.size)
+    else:
+        near = max(ready.D_S[np.argmax(ready.src[0].sum(axis=0) > 1e-6)], 1.0)
+        grid = Isogrid.make(numerics.step_dex, near, ready.edges[-1])
+        row, D, w = row_nodes(grid.pi, ready.edges, ready.kinks, numerics.nodes)
+    src = _source_rows(ready.model, ready.line, ready.sources, D)
+    src[0] *= w / ready.norm
+    if numerics.merge_sources and src.shape[1] > 1:
+        group = np.array([c.group for c in ready.model.galaxy.components], dtype=np.int64)
+        _, group = np.unique(group, return_inverse=True)
+        merged = np.empty((6, group.max() + 1, D.size))
+        profiles.merge_rows(src, group, merged)
+        src = merged
+    lens = ready.model.galaxy.profile(ready.line, 1.0 / (grid.pi[row] + 1.0 / D))
+    geometry = np.empty(D.size)
+    kernels.node_weights(grid.pi, row, D, KAPPA, MAS, geometry)
+    return grid, row, D, src, lens, geometry
+
+
+def rate_density(ready):
+    """Return the mass-free rate density of each element.
+
+    Parameters
+    ----------
+    ready : Line
+        From `prepare`.
+
+    Returns
+    -------
+    grid : Isogrid
+    T : ndarray, shape (E, P, K)
+        Events per source, year, unit ln pi_rel and ln mu_rel, for 1 Msun lenses.
+    """
+    grid, row, _, src, lens, geometry = _nodes(ready)
+    n = ready.numerics
+    T = np.zeros((lens.shape[1], grid.pi.size, grid.mu.size))
+    kernels.rate_density(
+        grid.pi, row, geometry, src, lens, np.arange(lens.shape[1]), grid.mu, float(n.directions), float(n.q_max),
+        float(n.weight_cut), T,
+    )  # fmt: skip
+    return grid, T
+
+
+def event_rate_density(ready, element_weight, D_edges, n_phi=24):
+    """Return the rate density before the sums over source distance and direction of motion.
+
+    Linear in `element_weight`, so kick laws and histories are weights here too. Summed over its source-distance and
+    direction cells it is `rate_density` of the weighted elements.
+
+    Parameters
+    ----------
+    ready : Line
+        From `prepare`.
+    element_weight : ndarray, shape (E,)
+        Factor of each element, for example the number of lenses per stated Msun.
+    D_edges : ndarray, shape (C + 1,)
+        Edges of source-distance cells [kpc]; sources outside are left out.
+    n_phi : int
+        Direction cells, the angle counted from +l toward +b.
+
+    Returns
+    -------
+    grid : Isogrid
+    R : ndarray of float32, shape (P, C, n_phi, K)
+        Events per source, year, unit ln pi_rel and ln mu_rel, integrated over each cell, for 1 Msun lenses.
+    """
+    grid, row, D, src, lens, geometry = _nodes(ready)
+    n = ready.numerics
+    cell = np.searchsorted(D_edges, D, side="right") - 1
+    cell[(cell >= len(D_edges) - 1)] = -1
+    R = np.zeros((grid.pi.size, len(D_edges) - 1, n_phi, grid.mu.size), dtype=np.float32)
+    kernels.event_rate_density(
+        grid.pi, row, cell, geometry, src, lens, np.asarray(element_weight, dtype=float), grid.mu, int(n_phi),
+        float(n.directions), float(n.q_max), R,
+    )  # fmt: skip
+    return grid, R

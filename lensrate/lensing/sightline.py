@@ -1,0 +1,484 @@
+"""One sightline, end to end: the function `sightline` and the record it returns."""
+
+import hashlib
+from dataclasses import dataclass, field, replace
+from functools import cached_property
+
+import astropy.units as u
+import numpy as np
+
+from .._version import __version__
+from ..errors import ConvergenceError, InputError, one_of
+from ..remnants.classes import CLASSES
+from ..scenario import Scenario, resolve
+from ..units import check_range, strip
+from . import distributions, rates
+from .quadrature import Numerics
+
+__all__ = ["Lens", "Sightline", "sightline"]
+
+_KINEMATICS_NOTE = (
+    "white dwarfs ride on the stars' field: their kick of under 1 km/s (El-Badry & Rix 2018) is neglected"
+)
+_UNKICKED_NOTE = "neutron stars and black holes are unkicked: they ride on the stellar field of their birth component"
+
+
+@dataclass(frozen=True)
+class Lens:
+    """What one class (or component, or element) of lenses does on a sightline.
+
+    Rates are per source star and year within u_0_limit; optical depth is for u < 1. Numbers that a t_E range limits
+    say so in the Sightline's `t_E_range`.
+    """
+
+    optical_depth: float
+    rate: float  # 1/yr
+    mean_t_E: float = np.nan  # d
+    median_t_E: float = np.nan  # d
+    share_of_events: float = np.nan
+    rate_standard_error: float | None = None  # sampling error of the fields; None for analytic ones
+    kinematics: str = "stellar"
+
+
+@dataclass(frozen=True, eq=False)
+class Sightline:
+    """Forecast for one sightline.
+
+    Attributes
+    ----------
+    l, b : Quantity
+        Direction.
+    lenses : dict of str to Lens
+        The five classes, the user's own, and "all".
+    components, elements : dict of str to Lens
+        By Galactic component and by its elements, all classes together; optical depth and rate only.
+    sources : dict
+        Rule, extinction by band, mean distance, share of disc sources, surface density.
+    t_E, rate_per_ln_t_E : ndarray, (n,) and (classes, n)
+        Timescale [d] and events per source, year and unit ln t_E, within u_0_limit.
+    warnings, references : tuple of str
+        What to mind; what the numbers rest on.
+    quadrature_error : float
+        Relative difference of the total rate between the two independent quadratures.
+    """
+
+    l: u.Quantity
+    b: u.Quantity
+    scenario: Scenario
+    sources: dict
+    lenses: dict
+    components: dict
+    elements: dict
+    t_E: np.ndarray
+    rate_per_ln_t_E: np.ndarray
+    u_0_limit: float = 1.0
+    t_E_range: tuple | None = None
+    warnings: tuple = ()
+    references: tuple = ()
+    quadrature_error: float = 0.0
+    mass_note: str = ""
+    frame: str = "heliocentric"
+    version: str = __version__
+    _ready: object = field(default=None, repr=False)
+    _grid: object = field(default=None, repr=False)
+    _T: object = field(default=None, repr=False)
+
+    @property
+    def classes(self):
+        """Lens classes in the order of `rate_per_ln_t_E`, without "all"."""
+        return [name for name in self.lenses if name != "all"]
+
+    def header(self):
+        """Return the line that stands above every table: sources, band, u_0 limit, timescales, frame."""
+        limit = "all t_E" if self.t_E_range is None else f"{self.t_E_range[0]:g} < t_E < {self.t_E_range[1]:g} d"
+        a = ", ".join(f"A_{band} = {value:.2f}" for band, value in self.sources["extinction"].items()) or "no dust used"
+        return f"sources {self.sources['rule']} ({a}); u_0 < {self.u_0_limit:g}; {limit}; {self.frame}"
+
+    def to_dict(self):
+        """Return plain numbers under the keys of ``lensrate sightline --json``.
+
+        Returns
+        -------
+        dict
+        """
+        lenses = {}
+        for name, lens in self.lenses.items():
+            lenses[name] = {
+                "optical_depth": lens.optical_depth,
+                "rate_per_star_per_yr": lens.rate,
+                "mean_t_E_d": _none(lens.mean_t_E),
+                "median_t_E_d": _none(lens.median_t_E),
+                "share_of_events": _none(lens.share_of_events),
+                "rate_standard_error": lens.rate_standard_error,
+                "kinematics": lens.kinematics,
+            }
+        parts = {
+            name: {"optical_depth": part.optical_depth, "rate_per_star_per_yr": part.rate}
+            for name, part in self.components.items()
+        }
+        return {
+            "l_deg": float(self.l.to_value(u.deg)),
+            "b_deg": float(self.b.to_value(u.deg)),
+            "scenario": self.scenario.name,
+            "scenario_hash": self.scenario.hash,
+            "frame": self.frame,
+            "u_0_limit": self.u_0_limit,
+            "t_E_range_d": list(self.t_E_range) if self.t_E_range else None,
+            "sources": self.sources,
+            "lenses": lenses,
+            "components": parts,
+            "quadrature_error": self.quadrature_error,
+            "warnings": list(self.warnings),
+            "references": list(self.references),
+            "version": self.version,
+        }
+
+    def meta(self):
+        """Return how this was made, for the metadata of tables and pictures.
+
+        Returns
+        -------
+        dict
+        """
+        return {
+            "program": "lensrate",
+            "version": self.version,
+            "l_deg": float(self.l.to_value(u.deg)),
+            "b_deg": float(self.b.to_value(u.deg)),
+            "header": self.header(),
+            "scenario": self.scenario.name,
+            "scenario_hash": self.scenario.hash,
+            "scenario_text": self.scenario.to_toml(),
+            "seed": None,
+            "mass_note": self.mass_note,
+            "warnings": list(self.warnings),
+            "references": list(self.references),
+        }
+
+    def to_table(self, by="class"):
+        """Return a table, a row per lens class, component or element.
+
+        Parameters
+        ----------
+        by : str
+            "class", "component" or "element".
+
+        Returns
+        -------
+        astropy.table.QTable
+            Columns lens, optical_depth, rate, mean_t_E, median_t_E, share_of_events, kinematics as far as they apply.
+
+        Raises
+        ------
+        InputError
+            Unknown `by`.
+        """
+        from astropy.table import QTable
+
+        rows = {"class": self.lenses, "component": self.components, "element": self.elements}
+        rows = rows[one_of("by", by, rows)]
+        table = QTable()
+        table["lens"] = list(rows)
+        table["optical_depth"] = np.array([r.optical_depth for r in rows.values()])
+        table["rate"] = np.array([r.rate for r in rows.values()]) / u.yr
+        if by == "class":
+            table["rate_standard_error"] = (
+                np.array([np.nan if r.rate_standard_error is None else r.rate_standard_error for r in rows.values()]) / u.yr
+            )
+            table["mean_t_E"] = np.array([r.mean_t_E for r in rows.values()]) * u.day
+            table["median_t_E"] = np.array([r.median_t_E for r in rows.values()]) * u.day
+            table["share_of_events"] = np.array([r.share_of_events for r in rows.values()])
+            table["kinematics"] = [r.kinematics for r in rows.values()]
+        described = {
+            "lens": by,
+            "optical_depth": "for u < 1",
+            "rate": f"events per source star and year, u_0 < {self.u_0_limit:g}",
+            "rate_standard_error": "sampling error of the fields; nan: analytic",
+            "mean_t_E": "mean Einstein radius crossing time",
+            "median_t_E": "median Einstein radius crossing time",
+            "share_of_events": "of the rate of all classes",
+            "kinematics": "stellar, kicked or unkicked",
+        }
+        for name in table.colnames:
+            table[name].info.description = described[name]
+        table.meta.update(self.meta())
+        return table
+
+    def to_pandas(self, by="class"):
+        """Return `to_table` as a pandas DataFrame, units dropped (1/yr, d).
+
+        Parameters
+        ----------
+        by : str
+            "class", "component" or "element".
+
+        Returns
+        -------
+        pandas.DataFrame
+        """
+        table = self.to_table(by)
+        import pandas as pd
+
+        return pd.DataFrame({c: getattr(table[c], "value", np.asarray(table[c])) for c in table.colnames}).set_index("lens")
+
+    def timescales(self):
+        """Return the timescale distribution: t_E and events per source, year and unit ln t_E by class.
+
+        Returns
+        -------
+        astropy.table.QTable
+            Columns t_E, one per class, all.
+        """
+        from astropy.table import QTable
+
+        table = QTable({"t_E": self.t_E * u.day})
+        for name, pdf in zip(self.classes, self.rate_per_ln_t_E):
+            table[name] = pdf / u.yr
+        table["all"] = self.rate_per_ln_t_E.sum(axis=0) / u.yr
+        table.meta.update(self.meta())
+        return table
+
+    def joint(self, y="pi_E"):
+        """Return the two-dimensional distribution (t_E, pi_E) or (t_E, theta_E) by class.
+
+        Parameters
+        ----------
+        y : str
+            "pi_E" or "theta_E".
+
+        Returns
+        -------
+        t_E, y, density : Quantity (n,), Quantity (m,), dict of str to Quantity (n, m)
+            Events per source, year, unit ln t_E and unit ln y, within u_0_limit.
+
+        Raises
+        ------
+        InputError
+            Unknown `y`.
+        """
+        one_of("y", y, ("pi_E", "theta_E"))
+        masses = distributions.MassGrid.deposit(self._grid.h, _spectra(self._ready.model))
+        t, values, density = distributions.joint(self._grid, self._T, masses, y)
+        unit = u.mas if y == "theta_E" else u.one
+        named = {name: self.u_0_limit * d / u.yr for name, d in zip(self.classes, density)}
+        return t * u.day, values * unit, named
+
+    @cached_property
+    def optical_depth_along(self):
+        """Optical depth per kpc of lens distance by component: distances [kpc] (n,), dict of name to (n,)."""
+        return _along(self)
+
+    def plot(self, ax=None, kind="timescales", **style):
+        """Draw the forecast.
+
+        Parameters
+        ----------
+        ax : matplotlib Axes, optional
+            Made if not given.
+        kind : str
+            "timescales" (by class, log axes), "stacked", "depth" (optical depth along the sightline), "pi_E" or
+            "theta_E" (two-dimensional, by class).
+        **style
+            Passed on to the drawing function.
+
+        Returns
+        -------
+        matplotlib Axes
+        """
+        import importlib
+
+        # plots stands above this module, and only a drawing needs it
+        return importlib.import_module("lensrate.plots").sightline(self, ax=ax, kind=kind, **style)
+
+    def _repr_html_(self):
+        l, b = self.l.to_value(u.deg), self.b.to_value(u.deg)
+        head = f"<p>lensrate: l = {l:g}, b = {b:g} deg, scenario {self.scenario.name} ({self.scenario.hash})<br>{self.header()}</p>"
+        return head + self.to_table()._repr_html_()
+
+
+def sightline(l, b, scenario="default", *, sources=None, extinction=None, kicks=None, t_E_range=None):
+    """Forecast optical depth, event rate and timescales toward one direction.
+
+    Parameters
+    ----------
+    l, b : Quantity
+        Galactic longitude and latitude.
+    scenario : Scenario or str
+        Every assumption; a name or file is read.
+    sources, extinction, kicks : optional
+        Shorthand for ``scenario.replace``: source rule, {band: A in mag}, kick law of neutron stars.
+    t_E_range : (Quantity, Quantity), optional
+        Limit every reported mean, median, rate and share to these timescales; optical depths too, by the share of
+        t_E-weighted events.
+
+    Returns
+    -------
+    Sightline
+
+    Raises
+    ------
+    InputError
+        Argument without unit, out of range, or unknown name.
+    ConvergenceError
+        No star passes the source rule, or a rate came out negative or not finite.
+
+    Notes
+    -----
+    Optical depth and rate by a product rule in source and lens distance, Gamma = 2 u_0 int n_L D_L^2 <theta_E mu_rel>;
+    distributions from the mass-free rate density; mean t_E = (2/pi) tau/Gamma, exact for u_0 < 1.
+    """
+    l_rad, b_rad = _direction(l, b)
+    if not isinstance(scenario, Scenario):
+        scenario = Scenario.read(scenario)
+    changes = {"sources": sources, "extinction": extinction, "kicks": kicks}
+    changes = {k: v for k, v in changes.items() if v is not None}
+    if changes:
+        scenario = scenario.replace(**changes)
+    limits = _t_E_range(t_E_range)
+    model = resolve(scenario)
+    numerics = Numerics(**scenario.numerics)
+    line = model.galaxy.sightline(l_rad, b_rad)
+    line_sources = model.sources.toward(l_rad, b_rad, model.galaxy)
+    ready = rates.prepare(model, line, line_sources, numerics)
+    tau_eS, gamma_eS, _ = rates.moments(ready)
+    grid, T = rates.rate_density(ready)
+    return _assemble(l << u.deg, b << u.deg, scenario, ready, tau_eS.sum(axis=1), gamma_eS.sum(axis=1), grid, T, limits)
+
+
+def _direction(l, b):
+    l_rad = strip("l", l, u.rad, shape=())
+    b_deg = strip("b", b, u.deg, shape=())
+    check_range("b", np.array(b_deg), "deg", -90.0, 90.0)
+    return l_rad, np.radians(b_deg)
+
+
+def _t_E_range(given):
+    if given is None:
+        return None
+    try:
+        low, high = given
+    except (TypeError, ValueError):
+        raise InputError(f"t_E_range: {given!r} given, two timescales are needed, for example (0.5, 300) * u.day") from None
+    low, high = (strip("t_E_range", q, u.day, low=0.0, shape=()) for q in (low, high))
+    if not low < high:
+        raise InputError(f"t_E_range: {low:g} to {high:g} d given, the first must be below the second")
+    return low, high
+
+
+def _spectra(model):
+    return [[model.spectrum(name, i) for i in range(len(model.galaxy.components))] for name in model.classes]
+
+
+def _assemble(l, b, scenario, ready, tau_e, gamma_e, grid, T, limits):
+    model, u_0 = ready.model, scenario.u_0_limit
+    spectra = _spectra(model)
+    masses = distributions.MassGrid.deposit(grid.h, spectra)
+    t, pdf = distributions.timescales(grid, distributions.unit_timescales(grid, T), masses)  # (C, E, n)
+    root = np.array([[0.0 if s is None else s.moment(0.5) for s in row] for row in spectra])
+    mass = np.array([[0.0 if s is None else s.moment(1.0) for s in row] for row in spectra])
+    tau, gamma = mass * tau_e, u_0 * root * gamma_e  # (C, E)
+    pdf = u_0 * pdf
+    if not (np.all(np.isfinite(tau)) and np.all(np.isfinite(gamma)) and np.all(gamma >= 0) and np.all(np.isfinite(pdf))):
+        raise ConvergenceError(f"sightline l = {l:g}, b = {b:g}: a rate is negative or not finite; check the scenario's numbers")
+    total_pdf = pdf.sum(axis=(0, 1))
+    quadrature = abs(np.sum(pdf) * grid.h / gamma.sum() - 1.0) if gamma.sum() > 0 else 0.0
+    tau_c, gamma_c, cut_c, mean_c, median_c = _by_class(t, pdf.sum(axis=1), tau.sum(axis=1), gamma.sum(axis=1), limits, u_0)
+    tau_a, gamma_a, _, mean_a, median_a = _by_class(
+        t, total_pdf[None], tau.sum()[None], gamma.sum()[None], limits, u_0
+    )
+    everything = gamma_c.sum()
+    lenses = {}
+    for c, name in enumerate(model.classes):
+        share = gamma_c[c] / everything if everything > 0 else np.nan
+        kind = "unkicked" if name in ("neutron_star", "black_hole") else "stellar"
+        lenses[name] = Lens(tau_c[c], gamma_c[c], mean_c[c], median_c[c], share, None, kind)
+    kinds = {lens.kinematics for lens in lenses.values() if lens.rate > 0}
+    lenses["all"] = Lens(tau_c.sum(), everything, mean_a[0], median_a[0], 1.0, None, " and ".join(sorted(kinds)) or "stellar")
+    elements = {}
+    for e, component in enumerate(model.galaxy.components):
+        if limits is None:
+            elements[component.element] = Lens(float(tau[:, e].sum()), float(gamma[:, e].sum()))
+        else:
+            a, g, *_ = _by_class(t, pdf[:, e], tau[:, e], gamma[:, e], limits, u_0)
+            elements[component.element] = Lens(float(a.sum()), float(g.sum()))
+    components = {}
+    for component in model.galaxy.components:
+        part, old = elements[component.element], components.get(component.name, Lens(0.0, 0.0))
+        components[component.name] = replace(
+            old, optical_depth=old.optical_depth + part.optical_depth, rate=old.rate + part.rate
+        )
+    warnings = list(ready.sources.warnings)
+    if any(lenses[n].rate > 0 for n in ("neutron_star", "black_hole")):
+        warnings.append(_UNKICKED_NOTE)
+    shares = ready.source_shares()
+    disc = _disc_share(model, shares)
+    return Sightline(
+        l=l, b=b, scenario=scenario,
+        sources={
+            "rule": ready.sources.rule.text,
+            "extinction": dict(ready.sources.extinction),
+            "mean_distance_kpc": ready.mean_distance(),
+            "disc_share": disc,
+            "source_density_per_arcmin2": ready.per_arcmin2() if ready.sources.counts_stars else None,
+        },
+        lenses=lenses, components=components, elements=elements, t_E=t, rate_per_ln_t_E=pdf.sum(axis=1),
+        u_0_limit=u_0, t_E_range=limits, warnings=tuple(warnings), references=model.references,
+        quadrature_error=float(quadrature), mass_note=model.mass_note(), _ready=ready, _grid=grid, _T=T,
+    )  # fmt: skip
+
+
+def _by_class(t, pdf, tau, gamma, limits, u_0):
+    """Optical depth, rate, their cut factor, mean and median t_E of each row, limited to a range of t_E if asked."""
+    n = len(pdf)
+    tau, gamma = np.array(tau, dtype=float), np.array(gamma, dtype=float)
+    cut, mean, median = np.ones(n), np.full(n, np.nan), np.full(n, np.nan)
+    for c in range(n):
+        if not gamma[c] > 0:
+            continue
+        q = distributions.Quantiles(t, pdf[c])
+        if limits is None:
+            mean[c] = 2.0 / np.pi * tau[c] * u_0 / gamma[c] * 365.25
+            median[c] = q.quantile(0.5)
+            continue
+        cut[c] = q.rate(*limits) / q.rate()
+        mean[c], median[c] = q.mean(*limits), q.quantile(0.5, *limits)
+        tau[c] *= cut[c] * mean[c] / q.mean() if cut[c] > 0 else 0.0
+        gamma[c] *= cut[c]
+    return tau, gamma, cut, mean, median
+
+
+def _disc_share(model, shares):
+    components = model.galaxy.components
+    if len(shares) != len(components):
+        return None
+    return float(sum(s for s, c in zip(shares, components) if not c.bulge))
+
+
+def _along(result, n=400):
+    ready = result._ready
+    D = np.linspace(0, max(ready.edges[-1] if ready.sources.fixed_distance else 12.0, 1e-3), n + 1)[1:]
+    lens = ready.model.galaxy.profile(ready.line, D)[0]
+    from ..units import FOUR_G_C2
+
+    w, D_S = ready.src[0].sum(axis=0), ready.D_S
+    inverse = np.array([np.sum(w[D_S > d] * (1.0 / d - 1.0 / D_S[D_S > d])) for d in D])
+    geometry = np.pi * FOUR_G_C2 * D**2 * inverse
+    out = {}
+    for i, c in enumerate(ready.model.galaxy.components):
+        mass = sum(s.moment(1.0) for name in ready.model.classes if (s := ready.model.spectrum(name, i)) is not None)
+        out[c.name] = out.get(c.name, 0.0) + mass * geometry * lens[i]
+    return D, out
+
+
+def _none(x):
+    return None if x is None or not np.isfinite(x) else float(x)
+
+
+def digest(values):
+    """Return a short sha256 of floats, for comparing runs bit for bit."""
+    return hashlib.sha256(np.ascontiguousarray(values, dtype=float).tobytes()).hexdigest()[:16]
+
+
+def all_classes(scenario):
+    """Return the lens classes of a scenario: the five, then the user's own."""
+    return [*CLASSES, *resolve(scenario).own]

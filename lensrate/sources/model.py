@@ -1,0 +1,163 @@
+"""The source stars of a sightline: rule, luminosity functions and dust joined to a weight against distance."""
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from .extinction import DustDisc, Extinction, sightline_extinction
+from .luminosity import _clump_magnitude as clump_magnitude
+from .rules import ClumpRule, DistanceRule, LimitRule
+
+__all__ = ["LineSources", "Sources"]
+
+_NEAREST_DISTANCE_MODULUS = 10.0  # mag, of 1 kpc
+
+
+@dataclass(frozen=True, eq=False)
+class LineSources:
+    """Source weight of each Galactic component against distance, on one sightline.
+
+    Attributes
+    ----------
+    rule : ClumpRule, LimitRule or DistanceRule
+    shining : tuple
+        LuminosityFunction of each component, None where it supplies no sources.
+    dust : Extinction
+    extinction : dict of str to float
+        What the header reports: A by band [mag].
+    warnings : tuple of str
+    """
+
+    rule: object
+    shining: tuple
+    dust: Extinction
+    extinction: dict
+    warnings: tuple
+
+    @property
+    def fixed_distance(self):
+        """The one source distance [kpc] of a distance rule, else None."""
+        return self.rule.distance if isinstance(self.rule, DistanceRule) else None
+
+    @property
+    def counts_stars(self):
+        """Whether the weights are numbers of stars, so that a surface density makes sense."""
+        return not isinstance(self.rule, DistanceRule)
+
+    def per_msun(self, D):
+        """Return the number of source stars per solar mass of each component's stated mass.
+
+        Parameters
+        ----------
+        D : ndarray, shape (n,)
+            Distance [kpc].
+
+        Returns
+        -------
+        ndarray, shape (components, n)
+        """
+        D = np.asarray(D, dtype=float)
+        out = np.zeros((len(self.shining), D.size))
+        if isinstance(self.rule, LimitRule):
+            with np.errstate(divide="ignore"):
+                absolute = self.rule.magnitude - 5.0 * np.log10(D) - _NEAREST_DISTANCE_MODULUS - self.dust(D)
+        for i, shine in enumerate(self.shining):
+            if shine is None:
+                continue
+            if isinstance(self.rule, LimitRule):
+                out[i] = shine.brighter(absolute)
+            elif isinstance(self.rule, ClumpRule):
+                out[i] = shine.clump_per_msun
+            else:
+                out[i] = 1.0
+        return out
+
+    def weights(self, D, density):
+        """Return sources per steradian and kpc of distance, or relative weights for one distance.
+
+        Parameters
+        ----------
+        D : ndarray, shape (n,)
+            Distance [kpc].
+        density : ndarray, shape (components, n)
+            Mass density [Msun/kpc^3].
+
+        Returns
+        -------
+        ndarray, shape (components, n)
+        """
+        return density * D**2 * self.per_msun(D)
+
+    def kinks(self):
+        """Return distances [kpc] at which the red clump crosses the magnitude limit, as panel edges."""
+        if not isinstance(self.rule, LimitRule):
+            return ()
+        lit = [s for s in self.shining if s is not None]
+        if not lit:
+            return ()
+        D = np.geomspace(0.05, 60.0, 600)
+        absolute = self.rule.magnitude - 5.0 * np.log10(D) - _NEAREST_DISTANCE_MODULUS - self.dust(D)
+        edges = []
+        centre = clump_magnitude(lit[0].band)
+        for mark in (centre - 0.25, centre, centre + 0.25):
+            above = absolute - mark
+            edges += [float(D[i]) for i in np.flatnonzero(np.diff(np.sign(above)) != 0)]
+        return tuple(edges)
+
+
+@dataclass(frozen=True, eq=False)
+class Sources:
+    """Source rule, luminosity functions and dust of a scenario.
+
+    Attributes
+    ----------
+    rule : ClumpRule, LimitRule or DistanceRule
+    luminosities : tuple
+        LuminosityFunction of each component, or None.
+    dust : DustDisc
+    measured : dict of str to float
+        The field's own extinction at the bulge, by band [mag].
+    references : tuple of str
+    """
+
+    rule: object
+    luminosities: tuple
+    dust: DustDisc
+    measured: dict
+    references: tuple = ()
+
+    @property
+    def band(self):
+        """Band that the report of extinction is in."""
+        return self.rule.band if isinstance(self.rule, LimitRule) else "I"
+
+    def toward(self, l, b, galaxy):
+        """Return the source weights of a sightline.
+
+        Parameters
+        ----------
+        l, b : float
+            Direction [rad].
+        galaxy : Galaxy
+            Whose components are the sources.
+
+        Returns
+        -------
+        LineSources
+        """
+        bulge_only = isinstance(self.rule, ClumpRule) and not self.rule.discs
+        shining = tuple(
+            shine if c.sources and (c.bulge or not bulge_only) else None
+            for c, shine in zip(galaxy.components, self.luminosities)
+        )
+        uses_dust = isinstance(self.rule, LimitRule)
+        dust = sightline_extinction(
+            self.dust, l, b, self.band, self.measured or None, galaxy.R0, float(galaxy.sun.z.to_value("kpc"))
+        )
+        return LineSources(
+            self.rule,
+            shining,
+            dust,
+            {self.band: dust.at_R0} if uses_dust else {},
+            dust.warnings if uses_dust else (),
+        )
