@@ -16,7 +16,7 @@ from ..errors import InputError
 from ..remnants.tables import check_keys, number
 from .bands import check_band
 
-__all__ = ["LuminosityFunction", "luminosity_function"]
+__all__ = ["LuminosityFunction", "clump_magnitude", "luminosity_function"]
 
 _AGES = 24  # bursts that stand for a longer history
 _MASSES = 240  # points of the main sequence of one age
@@ -137,7 +137,8 @@ def _main_sequence(band, mass, age, lifetimes):
     return _sequence(band, mass) - share * g["amount"] * (lived ** g["power"] - g["zero"])
 
 
-def _clump_magnitude(band):
+def clump_magnitude(band):
+    """Return the red clump's absolute magnitude in V, I, J, H or Ks [mag]."""
     clump = _giants()["clump"]
     return clump["M_I"] + clump["V_I"] if band == "V" else clump[f"M_{band}"]
 
@@ -160,7 +161,7 @@ def _burst(band, grid, age, imf, lifetimes):
     base, span = dwarfs[-1], g["subgiant"]["span"]
     total = total + flux * g["subgiant"]["duration"] * age * np.clip((grid - (base - span)) / span, 0, 1)
     clump = flux * min(g["clump"]["lifetime"], g["clump"]["longest_share"] * age)
-    centre, slope = _clump_magnitude(band), g["giant"]["slope"]
+    centre, slope = clump_magnitude(band), g["giant"]["slope"]
     total = total + clump * ndtr((grid - centre) / g["clump"]["width"])
     tip = centre + g["giant"]["tip"] - g["clump"]["M_I"]
     if base - span > tip:

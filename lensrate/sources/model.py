@@ -5,12 +5,13 @@ from dataclasses import dataclass
 import numpy as np
 
 from .extinction import DustDisc, Extinction, sightline_extinction
-from .luminosity import _clump_magnitude as clump_magnitude
+from .luminosity import clump_magnitude
 from .rules import ClumpRule, DistanceRule, LimitRule
 
 __all__ = ["LineSources", "Sources"]
 
-_NEAREST_DISTANCE_MODULUS = 10.0  # mag, of 1 kpc
+_MODULUS_1_KPC = 10.0  # mag
+_CLUMP_WINDOW = 0.5  # mag around the clump at the Galactic centre, where disc clump giants are taken for bulge ones
 
 
 @dataclass(frozen=True, eq=False)
@@ -26,6 +27,10 @@ class LineSources:
     extinction : dict of str to float
         What the header reports: A by band [mag].
     warnings : tuple of str
+    bulge : tuple of bool
+        Which components are bulge.
+    R0 : float
+        Distance of the Galactic centre [kpc].
     """
 
     rule: object
@@ -33,6 +38,8 @@ class LineSources:
     dust: Extinction
     extinction: dict
     warnings: tuple
+    bulge: tuple
+    R0: float
 
     @property
     def fixed_distance(self):
@@ -60,7 +67,7 @@ class LineSources:
         out = np.zeros((len(self.shining), D.size))
         if isinstance(self.rule, LimitRule):
             with np.errstate(divide="ignore"):
-                absolute = self.rule.magnitude - 5.0 * np.log10(D) - _NEAREST_DISTANCE_MODULUS - self.dust(D)
+                absolute = self.rule.magnitude - 5.0 * np.log10(D) - _MODULUS_1_KPC - self.dust(D)
         for i, shine in enumerate(self.shining):
             if shine is None:
                 continue
@@ -68,9 +75,16 @@ class LineSources:
                 out[i] = shine.brighter(absolute)
             elif isinstance(self.rule, ClumpRule):
                 out[i] = shine.clump_per_msun
+                if not self.bulge[i]:
+                    near, far = self._clump_window()
+                    out[i] *= (near < D) & (far > D)
             else:
                 out[i] = 1.0
         return out
+
+    def _clump_window(self):
+        """Distances [kpc] between which a clump giant is within half a magnitude of one at the centre."""
+        return self.R0 * 10 ** (-_CLUMP_WINDOW / 5), self.R0 * 10 ** (_CLUMP_WINDOW / 5)
 
     def weights(self, D, density):
         """Return sources per steradian and kpc of distance, or relative weights for one distance.
@@ -89,14 +103,16 @@ class LineSources:
         return density * D**2 * self.per_msun(D)
 
     def kinks(self):
-        """Return distances [kpc] at which the red clump crosses the magnitude limit, as panel edges."""
+        """Return distances [kpc] at which the weight jumps or the red clump crosses the limit, as panel edges."""
+        if isinstance(self.rule, ClumpRule) and self.rule.discs:
+            return self._clump_window()
         if not isinstance(self.rule, LimitRule):
             return ()
         lit = [s for s in self.shining if s is not None]
         if not lit:
             return ()
         D = np.geomspace(0.05, 60.0, 600)
-        absolute = self.rule.magnitude - 5.0 * np.log10(D) - _NEAREST_DISTANCE_MODULUS - self.dust(D)
+        absolute = self.rule.magnitude - 5.0 * np.log10(D) - _MODULUS_1_KPC - self.dust(D)
         edges = []
         centre = clump_magnitude(lit[0].band)
         for mark in (centre - 0.25, centre, centre + 0.25):
@@ -160,4 +176,6 @@ class Sources:
             dust,
             {self.band: dust.at_R0} if uses_dust else {},
             dust.warnings if uses_dust else (),
+            tuple(c.bulge for c in galaxy.components),
+            galaxy.R0,
         )
