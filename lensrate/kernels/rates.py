@@ -144,7 +144,8 @@ def rate_density(pi, row, geometry, src, lens, element, mu, directions, q_max, w
 
     pi (P,), row (N,): index of the pi row of each node; geometry (N,) from node_weights; src (6, S, N) with
     weights that sum to one over the nodes of a row; lens (6, L, N); mu (K,) uniform in the logarithm.
-    Fills T (E, P, K). Nodes below w_cut of an element's largest weight are dropped.
+    Fills T (E, P, K). Nodes below w_cut of an element's largest weight (of a thousandth of the
+    largest of all, if that is more) are dropped.
     """
     T[:] = 0.0
     K = mu.size
@@ -157,6 +158,8 @@ def rate_density(pi, row, geometry, src, lens, element, mu, directions, q_max, w
             w = geometry[p] * lens[0, r, p] * w_s
             if w > peak[element[r]]:
                 peak[element[r]] = w
+    # an element a thousand times fainter than the brightest one needs no finer cut of its own
+    peak = np.maximum(peak, 1e-3 * peak.max())
     tmp = np.empty(K)
     step_mu = math.log(mu[1] / mu[0])
     for r in range(element.size):

@@ -22,12 +22,12 @@ class Numerics:
     """Steps and ranges of the quadratures; every one may be halved to see that nothing reported moves."""
 
     step_dex: float = field(default=0.05, metadata={"range": (0.005, 0.2)})  # of mu_rel and t_E; pi_rel and M: twice it
-    nodes: int = field(default=5, metadata={"range": (2, 24)})  # Gauss-Legendre nodes per panel
+    nodes: int = field(default=5, metadata={"range": (2, 24)})  # Gauss-Legendre nodes per panel, two more for totals
     directions: float = field(default=3.0, metadata={"range": (1.0, 12.0)})  # density of directions on a circle of mu
     half_circle: int = field(default=16, metadata={"range": (8, 64)})  # directions of the mean speed
     q_max: float = field(default=18.0, metadata={"range": (8.0, 60.0)})  # exponents beyond are dropped
     weight_cut: float = field(default=1e-6, metadata={"range": (0.0, 1e-3)})  # nodes lighter than this share of the peak
-    D_max: float = field(default=40.0, metadata={"range": (1.0, 500.0)})  # kpc, farthest source of a magnitude limit
+    D_max: float = field(default=100.0, metadata={"range": (1.0, 500.0)})  # kpc, where the stars of the model end
     merge_sources: bool = True  # moment-match source rows of one group for the rate density
 
     def __post_init__(self):
@@ -44,7 +44,7 @@ class Numerics:
         """Return numerics with every step halved, for convergence tests."""
         return Numerics(
             self.step_dex / 2, 2 * self.nodes, 2 * self.directions, 2 * self.half_circle, 2 * self.q_max,
-            self.weight_cut / 100, self.D_max * 1.5, self.merge_sources,
+            self.weight_cut / 100, self.D_max, self.merge_sources,
         )
 
 
@@ -61,9 +61,10 @@ class Isogrid:
         """Cover sources between D_min and D_max [kpc]; `fine` divides the step."""
         h = step_dex / fine
         low = np.floor(np.log10(1e-5 / D_max) / (2 * h)) * 2 * h
-        high = np.ceil(np.log10(max(60.0, 200.0 / D_min)) / (2 * h)) * 2 * h
+        # lenses down to 1e-4 of the nearest sources' distance, whose proper motions are as much larger
+        high = np.ceil(np.log10(1e4 / D_min) / (2 * h)) * 2 * h
         pi = 10 ** np.arange(low, high + h, 2 * h)
-        mu = 10 ** np.arange(-3.0, 3.0 + max(0.0, np.log10(1.0 / D_min)) + h / 2, h)
+        mu = 10 ** np.arange(-3.0, 4.5 - np.log10(min(D_min, 1.0)) + h / 2, h)
         return cls(h * LN10, pi, mu)
 
 
@@ -105,7 +106,7 @@ def panel_edges(line, kink_radii, D_max, extra=()):
             base = [e for e in base if abs(e - tangent) > 1.5] + [tangent - 1.2, tangent + 1.2]
         for reach, half in ((0.4, 0.12), (0.12, 0.03)):
             if max(abs(float(z)), miss) < reach:
-                base += [tangent - half, tangent + half]
+                kinks += [tangent - half, tangent + half]
     for R in sorted(set(kink_radii)):
         kinks += line.radius_crossings(R)
     crossing = line.plane_crossing()

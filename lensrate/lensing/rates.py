@@ -80,7 +80,7 @@ def prepare(model, line, sources, numerics):
     if fixed:
         D, w = np.array([fixed]), np.ones(1)
     else:
-        D, w = panel_nodes(edges, numerics.nodes)
+        D, w = panel_nodes(edges, numerics.nodes + 2)
     src = _source_rows(model, line, sources, D)
     src[0] *= w
     norm = float(src[0].sum())
@@ -120,7 +120,7 @@ def moments(ready):
     distance : ndarray, shape (E,)
         Rate-weighted mean lens distance [kpc].
     """
-    outer, D_L, w_L = lens_pairs(ready.D_S, ready.edges, ready.numerics.nodes)
+    outer, D_L, w_L = lens_pairs(ready.D_S, ready.edges, ready.numerics.nodes + 2)
     lens = ready.model.galaxy.profile(ready.line, D_L)
     E, S = lens.shape[1], ready.src.shape[1]
     tau, gamma, distance = np.zeros((E, S)), np.zeros((E, S)), np.zeros(E)
