@@ -37,6 +37,10 @@ class Kinematics(Params):
         """Return the kernel's parameters, internal units; `density` supplies the asymmetric drift's slope."""
         return super().pack()
 
+    def kink_radii(self):
+        """Return the cylindrical radii [kpc] at which the motion or a derivative of it jumps."""
+        return ()
+
 
 @dataclass(frozen=True)
 class DiscMotion(Kinematics):
@@ -49,6 +53,9 @@ class DiscMotion(Kinematics):
     R_frozen: u.Quantity = param("kpc", "dispersions stay constant inside", default=0.0)
     drift: u.Quantity = param("km/s", "lag at the Sun; below zero: from Jeans' equation", default=0.0)
     kind: ClassVar[int] = kernels.DISC
+
+    def kink_radii(self):
+        return (self.R_frozen.value,) if self.R_frozen.value > 0 and self.fall.value != 0 else ()
 
     def pack(self, R0, density):
         s = [q.value for q in (self.sigma_R, self.sigma_phi, self.sigma_z, self.fall, self.R_frozen)]

@@ -73,7 +73,7 @@ def prepare(model, line, sources, numerics):
     ConvergenceError
         No star passes the source rule.
     """
-    radii = [r for c in model.galaxy.components for r in c.density.kink_radii()]
+    radii = [r for c in model.galaxy.components for part in (c.density, c.kinematics) for r in part.kink_radii()]
     fixed = sources.fixed_distance
     D_max = fixed if fixed else numerics.D_max
     edges, kinks = panel_edges(line, radii, D_max, sources.kinks())
