@@ -35,7 +35,8 @@ else:
 
 @kernel(inline="always")
 def fexp(x):
-    """exp(x) for -700 < x < 700 to about 1e-14; branch-free, so that loops over it vectorise."""
+    """exp(x) for x < 700 to about 1e-14, 1e-304 below -700; branch-free, so that loops over it vectorise."""
+    x = max(x, -700.0)
     n = np.floor(x * _LOG2E + 0.5)
     r = (x - n * _LN2_HI) - n * _LN2_LO
     p = _C10 + r * _C11

@@ -52,6 +52,8 @@ def merge_rows(src, group, out):
                     w += src[0, s, i]
                     ml += src[0, s, i] * src[1, s, i]
                     mb += src[0, s, i] * src[2, s, i]
+            # a weight so small that its inverse overflows counts for nothing
+            w = w if w > 1e-290 else 0.0
             out[0, g, i] = w
             if w > 0.0:
                 ml /= w

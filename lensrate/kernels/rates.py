@@ -192,15 +192,20 @@ def rate_density(pi, row, geometry, src, lens, element, mu, directions, q_max, w
 
 
 @kernel
-def event_rate_density(pi, row, cell, geometry, src, lens, row_weight, mu, n_phi, directions, q_max, R):
+def event_rate_density(pi, row, cell, geometry, src, lens, row_weight, mu, n_phi, directions, q_max, w_cut, R):
     """The finer density, before the sums over source distance and direction of motion.
 
     cell (N,): source-distance cell of each node, negative to skip; row_weight (L,): factor of each lens row
     (kick law and history enter here, linearly). Direction cells are [2 pi j / n_phi, 2 pi (j+1) / n_phi), the angle
-    counted from +l toward +b. Adds to R (P, C, n_phi, K) float32: rate per ln pi_rel, ln mu_rel, integrated over cells.
+    counted from +l toward +b. Nodes below w_cut of the largest weight are dropped. Adds to R (P, C, n_phi, K) float32: rate per ln pi_rel, ln mu_rel, integrated over cells.
     """
     K = mu.size
     tmp = np.empty((n_phi, K))
+    peak = 0.0
+    for r in range(row_weight.size):
+        for p in range(row.size):
+            for s in range(src.shape[1]):
+                peak = max(peak, geometry[p] * lens[0, r, p] * row_weight[r] * src[0, s, p])
     for p in range(row.size):
         c = cell[p]
         if c < 0:
@@ -213,7 +218,7 @@ def event_rate_density(pi, row, cell, geometry, src, lens, row_weight, mu, n_phi
                 continue
             for s in range(src.shape[1]):
                 w = g * src[0, s, p]
-                if w <= 0.0:
+                if w <= w_cut * peak:
                     continue
                 used = True
                 ml, mb, ixx, ixy, iyy, log_norm, s_min, s_max = _gaussian(lens, src, r, s, p)

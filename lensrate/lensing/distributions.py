@@ -139,8 +139,12 @@ def joint(grid, T, masses, which):
         y = np.sqrt(KAPPA * grid.pi[0]) * np.exp(grid.h * (np.arange(n_y) + masses.k0))
     else:
         y = np.sqrt(grid.pi[0] / KAPPA) * np.exp(grid.h * (np.arange(n_y) - (n - 1) - masses.k0))
-    # d ln pi d ln mu = 2 d ln t_E d ln y at fixed mass
-    return t, y, np.maximum(2.0 * out, 0.0)
+    # d ln pi d ln mu = 2 d ln t_E d ln y at fixed mass; where Lagrange weights undershoot, a class keeps its total rate
+    total = out.sum(axis=(1, 2))
+    out = np.maximum(out, 0.0)
+    kept = out.sum(axis=(1, 2))
+    out *= np.divide(2.0 * total, kept, out=np.zeros_like(kept), where=kept > 0)[:, None, None]
+    return t, y, out
 
 
 class Quantiles:

@@ -212,6 +212,6 @@ def event_rate_density(ready, element_weight, D_edges, n_phi=24):
     R = np.zeros((grid.pi.size, len(D_edges) - 1, n_phi, grid.mu.size), dtype=np.float32)
     kernels.event_rate_density(
         grid.pi, row, cell, geometry, src, lens, np.asarray(element_weight, dtype=float), grid.mu, int(n_phi),
-        float(n.directions), float(n.q_max), R,
+        float(n.directions), float(n.q_max), float(n.weight_cut), R,
     )  # fmt: skip
     return grid, R

@@ -25,6 +25,7 @@ _BRIGHTEST = -8.0  # mag, beyond the brightest giants of a young burst
 _YOUNGEST = 1e-3  # Gyr; stars die no younger than about 3 Myr
 
 _GIANTS = {
+    "spread": {"sigma": "mag"},
     "brightening": {"amount": "mag", "power": "", "zero": "", "from": "Msun", "full": "Msun"},
     "subgiant": {"duration": "", "span": "mag"},
     "giant": {"slope": "1/mag", "tip": "mag"},
@@ -144,7 +145,7 @@ def clump_magnitude(band):
 
 
 def _burst(band, grid, age, imf, lifetimes):
-    """Stars brighter than each of `grid`, and clump giants, of one solar mass formed `age` Gyr ago."""
+    """Stars brighter than each of `grid` without the clump, and clump giants, of one solar mass formed `age` Gyr ago."""
     g = _giants()
     lightest, turnoff = _dwarfs(band)[0][0], float(lifetimes.turnoff_mass(age))
     top = min(turnoff, imf.breaks[-1])
@@ -162,12 +163,25 @@ def _burst(band, grid, age, imf, lifetimes):
     total = total + flux * g["subgiant"]["duration"] * age * np.clip((grid - (base - span)) / span, 0, 1)
     clump = flux * min(g["clump"]["lifetime"], g["clump"]["longest_share"] * age)
     centre, slope = clump_magnitude(band), g["giant"]["slope"]
-    total = total + clump * ndtr((grid - centre) / g["clump"]["width"])
     tip = centre + g["giant"]["tip"] - g["clump"]["M_I"]
     if base - span > tip:
         at_tip = clump / g["clump"]["equivalent_width"] * math.exp(slope * (tip - centre))
         total = total + at_tip / slope * np.expm1(slope * (np.clip(grid, tip, base - span) - tip))
     return total, clump
+
+
+def _spread(cumulative, sigma):
+    """Smooth over a Gaussian spread of magnitude; the irregular last point of the grid stays as it is."""
+    half = int(math.ceil(4 * sigma / _STEP))
+    if half == 0:
+        return cumulative
+    weight = np.exp(-0.5 * (np.arange(-half, half + 1) * _STEP / sigma) ** 2)
+    regular = cumulative[:-1]
+    # beyond the faint end the counts go on rising, in a straight line as far as the spread can see
+    rise = regular[-1] + (regular[-1] - regular[-2]) * np.arange(1, half + 1)
+    padded = np.concatenate([np.zeros(half), regular, rise])
+    smooth = np.convolve(padded, weight / weight.sum(), mode="valid")
+    return np.append(np.minimum(smooth, cumulative[-1]), cumulative[-1])
 
 
 def luminosity_function(band, history, population, imf, lifetimes):
@@ -194,7 +208,7 @@ def luminosity_function(band, history, population, imf, lifetimes):
     -----
     Dwarfs: Pecaut & Mamajek (2013) and its electronic table. The flux through the evolved phases is the number of
     stars born at the turn-off mass times the speed of that mass; every phase holds flux times duration. The clump's
-    place and the giants' slope are those of Nataf+ (2013); other bands have the clump's colours, which leaves the
+    place and the giants' slope are those of Nataf+ (2013); all but the clump is smoothed over the spread of metallicity; other bands have the clump's colours, which leaves the
     giants near the tip too blue. Dwarfs heavier than the sequence continue its slope.
     """
     check_band("band", band)
@@ -205,6 +219,8 @@ def luminosity_function(band, history, population, imf, lifetimes):
         brighter, giants = _burst(band, grid, max(age, _YOUNGEST), imf, lifetimes)
         total += weight * brighter
         clump += weight * giants
+    g = _giants()
+    total = _spread(total, g["spread"]["sigma"]) + clump * ndtr((grid - clump_magnitude(band)) / g["clump"]["width"])
     formed = population.initial_mass_per_msun
     return LuminosityFunction(band, grid, total * formed, float(clump * formed))
 

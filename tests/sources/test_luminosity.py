@@ -6,6 +6,7 @@ import numpy as np
 import pytest
 from astropy.table import Table
 
+from lensrate.datafiles import read_set
 from lensrate.errors import InputError
 from lensrate.remnants.history import History
 from lensrate.remnants.ifmr import Ifmr
@@ -42,14 +43,19 @@ def test_evolved_stars_of_an_old_burst():
     flux = IMF.density(1.0) * 1.0 / (2.5 * 10) * pop.initial_mass_per_msun  # -dM/dt of 10 Gyr M^-2.5
     assert f.clump_per_msun == pytest.approx(0.10 * flux, rel=1e-10)
     giants = f.clump_per_msun / 1.9 / 0.55 * (math.exp(0.55 * (2.0 + 0.12)) - math.exp(0.55 * (-4.0 + 0.12)))
-    assert f.brighter(2.0) == pytest.approx(f.clump_per_msun + giants, rel=1e-4)
+    widened = math.exp(0.5 * (0.55 * 0.12) ** 2)  # a Gaussian spread raises an exponential by this
+    assert f.brighter(2.0) == pytest.approx(f.clump_per_msun + widened * giants, rel=1e-4)
     turnoff = 4.087 - 0.9 * (1 - 0.3)
     branch = f.clump_per_msun / 1.9 / 0.55 * (math.exp(0.55 * (turnoff - 0.8 + 0.12)) - math.exp(0.55 * (-4.0 + 0.12)))
-    assert f.brighter(turnoff) == pytest.approx(f.clump_per_msun + branch + 0.12 * 10 * flux, rel=2e-3)
+    # half-way up the subgiants, where the spread changes nothing
+    assert f.brighter(turnoff - 0.4) == pytest.approx(f.clump_per_msun + branch + 0.06 * 10 * flux, rel=2e-3)
     # below 0.6 Msun there is no brightening: the sequence's own magnitude counts the stars above that mass
     evolved = f.cumulative[-1] - pop.initial_mass_per_msun * IMF.number(0.079, 1.0)
-    counted = pop.initial_mass_per_msun * IMF.number(0.45, 1.0) + evolved
-    assert f.brighter(8.037) == pytest.approx(counted, rel=1e-3)
+    dwarfs = read_set("sources", "dwarf_sequence")["columns"]
+    x = np.linspace(-5, 5, 401)
+    lightest = np.exp(np.interp(8.037 + 0.12 * x, dwarfs["M_I"], np.log(dwarfs["mass"])))
+    brighter = np.average(IMF.number(lightest, 1.0), weights=np.exp(-0.5 * x**2))  # over the spread of 0.12 mag
+    assert f.brighter(8.037) == pytest.approx(pop.initial_mass_per_msun * brighter + evolved, rel=1e-3)
 
 
 def test_colours_of_the_clump():
