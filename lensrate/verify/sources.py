@@ -54,6 +54,7 @@ def _baade():
 COMPUTE = {
     "G1_M_I": partial(_peak, "I", -0.6, 0.4),
     "G1_V_I": lambda: _peak("V", 0.4, 1.4) - _peak("I", -0.6, 0.4),
+    "G1_J_Ks": lambda: _peak("J", -1.4, -0.4) - _peak("Ks", -2.1, -1.1),
     "G2_clump_at_8.20": partial(_clump_at, 8.20),
     "G3_a": partial(extinction_from_colours, 1.0, 0.3433),
     "G3_b": partial(extinction_from_colours, 1.0, 0.28),
