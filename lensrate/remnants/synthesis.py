@@ -1,0 +1,288 @@
+"""Run the orbits of a Galaxy: equilibrium of each component, births with kicks, fields of every element.
+
+Each element (component and kick bin) is one job with its own random stream, and sums its batches in order, so the
+result is the same whatever the number of threads.
+"""
+
+import hashlib
+import json
+from dataclasses import dataclass
+from pathlib import Path
+
+import astropy.units as u
+import numpy as np
+
+from .._version import __version__
+from ..errors import DataFileError, InputError
+from ..galaxy.density import Uniform
+from ..io import whole_file
+from ..kernels import fields as kernels
+from ..parallel import run_map
+from .births import KICK_EDGES, analytic, draw, kicked, self_held, window
+from .equilibrium import cells_of, solve
+from .fields import Grid, RemnantField
+from .moments import batch_ratios, encode, split_speeds
+from .orbits import states_energies, step
+
+__all__ = ["Settings", "synthesize"]
+
+_RING = 1.5  # kpc on either side of the Sun's radius, where heights are counted
+_HEIGHTS = np.concatenate([[0.0], np.geomspace(0.01, 50.0, 61), [np.inf]])
+_PILOT = 8  # one tracer in so many finds the speeds that divide the two Gaussians
+
+
+@dataclass(frozen=True)
+class Settings:
+    """Numbers of a synthesis.
+
+    Parameters
+    ----------
+    tracers : int
+        Per element, over all batches.
+    batches : int
+        At least 2; their scatter gives the sampling error.
+    kick_edges : tuple of float  [km/s]
+    bundles, iterations : int
+        Of the equilibrium, see `equilibrium.solve`.
+    eta : float
+        Step, see `orbits.step`.
+    stride : int
+        Steps between deposits.
+    grid : Grid
+    seed : int
+    """
+
+    tracers: int = 20_000
+    batches: int = 4
+    kick_edges: tuple = KICK_EDGES
+    bundles: int = 2048
+    iterations: int = 300
+    eta: float = 0.1
+    stride: int = 8
+    grid: Grid = Grid()
+    seed: int = 1
+
+    def __post_init__(self):
+        edges = np.asarray(self.kick_edges, dtype=float)
+        if edges.ndim != 1 or edges.size < 2 or edges[0] < 0 or np.any(np.diff(edges) <= 0):
+            raise InputError("kick_edges: two or more rising speeds from 0 km/s up are needed")
+        for name, low in (("tracers", 256), ("batches", 2), ("bundles", 64), ("iterations", 0), ("stride", 1)):
+            value = getattr(self, name)
+            if not isinstance(value, (int, np.integer)) or value < low:
+                raise InputError(f"{name}: {value!r} given, a whole number of at least {low} is needed")
+        step(self.eta)
+
+
+def synthesize(galaxy, potential, settings=None, *, jobs=1, executor=None, progress=None, checkpoint=None):
+    """Make the kick-resolved fields of a Galaxy.
+
+    Parameters
+    ----------
+    galaxy : Galaxy
+        Its components of stars; those of uniform density are left out.
+    potential : Potential
+        Of the whole Galaxy. Members marked so are left out of the orbits, except for the component they hold.
+    settings : Settings, optional
+    jobs, executor
+        See `parallel.run_map`.
+    progress : str, optional
+        Label of a progress bar.
+    checkpoint : str or Path, optional
+        Folder that keeps finished pieces; a run with the same inputs takes them up again.
+
+    Returns
+    -------
+    RemnantField
+
+    Raises
+    ------
+    InputError
+        The Galaxy's bar and the potential's stand at different angles, or nothing is left to synthesise.
+    """
+    settings = settings or Settings()
+    bar = galaxy.bar()
+    if bar is not None and abs((bar.angle - potential.bar_angle).to_value(u.deg)) > 1e-6:
+        raise InputError(
+            f"potential '{potential.name}': its bar stands at {potential.bar_angle:.4g}, the stars' bar of galaxy "
+            f"'{galaxy.name}' at {bar.angle:.4g}; change one of them"
+        )
+    components = [c for c in galaxy.components if c.stars and not isinstance(c.density, Uniform)]
+    if not components:
+        raise InputError(f"galaxy '{galaxy.name}': no component of stars with an end; nothing to synthesise")
+    pieces = _Pieces(checkpoint, _made(galaxy, potential, settings))
+    root = np.random.SeedSequence(settings.seed)
+    streams = root.spawn(len(components))
+    plans = []
+    for c, stream in zip(components, streams):
+        equilibrium = None
+        if not self_held(c):
+            rng = np.random.default_rng(stream.spawn(1)[0])
+            options = {"bundles": settings.bundles, "iterations": settings.iterations, "eta": settings.eta}
+            options.update(jobs=jobs, executor=executor)
+            equilibrium = solve(c, galaxy, potential.for_orbits(), rng, **options)
+        plans += [(c, equilibrium, i, s) for i, s in enumerate(stream.spawn(len(settings.kick_edges)))]
+
+    def run(plan):
+        component, equilibrium, number, stream = plan
+        key = f"{component.element}_{number}"
+        found = pieces.get(key)
+        return found or pieces.keep(key, _element(component, equilibrium, number, stream, galaxy, potential, settings))
+
+    done = run_map(run, plans, jobs, executor, progress)
+    shape = (len(components), len(settings.kick_edges))
+    stacked = {k: np.stack([d[k] for d in done]).reshape(*shape, *done[0][k].shape) for k in done[0]}
+    mismatch = {}
+    for i, c in enumerate(components):
+        equilibrium = plans[i * shape[1]][1]
+        held = {**equilibrium.mismatch, "effective_bundles": equilibrium.effective} if equilibrium else {}
+        regions = _regions(c, galaxy, potential, settings.grid, stacked["density"][i, 0])
+        mismatch[c.element] = {"equilibrium": held, "regions": regions}
+    return RemnantField(
+        components=tuple(c.element for c in components),
+        kick_edges=np.asarray(settings.kick_edges, dtype=float),
+        grid=settings.grid,
+        one=stacked["one"],
+        two=stacked["two"],
+        batches=stacked["batches"],
+        ends={k: stacked["ends"][..., i] for i, k in enumerate(("escaped", "beyond_20_kpc", "outside_grid"))},
+        heights=stacked["heights"],
+        height_edges=_HEIGHTS,
+        bar_angle=float(potential.bar_angle.to_value(u.rad)),
+        mismatch=mismatch,
+        provenance=pieces.made,
+    )
+
+
+def _element(component, equilibrium, number, stream, galaxy, potential, settings):
+    """Follow the tracers of one element; return stored arrays, shares and its density."""
+    grid, edges = settings.grid, settings.kick_edges
+    felt = potential if self_held(component) else potential.for_orbits()
+    kinds, pars = felt.packed
+    ages, ds = window(component), step(settings.eta)
+    bins = (_HEIGHTS.size - 3) / np.log(_HEIGHTS[-2] / _HEIGHTS[1])
+    ring = np.array([galaxy.R0 - _RING, galaxy.R0 + _RING, np.log(_HEIGHTS[1]), bins])
+
+    def follow(rng, n, split, sums, heights, ends):
+        if equilibrium is None:
+            rows = analytic(component, galaxy, felt, n, rng)
+        else:
+            rows = draw(equilibrium, n, rng)
+        if number > 0:
+            rows = kicked(rows, edges[number - 1], edges[number], rng)
+        # blocks of like energy take like numbers of steps
+        order = np.argsort(states_energies(felt, rows)[:, 0], kind="stable")
+        rows = np.ascontiguousarray(rows[order])
+        span = (ages.young, ages.old, ages.growth, settings.stride)
+        kernels.deposit_orbits(kinds, pars, felt.omega, ds, rows, *span, grid.pack(), split, ring, sums, heights, ends)
+
+    cells = (2, grid.n_R, grid.n_z, grid.n_phi, 10)
+    rngs = [np.random.default_rng(s) for s in stream.spawn(settings.batches + 1)]
+    sums, heights, ends = np.zeros(cells), np.zeros(_HEIGHTS.size - 1), np.zeros(4)
+    follow(rngs[0], max(64, settings.tracers // _PILOT), np.empty((0, grid.n_z, grid.n_phi)), sums, heights, ends)
+    split = split_speeds(sums[0], grid)
+    total, heights, ends = np.zeros(cells), np.zeros(_HEIGHTS.size - 1), np.zeros(4)
+    weights = np.empty((settings.batches, *cells[1:4]))
+    n = -(-settings.tracers // settings.batches)
+    for b, rng in enumerate(rngs[1:]):
+        sums[:] = 0.0
+        follow(rng, n, split, sums, heights, ends)
+        weights[b] = sums[..., 0].sum(axis=0)
+        total += sums
+    scale = settings.stride * ds / (ages.total * ends[0])
+    one, two = encode(total, scale, grid)
+    inside = total[..., 0].sum() * scale
+    return {
+        "one": one,
+        "two": two,
+        "batches": batch_ratios(weights),
+        "heights": heights * scale,
+        "ends": np.array([ends[1] / ends[0], 1 - ends[2] / ends[0], 1 - inside]),
+        "density": total[..., 0].sum(axis=0) * scale / grid.volumes(),
+    }
+
+
+#: regions in which the synthesised stars are held against the stars of the Galaxy set: R and |z| between [kpc]
+_REGIONS = {
+    "R<1,|z|<0.3": (0, 1, 0, 0.3),
+    "R<1,0.3<|z|<0.8": (0, 1, 0.3, 0.8),
+    "1<R<3,|z|<0.3": (1, 3, 0, 0.3),
+    "1<R<3,0.3<|z|<0.8": (1, 3, 0.3, 0.8),
+    "3<R<6,|z|<0.8": (3, 6, 0, 0.8),
+    "6<R<10,|z|<0.8": (6, 10, 0, 0.8),
+    "R<10,0.8<|z|<3": (0, 10, 0.8, 3),
+}
+
+
+def _regions(component, galaxy, potential, grid, density):
+    """Return by region the share of the unkicked tracers over the share of the stars."""
+    cells = cells_of(component, galaxy, potential)
+    # mass of each grid cell from 3 x 3 x 2 points in it
+    (R, z), sub = grid.edges(), (np.arange(3) + 0.5) / 3
+    R = (R[:-1, None] + np.diff(R)[:, None] * sub).ravel()
+    z = (z[:-1, None] + np.diff(z)[:, None] * sub).ravel()
+    phi = (np.arange(2 * grid.n_phi) + 0.5) * np.pi / (2 * grid.n_phi)
+    R, z, phi = np.meshgrid(R, z, phi, indexing="ij")
+    points = potential.from_bar_frame(np.stack([R * np.cos(phi), R * np.sin(phi), z], axis=-1).reshape(-1, 3))
+    rho = component.density.at(*points.T, galaxy.R0).reshape(R.shape) * R
+    volume = grid.volumes() / (18 * R.reshape(grid.n_R, 3, grid.n_z, 3, grid.n_phi, 2).mean(axis=(1, 3, 5)))
+    stars = rho.reshape(grid.n_R, 3, grid.n_z, 3, grid.n_phi, 2).sum(axis=(1, 3, 5)) * volume
+    found = density * grid.volumes()
+    stars = stars / cells.mass
+    R, z, _ = grid.centres()
+    out = {}
+    for name, (r0, r1, z0, z1) in _REGIONS.items():
+        here = ((R[:, None] >= r0) & (R[:, None] < r1) & (z >= z0) & (z < z1))[:, :, None]
+        wanted = float(np.sum(stars * here))
+        if wanted > 2e-3:
+            out[name] = float(np.sum(found * here)) / wanted
+    return out
+
+
+def _made(galaxy, potential, settings):
+    """Return what decides the result, as plain JSON values."""
+    numbers = {k: v for k, v in vars(settings).items() if k != "grid"}
+    return json.loads(
+        json.dumps(
+            {
+                "version": __version__,
+                "galaxy": galaxy.name,
+                "galaxy_numbers": hashlib.sha256(repr(galaxy.components).encode()).hexdigest(),
+                "potential": potential.name,
+                "potential_numbers": hashlib.sha256(repr(potential.members).encode()).hexdigest(),
+                "pattern_speed_kms_kpc": -potential.omega,
+                "references": [*galaxy.references, potential.reference],
+                "grid": vars(settings.grid),
+                **numbers,
+            }
+        )
+    )
+
+
+class _Pieces:
+    """Finished elements in a folder; without a folder nothing is kept."""
+
+    def __init__(self, folder, made):
+        self.made = made
+        self.folder = None
+        if folder is not None:
+            self.folder = Path(folder) / hashlib.sha256(json.dumps(made, sort_keys=True).encode()).hexdigest()[:16]
+            try:
+                self.folder.mkdir(parents=True, exist_ok=True)
+            except OSError as error:
+                raise DataFileError(f"checkpoint: folder '{self.folder}' cannot be made ({error.strerror})") from None
+
+    def get(self, key):
+        path = self.folder / f"{key}.npz" if self.folder else None
+        if path is None or not path.is_file():
+            return None
+        try:
+            with np.load(path) as kept:
+                return {k: kept[k] for k in kept.files}
+        except (OSError, ValueError, EOFError):
+            return None  # a damaged piece is made again
+
+    def keep(self, key, arrays):
+        if self.folder is not None:
+            with whole_file(self.folder / f"{key}.npz") as temporary:
+                np.savez_compressed(temporary, **arrays)
+        return arrays
