@@ -31,14 +31,18 @@ def data_folder():
     given = os.environ.get("LENSRATE_DATA")
     if given:
         if not Path(given).is_dir():
-            raise DataFileError(f"$LENSRATE_DATA: no folder '{given}'; unset it or point it at a copy of lensrate's data")
+            raise DataFileError(
+                f"$LENSRATE_DATA: no folder '{given}'; unset it or point it at a copy of lensrate's data"
+            )
         return Path(given)
     if (package / "_data").is_dir():
         return package / "_data"
     project = package.parent / "pyproject.toml"
     if project.is_file() and 'name = "lensrate"' in project.read_text() and (package.parent / "data").is_dir():
         return package.parent / "data"
-    raise DataFileError(f"data: not in $LENSRATE_DATA, {package / '_data'} or {package.parent / 'data'}; reinstall lensrate")
+    raise DataFileError(
+        f"data: not in $LENSRATE_DATA, {package / '_data'} or {package.parent / 'data'}; reinstall lensrate"
+    )
 
 
 @cache
@@ -72,7 +76,10 @@ def find(relative):
     if listed is None:
         raise DataFileError(f"{relative}: not listed in SHA256SUMS of {data_folder()}")
     if hashlib.sha256(path.read_bytes()).hexdigest() != listed:
-        raise DataFileError(f"{relative}: its sha256 differs from the shipped one; reinstall lensrate, or keep your own copy under another name")
+        raise DataFileError(
+            f"{relative}: its sha256 differs from the shipped one; reinstall lensrate, "
+            "or keep your own copy under another name"
+        )
     return path
 
 

@@ -93,7 +93,9 @@ def whole_file(path):
         os.replace(temporary, path)
         temporary = None
     except OSError as error:
-        raise DataFileError(f"{path}: could not be written ({error.strerror or error}); nothing was left there") from error
+        raise DataFileError(
+            f"{path}: could not be written ({error.strerror or error}); nothing was left there"
+        ) from error
     finally:
         if temporary is not None:
             temporary.unlink(missing_ok=True)
@@ -224,12 +226,16 @@ def read_rows(path, what="table"):
     try:
         with warnings.catch_warnings():
             warnings.simplefilter("ignore")
-            table = Table.read(path, format=formats.get(ending, "ascii"), **({"comment": "#"} if ending == ".csv" else {}))
+            table = Table.read(
+                path, format=formats.get(ending, "ascii"), **({"comment": "#"} if ending == ".csv" else {})
+            )
     except InputError:
         raise
     except Exception as error:  # astropy's readers raise many kinds; all mean that the file is not what it should be
         reason = " ".join(str(error).split())[:160]
-        raise InputError(f"{what}: '{path}' cannot be read as {ending or 'a table'} ({type(error).__name__}: {reason})") from None
+        raise InputError(
+            f"{what}: '{path}' cannot be read as {ending or 'a table'} ({type(error).__name__}: {reason})"
+        ) from None
     if len(table) == 0:
         raise InputError(f"{what}: '{path}' has no rows")
     return table

@@ -57,7 +57,9 @@ class Params:
         -------
         ndarray, shape (n,)
         """
-        return np.array([getattr(self, f.name).to_value(f.metadata["unit"]) for f in fields(self) if "unit" in f.metadata])
+        return np.array(
+            [getattr(self, f.name).to_value(f.metadata["unit"]) for f in fields(self) if "unit" in f.metadata]
+        )
 
     @classmethod
     def from_table(cls, table, where):
@@ -83,7 +85,10 @@ class Params:
         values = {}
         for key, entry in table.items():
             if key not in known:
-                raise InputError(f"{where}.{key}: not a parameter of {cls.__name__}{did_you_mean(key, known)} (known: {', '.join(known)})")
+                raise InputError(
+                    f"{where}.{key}: not a parameter of {cls.__name__}{did_you_mean(key, known)} "
+                    f"(known: {', '.join(known)})"
+                )
             values[key] = _quantity(entry, f"{where}.{key}", known[key].metadata["unit"])
         missing = [f for f, d in known.items() if f not in values and d.default is d.default_factory]
         if missing:

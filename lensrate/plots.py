@@ -23,7 +23,14 @@ _COLOURS = {
     "black_hole": "#000000",
     "all": "#7F7F7F",
 }
-_STYLES = {"star": "-", "brown_dwarf": (0, (5, 1)), "white_dwarf": (0, (6, 1.5, 1, 1.5)), "neutron_star": (0, (1.2, 1)), "black_hole": "--", "all": "-"}
+_STYLES = {
+    "star": "-",
+    "brown_dwarf": (0, (5, 1)),
+    "white_dwarf": (0, (6, 1.5, 1, 1.5)),
+    "neutron_star": (0, (1.2, 1)),
+    "black_hole": "--",
+    "all": "-",
+}
 _OTHERS = ("#009E73", "#0072B2", "#D55E00", "#F0E442")
 _COMPONENTS = ("#0072B2", "#56B4E9", "#D55E00", "#E69F00", "#009E73", "#CC79A7")
 _KINDS = ("overview", "timescales", "stacked", "depth", "pi_E", "theta_E")
@@ -74,7 +81,11 @@ def timescales(result, ax=None, **line):
     for name, pdf in zip(result.classes, result.rate_per_ln_t_E):
         if not pdf.max() > 0:
             continue
-        ax.plot(result.t_E, pdf, **{"color": _colour(name, own), "ls": _STYLES.get(name, "-"), "lw": 1.6, "label": _label(name), **line})
+        ax.plot(
+            result.t_E,
+            pdf,
+            **{"color": _colour(name, own), "ls": _STYLES.get(name, "-"), "lw": 1.6, "label": _label(name), **line},
+        )
         own += name not in _COLOURS
     _timescale_axis(ax, result, total)
     ax.set_yscale("log")
@@ -109,7 +120,13 @@ def stacked(result, ax=None, **fill):
         name, pdf = result.classes[c], result.rate_per_ln_t_E[c]
         if not pdf.max() > 0:
             continue
-        style = {"facecolor": _colour(name, own), "edgecolor": "white", "lw": 0.3, "hatch": hatches.get(name), "label": _label(name)}
+        style = {
+            "facecolor": _colour(name, own),
+            "edgecolor": "white",
+            "lw": 0.3,
+            "hatch": hatches.get(name),
+            "label": _label(name),
+        }
         ax.fill_between(result.t_E, base, base + pdf, **{**style, **fill})
         base, own = base + pdf, own + (name not in _COLOURS)
     ax.plot(result.t_E, base, color="black", lw=0.8)

@@ -11,7 +11,17 @@ import numpy as np
 
 from .errors import InputError
 
-__all__ = ["DAYS_PER_YEAR", "FOUR_G_C2", "G", "KAPPA", "KMS_PER_MASYR_KPC", "KPC_PER_MYR", "MAS", "RE2_PER_M_D", "strip"]
+__all__ = [
+    "DAYS_PER_YEAR",
+    "FOUR_G_C2",
+    "KAPPA",
+    "KMS_PER_MASYR_KPC",
+    "KPC_PER_MYR",
+    "MAS",
+    "RE2_PER_M_D",
+    "G",
+    "strip",
+]
 
 #: gravitational constant [kpc (km/s)^2 / Msun], from the nominal solar mass parameter
 G = float((const.GM_sun / u.Msun).to_value(u.kpc * (u.km / u.s) ** 2 / u.Msun))

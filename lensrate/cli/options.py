@@ -11,11 +11,13 @@ def assumptions(command):
     """Add the options that choose or change a scenario."""
     for option in reversed(
         [
-            click.option("--scenario", "scenario_name", metavar="NAME|FILE", default="default", show_default=True, help="Named scenario or TOML file."),
-            click.option("--kicks", metavar="LAW", help="Kick law of neutron stars: a published set, maxwell:265, none, ..."),
+            click.option("--scenario", "scenario_name", metavar="NAME|FILE", default="default", show_default=True,
+                         help="Named scenario or TOML file."),
+            click.option("--kicks", metavar="LAW", help="Kick law of neutron stars: a published set, maxwell:265, none."),
             click.option("--bh-kicks", metavar="LAW", help="Kick law of black holes: same, momentum, or a law."),
             click.option("--sources", metavar="RULE", help="Source rule: limit:I=21, clump, clump:all, distance:8.0."),
-            click.option("--extinction", metavar="BAND=MAG", multiple=True, help="The field's measured extinction, e.g. I=1.25; may be repeated."),
+            click.option("--extinction", metavar="BAND=MAG", multiple=True,
+                         help="The field's measured extinction, e.g. I=1.25; may be repeated."),
             click.option("--u-0-limit", type=float, metavar="U", help="Largest impact parameter in Einstein radii."),
         ]
     ):  # fmt: skip
@@ -47,7 +49,9 @@ def parse_extinction(items):
         except ValueError:
             equals = ""
         if not equals:
-            raise InputError(f"--extinction: '{item}' is not understood; write a band and magnitudes, for example I=1.25")
+            raise InputError(
+                f"--extinction: '{item}' is not understood; write a band and magnitudes, for example I=1.25"
+            )
     return out
 
 

@@ -12,16 +12,35 @@ _PICTURES = ("overview", "timescales", "stacked", "depth", "pi_E", "theta_E")
 @click.command(cls=Command)
 @click.argument("lon", metavar="[L B]", required=False)
 @click.argument("lat", metavar="", required=False)
-@click.option("--table", "table_file", metavar="FILE", help="Many sightlines: columns l, b (or ra, dec), optionally A_I etc.")
+@click.option(
+    "--table", "table_file", metavar="FILE", help="Many sightlines: columns l, b (or ra, dec), optionally A_I etc."
+)
 @click.option("--icrs", is_flag=True, help="Take RA Dec (degrees, or hh:mm:ss dd:mm:ss) instead of l b.")
 @assumptions
-@click.option("--t-E-range", "t_E_range", type=float, nargs=2, metavar="LOW HIGH", help="Limit what is reported to these timescales in days.")
-@click.option("--by", type=click.Choice(["class", "component", "element"]), default="class", show_default=True, help="Rows of the table.")
+@click.option(
+    "--t-E-range",
+    "t_E_range",
+    type=float,
+    nargs=2,
+    metavar="LOW HIGH",
+    help="Limit what is reported to these timescales in days.",
+)
+@click.option(
+    "--by",
+    type=click.Choice(["class", "component", "element"]),
+    default="class",
+    show_default=True,
+    help="Rows of the table.",
+)
 @click.option("--plot", metavar="FILE", help="Draw a picture: .png .pdf .svg.")
-@click.option("--picture", type=click.Choice(_PICTURES), default="overview", show_default=True, help="What --plot draws.")
+@click.option(
+    "--picture", type=click.Choice(_PICTURES), default="overview", show_default=True, help="What --plot draws."
+)
 @click.option("--jobs", type=click.IntRange(1, 256), default=1, show_default=True, help="Threads for --table.")
 @output
-def sightline(lon, lat, table_file, icrs, t_E_range, by, plot, picture, jobs, save, as_json, overwrite, quiet, **choices):  # fmt: skip
+def sightline(
+    lon, lat, table_file, icrs, t_E_range, by, plot, picture, jobs, save, as_json, overwrite, quiet, **choices
+):  # fmt: skip
     """Optical depth, event rate and timescales by lens class toward L B (degrees).
 
     \b
@@ -125,20 +144,24 @@ def report(result, by):
     if result.mass_note:
         head.append(wrap(f"mass of {result.mass_note}"))
     if by == "class":
-        titles = ["lens", "tau [1e-6]", "rate [1e-6/yr]", "mean t_E [d]", "median t_E [d]", "share of events", "field"]
+        titles = ["lens", "tau [1e-6]", "rate [1e-6/yr]", "mean t_E [d]", "median t_E [d]", "share", "field"]
         rows = []
         for name, lens in result.lenses.items():
             label = LABELS.get(name, name.replace("_", " "))
-            rows.append(
-                [label, number(lens.optical_depth * 1e6), number(lens.rate * 1e6), number(lens.mean_t_E), number(lens.median_t_E),
-                 f"{lens.share_of_events:.4f}" if lens.share_of_events == lens.share_of_events else "-", lens.kinematics]
-            )  # fmt: skip
+            share = f"{lens.share_of_events:.4f}" if lens.share_of_events == lens.share_of_events else "-"
+            numbers = (lens.optical_depth * 1e6, lens.rate * 1e6, lens.mean_t_E, lens.median_t_E)
+            rows.append([label, *map(number, numbers), share, lens.kinematics])
     else:
         parts = result.components if by == "component" else result.elements
         total = result.lenses["all"]
         titles = [by, "tau [1e-6]", "rate [1e-6/yr]", "share of events"]
         rows = [
-            [n, number(p.optical_depth * 1e6), number(p.rate * 1e6), f"{p.rate / total.rate:.4f}" if total.rate > 0 else "-"]
+            [
+                n,
+                number(p.optical_depth * 1e6),
+                number(p.rate * 1e6),
+                f"{p.rate / total.rate:.4f}" if total.rate > 0 else "-",
+            ]
             for n, p in parts.items()
         ]
         rows.append(["all", number(total.optical_depth * 1e6), number(total.rate * 1e6), "1.0000"])
@@ -163,10 +186,13 @@ def _many(table_file, icrs, scenario, t_E_range, jobs, save, as_json, overwrite,
         click.echo(dump_json(table.meta["rows"]))
         return
     meta = table.meta
-    click.echo(f"lensrate {meta['version']}   {len(table)} sightlines   scenario {safe(meta['scenario'])} ({meta['scenario_hash']})")
+    click.echo(
+        f"lensrate {meta['version']}   {len(table)} sightlines   "
+        f"scenario {safe(meta['scenario'])} ({meta['scenario_hash']})"
+    )
     click.echo(meta["header"])
     click.echo("")
-    titles = ["l", "b", "tau [1e-6]", "rate [1e-6/yr]", "mean t_E [d]", "NS share", "BH share", "D_S [kpc]", "per arcmin2"]
+    titles = ["l", "b", "tau [1e-6]", "rate [1e-6/yr]", "<t_E> [d]", "NS share", "BH share", "D_S [kpc]", "per arcmin2"]
     body = []
     for r in table.meta["rows"]:
         lens = r["lenses"]

@@ -43,9 +43,7 @@ def verify(group, as_json, save, overwrite, quiet):
 def _print(rows):
     for name in dict.fromkeys(r.group for r in rows):
         group = [r for r in rows if r.group == name]
-        body = [
-            [_short(r.quantity), number(r.published, 5), number(r.computed, 5), r.unit, r.verdict] for r in group
-        ]
+        body = [[_short(r.quantity), number(r.published, 5), number(r.computed, 5), r.unit, r.verdict] for r in group]
         head, *lines = columns(["  quantity", "published", "computed", "unit", "verdict"], body).splitlines()
         click.echo(f"\n{name}\n{head}")
         source = None

@@ -11,7 +11,18 @@ from ..kernels import density as kernels
 from ..params import Params, param
 from ..units import G
 
-__all__ = ["BAR_PROFILES", "DENSITIES", "Bar", "CoredHalo", "Density", "ExpDisc", "IsothermalDisc", "PowerHalo", "SechExpDisc", "Uniform"]
+__all__ = [
+    "BAR_PROFILES",
+    "DENSITIES",
+    "Bar",
+    "CoredHalo",
+    "Density",
+    "ExpDisc",
+    "IsothermalDisc",
+    "PowerHalo",
+    "SechExpDisc",
+    "Uniform",
+]
 
 BAR_PROFILES = {"exp": 0.0, "gauss": 1.0, "sech2": 2.0}
 _INT_EXP_ELLIPSOID = 8.0 * np.pi  # int exp(-m) d^3m over ellipsoidal surfaces
@@ -56,7 +67,9 @@ class Density(Params):
         ndarray, shape (n,)
             Density [Msun/kpc^3].
         """
-        x, y, z = (np.ascontiguousarray(np.broadcast_to(a, np.broadcast(x, y, z).shape), dtype=float) for a in (x, y, z))
+        x, y, z = (
+            np.ascontiguousarray(np.broadcast_to(a, np.broadcast(x, y, z).shape), dtype=float) for a in (x, y, z)
+        )
         out = np.empty(x.size)
         kernels.density_many(self.kind, self.pack(R0), x.ravel(), y.ravel(), z.ravel(), out)
         return out.reshape(x.shape)
@@ -111,7 +124,11 @@ class IsothermalDisc(Density):
 
     def _vertical(self):
         s2 = self.sigma_W.value**2
-        return 2 * np.pi * G * self.sheet_column.value / s2, self.sheet_depth.value, 2 * np.pi * G * self.rho_dark.value / s2
+        return (
+            2 * np.pi * G * self.sheet_column.value / s2,
+            self.sheet_depth.value,
+            2 * np.pi * G * self.rho_dark.value / s2,
+        )
 
     def half_thickness(self):
         """Return column / (2 density in the plane), kpc."""

@@ -61,7 +61,15 @@ class DiscMotion(Kinematics):
         s = [q.value for q in (self.sigma_R, self.sigma_phi, self.sigma_z, self.fall, self.R_frozen)]
         h_R = getattr(density, "h_R", None)
         R_flat = getattr(density, "R_flat", None)
-        return np.array([*s, R0, self.drift.value, h_R.value if h_R is not None else 1e9, R_flat.value if R_flat is not None else 0.0])
+        return np.array(
+            [
+                *s,
+                R0,
+                self.drift.value,
+                h_R.value if h_R is not None else 1e9,
+                R_flat.value if R_flat is not None else 0.0,
+            ]
+        )
 
 
 @dataclass(frozen=True)

@@ -101,7 +101,18 @@ class Galaxy:
         InputError
             See `read`.
         """
-        known = ("name", "title", "references", "notes", "retrieved", "potential", "lens_class", "sun", "rotation", "component")
+        known = (
+            "name",
+            "title",
+            "references",
+            "notes",
+            "retrieved",
+            "potential",
+            "lens_class",
+            "sun",
+            "rotation",
+            "component",
+        )
         for key in table:
             if key not in known:
                 raise InputError(f"{where}: unknown key '{key}'{did_you_mean(key, known)} (known: {', '.join(known)})")
@@ -233,7 +244,11 @@ def _record(table, kinds, where):
     record = kinds[kind].from_table(rest, where) if not profile else _bar(rest, profile, where)
     for key, value in vars(record).items():
         # lengths, masses and dispersions are never negative; drift below zero is a code
-        if isinstance(value, u.Quantity) and value.value < 0 and key not in ("drift", "angle", "v_rot", "fall", "fall_R", "fall_z"):
+        if (
+            isinstance(value, u.Quantity)
+            and value.value < 0
+            and key not in ("drift", "angle", "v_rot", "fall", "fall_R", "fall_z")
+        ):
             raise InputError(f"{where}.{key}: {value} given, must not be negative")
     return record
 
@@ -244,7 +259,20 @@ def _bar(rest, profile, where):
 
 
 def _component(row, where):
-    known = ("name", "element", "density", "kinematics", "imf", "age", "efold", "counts", "stars", "sources", "bulge", "group")
+    known = (
+        "name",
+        "element",
+        "density",
+        "kinematics",
+        "imf",
+        "age",
+        "efold",
+        "counts",
+        "stars",
+        "sources",
+        "bulge",
+        "group",
+    )
     if not isinstance(row, dict):
         raise InputError(f"{where}: must be a table")
     for key in row:
@@ -254,7 +282,12 @@ def _component(row, where):
         if key not in row:
             raise InputError(f"{where}: needs '{key}'")
     age = row.get("age", [10.0, 10.0])
-    if not (isinstance(age, list) and len(age) == 2 and all(isinstance(a, (int, float)) for a in age) and 0 <= age[0] <= age[1] <= 14):
+    if not (
+        isinstance(age, list)
+        and len(age) == 2
+        and all(isinstance(a, (int, float)) for a in age)
+        and 0 <= age[0] <= age[1] <= 14
+    ):
         raise InputError(f"{where}.age: {age!r} given, must be [youngest, oldest] in Gyr between 0 and 14")
     one_of(f"{where}.counts", row.get("counts", "total"), COUNTS)
     return Component(

@@ -57,14 +57,19 @@ def moments(outer, D_S, src, D_L, w_L, lens, element, four_g_c2, kappa, mas, n_d
                 if w <= 0.0:
                     continue
                 tau[e, s] += g_tau * w * n
-                g = g_rate * w * n * mean_speed(
-                    lens[1, r, p] - src[1, s, j],
-                    lens[2, r, p] - src[2, s, j],
-                    lens[3, r, p] + src[3, s, j],
-                    lens[4, r, p] + src[4, s, j],
-                    lens[5, r, p] + src[5, s, j],
-                    cos,
-                    sin,
+                g = (
+                    g_rate
+                    * w
+                    * n
+                    * mean_speed(
+                        lens[1, r, p] - src[1, s, j],
+                        lens[2, r, p] - src[2, s, j],
+                        lens[3, r, p] + src[3, s, j],
+                        lens[4, r, p] + src[4, s, j],
+                        lens[5, r, p] + src[5, s, j],
+                        cos,
+                        sin,
+                    )
                 )
                 gamma[e, s] += g
                 distance[e] += g * d
@@ -108,7 +113,7 @@ def _add_directions(weight, ml, mb, ixx, ixy, iyy, log_norm, first, step, n_dir,
 
 @kernel
 def _gaussian(lens, src, r, s, p):
-    """Mean, inverse covariance, log of normalisation, smallest and largest dispersion of lens row r minus source row s."""
+    """Mean, inverse covariance, log of norm, smallest and largest dispersion of lens row r minus source row s."""
     ml = lens[1, r, p] - src[1, s, p]
     mb = lens[2, r, p] - src[2, s, p]
     cxx = lens[3, r, p] + src[3, s, p]
@@ -197,7 +202,8 @@ def event_rate_density(pi, row, cell, geometry, src, lens, row_weight, mu, n_phi
 
     cell (N,): source-distance cell of each node, negative to skip; row_weight (L,): factor of each lens row
     (kick law and history enter here, linearly). Direction cells are [2 pi j / n_phi, 2 pi (j+1) / n_phi), the angle
-    counted from +l toward +b. Nodes below w_cut of the largest weight are dropped. Adds to R (P, C, n_phi, K) float32: rate per ln pi_rel, ln mu_rel, integrated over cells.
+    counted from +l toward +b. Nodes below w_cut of the largest weight are dropped. Adds to R (P, C, n_phi, K) float32:
+    rate per ln pi_rel, ln mu_rel, integrated over cells.
     """
     K = mu.size
     tmp = np.empty((n_phi, K))

@@ -184,7 +184,11 @@ class Quantiles:
         """Return the mean t_E [d] between two timescales, NaN where there are no events."""
         a, b = self._range(low, high)
         rate = self.rate(low, high)
-        return float((np.interp(b, self._x, self._cum_t) - np.interp(a, self._x, self._cum_t)) / rate) if rate > 0 else np.nan
+        return (
+            float((np.interp(b, self._x, self._cum_t) - np.interp(a, self._x, self._cum_t)) / rate)
+            if rate > 0
+            else np.nan
+        )
 
     def quantile(self, q, low=None, high=None):
         """Return t_E [d] below which the share q of the events lies, NaN where there are no events."""

@@ -39,7 +39,9 @@ def directions_of(table, icrs=False):
     values = []
     for name in wanted:
         if name not in table.colnames:
-            raise InputError(f"table: no column '{name}'{did_you_mean(name, table.colnames)} (columns: {', '.join(table.colnames)})")
+            raise InputError(
+                f"table: no column '{name}'{did_you_mean(name, table.colnames)} (columns: {', '.join(table.colnames)})"
+            )
         values.append(_column(table, name, u.deg))
     limit = 90.0
     for i, value in enumerate(values[1]):
@@ -109,7 +111,10 @@ def sightlines(l, b, scenario="default", *, extinction=None, t_E_range=None, job
     check_range("b", b.to_value(u.deg), "deg", -90.0, 90.0)
     extinction = extinction if extinction is not None else [{}] * l.size
     if not (l.size == b.size == len(extinction)):
-        raise InputError(f"sightlines: {l.size} longitudes, {b.size} latitudes and {len(extinction)} extinctions given; equal numbers are needed")
+        raise InputError(
+            f"sightlines: {l.size} longitudes, {b.size} latitudes, {len(extinction)} extinctions given; "
+            "equal numbers are needed"
+        )
     resolve(scenario)
 
     def one(i):

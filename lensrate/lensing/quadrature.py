@@ -26,7 +26,9 @@ class Numerics:
     directions: float = field(default=3.0, metadata={"range": (1.0, 12.0)})  # density of directions on a circle of mu
     half_circle: int = field(default=16, metadata={"range": (8, 64)})  # directions of the mean speed
     q_max: float = field(default=18.0, metadata={"range": (8.0, 60.0)})  # exponents beyond are dropped
-    weight_cut: float = field(default=1e-6, metadata={"range": (0.0, 1e-3)})  # nodes lighter than this share of the peak
+    weight_cut: float = field(
+        default=1e-6, metadata={"range": (0.0, 1e-3)}
+    )  # nodes lighter than this share of the peak
     D_max: float = field(default=100.0, metadata={"range": (1.0, 500.0)})  # kpc, where the stars of the model end
     merge_sources: bool = True  # moment-match source rows of one group for the rate density
 
@@ -43,8 +45,14 @@ class Numerics:
     def halved(self):
         """Return numerics with every step halved, for convergence tests."""
         return Numerics(
-            self.step_dex / 2, 2 * self.nodes, 2 * self.directions, 2 * self.half_circle, 2 * self.q_max,
-            self.weight_cut / 100, self.D_max, self.merge_sources,
+            self.step_dex / 2,
+            2 * self.nodes,
+            2 * self.directions,
+            2 * self.half_circle,
+            2 * self.q_max,
+            self.weight_cut / 100,
+            self.D_max,
+            self.merge_sources,
         )
 
 

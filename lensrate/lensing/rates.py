@@ -125,8 +125,8 @@ def moments(ready):
     E, S = lens.shape[1], ready.src.shape[1]
     tau, gamma, distance = np.zeros((E, S)), np.zeros((E, S)), np.zeros(E)
     kernels.moments(
-        outer, ready.D_S, ready.src, D_L, w_L, lens, np.arange(E), FOUR_G_C2, KAPPA, MAS, int(ready.numerics.half_circle),
-        tau, gamma, distance,
+        outer, ready.D_S, ready.src, D_L, w_L, lens, np.arange(E), FOUR_G_C2, KAPPA, MAS,
+        int(ready.numerics.half_circle), tau, gamma, distance,
     )  # fmt: skip
     total = gamma.sum(axis=1)
     return tau, gamma, np.divide(distance, total, out=np.full(E, np.nan), where=total > 0)

@@ -1,6 +1,5 @@
 """One sightline, end to end: the function `sightline` and the record it returns."""
 
-import hashlib
 from dataclasses import dataclass, field, replace
 from functools import cached_property
 
@@ -9,17 +8,13 @@ import numpy as np
 
 from .._version import __version__
 from ..errors import ConvergenceError, InputError, one_of
-from ..remnants.classes import CLASSES
 from ..scenario import Scenario, resolve
-from ..units import check_range, strip
+from ..units import DAYS_PER_YEAR, FOUR_G_C2, check_range, strip
 from . import distributions, rates
 from .quadrature import Numerics
 
 __all__ = ["Lens", "Sightline", "sightline"]
 
-_KINEMATICS_NOTE = (
-    "white dwarfs ride on the stars' field: their kick of under 1 km/s (El-Badry & Rix 2018) is neglected"
-)
 _UNKICKED_NOTE = "neutron stars and black holes are unkicked: they ride on the stellar field of their birth component"
 
 
@@ -183,7 +178,8 @@ class Sightline:
         table["rate"] = np.array([r.rate for r in rows.values()]) / u.yr
         if by == "class":
             table["rate_standard_error"] = (
-                np.array([np.nan if r.rate_standard_error is None else r.rate_standard_error for r in rows.values()]) / u.yr
+                np.array([np.nan if r.rate_standard_error is None else r.rate_standard_error for r in rows.values()])
+                / u.yr
             )
             table["mean_t_E"] = np.array([r.mean_t_E for r in rows.values()]) * u.day
             table["median_t_E"] = np.array([r.median_t_E for r in rows.values()]) * u.day
@@ -197,7 +193,7 @@ class Sightline:
             "mean_t_E": "mean Einstein radius crossing time",
             "median_t_E": "median Einstein radius crossing time",
             "share_of_events": "of the rate of all classes",
-            "kinematics": "stellar, kicked or unkicked",
+            "kinematics": "stellar, kicked, unkicked, or mixed",
         }
         for name in table.colnames:
             table[name].info.description = described[name]
@@ -219,7 +215,9 @@ class Sightline:
         table = self.to_table(by)
         import pandas as pd
 
-        return pd.DataFrame({c: getattr(table[c], "value", np.asarray(table[c])) for c in table.colnames}).set_index("lens")
+        return pd.DataFrame({c: getattr(table[c], "value", np.asarray(table[c])) for c in table.colnames}).set_index(
+            "lens"
+        )
 
     def timescales(self):
         """Return the timescale distribution: t_E and events per source, year and unit ln t_E by class.
@@ -292,7 +290,8 @@ class Sightline:
 
     def _repr_html_(self):
         l, b = self.l.to_value(u.deg), self.b.to_value(u.deg)
-        head = f"<p>lensrate: l = {l:g}, b = {b:g} deg, scenario {self.scenario.name} ({self.scenario.hash})<br>{self.header()}</p>"
+        where = f"l = {l:g}, b = {b:g} deg, scenario {self.scenario.name} ({self.scenario.hash})"
+        head = f"<p>lensrate: {where}<br>{self.header()}</p>"
         return head + self.to_table()._repr_html_()
 
 
@@ -358,7 +357,9 @@ def _t_E_range(given):
     try:
         low, high = given
     except (TypeError, ValueError):
-        raise InputError(f"t_E_range: {given!r} given, two timescales are needed, for example (0.5, 300) * u.day") from None
+        raise InputError(
+            f"t_E_range: {given!r} given, two timescales are needed, for example (0.5, 300) * u.day"
+        ) from None
     low, high = (strip("t_E_range", q, u.day, low=0.0, shape=()) for q in (low, high))
     if not low < high:
         raise InputError(f"t_E_range: {low:g} to {high:g} d given, the first must be below the second")
@@ -378,14 +379,16 @@ def _assemble(l, b, scenario, ready, tau_e, gamma_e, grid, T, limits):
     mass = np.array([[0.0 if s is None else s.moment(1.0) for s in row] for row in spectra])
     tau, gamma = mass * tau_e, u_0 * root * gamma_e  # (C, E)
     pdf = u_0 * pdf
-    if not (np.all(np.isfinite(tau)) and np.all(np.isfinite(gamma)) and np.all(gamma >= 0) and np.all(np.isfinite(pdf))):
-        raise ConvergenceError(f"sightline l = {l:g}, b = {b:g}: a rate is negative or not finite; check the scenario's numbers")
+    if not (
+        np.all(np.isfinite(tau)) and np.all(np.isfinite(gamma)) and np.all(gamma >= 0) and np.all(np.isfinite(pdf))
+    ):
+        raise ConvergenceError(
+            f"sightline l = {l:g}, b = {b:g}: a rate is negative or not finite; check the scenario's numbers"
+        )
     total_pdf = pdf.sum(axis=(0, 1))
     quadrature = abs(np.sum(pdf) * grid.h / gamma.sum() - 1.0) if gamma.sum() > 0 else 0.0
-    tau_c, gamma_c, cut_c, mean_c, median_c = _by_class(t, pdf.sum(axis=1), tau.sum(axis=1), gamma.sum(axis=1), limits, u_0)
-    tau_a, gamma_a, _, mean_a, median_a = _by_class(
-        t, total_pdf[None], tau.sum()[None], gamma.sum()[None], limits, u_0
-    )
+    tau_c, gamma_c, mean_c, median_c = _by_class(t, pdf.sum(axis=1), tau.sum(axis=1), gamma.sum(axis=1), limits, u_0)
+    *_, mean_a, median_a = _by_class(t, total_pdf[None], [tau.sum()], [gamma.sum()], limits, u_0)
     everything = gamma_c.sum()
     lenses = {}
     for c, name in enumerate(model.classes):
@@ -393,7 +396,8 @@ def _assemble(l, b, scenario, ready, tau_e, gamma_e, grid, T, limits):
         kind = "unkicked" if name in ("neutron_star", "black_hole") else "stellar"
         lenses[name] = Lens(tau_c[c], gamma_c[c], mean_c[c], median_c[c], share, None, kind)
     kinds = {lens.kinematics for lens in lenses.values() if lens.rate > 0}
-    lenses["all"] = Lens(tau_c.sum(), everything, mean_a[0], median_a[0], 1.0, None, " and ".join(sorted(kinds)) or "stellar")
+    kind = kinds.pop() if len(kinds) == 1 else "mixed"
+    lenses["all"] = Lens(tau_c.sum(), everything, mean_a[0], median_a[0], 1.0 if everything > 0 else np.nan, None, kind)
     elements = {}
     for e, component in enumerate(model.galaxy.components):
         if limits is None:
@@ -428,23 +432,25 @@ def _assemble(l, b, scenario, ready, tau_e, gamma_e, grid, T, limits):
 
 
 def _by_class(t, pdf, tau, gamma, limits, u_0):
-    """Optical depth, rate, their cut factor, mean and median t_E of each row, limited to a range of t_E if asked."""
+    """Optical depth, rate, mean and median t_E of each row, limited to a range of t_E if asked."""
     n = len(pdf)
     tau, gamma = np.array(tau, dtype=float), np.array(gamma, dtype=float)
-    cut, mean, median = np.ones(n), np.full(n, np.nan), np.full(n, np.nan)
+    mean, median = np.full(n, np.nan), np.full(n, np.nan)
     for c in range(n):
         if not gamma[c] > 0:
             continue
         q = distributions.Quantiles(t, pdf[c])
         if limits is None:
-            mean[c] = 2.0 / np.pi * tau[c] * u_0 / gamma[c] * 365.25
+            mean[c] = 2.0 / np.pi * tau[c] * u_0 / gamma[c] * DAYS_PER_YEAR
             median[c] = q.quantile(0.5)
             continue
-        cut[c] = q.rate(*limits) / q.rate()
+        whole = q.rate()
+        kept = q.rate(*limits) / whole if whole > 0 else 0.0
         mean[c], median[c] = q.mean(*limits), q.quantile(0.5, *limits)
-        tau[c] *= cut[c] * mean[c] / q.mean() if cut[c] > 0 else 0.0
-        gamma[c] *= cut[c]
-    return tau, gamma, cut, mean, median
+        # an event's share of the optical depth goes with its duration
+        tau[c] *= kept * mean[c] / q.mean() if kept > 0 else 0.0
+        gamma[c] *= kept
+    return tau, gamma, mean, median
 
 
 def _disc_share(model, shares):
@@ -458,8 +464,6 @@ def _along(result, n=400):
     ready = result._ready
     D = np.linspace(0, max(ready.edges[-1] if ready.sources.fixed_distance else 12.0, 1e-3), n + 1)[1:]
     lens = ready.model.galaxy.profile(ready.line, D)[0]
-    from ..units import FOUR_G_C2
-
     w, D_S = ready.src[0].sum(axis=0), ready.D_S
     inverse = np.array([np.sum(w[D_S > d] * (1.0 / d - 1.0 / D_S[D_S > d])) for d in D])
     geometry = np.pi * FOUR_G_C2 * D**2 * inverse
@@ -472,13 +476,3 @@ def _along(result, n=400):
 
 def _none(x):
     return None if x is None or not np.isfinite(x) else float(x)
-
-
-def digest(values):
-    """Return a short sha256 of floats, for comparing runs bit for bit."""
-    return hashlib.sha256(np.ascontiguousarray(values, dtype=float).tobytes()).hexdigest()[:16]
-
-
-def all_classes(scenario):
-    """Return the lens classes of a scenario: the five, then the user's own."""
-    return [*CLASSES, *resolve(scenario).own]

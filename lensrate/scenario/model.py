@@ -107,9 +107,7 @@ def _build(scenario):
     galaxy = scenario.build_galaxy()
     lifetimes, ifmr = Lifetimes.read(scenario.lifetimes), Ifmr.read(scenario.ifmr)
     rule = parse_rule(scenario.sources)
-    own = {
-        name: LensClass.parse(name, table) for name, table in {**galaxy.lens_class, **scenario.lens_class}.items()
-    }
+    own = {name: LensClass.parse(name, table) for name, table in {**galaxy.lens_class, **scenario.lens_class}.items()}
     band = rule.band if isinstance(rule, LimitRule) else "I"
     users = LuminosityFunction.read(scenario.luminosity, band) if scenario.luminosity else None
     populations, luminosities, made = [], [], {}

@@ -98,7 +98,11 @@ class Scenario:
         for key, value in self.numerics.items():
             one_of("scenario: numerics", key, _NUMERICS)
             low, high = _NUMERICS[key]
-            if isinstance(low, bool) != isinstance(value, bool) or not isinstance(value, (int, float)) or not low <= value <= high:
+            if (
+                isinstance(low, bool) != isinstance(value, bool)
+                or not isinstance(value, (int, float))
+                or not low <= value <= high
+            ):
                 raise InputError(f"scenario: numerics.{key}: {value!r} given, must be between {low} and {high}")
             if isinstance(low, int) and not isinstance(value, int):
                 raise InputError(f"scenario: numerics.{key}: {value!r} given, must be a whole number")
@@ -154,7 +158,9 @@ class Scenario:
         known = [f.name for f in fields(cls)]
         for key in table:
             if key not in (*known, "base"):
-                raise InputError(f"{where}: unknown key '{key}'{did_you_mean(key, known)} (known: base, {', '.join(known)})")
+                raise InputError(
+                    f"{where}: unknown key '{key}'{did_you_mean(key, known)} (known: base, {', '.join(known)})"
+                )
         if _depth > 8:
             raise InputError(f"{where}: 'base' goes in circles or deeper than 8 files")
         rest = {k: v for k, v in table.items() if k != "base"}
@@ -242,11 +248,14 @@ class Scenario:
         full = self.to_dict()
         for key in ("name", "title"):
             full.pop(key)
+        used = {self.imf or row.get("imf", "kroupa2001") for row in self._galaxy_table["component"]}
         full["sets"] = {
             "galaxy": self._galaxy_table,
             "lifetimes": read_set("lifetimes", self.lifetimes),
             "ifmr": read_set("ifmr", self.ifmr),
             "dust": read_set("sources", self.dust),
+            "light": [read_set("sources", n) for n in ("giants", "dwarf_sequence", "extinction_law")],
+            "imf": {n: read_set("imf", n) for n in sorted(used)},
         }
         if self.luminosity:
             full["sets"]["luminosity"] = hashlib.sha256(Path(self.luminosity).read_bytes()).hexdigest()
@@ -263,7 +272,8 @@ class Scenario:
         return _toml(self.to_dict())
 
     def __repr__(self):
-        return f"Scenario('{self.name}', galaxy='{self.galaxy}', sources='{self.sources}', kicks='{self.kicks}', hash={self.hash})"
+        chosen = f"galaxy='{self.galaxy}', sources='{self.sources}', kicks='{self.kicks}'"
+        return f"Scenario('{self.name}', {chosen}, hash={self.hash})"
 
     def _repr_html_(self):
         rows = "".join(f"<tr><td>{k}</td><td>{v}</td></tr>" for k, v in self.to_dict().items() if v not in ("", {}, []))

@@ -145,7 +145,7 @@ def clump_magnitude(band):
 
 
 def _burst(band, grid, age, imf, lifetimes):
-    """Stars brighter than each of `grid` without the clump, and clump giants, of one solar mass formed `age` Gyr ago."""
+    """Stars brighter than each of `grid` but for the clump, and clump giants, of one solar mass formed `age` ago."""
     g = _giants()
     lightest, turnoff = _dwarfs(band)[0][0], float(lifetimes.turnoff_mass(age))
     top = min(turnoff, imf.breaks[-1])
@@ -208,7 +208,8 @@ def luminosity_function(band, history, population, imf, lifetimes):
     -----
     Dwarfs: Pecaut & Mamajek (2013) and its electronic table. The flux through the evolved phases is the number of
     stars born at the turn-off mass times the speed of that mass; every phase holds flux times duration. The clump's
-    place and the giants' slope are those of Nataf+ (2013); all but the clump is smoothed over the spread of metallicity; other bands have the clump's colours, which leaves the
+    place and the giants' slope are those of Nataf+ (2013); all but the clump is smoothed
+    over the spread of metallicity; other bands have the clump's colours, which leaves the
     giants near the tip too blue. Dwarfs heavier than the sequence continue its slope.
     """
     check_band("band", band)

@@ -68,7 +68,7 @@ def test_direction_cells_follow_the_mean_motion():
 
 
 def test_mass_shifts_timescales():
-    """A class four times as heavy: t_E doubles, the same optical depth needs a quarter of the lenses at half the rate."""
+    """A class four times as heavy: t_E doubles; the same optical depth comes at half the rate."""
 
     def own(mass):
         table = {"mass_function": {"kind": "delta", "M": mass}, "rides_on": "bulge", "mass_fraction": 0.1}
@@ -135,9 +135,7 @@ def test_halving_every_step_moves_nothing_by_a_thousandth(l, b, rule):
         "merge_sources": False,
     }  # fmt: skip
     scenario = DEFAULT.replace(sources=rule)
-    coarse, exact = (
-        lensrate.sightline(l * u.deg, b * u.deg, s) for s in (scenario, scenario.replace(numerics=fine))
-    )
+    coarse, exact = (lensrate.sightline(l * u.deg, b * u.deg, s) for s in (scenario, scenario.replace(numerics=fine)))
     for name, lens in exact.lenses.items():
         for key in ("optical_depth", "rate", "mean_t_E", "median_t_E", "share_of_events"):
             assert getattr(coarse.lenses[name], key) == pytest.approx(getattr(lens, key), rel=1e-3), (name, key)
@@ -152,7 +150,9 @@ def test_halving_every_step_moves_nothing_by_a_thousandth(l, b, rule):
 
 
 @settings(derandomize=True, max_examples=25, deadline=None)
-@given(st.floats(-360, 360), st.floats(-90, 90), st.sampled_from(["limit:I=19", "distance:3.3", "clump:all", "limit:H=16"]))
+@given(
+    st.floats(-360, 360), st.floats(-90, 90), st.sampled_from(["limit:I=19", "distance:3.3", "clump:all", "limit:H=16"])
+)
 def test_any_direction_gives_sound_numbers(l, b, rule):
     quick = {"step_dex": 0.1, "nodes": 4, "directions": 2.0}
     result = lensrate.sightline(l * u.deg, b * u.deg, DEFAULT.replace(sources=rule, numerics=quick))

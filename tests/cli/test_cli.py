@@ -1,0 +1,305 @@
+"""The command line as a user meets it: contract of the JSON, coordinates as typed, files, complaints, exit codes."""
+
+import json
+import subprocess
+import sys
+
+import numpy as np
+import pytest
+from astropy.io import fits
+from astropy.table import Table
+from click.testing import CliRunner
+from hypothesis import given, settings
+from hypothesis import strategies as st
+
+from lensrate.cli import cli, main
+
+FAST = ["--sources", "distance:8"]
+
+
+def run(*args):
+    """Run `main` in this process; returns exit code, stdout, stderr."""
+    runner = CliRunner()
+    with runner.isolation() as streams:
+        try:
+            main([str(a) for a in args])
+            code = 0
+        except SystemExit as done:
+            code = done.code
+        out, err = streams[0].getvalue().decode(), streams[1].getvalue().decode()
+    return code, out, err
+
+
+def forecast(*args):
+    code, out, err = run("sightline", "--json", *args)
+    assert code == 0, err
+    return json.loads(out)
+
+
+def test_json_keeps_its_contract():
+    result = forecast("1.0", "-3.9")
+    assert result["l_deg"] == 1.0 and result["b_deg"] == -3.9
+    assert (result["scenario"], result["frame"], result["u_0_limit"], result["t_E_range_d"]) == (
+        "default",
+        "heliocentric",
+        1.0,
+        None,
+    )
+    assert result["sources"]["rule"] == "limit:I=21" and set(result["sources"]) == {
+        "rule", "extinction", "mean_distance_kpc", "disc_share", "source_density_per_arcmin2"
+    }  # fmt: skip
+    assert list(result["lenses"]) == ["star", "brown_dwarf", "white_dwarf", "neutron_star", "black_hole", "all"]
+    for name, lens in result["lenses"].items():
+        assert set(lens) == {
+            "optical_depth", "rate_per_star_per_yr", "mean_t_E_d", "median_t_E_d", "share_of_events",
+            "rate_standard_error", "kinematics",
+        }  # fmt: skip
+        assert lens["optical_depth"] > 0 and lens["rate_per_star_per_yr"] > 0, name
+    assert set(result["components"]) == {"thin_disc", "thick_disc", "bulge", "nuclear_disc", "halo"}
+    total = result["lenses"]["all"]
+    for key in ("optical_depth", "rate_per_star_per_yr"):
+        assert sum(c[key] for c in result["components"].values()) == pytest.approx(total[key], rel=1e-9)
+        assert sum(result["lenses"][c][key] for c in list(result["lenses"])[:-1]) == pytest.approx(total[key], rel=1e-9)
+    assert result["lenses"]["neutron_star"]["kinematics"] == "unkicked"
+    assert any("unkicked" in w for w in result["warnings"]) and len(result["references"]) > 10 and result["version"]
+
+
+def test_negative_numbers_are_taken_as_typed():
+    a = forecast("-1.5", "-2.5", *FAST)
+    b = forecast(*FAST, "--", "-1.5", "-2.5")
+    c = forecast(*FAST, "--t-E-range", "-0.0", "1e9", "-1.5", "-2.5")
+    assert (
+        a == b
+        and a["l_deg"] == -1.5
+        and c["lenses"]["all"]["rate_per_star_per_yr"]
+        == pytest.approx(a["lenses"]["all"]["rate_per_star_per_yr"], rel=1e-3)
+    )
+    code, _, err = run("sightline", "1.0", "-3.9", "--scenari", "default")
+    assert code == 2 and "--scenari" in err and "--scenario" in err
+
+
+def test_equatorial_input():
+    degrees = forecast("--icrs", "267.9174", "-29.8906", *FAST)
+    sexagesimal = forecast("--icrs", "17:51:40.19", "-29:53:26.3", *FAST)
+    assert degrees["l_deg"] == pytest.approx(359.8613, abs=2e-4) and degrees["b_deg"] == pytest.approx(
+        -1.6210, abs=2e-4
+    )
+    assert sexagesimal["l_deg"] == pytest.approx(degrees["l_deg"], abs=1e-3)
+
+
+def test_people_get_a_table_with_its_conditions():
+    code, out, err = run("sightline", "1", "-3", "--extinction", "I=1.0", "--t-E-range", "2", "300")
+    assert code == 0
+    for words in ("limit:I=21", "A_I = 1.00", "u_0 < 1", "2 < t_E < 300 d", "heliocentric", "neutron star", "unkicked"):
+        assert words in out
+    assert "unkicked" in err and max(map(len, out.splitlines() + err.splitlines())) <= 100
+    by_element = run("sightline", "1", "-3", "--by", "element", *FAST)[1]
+    assert "thin_disc_5_10" in by_element
+    assert run("sightline", "1", "-3", "--quiet")[2] == ""
+
+
+def test_files_hold_the_numbers_and_how_they_were_made(tmp_path):
+    wanted = forecast("1", "-3", *FAST)
+    rate = wanted["lenses"]["black_hole"]["rate_per_star_per_yr"]
+    for ending in ("ecsv", "csv", "fits", "vot", "json"):
+        path = tmp_path / f"out.{ending}"
+        code, _, err = run("sightline", "1", "-3", *FAST, "--save", path, "-q")
+        assert code == 0, err
+        text = path.read_bytes()
+        assert wanted["scenario_hash"].encode() in text and b"Wegg" in text
+        if ending == "json":
+            assert json.loads(text)["lenses"]["black_hole"]["rate_per_star_per_yr"] == rate
+            continue
+        if ending == "fits":
+            with fits.open(path) as hdus:
+                made = json.loads(hdus[1].header["MADE"])
+                rows = {str(n): r for n, r in zip(hdus[1].data["lens"], hdus[1].data["rate"])}
+            assert made["scenario"] == "default" and made["version"] == wanted["version"]
+        else:
+            table = Table.read(
+                path,
+                format={"ecsv": "ascii.ecsv", "csv": "ascii.csv", "vot": "votable"}[ending],
+                **({"comment": "#"} if ending == "csv" else {}),
+            )
+            rows = {str(n): r for n, r in zip(table["lens"], table["rate"])}
+        assert rows["black_hole"] == rate
+    code, _, err = run("sightline", "1", "-3", *FAST, "--save", tmp_path / "out.ecsv")
+    assert code == 2 and "--overwrite" in err
+    assert run("sightline", "1", "-3", *FAST, "--save", tmp_path / "out.ecsv", "--overwrite", "-q")[0] == 0
+    assert sorted(p.name for p in tmp_path.iterdir()) == ["out.csv", "out.ecsv", "out.fits", "out.json", "out.vot"]
+
+
+def test_pictures_are_written_with_their_provenance(tmp_path):
+    for name, picture in (
+        ("a.png", "overview"),
+        ("b.svg", "stacked"),
+        ("c.pdf", "pi_E"),
+        ("d.png", "theta_E"),
+        ("e.png", "depth"),
+    ):
+        assert run("sightline", "1", "-3", *FAST, "--plot", tmp_path / name, "--picture", picture, "-q")[0] == 0
+        assert (tmp_path / name).stat().st_size > 5000
+    assert (
+        b"scenario_hash" in (tmp_path / "a.png").read_bytes() and b"scenario_hash" in (tmp_path / "b.svg").read_bytes()
+    )
+
+
+def test_many_sightlines(tmp_path):
+    path = tmp_path / "fields.csv"
+    path.write_text("name,l,b,A_I\nM01,1.0,-2.9,1.25\nM02,359.0,-2.0,2.0\n")
+    code, out, err = run("sightline", "--table", path, "--json", "--jobs", "2")
+    assert code == 0, err
+    rows = json.loads(out)
+    one = forecast("1.0", "-2.9", "--extinction", "I=1.25")
+    assert rows[0]["lenses"] == one["lenses"] and rows[0]["sources"]["extinction"] == {"I": 1.25}
+    assert rows[1]["sources"]["extinction"] == {"I": 2.0}
+    assert run("sightline", "--table", path, "--save", tmp_path / "r.fits", "-q")[0] == 0
+    saved = Table.read(tmp_path / "r.fits")
+    assert saved["rate_all"][0] == one["lenses"]["all"]["rate_per_star_per_yr"]
+    code, out, _ = run("sightline", "--table", path, "-q")
+    assert code == 0 and "A_I by row" in out and max(map(len, out.splitlines())) <= 100
+
+
+def test_scenarios(tmp_path):
+    code, out, _ = run("scenario")
+    assert code == 0 and "hangould2003" in out and "griest1991" in out
+    code, out, _ = run("scenario", "default")
+    again = tmp_path / "again.toml"
+    again.write_text(out)
+    assert code == 0
+    first, second = (run("scenario", n, "--check")[1].split("hash ")[1] for n in ("default", again))
+    assert first == second
+    mine = tmp_path / "mine.toml"
+    mine.write_text('base = "default"\nkicks = "maxwell:190"\n[change.bulge.density]\nangle = 30.0\n')
+    base, changed = forecast("1", "-3"), forecast("1", "-3", "--scenario", mine)
+    assert changed["scenario"] == "mine" and changed["scenario_hash"] != base["scenario_hash"]
+    assert changed["components"]["bulge"]["optical_depth"] < base["components"]["bulge"]["optical_depth"]
+    code, out, _ = run("scenario", "default", "--references")
+    assert code == 0 and "Sormani" in out and "Cummings" in out
+
+
+BAD = [
+    (["1", "-91"], "b: -91"),
+    (["nan", "-3"], "l: nan"),
+    (["1", "inf"], "b: inf"),
+    (["one", "-3"], "'one'"),
+    (["1"], "two numbers"),
+    ([], "either L B or --table"),
+    (["1", "-3", "4"], "unexpected extra argument"),
+    (["1", "-3", "--sources", "distance:-8"], "-8"),
+    (["1", "-3", "--sources", "distance:0.01"], "0.05"),
+    (["1", "-3", "--sources", "limt:I=21"], "limit"),
+    (["1", "-3", "--sources", "limit:R=21"], "R"),
+    (["1", "-3", "--sources", "limit:I=nan"], "finite"),
+    (["1", "-3", "--scenario", "defalt"], "did you mean 'default'"),
+    (["1", "-3", "--scenario", "nowhere/my.toml"], "no such file"),
+    (["1", "-3", "--kicks", "hobs2005"], "hobbs2005"),
+    (["1", "-3", "--kicks", "maxwell:-3"], "-3"),
+    (["1", "-3", "--extinction", "1.2"], "I=1.25"),
+    (["1", "-3", "--extinction", "I=-1"], "extinction"),
+    (["1", "-3", "--extinction", "R=1"], "R"),
+    (["1", "-3", "--u-0-limit", "0"], "u_0_limit"),
+    (["1", "-3", "--t-E-range", "300", "2"], "t_E_range"),
+    (["1", "-3", "--save", "out.xls"], ".ecsv"),
+    (["1", "-3", "--save", "no_such_folder/out.ecsv"], "does not exist"),
+    (["1", "-3", "--plot", "out.gif"], ".png"),
+    (["--table", "absent.csv"], "absent.csv"),
+    (["--icrs", "17:99:00", "-29"], "17:99:00"),
+]  # fmt: skip
+
+
+@pytest.mark.parametrize("args, word", BAD, ids=lambda x: "_".join(x) if isinstance(x, list) else None)
+def test_bad_input_is_one_clear_line(args, word, tmp_path, monkeypatch):
+    monkeypatch.chdir(tmp_path)
+    code, out, err = run("sightline", *args)
+    assert code == 2 and out == "" and word in err and "Traceback" not in err
+    assert not list(tmp_path.iterdir())
+
+
+@pytest.mark.parametrize(
+    "text, word",
+    [
+        ("l,b\n1,-3\n2,-95\n", "row 2, column b"),
+        ("l,b\n1,nan\n", "row 1, column b"),
+        ("l,lat\n1,-3\n", "column 'b'"),
+        ("l,b\n1,south\n", "column b must hold numbers"),
+        ("l,b,A_I\n1,-3,-2\n", "extinction"),
+        ("", "no rows"),
+        ("l,b\n1,-3,4\n", "cannot be read"),
+        ("l,b\n", "no rows"),
+    ],
+)
+def test_bad_tables_name_row_and_column(tmp_path, text, word):
+    path = tmp_path / "fields.csv"
+    path.write_text(text)
+    code, out, err = run("sightline", "--table", path)
+    assert code == 2 and word in err and out == ""
+
+
+@pytest.mark.parametrize(
+    "text, word",
+    [
+        ('base = "default"\nkick = "none"', "did you mean 'kicks'"),
+        ('galaxy = "defaul"', "did you mean 'default'"),
+        ("u_0_limit = nan", "u_0_limit"),
+        ("numerics = {nodes = 1000}", "nodes"),
+        ("numerics = {nodez = 5}", "did you mean 'nodes'"),
+        ('[change.buldge]\nimf = "kroupa2001"', "did you mean 'bulge'"),
+        ("[change.bulge.density]\nangel = 3.0", "did you mean 'angle'"),
+        ("[change.bulge.density]\nmass = {value = 1.0, unit = 'kpc'}", "mass"),
+        ("[change.bulge.density]\nmass = -1.0", "mass"),
+        (
+            "[lens_class.pbh]\nrides_on = 'hallo'\nmass_fraction = 0.1\nmass_function = {kind = 'delta', M = 30.0}",
+            "did you mean 'halo'",
+        ),
+        ("sources = 3", "must be text"),
+        ("this is not toml", "not a valid TOML"),
+        ("base = 'loop.toml'", "circles"),
+    ],
+)
+def test_bad_scenarios_name_the_key(tmp_path, text, word):
+    path = tmp_path / "loop.toml"
+    path.write_text(text)
+    code, out, err = run("sightline", "1", "-3", "--scenario", path)
+    assert code == 2 and word in err and "Traceback" not in err and out == ""
+
+
+def test_unwritable_folder(tmp_path):
+    folder = tmp_path / "shut"
+    folder.mkdir()
+    folder.chmod(0o500)
+    code, out, err = run("sightline", "1", "-3", *FAST, "--save", folder / "x.ecsv", "-q")
+    folder.chmod(0o700)
+    # the superuser may write anywhere
+    assert (code == 2 and "not writable" in err and out == "") or (folder / "x.ecsv").exists()
+
+
+def test_commands_are_named_when_mistyped():
+    code, _, err = run("sightlin", "1", "-3")
+    assert code == 2 and "did you mean 'sightline'" in err
+    assert run("--help")[0] == 0 and run("--version")[0] == 0
+    for name, command in cli.commands.items():
+        assert command.help and "Examples" in command.help, name
+        assert run(name, "--help")[0] == 0
+
+
+@settings(derandomize=True, max_examples=120, deadline=None)
+@given(st.text(max_size=12), st.text(max_size=12))
+def test_garbage_is_refused_politely(lon, lat):
+    code, out, err = run("sightline", "--sources", "distance:8", "--json", "--", lon, lat)
+    assert code in (0, 2) and "Traceback" not in err
+    if code == 0:
+        assert np.isfinite(json.loads(out)["lenses"]["all"]["optical_depth"])
+
+
+@settings(derandomize=True, max_examples=150, deadline=None)
+@given(st.sampled_from(["--sources", "--kicks", "--bh-kicks", "--extinction", "--scenario"]), st.text(max_size=16))
+def test_garbage_in_options_is_refused_politely(option, text):
+    code, _, err = run("sightline", "1", "-91", option, text)
+    assert code == 2 and "Traceback" not in err and all(c.isprintable() or c == "\n" for c in err)
+
+
+def test_pipes_stay_clean():
+    code = "from lensrate.cli import main; main(['sightline', '1', '-3', '--sources', 'distance:8', '--json'])"
+    out = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True)
+    assert json.loads(out.stdout)["l_deg"] == 1.0 and "note:" in out.stderr
