@@ -1,0 +1,54 @@
+"""README and guide against the code: commands listed, Python runs, output as printed, the picture there."""
+
+import re
+import shlex
+from pathlib import Path
+
+import pytest
+from click.testing import CliRunner
+
+from lensrate.cli import cli, main
+
+ROOT = Path(__file__).parent.parent
+README = (ROOT / "README.md").read_text(encoding="utf-8")
+
+
+def block(language):
+    return re.findall(rf"```{language}\n(.*?)```", README, flags=re.DOTALL)
+
+
+def run(line):
+    runner = CliRunner()
+    with runner.isolation() as streams:
+        with pytest.raises(SystemExit) as done:
+            main(shlex.split(line)[1:])
+        assert not done.value.code, streams[1].getvalue().decode()
+        return streams[0].getvalue().decode()
+
+
+def test_printed_output_is_the_real_one():
+    command = re.search(r"<!-- output of: (.*?) -->", README).group(1)
+    assert block("text")[0].strip() == run(command).strip()
+
+
+def test_python_example_runs(tmp_path, monkeypatch):
+    monkeypatch.chdir(tmp_path)
+    for code in block("python"):
+        exec(compile(code, "README.md", "exec"), {})
+
+
+def test_scenario_example_runs(tmp_path, monkeypatch):
+    monkeypatch.chdir(tmp_path)
+    Path("mine.toml").write_text(block("toml")[0])
+    out = run("lensrate sightline 1.0 -3.9 --scenario mine.toml -q")
+    assert "free planet" in out
+
+
+def test_commands_and_files_are_there():
+    for name in cli.commands:
+        assert f"`lensrate {name}" in README, name
+    for picture in re.findall(r"!\[.*?\]\((.*?)\)", README):
+        assert (ROOT / picture).is_file(), picture
+    guide = (ROOT / "DEVELOPERS.md").read_text(encoding="utf-8")
+    for package in sorted(p.stem for p in (ROOT / "lensrate").glob("[a-z]*")):
+        assert f"`{package}`" in guide, f"{package} is missing from the guide's layers"
