@@ -71,13 +71,13 @@ class Check:
 
     @property
     def failed(self):
-        """Whether it should agree and does not."""
-        return not self.agrees and not self.expected_to_differ
+        """Whether it should agree and does not, or could not be computed."""
+        return not self.agrees and (not self.expected_to_differ or math.isnan(self.computed))
 
     @property
     def verdict(self):
         """The outcome in a word or two; a star marks values that were in view in tuning."""
-        word = "agrees" if self.agrees else "differs: known" if self.expected_to_differ else "FAILS"
+        word = "agrees" if self.agrees else "FAILS" if self.failed else "differs: known"
         return word + (" *" if self.used_in_tuning else "")
 
     def to_dict(self):
@@ -89,7 +89,7 @@ class Check:
             `status` says in words whether the values agree, why not where that is known, and how the published one
             is known; `note` holds the conditions, and the tolerance where it is a rule.
         """
-        word = "agrees" if self.agrees else f"differs, known: {self.why}" if self.expected_to_differ else "differs"
+        word = "agrees" if self.agrees else "differs" if self.failed else f"differs, known: {self.why}"
         known = {"memory": "published value from memory", "seen": "published value seen in print"}
         known = known.get(self.status, f"published value: {self.status}")
         return {

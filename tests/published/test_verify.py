@@ -8,6 +8,7 @@ from astropy.table import QTable
 from click.testing import CliRunner
 
 import lensrate.verify.engine as engine
+from lensrate.cli import main
 from lensrate.cli.verify import verify
 from lensrate.datafiles import checksums, data_folder
 from lensrate.errors import DataFileError, InputError
@@ -57,7 +58,7 @@ def test_verdicts():
     def broken():
         raise InputError("this cannot be")
 
-    lost = engine.check(ROW, broken)
+    lost = engine.check(ROW | {"expected_to_differ": True, "why": "its reason"}, broken)
     assert lost.failed and "this cannot be" in lost.note and lost.to_dict()["computed"] is None
 
 
@@ -104,6 +105,9 @@ def test_command(tmp_path, monkeypatch):
     assert max(len(line) for line in text.splitlines()) <= 100 and "Hawkins" in text
     monkeypatch.setattr("lensrate.verify.checks", lambda group: [engine.check(ROW, lambda: 3.0)])
     assert run(verify, ["--quiet"]).exit_code == 1
+    with pytest.raises(SystemExit) as done:
+        main(["verify", "--quiet"])
+    assert done.value.code == 1
 
 
 def test_damaged_table_stops(monkeypatch):
