@@ -94,7 +94,7 @@ def test_asymmetric_drift_from_jeans_equation(component, R):
 
 def test_drift_at_the_sun():
     # the thick disc lags by 46 km/s behind the circular speed: Bensby+ 2003, A&A 410, 527 (seen)
-    v_0 = DEFAULT.rotation.v0.value
+    v_0 = kernels.circular_speed(DEFAULT.R0, DEFAULT.rotation.pack(DEFAULT.R0))
 
     def lag(component):
         return v_0 - motion(component, DEFAULT, -DEFAULT.R0, 0.0, 0.0)[0][0, 1]
