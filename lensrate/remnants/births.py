@@ -18,7 +18,8 @@ __all__ = ["KICK_EDGES", "Window", "analytic", "draw", "kicked", "self_held", "w
 
 #: edges of the kick bins [km/s]: narrow where kicks are like the stars' own dispersions
 KICK_EDGES = (0, 5, 10, 20, 40, 60, 90, 130, 180, 240, 310, 400, 520, 700, 1000, 1500)
-_SHORTEST = 2.0  # Gyr: a burst is followed over its last two, since the potential is steady
+_SHORTEST = 2.0  # Gyr: a burst is seen over its last two, since the potential is steady
+_MIXED = 2.0  # Gyr: several hundred turns of a self-held component, after which nothing changes any more
 
 
 @dataclass(frozen=True)
@@ -43,7 +44,7 @@ def window(component):
     Parameters
     ----------
     component : Component
-        A burst is seen over the two Gyr before its age.
+        A burst is seen over the two Gyr before its age; a self-held component over the second Gyr of its orbits.
 
     Returns
     -------
@@ -53,6 +54,8 @@ def window(component):
     young, old = component.age
     if old <= 0:
         raise InputError(f"component '{component.element}': remnants need an age above 0, got {component.age} Gyr")
+    if self_held(component):
+        return Window(0.5 * min(old, _MIXED) * gyr, min(old, _MIXED) * gyr, 0.0)
     if young == old:
         young = max(0.0, old - _SHORTEST)
         return Window(young * gyr, old * gyr, 0.0)

@@ -45,7 +45,7 @@ class Settings:
     bundles, iterations : int
         Of the equilibrium, see `equilibrium.solve`.
     eta : float
-        Step, see `orbits.step`.
+        Step, see `orbits.step`; densities move by less than their sampling error between 0.1 and 0.2.
     stride : int
         Steps between deposits.
     grid : Grid
@@ -57,7 +57,7 @@ class Settings:
     kick_edges: tuple = KICK_EDGES
     bundles: int = 2048
     iterations: int = 300
-    eta: float = 0.1
+    eta: float = 0.15
     stride: int = 8
     grid: Grid = Grid()
     seed: int = 1
