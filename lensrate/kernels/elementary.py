@@ -1,7 +1,7 @@
-"""Exponential, logarithm and incomplete gamma functions for loops that must vectorise.
+"""A logarithm for loops that must vectorise, and incomplete gamma functions.
 
-The exponential and logarithm split a number through its bits and use a polynomial, so that a loop
-over lanes becomes vector instructions; libm's would be called one lane at a time.
+The logarithm splits a number through its bits and uses a polynomial, so that a loop over lanes becomes
+vector instructions; libm's would be called one lane at a time.
 """
 
 import math
@@ -13,7 +13,7 @@ from numba.extending import intrinsic
 
 from ._jit import kernel
 
-__all__ = ["exp", "gamma_upper", "log", "regularised_gamma"]
+__all__ = ["gamma_upper", "log", "regularised_gamma"]
 
 if os.environ.get("NUMBA_DISABLE_JIT", "0") == "1":
 
@@ -46,43 +46,9 @@ else:
         return types.float64(types.int64), codegen
 
 
-# 1.5 * 2^52: adding it rounds to an integer, which then stands in the low bits
-_ROUND = 6755399441055744.0
-_LOG2E = 1.4426950408889634
 _LN2_HIGH = 0.693147180369123816490  # low 32 bits zero: times a small integer it is exact
 _LN2_LOW = 1.90821492927058770002e-10
 _TWO52 = 4503599627370496.0
-
-
-@kernel(fastmath={"contract"})
-def exp(x):
-    """Return e^x to 1e-14 relative; arguments below -700 give e^-700, above 700 e^700.
-
-    Parameters
-    ----------
-    x : float
-
-    Returns
-    -------
-    float
-    """
-    x = min(max(x, -700.0), 700.0)
-    shifted = x * _LOG2E + _ROUND
-    whole = shifted - _ROUND
-    r = (x - whole * _LN2_HIGH) - whole * _LN2_LOW
-    p = 1.0 / 39916800.0
-    p = p * r + 1.0 / 3628800.0
-    p = p * r + 1.0 / 362880.0
-    p = p * r + 1.0 / 40320.0
-    p = p * r + 1.0 / 5040.0
-    p = p * r + 1.0 / 720.0
-    p = p * r + 1.0 / 120.0
-    p = p * r + 1.0 / 24.0
-    p = p * r + 1.0 / 6.0
-    p = p * r + 0.5
-    p = p * r + 1.0
-    p = p * r + 1.0
-    return p * bits_float((float_bits(shifted) + 1023) << 52)
 
 
 @kernel(fastmath={"contract"})

@@ -8,7 +8,8 @@ kind codes and one row of numbers per member; masses come multiplied by G, in kp
 import math
 
 from ._jit import kernel
-from .elementary import exp, gamma_upper, log, regularised_gamma
+from .elementary import gamma_upper, log, regularised_gamma
+from .maths import fexp
 
 __all__ = [
     "CUTOFF_POWER",
@@ -31,6 +32,7 @@ CUTOFF_POWER = 3  # G times total mass, alpha, cut-off radius
 PLUMMER = 4  # GM, b
 NEEDLE_BAR = 5  # GM, a, b, c
 HOMEOIDS = 6  # GM, three lengths, K, then K times (weight, 1/(a1^2+u), 1/(a2^2+u), 1/(a3^2+u))
+_LEAST = -690.0  # exponents that the fast exponential takes
 #: multiply and add in one instruction; nothing else of fast arithmetic, so that not-a-number stays visible
 _FMA = {"contract"}
 _HEAD = 5  # where the homeoids' K groups of four begin
@@ -184,7 +186,7 @@ def homeoids_potential(x, y, z, p):
     for k in range(int(p[4])):
         j = _HEAD + 4 * k
         m = math.sqrt(x * x * p[j + 1] + y * y * p[j + 2] + z * z * p[j + 3])
-        total += p[j] * (1.0 + m) * exp(-m)
+        total += p[j] * (1.0 + m) * fexp(max(-m, _LEAST))
     return -total
 
 
@@ -194,7 +196,8 @@ def homeoids_acceleration(x, y, z, p):
     fx, fy, fz = 0.0, 0.0, 0.0
     for k in range(int(p[4])):
         j = _HEAD + 4 * k
-        w = p[j] * exp(-math.sqrt(x * x * p[j + 1] + y * y * p[j + 2] + z * z * p[j + 3]))
+        m = math.sqrt(x * x * p[j + 1] + y * y * p[j + 2] + z * z * p[j + 3])
+        w = p[j] * fexp(max(-m, _LEAST))
         fx += w * p[j + 1]
         fy += w * p[j + 2]
         fz += w * p[j + 3]
@@ -205,7 +208,7 @@ def homeoids_acceleration(x, y, z, p):
 def homeoids_source(x, y, z, p):
     """Return 4 pi G rho of the body itself: G M exp(-m) / (2 a1 a2 a3)."""
     m = math.sqrt((x / p[1]) ** 2 + (y / p[2]) ** 2 + (z / p[3]) ** 2)
-    return p[0] * exp(-m) / (2.0 * p[1] * p[2] * p[3])
+    return p[0] * math.exp(-m) / (2.0 * p[1] * p[2] * p[3])
 
 
 @kernel
@@ -325,7 +328,7 @@ def _add_homeoids(p, s):
         w, i1, i2, i3 = p[j], p[j + 1], p[j + 2], p[j + 3]
         for i in range(LANES):
             x, y, z = s[_X + i], s[_Y + i], s[_Z + i]
-            e = w * exp(-math.sqrt(x * x * i1 + y * y * i2 + z * z * i3))
+            e = w * fexp(max(-math.sqrt(x * x * i1 + y * y * i2 + z * z * i3), _LEAST))
             s[_T1 + i] += e * i1
             s[_T2 + i] += e * i2
             s[_T3 + i] += e * i3

@@ -213,8 +213,6 @@ def test_lanes_agree_with_single_points():
 
 
 def test_elementary_functions_against_scipy():
-    x = np.linspace(-690, 690, 2001)
-    assert [elementary.exp(v) for v in x] == pytest.approx(np.exp(x), rel=2e-14)
     y = np.concatenate([np.geomspace(1e-300, 1e300, 1001), 1 + np.geomspace(1e-15, 1, 100)])
     assert [elementary.log(v) for v in y] == pytest.approx(np.log(y), rel=1e-15)
     for s in (0.1, 0.6, 1.5, 3.0):
