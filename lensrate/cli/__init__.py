@@ -35,9 +35,9 @@ for command in (sightline, scenario, verify):
 def main(args=None):
     """Run the command line; exit code 0 done, 1 failed run, 2 wrong input, 130 interrupted."""
     try:
-        cli.main(args=args, prog_name="lensrate", standalone_mode=False)
-    except click.exceptions.Exit as done:
-        sys.exit(done.exit_code)
+        # without its standalone mode click returns the code that a command exits with
+        code = cli.main(args=args, prog_name="lensrate", standalone_mode=False)
+        sys.exit(code if isinstance(code, int) else 0)
     except click.ClickException as error:
         error.show(sys.stderr)
         sys.exit(error.exit_code)
@@ -57,7 +57,6 @@ def main(args=None):
     except MemoryError:
         _complain("not enough memory for this run; take fewer sightlines at a time or a larger step_dex")
         sys.exit(1)
-    sys.exit(0)
 
 
 def _complain(text):

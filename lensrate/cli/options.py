@@ -13,7 +13,7 @@ def assumptions(command):
         [
             click.option("--scenario", "scenario_name", metavar="NAME|FILE", default="default", show_default=True,
                          help="Named scenario or TOML file."),
-            click.option("--kicks", metavar="LAW", help="Kick law of neutron stars: a published set, maxwell:265, none."),
+            click.option("--kicks", metavar="LAW", help="Kick law of neutron stars: a published set or maxwell:265."),
             click.option("--bh-kicks", metavar="LAW", help="Kick law of black holes: same, momentum, or a law."),
             click.option("--sources", metavar="RULE", help="Source rule: limit:I=21, clump, clump:all, distance:8.0."),
             click.option("--extinction", metavar="BAND=MAG", multiple=True,

@@ -57,22 +57,21 @@ class Density(Params):
 
         Parameters
         ----------
-        x, y, z : ndarray, shape (n,)
+        x, y, z : ndarray, any shapes that broadcast
             Place [kpc].
         R0 : float
             The Sun's distance from the axis [kpc].
 
         Returns
         -------
-        ndarray, shape (n,)
-            Density [Msun/kpc^3].
+        ndarray
+            Density [Msun/kpc^3], of the broadcast shape.
         """
-        x, y, z = (
-            np.ascontiguousarray(np.broadcast_to(a, np.broadcast(x, y, z).shape), dtype=float) for a in (x, y, z)
-        )
+        shape = np.broadcast(x, y, z).shape
+        x, y, z = (np.ascontiguousarray(np.broadcast_to(a, shape), dtype=float).ravel() for a in (x, y, z))
         out = np.empty(x.size)
-        kernels.density_many(self.kind, self.pack(R0), x.ravel(), y.ravel(), z.ravel(), out)
-        return out.reshape(x.shape)
+        kernels.density_many(self.kind, self.pack(R0), x, y, z, out)
+        return out.reshape(shape)
 
 
 @dataclass(frozen=True)

@@ -1,6 +1,7 @@
 """Velocity distributions of stellar components, as declared records; the arithmetic is in kernels/kinematics.py."""
 
 from dataclasses import dataclass
+from functools import cache
 from typing import ClassVar
 
 import astropy.units as u
@@ -8,8 +9,11 @@ import numpy as np
 
 from ..kernels import kinematics as kernels
 from ..params import Params, param
+from .potential import Potential
 
-__all__ = ["KINEMATICS", "AtRest", "BarMotion", "DiscMotion", "Kinematics", "LinearRotation"]
+__all__ = ["KINEMATICS", "AtRest", "BarMotion", "DiscMotion", "Kinematics", "LinearRotation", "PotentialRotation"]
+
+_SPEED_STEP = 0.1  # kpc
 
 
 @dataclass(frozen=True)
@@ -25,6 +29,24 @@ class LinearRotation(Params):
         # v0 is the speed at R0 itself, whatever the softening
         v0 = self.v0.value * np.sqrt(R0**2 + self.soft.value**2) / R0
         return np.array([kernels.LINEAR, v0, self.slope.value, R0, self.soft.value], dtype=float)
+
+
+@dataclass(frozen=True)
+class PotentialRotation:
+    """The circular speed of a potential set, as the orbits feel it, so that stars and kicked remnants agree."""
+
+    potential: str
+
+    def pack(self, R0):
+        """Return the kernel's rotation array: a table in steps of 0.1 kpc out to 60 kpc."""
+        return _speeds(self.potential)
+
+
+@cache
+def _speeds(name):
+    R = np.arange(0.0, 60.05, _SPEED_STEP)
+    speed = Potential.read(name).for_orbits().circular_speed(R[1:] * u.kpc).to_value(u.km / u.s)
+    return np.concatenate([[kernels.TABLE, _SPEED_STEP, 0.0], speed])
 
 
 @dataclass(frozen=True)

@@ -6,13 +6,13 @@ from functools import cached_property
 import astropy.units as u
 import numpy as np
 
-from ..datafiles import read_set
+from ..datafiles import names, read_set
 from ..errors import InputError, did_you_mean, one_of
 from ..kernels import profile as kernels
 from ..units import KMS_PER_MASYR_KPC
 from .density import DENSITIES, Bar, Density
 from .frames import Sightline3D, Sun
-from .kinematics import KINEMATICS, Kinematics, LinearRotation
+from .kinematics import KINEMATICS, Kinematics, LinearRotation, PotentialRotation
 
 __all__ = ["COUNTS", "Component", "Galaxy"]
 
@@ -55,7 +55,7 @@ class Galaxy:
     name: str
     components: tuple
     sun: Sun
-    rotation: LinearRotation
+    rotation: LinearRotation | PotentialRotation
     references: tuple = ()
     potential: str = ""
     lens_class: dict = field(default_factory=dict)  # lens classes that belong to the set, see remnants/classes.py
@@ -122,7 +122,7 @@ class Galaxy:
         sun = Sun.from_table(table["sun"], f"{where}: sun")
         if sun.R0.value <= 0:
             raise InputError(f"{where}: sun.R0: {sun.R0} given, must be above 0")
-        rotation = LinearRotation.from_table(table.get("rotation", {"v0": 220.0}), f"{where}: rotation")
+        rotation = _rotation(table, f"{where}: rotation")
         rows = table["component"]
         if not isinstance(rows, list) or not rows:
             raise InputError(f"{where}: component must be a list of tables, [[component]]")
@@ -219,13 +219,26 @@ class Galaxy:
         place = [np.atleast_1d(q.to_value(u.kpc)) for q in (x, y, z)]
         return sum(c.density.at(*place, self.R0) for c in chosen) * u.Msun / u.kpc**3
 
-    def names(self):
+    def component_names(self):
         """Return the component names in order, each once."""
         return list(dict.fromkeys(c.name for c in self.components))
 
     def bar(self):
         """Return the first bar's density record, or None."""
         return next((c.density for c in self.components if isinstance(c.density, Bar)), None)
+
+
+def _rotation(table, where):
+    """The set's rotation curve: that of a potential, or numbers of its own."""
+    given = table.get("rotation", {"v0": 220.0})
+    if not isinstance(given, dict):
+        raise InputError(f"{where}: {given!r} given, must be a table")
+    if "potential" not in given:
+        return LinearRotation.from_table(given, where)
+    if len(given) > 1:
+        raise InputError(f"{where}: give either a potential or numbers, not both")
+    one_of(f"{where}.potential", given["potential"], names("potential"))
+    return PotentialRotation(given["potential"])
 
 
 def _pad(rows):
