@@ -41,7 +41,7 @@ class TestIsothermalDisc(DensityContract):
     mass = disc_mass(column, 2.6, 4.0)
 
     def test_half_thickness(self):
-        here = self.density.at(self.R0, 0.0, 0.0, self.R0)[0]
+        here = self.density.at(self.R0, 0.0, 0.0, self.R0)
         assert self.density.half_thickness() == pytest.approx(self.column / (2 * here), rel=1e-12)
 
 
@@ -140,8 +140,8 @@ def test_every_kind_is_under_contract():
 def test_stated_densities_hold_at_the_sun():
     R0 = 8.2
     for density in (ExpDisc(3e7, 2.5, 0.3), SechExpDisc(3e7, 2.5, 0.3, 0.4, 0.5), PowerHalo(3e7, 2.8, 0.6, 0.5)):
-        assert density.at(0.0, R0, 0.0, R0)[0] == pytest.approx(3e7, rel=1e-12)
-    assert Bar(1, 0.5, 0.3, 20, rho_centre=2e9).at(0.0, 0.0, 0.0, R0)[0] == 2e9
+        assert density.at(0.0, R0, 0.0, R0) == pytest.approx(3e7, rel=1e-12)
+    assert Bar(1, 0.5, 0.3, 20, rho_centre=2e9).at(0.0, 0.0, 0.0, R0) == 2e9
 
 
 def test_unit_volumes():
