@@ -19,8 +19,9 @@ from ..io import whole_file
 from ..kernels import fields as kernels
 from ..parallel import run_map
 from .births import KICK_EDGES, analytic, draw, kicked, self_held, window
-from .equilibrium import cells_of, solve
+from .equilibrium import Equilibrium, cells_of, solve
 from .fields import Grid, RemnantField
+from .kicked import galaxy_numbers
 from .moments import batch_ratios, encode, split_speeds
 from .orbits import states_energies, step
 
@@ -110,16 +111,10 @@ def synthesize(galaxy, potential, settings=None, *, jobs=1, executor=None, progr
     if not components:
         raise InputError(f"galaxy '{galaxy.name}': no component of stars with an end; nothing to synthesise")
     pieces = _Pieces(checkpoint, _made(galaxy, potential, settings))
-    root = np.random.SeedSequence(settings.seed)
-    streams = root.spawn(len(components))
+    streams = np.random.SeedSequence(settings.seed).spawn(len(components))
     plans = []
     for c, stream in zip(components, streams):
-        equilibrium = None
-        if not self_held(c):
-            rng = np.random.default_rng(stream.spawn(1)[0])
-            options = {"bundles": settings.bundles, "iterations": settings.iterations, "eta": settings.eta}
-            options.update(jobs=jobs, executor=executor)
-            equilibrium = solve(c, galaxy, potential.for_orbits(), rng, **options)
+        equilibrium = None if self_held(c) else _held(c, galaxy, potential, settings, stream, pieces, jobs, executor)
         plans += [(c, equilibrium, i, s) for i, s in enumerate(stream.spawn(len(settings.kick_edges)))]
 
     def run(plan):
@@ -150,6 +145,22 @@ def synthesize(galaxy, potential, settings=None, *, jobs=1, executor=None, progr
         bar_angle=float(potential.bar_angle.to_value(u.rad)),
         mismatch=mismatch,
         provenance=pieces.made,
+    )
+
+
+def _held(component, galaxy, potential, settings, stream, pieces, jobs, executor):
+    """Return a component's equilibrium, found now or kept from before."""
+    rng = np.random.default_rng(stream.spawn(1)[0])
+    key = f"{component.element}_equilibrium"
+    kept = pieces.get(key)
+    if kept is None:
+        options = {"bundles": settings.bundles, "iterations": settings.iterations, "eta": settings.eta}
+        found = solve(component, galaxy, potential.for_orbits(), rng, jobs=jobs, executor=executor, **options)
+        mismatch = np.array(json.dumps(found.mismatch))
+        pieces.keep(key, {"states": found.states, "weights": found.weights, "mismatch": mismatch})
+        return found
+    return Equilibrium(
+        kept["states"], kept["weights"], float(1 / np.sum(kept["weights"] ** 2)), json.loads(str(kept["mismatch"]))
     )
 
 
@@ -246,7 +257,7 @@ def _made(galaxy, potential, settings):
             {
                 "version": __version__,
                 "galaxy": galaxy.name,
-                "galaxy_numbers": hashlib.sha256(repr(galaxy.components).encode()).hexdigest(),
+                "galaxy_numbers": galaxy_numbers(galaxy),
                 "potential": potential.name,
                 "potential_numbers": hashlib.sha256(repr(potential.members).encode()).hexdigest(),
                 "pattern_speed_kms_kpc": -potential.omega,
