@@ -315,9 +315,10 @@ def _velocities(component, galaxy, potential, place, bundle, rng):
     kind = (bundle // 2) % 4
     if hasattr(component.density, "h_R"):
         # half the bundles start near the top of their vertical motion, whatever the vertical force is there,
-        # and half of these turn too slowly for their radius, as high orbits near the centre must
+        # and inside a scale length half of these turn too slowly for their radius, as high orbits near the centre must
         velocity[:, 2] *= np.where(kind % 2 == 1, 0.2, 1.0)
-        velocity[:, :2] *= np.where(kind == 3, rng.uniform(0.1, 1.0, n), 1.0)[:, None]
+        slow = (kind == 3) & (np.hypot(place[:, 0], place[:, 1]) < component.density.h_R.value)
+        velocity[:, :2] *= np.where(slow, rng.uniform(0.1, 1.0, n), 1.0)[:, None]
         return velocity
     # a quarter cold and fast, a quarter of any speed in any direction; nothing near escape
     escape = np.sqrt(-2 * potential.value(*(place.T * u.kpc)).value)
