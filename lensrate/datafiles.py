@@ -8,7 +8,16 @@ from pathlib import Path
 
 from .errors import DataFileError, InputError, one_of
 
-__all__ = ["data_folder", "find", "names", "parse_toml", "read_set"]
+__all__ = [
+    "data_folder",
+    "field_checksum",
+    "field_names",
+    "field_path",
+    "find",
+    "names",
+    "parse_toml",
+    "read_set",
+]
 
 _LIMIT = 4_000_000  # bytes; the largest text file we ship is far smaller
 
@@ -86,6 +95,44 @@ def find(relative):
 def names(kind):
     """Return the sorted names of the shipped sets of one kind ("galaxy", "kicks", ...)."""
     return sorted(p.stem for p in (data_folder() / kind).glob("*.toml"))
+
+
+def field_names():
+    """Return the sorted names of the shipped kick-resolved fields."""
+    return sorted(p.stem for p in (data_folder() / "fields").glob("*.fits"))
+
+
+def field_path(name):
+    """Return the path of kick-resolved fields: a shipped name, or a user's file ending in ``.fits``.
+
+    Raises
+    ------
+    InputError
+        Unknown name, or no such file.
+    DataFileError
+        A shipped file that is damaged.
+    """
+    if not str(name).endswith(".fits"):
+        one_of("fields", str(name), field_names())
+        return find(f"fields/{name}.fits")
+    if not Path(name).is_file():
+        raise InputError(f"fields: no file '{name}'; make one with 'lensrate synthesize'")
+    return Path(name)
+
+
+@cache
+def _checksum(path, _stamp):
+    return hashlib.sha256(Path(path).read_bytes()).hexdigest()
+
+
+def field_checksum(name):
+    """Return the sha256 of kick-resolved fields, as listed for shipped ones."""
+    listed = checksums().get(f"fields/{name}.fits")
+    if listed is not None:
+        return listed
+    path = field_path(name)
+    status = path.stat()
+    return _checksum(str(path), (status.st_mtime_ns, status.st_size))
 
 
 def parse_toml(path, limit=_LIMIT):

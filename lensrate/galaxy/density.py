@@ -1,6 +1,6 @@
 """Mass densities of stellar components, as declared records; the arithmetic is in kernels/density.py."""
 
-from dataclasses import dataclass, fields
+from dataclasses import dataclass
 from typing import ClassVar
 
 import astropy.units as u
@@ -22,6 +22,7 @@ __all__ = [
     "PowerHalo",
     "SechExpDisc",
     "Uniform",
+    "stellar_mass",
 ]
 
 BAR_PROFILES = {"exp": 0.0, "gauss": 1.0, "sech2": 2.0}
@@ -278,6 +279,48 @@ DENSITIES = {
 }
 
 
-def declared(cls):
-    """Return the names a Galaxy file may set for a record, in order."""
-    return [f.name for f in fields(cls)]
+def stellar_mass(density, R0, R_max=100.0):
+    """Return the mass of a component [Msun], float; of halos, which do not end, inside `R_max` [kpc].
+
+    Parameters
+    ----------
+    density : Density
+        Any record but `Uniform`, whose mass is infinite.
+    R0 : float
+        The Sun's distance from the axis [kpc].
+    R_max : float
+        Where a halo is cut [kpc].
+
+    Returns
+    -------
+    float
+    """
+    if isinstance(density, NuclearDisc):
+        return float(density.mass.value)
+    if isinstance(density, Bar):
+        return float(density.total_mass().value)
+    if isinstance(density, (ExpDisc, IsothermalDisc, SechExpDisc)):
+        h = density.h_R.value
+        R_f = density.R_flat.value if hasattr(density, "R_flat") else 0.0
+        area = 2 * np.pi * np.exp((R0 - R_f) / h) * (0.5 * R_f**2 + h * (R_f + h))
+        return float(area * _column(density))
+    if isinstance(density, Uniform):
+        return np.inf
+    x, w = np.polynomial.legendre.leggauss(48)
+    u_r, u_t = 0.5 * (x + 1), 0.5 * (x + 1)
+    # r = R_max u^3 gathers the nodes at the centre
+    r = R_max * u_r**3
+    R, z = r[:, None] * np.sqrt(1 - u_t**2), r[:, None] * u_t
+    rho = density.at(R, 0.0, z, R0)
+    weight = (0.5 * w * 3 * R_max * u_r**2 * 4 * np.pi * r**2)[:, None] * (0.5 * w)
+    return float(np.sum(rho * weight))
+
+
+def _column(density):
+    """Surface density at the Sun's radius [Msun/kpc^2]."""
+    if isinstance(density, IsothermalDisc):
+        return density.column.value
+    if isinstance(density, ExpDisc):
+        return 2 * density.rho_sun.value * density.h_z.value
+    share = density.share_sech.value
+    return 2 * density.rho_sun.value * (share * density.h_sech.value + (1 - share) * density.h_exp.value)

@@ -76,6 +76,47 @@ def moments(outer, D_S, src, D_L, w_L, lens, element, four_g_c2, kappa, mas, n_d
 
 
 @kernel
+def pair_moments(outer, D_S, src, D_L, w_L, lens, element, four_g_c2, kappa, mas, n_dir, tau, gamma):
+    """As `moments`, but add to tau and gamma (E, N) the part of each pair, summed over source rows."""
+    cos = np.empty(n_dir)
+    sin = np.empty(n_dir)
+    for i in range(n_dir):
+        cos[i] = math.cos(math.pi * i / n_dir)
+        sin[i] = math.sin(math.pi * i / n_dir)
+    for r in range(element.size):
+        e = element[r]
+        for p in range(outer.size):
+            n = lens[0, r, p]
+            if n <= 0.0:
+                continue
+            j = outer[p]
+            d = D_L[p]
+            pi_rel = 1.0 / d - 1.0 / D_S[j]
+            if pi_rel <= 0.0:
+                continue
+            g_tau = w_L[p] * math.pi * four_g_c2 * d * d * pi_rel * n
+            g_rate = w_L[p] * 2.0 * d * d * math.sqrt(kappa * pi_rel) * mas * mas * n
+            for s in range(src.shape[1]):
+                w = src[0, s, j]
+                if w <= 0.0:
+                    continue
+                tau[e, p] += g_tau * w
+                gamma[e, p] += (
+                    g_rate
+                    * w
+                    * mean_speed(
+                        lens[1, r, p] - src[1, s, j],
+                        lens[2, r, p] - src[2, s, j],
+                        lens[3, r, p] + src[3, s, j],
+                        lens[4, r, p] + src[4, s, j],
+                        lens[5, r, p] + src[5, s, j],
+                        cos,
+                        sin,
+                    )
+                )
+
+
+@kernel
 def _add_directions(weight, ml, mb, ixx, ixy, iyy, log_norm, first, step, n_dir, mu, ka, kb, q_max, out):
     """Add weight * N2(mu e_phi) summed over n_dir directions from angle `first`, for mu[ka:kb]."""
     target = out[ka:kb]

@@ -45,7 +45,7 @@ class MassGrid:
         weight = np.zeros((len(spectra), len(spectra[0]), n))
         for c, row in enumerate(spectra):
             for e, s in enumerate(row):
-                if s is None or not s.mass.size:
+                if s is None or not s.mass.size or not np.any(s.number):
                     continue
                 x = np.log(s.mass) / (2 * h)
                 i = np.floor(x).astype(int)
@@ -77,7 +77,7 @@ def unit_timescales(grid, T):
 
 
 def timescales(grid, unit, masses):
-    """Return t_E [d] (n,) and the rate per ln t_E by class and element (classes, elements, n).
+    """Return t_E [d] (n,) and the rate per ln t_E by class (classes, n) and by element (E, n).
 
     Parameters
     ----------
@@ -90,17 +90,20 @@ def timescales(grid, unit, masses):
 
     Returns
     -------
-    t_E, pdf : ndarray
+    t_E, by_class, by_element : ndarray
         Days; events per source, year and unit ln t_E.
     """
-    n = masses.weight.shape[2]
-    size = unit.shape[1] + n - 1
-    t = timescale_grid(grid)[0] * np.exp(grid.h * (np.arange(size) + masses.k0))
-    length = 1 << (size - 1).bit_length()
-    spectrum = np.fft.rfft(unit, length)[None] * np.fft.rfft(masses.weight, length)
-    pdf = np.fft.irfft(spectrum, length)[..., :size]
-    # the convolution is positive but for rounding and the Lagrange weights' undershoot at sharp mass edges
-    return t, np.maximum(pdf, 0.0)
+    weight = masses.weight
+    n, m = weight.shape[2], unit.shape[1]
+    t = timescale_grid(grid)[0] * np.exp(grid.h * (np.arange(m + n - 1) + masses.k0))
+    by_class, by_element = np.zeros((weight.shape[0], t.size)), np.zeros((unit.shape[0], t.size))
+    together = weight.sum(axis=0)
+    for k in range(n):
+        if np.any(weight[:, :, k]):
+            by_class[:, k : k + m] += weight[:, :, k] @ unit
+            by_element[:, k : k + m] += together[:, k, None] * unit
+    # positive but for the Lagrange weights' undershoot at sharp mass edges
+    return t, np.maximum(by_class, 0.0), np.maximum(by_element, 0.0)
 
 
 def joint(grid, T, masses, which):

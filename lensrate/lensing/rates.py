@@ -10,7 +10,15 @@ from ..kernels import rates as kernels
 from ..units import FOUR_G_C2, KAPPA, KMS_PER_MASYR_KPC, MAS
 from .quadrature import Isogrid, lens_pairs, panel_edges, panel_nodes, row_nodes
 
-__all__ = ["Line", "event_rate_density", "moments", "prepare", "rate_density"]
+__all__ = [
+    "Line",
+    "event_rate_density",
+    "kicked_moments",
+    "kicked_rate_density",
+    "moments",
+    "prepare",
+    "rate_density",
+]
 
 _ARCMIN2 = (np.pi / 10800.0) ** 2  # sr
 
@@ -132,6 +140,93 @@ def moments(ready):
     return tau, gamma, np.divide(distance, total, out=np.full(E, np.nan), where=total > 0)
 
 
+_KICKED_NODES = 4  # per panel: kicked populations are smooth
+_KICKED_GAP = 0.3  # kpc, panels shorter than this are joined for them
+_KICKED_DIRECTIONS = 12
+
+
+def kicked_moments(ready):
+    """Return optical depth and rate of 1 Msun lenses on the remnants' own fields.
+
+    Parameters
+    ----------
+    ready : Line
+        From `prepare`, of a model with fields.
+
+    Returns
+    -------
+    tau, gamma : ndarray, shape (K,)
+        By kicked element, as `moments`, summed over sources.
+    error : ndarray, shape (K,)
+        Standard error of gamma from the scatter of the fields' batches.
+    """
+    kicked, numerics = ready.model.kicked, ready.numerics
+    edges = _joined(ready.edges)
+    n = max(_KICKED_NODES, numerics.nodes - 1)
+    if ready.sources.fixed_distance:
+        D, w = ready.D_S, np.ones(1)
+    else:
+        D, w = panel_nodes(edges, n)
+    src = _source_rows(ready.model, ready.line, ready.sources, D)
+    src[0] *= w / ready.norm
+    src = _merged(ready.model, src, two=True)
+    light = src[0].sum(axis=0) > 1e-7 * src[0].sum()
+    D, src = np.ascontiguousarray(D[light]), np.ascontiguousarray(src[:, :, light])
+    outer, D_L, w_L = lens_pairs(D, edges, n)
+    lens = kicked.profile(ready.line, D_L)
+    pair_tau, pair_gamma = np.zeros((len(kicked.host), D_L.size)), np.zeros((len(kicked.host), D_L.size))
+    kernels.pair_moments(
+        outer, D, src, D_L, w_L, lens, kicked.element_of_row, FOUR_G_C2, KAPPA, MAS, _KICKED_DIRECTIONS,
+        pair_tau, pair_gamma,
+    )  # fmt: skip
+    by_batch = np.einsum("bkn,kn->bk", kicked.batch_factors(ready.line, D_L), pair_gamma)
+    error = by_batch.std(axis=0, ddof=1) / np.sqrt(len(by_batch))
+    return pair_tau.sum(axis=1), pair_gamma.sum(axis=1), error
+
+
+def kicked_rate_density(ready, grid):
+    """Return the mass-free rate density of the remnants' own fields on a given isogrid, (K, P, K_mu)."""
+    numerics = ready.numerics
+    if ready.sources.fixed_distance:
+        D = np.full(grid.pi.size, ready.sources.fixed_distance)
+        row, w = np.arange(grid.pi.size), np.ones(grid.pi.size)
+    else:
+        row, D, w = row_nodes(grid.pi, _joined(ready.edges), np.empty(0), max(_KICKED_NODES, numerics.nodes - 1))
+    src = _source_rows(ready.model, ready.line, ready.sources, D)
+    src[0] *= w / ready.norm
+    light = src[0].sum(axis=0) > 1e-7 * src[0].sum(axis=0).max()
+    row, D, src = row[light], D[light], _merged(ready.model, np.ascontiguousarray(src[:, :, light]), two=True)
+    kicked = ready.model.kicked
+    lens = kicked.profile(ready.line, 1.0 / (grid.pi[row] + 1.0 / D))
+    geometry = np.empty(D.size)
+    kernels.node_weights(grid.pi, row, D, KAPPA, MAS, geometry)
+    T = np.zeros((len(kicked.host), grid.pi.size, grid.mu.size))
+    kernels.rate_density(
+        grid.pi, row, geometry, src, lens, kicked.element_of_row, grid.mu, 2.0, 12.0, 1e-4, T,
+    )  # fmt: skip
+    return T
+
+
+def _joined(edges):
+    """Panel edges without those that follow another one closely."""
+    keep = [edges[0]]
+    for e in edges[1:-1]:
+        if e - keep[-1] >= _KICKED_GAP:
+            keep.append(e)
+    return np.array([*keep, edges[-1]])
+
+
+def _merged(model, src, two=False):
+    """Source rows moment-matched into the components' groups, or into disc and bulge."""
+    if src.shape[1] == 1:
+        return src
+    group = [int(c.bulge) if two else c.group for c in model.galaxy.components]
+    _, group = np.unique(group, return_inverse=True)
+    out = np.empty((6, group.max() + 1, src.shape[2]))
+    profiles.merge_rows(src, group, out)
+    return out
+
+
 def _nodes(ready):
     """Isogrid, node rows and distances, source rows (merged if asked) and lens profile at the nodes."""
     numerics = ready.numerics
@@ -146,12 +241,8 @@ def _nodes(ready):
         row, D, w = row_nodes(grid.pi, ready.edges, ready.kinks, numerics.nodes)
     src = _source_rows(ready.model, ready.line, ready.sources, D)
     src[0] *= w / ready.norm
-    if numerics.merge_sources and src.shape[1] > 1:
-        group = np.array([c.group for c in ready.model.galaxy.components], dtype=np.int64)
-        _, group = np.unique(group, return_inverse=True)
-        merged = np.empty((6, group.max() + 1, D.size))
-        profiles.merge_rows(src, group, merged)
-        src = merged
+    if numerics.merge_sources:
+        src = _merged(ready.model, src)
     lens = ready.model.galaxy.profile(ready.line, 1.0 / (grid.pi[row] + 1.0 / D))
     geometry = np.empty(D.size)
     kernels.node_weights(grid.pi, row, D, KAPPA, MAS, geometry)

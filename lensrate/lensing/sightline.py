@@ -1,38 +1,22 @@
 """One sightline, end to end: the function `sightline` and the record it returns."""
 
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, field
 from functools import cached_property
 
 import astropy.units as u
 import numpy as np
 
 from .._version import __version__
-from ..errors import ConvergenceError, InputError, one_of
+from ..errors import InputError, one_of
 from ..scenario import Scenario, resolve
-from ..units import DAYS_PER_YEAR, FOUR_G_C2, check_range, strip
+from ..units import check_range, strip
 from . import distributions, rates
+from .forecast import Lens, assemble, disc_share, integrate, optical_depth_along
 from .quadrature import Numerics
 
 __all__ = ["Lens", "Sightline", "sightline"]
 
-_UNKICKED_NOTE = "neutron stars and black holes are unkicked: they ride on the stellar field of their birth component"
-
-
-@dataclass(frozen=True)
-class Lens:
-    """What one class (or component, or element) of lenses does on a sightline.
-
-    Rates are per source star and year within u_0_limit; optical depth is for u < 1. Numbers that a t_E range limits
-    say so in the Sightline's `t_E_range`.
-    """
-
-    optical_depth: float
-    rate: float  # 1/yr
-    mean_t_E: float = np.nan  # d
-    median_t_E: float = np.nan  # d
-    share_of_events: float = np.nan
-    rate_standard_error: float | None = None  # sampling error of the fields; None for analytic ones
-    kinematics: str = "stellar"
+_LINEAR = ("kicks", "bh_kicks", "ifmr", "imf", "lens_class", "u_0_limit")
 
 
 @dataclass(frozen=True, eq=False)
@@ -55,6 +39,9 @@ class Sightline:
         What to mind; what the numbers rest on.
     quadrature_error : float
         Relative difference of the total rate between the two independent quadratures.
+    field_mismatch : float or None
+        Systematic error of the kicked rates: neutron stars on the synthesised unkicked field over those on the
+        stars' own, minus one, on this sightline; None without fields.
     """
 
     l: u.Quantity
@@ -74,9 +61,9 @@ class Sightline:
     mass_note: str = ""
     frame: str = "heliocentric"
     version: str = __version__
-    _ready: object = field(default=None, repr=False)
-    _grid: object = field(default=None, repr=False)
-    _T: object = field(default=None, repr=False)
+    field_mismatch: float | None = None
+    _model: object = field(default=None, repr=False)
+    _integrals: object = field(default=None, repr=False)
 
     @property
     def classes(self):
@@ -123,6 +110,7 @@ class Sightline:
             "lenses": lenses,
             "components": parts,
             "quadrature_error": self.quadrature_error,
+            "field_mismatch": _none(self.field_mismatch),
             "warnings": list(self.warnings),
             "references": list(self.references),
             "version": self.version,
@@ -255,16 +243,43 @@ class Sightline:
             Unknown `y`.
         """
         one_of("y", y, ("pi_E", "theta_E"))
-        masses = distributions.MassGrid.deposit(self._grid.h, _spectra(self._ready.model))
-        t, values, density = distributions.joint(self._grid, self._T, masses, y)
+        grid = self._integrals.grid
+        masses = distributions.MassGrid.deposit(grid.h, self._model.spectra())
+        t, values, density = distributions.joint(grid, self._integrals.T, masses, y)
         unit = u.mas if y == "theta_E" else u.one
         named = {name: self.u_0_limit * d / u.yr for name, d in zip(self.classes, density)}
         return t * u.day, values * unit, named
 
+    def reforecast(self, **changes):
+        """Return the forecast under other kick laws, class masses or lens classes, from the integrals already done.
+
+        Parameters
+        ----------
+        **changes
+            Any of kicks, bh_kicks, ifmr, imf, lens_class, u_0_limit, as in `Scenario`. The source stars stay as they
+            are. Anything else, or a kick where there was none, needs a new `sightline`.
+
+        Returns
+        -------
+        Sightline
+
+        Raises
+        ------
+        InputError
+            A field that the integrals depend on, or an impossible value.
+        """
+        for key in changes:
+            one_of("reforecast", key, _LINEAR)
+        scenario = self.scenario.replace(**changes)
+        if self._model.kicked is None and not scenario.unkicked and scenario.fields:
+            raise InputError("reforecast: this forecast is unkicked and holds no fields; run a new sightline")
+        model = self._model.changed(scenario)
+        return _record(self.l, self.b, scenario, model, self._integrals, self.t_E_range)
+
     @cached_property
     def optical_depth_along(self):
         """Optical depth per kpc of lens distance by component: distances [kpc] (n,), dict of name to (n,)."""
-        return _along(self)
+        return optical_depth_along(self._model, self._integrals.ready)
 
     def plot(self, ax=None, kind="timescales", **style):
         """Draw the forecast.
@@ -335,13 +350,35 @@ def sightline(l, b, scenario="default", *, sources=None, extinction=None, kicks=
         scenario = scenario.replace(**changes)
     limits = _t_E_range(t_E_range)
     model = resolve(scenario)
-    numerics = Numerics(**scenario.numerics)
     line = model.galaxy.sightline(l_rad, b_rad)
-    line_sources = model.sources.toward(l_rad, b_rad, model.galaxy)
-    ready = rates.prepare(model, line, line_sources, numerics)
-    tau_eS, gamma_eS, _ = rates.moments(ready)
-    grid, T = rates.rate_density(ready)
-    return _assemble(l << u.deg, b << u.deg, scenario, ready, tau_eS.sum(axis=1), gamma_eS.sum(axis=1), grid, T, limits)
+    toward = model.sources.toward(l_rad, b_rad, model.galaxy)
+    integrals = integrate(rates.prepare(model, line, toward, Numerics(**scenario.numerics)))
+    return _record(l << u.deg, b << u.deg, scenario, model, integrals, limits)
+
+
+def _record(l, b, scenario, model, integrals, limits):
+    ready = integrals.ready
+    forecast = assemble(model, integrals, scenario.u_0_limit, limits, f"l = {l:g}, b = {b:g}")
+    sources = {
+        "rule": ready.sources.rule.text,
+        "extinction": dict(ready.sources.extinction),
+        "mean_distance_kpc": ready.mean_distance(),
+        "disc_share": disc_share(ready),
+        "source_density_per_arcmin2": ready.per_arcmin2() if ready.sources.counts_stars else None,
+    }
+    return Sightline(
+        l=l,
+        b=b,
+        scenario=scenario,
+        sources=sources,
+        u_0_limit=scenario.u_0_limit,
+        t_E_range=limits,
+        references=model.references,
+        mass_note=model.mass_note(),
+        _model=model,
+        _integrals=integrals,
+        **forecast,
+    )
 
 
 def _direction(l, b):
@@ -364,114 +401,6 @@ def _t_E_range(given):
     if not low < high:
         raise InputError(f"t_E_range: {low:g} to {high:g} d given, the first must be below the second")
     return low, high
-
-
-def _spectra(model):
-    return [[model.spectrum(name, i) for i in range(len(model.galaxy.components))] for name in model.classes]
-
-
-def _assemble(l, b, scenario, ready, tau_e, gamma_e, grid, T, limits):
-    model, u_0 = ready.model, scenario.u_0_limit
-    spectra = _spectra(model)
-    masses = distributions.MassGrid.deposit(grid.h, spectra)
-    t, pdf = distributions.timescales(grid, distributions.unit_timescales(grid, T), masses)  # (C, E, n)
-    root = np.array([[0.0 if s is None else s.moment(0.5) for s in row] for row in spectra])
-    mass = np.array([[0.0 if s is None else s.moment(1.0) for s in row] for row in spectra])
-    tau, gamma = mass * tau_e, u_0 * root * gamma_e  # (C, E)
-    pdf = u_0 * pdf
-    if not (
-        np.all(np.isfinite(tau)) and np.all(np.isfinite(gamma)) and np.all(gamma >= 0) and np.all(np.isfinite(pdf))
-    ):
-        raise ConvergenceError(
-            f"sightline l = {l:g}, b = {b:g}: a rate is negative or not finite; check the scenario's numbers"
-        )
-    total_pdf = pdf.sum(axis=(0, 1))
-    quadrature = abs(np.sum(pdf) * grid.h / gamma.sum() - 1.0) if gamma.sum() > 0 else 0.0
-    tau_c, gamma_c, mean_c, median_c = _by_class(t, pdf.sum(axis=1), tau.sum(axis=1), gamma.sum(axis=1), limits, u_0)
-    *_, mean_a, median_a = _by_class(t, total_pdf[None], [tau.sum()], [gamma.sum()], limits, u_0)
-    everything = gamma_c.sum()
-    lenses = {}
-    for c, name in enumerate(model.classes):
-        share = gamma_c[c] / everything if everything > 0 else np.nan
-        kind = "unkicked" if name in ("neutron_star", "black_hole") else "stellar"
-        lenses[name] = Lens(tau_c[c], gamma_c[c], mean_c[c], median_c[c], share, None, kind)
-    kinds = {lens.kinematics for lens in lenses.values() if lens.rate > 0}
-    kind = kinds.pop() if len(kinds) == 1 else "mixed"
-    lenses["all"] = Lens(tau_c.sum(), everything, mean_a[0], median_a[0], 1.0 if everything > 0 else np.nan, None, kind)
-    elements = {}
-    for e, component in enumerate(model.galaxy.components):
-        if limits is None:
-            elements[component.element] = Lens(float(tau[:, e].sum()), float(gamma[:, e].sum()))
-        else:
-            a, g, *_ = _by_class(t, pdf[:, e], tau[:, e], gamma[:, e], limits, u_0)
-            elements[component.element] = Lens(float(a.sum()), float(g.sum()))
-    components = {}
-    for component in model.galaxy.components:
-        part, old = elements[component.element], components.get(component.name, Lens(0.0, 0.0))
-        components[component.name] = replace(
-            old, optical_depth=old.optical_depth + part.optical_depth, rate=old.rate + part.rate
-        )
-    warnings = list(ready.sources.warnings)
-    if any(lenses[n].rate > 0 for n in ("neutron_star", "black_hole")):
-        warnings.append(_UNKICKED_NOTE)
-    shares = ready.source_shares()
-    disc = _disc_share(model, shares)
-    return Sightline(
-        l=l, b=b, scenario=scenario,
-        sources={
-            "rule": ready.sources.rule.text,
-            "extinction": dict(ready.sources.extinction),
-            "mean_distance_kpc": ready.mean_distance(),
-            "disc_share": disc,
-            "source_density_per_arcmin2": ready.per_arcmin2() if ready.sources.counts_stars else None,
-        },
-        lenses=lenses, components=components, elements=elements, t_E=t, rate_per_ln_t_E=pdf.sum(axis=1),
-        u_0_limit=u_0, t_E_range=limits, warnings=tuple(warnings), references=model.references,
-        quadrature_error=float(quadrature), mass_note=model.mass_note(), _ready=ready, _grid=grid, _T=T,
-    )  # fmt: skip
-
-
-def _by_class(t, pdf, tau, gamma, limits, u_0):
-    """Optical depth, rate, mean and median t_E of each row, limited to a range of t_E if asked."""
-    n = len(pdf)
-    tau, gamma = np.array(tau, dtype=float), np.array(gamma, dtype=float)
-    mean, median = np.full(n, np.nan), np.full(n, np.nan)
-    for c in range(n):
-        if not gamma[c] > 0:
-            continue
-        q = distributions.Quantiles(t, pdf[c])
-        if limits is None:
-            mean[c] = 2.0 / np.pi * tau[c] * u_0 / gamma[c] * DAYS_PER_YEAR
-            median[c] = q.quantile(0.5)
-            continue
-        whole = q.rate()
-        kept = q.rate(*limits) / whole if whole > 0 else 0.0
-        mean[c], median[c] = q.mean(*limits), q.quantile(0.5, *limits)
-        # an event's share of the optical depth goes with its duration
-        tau[c] *= kept * mean[c] / q.mean() if kept > 0 else 0.0
-        gamma[c] *= kept
-    return tau, gamma, mean, median
-
-
-def _disc_share(model, shares):
-    components = model.galaxy.components
-    if len(shares) != len(components):
-        return None
-    return float(sum(s for s, c in zip(shares, components) if not c.bulge))
-
-
-def _along(result, n=400):
-    ready = result._ready
-    D = np.linspace(0, max(ready.edges[-1] if ready.sources.fixed_distance else 12.0, 1e-3), n + 1)[1:]
-    lens = ready.model.galaxy.profile(ready.line, D)[0]
-    w, D_S = ready.src[0].sum(axis=0), ready.D_S
-    inverse = np.array([np.sum(w[D_S > d] * (1.0 / d - 1.0 / D_S[D_S > d])) for d in D])
-    geometry = np.pi * FOUR_G_C2 * D**2 * inverse
-    out = {}
-    for i, c in enumerate(ready.model.galaxy.components):
-        mass = sum(s.moment(1.0) for name in ready.model.classes if (s := ready.model.spectrum(name, i)) is not None)
-        out[c.name] = out.get(c.name, 0.0) + mass * geometry * lens[i]
-    return D, out
 
 
 def _none(x):

@@ -1,22 +1,24 @@
 """A scenario resolved: Galaxy, populations and source model built once and shared by everything that runs on it."""
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import cached_property
 
 import numpy as np
 
+from ..errors import InputError
 from ..galaxy.model import Galaxy
-from ..remnants.classes import CLASSES, LensClass
+from ..remnants.classes import CLASSES, LensClass, MassSpectrum
 from ..remnants.history import History
 from ..remnants.ifmr import Ifmr
 from ..remnants.imf import Imf
+from ..remnants.kicked import KickedLenses, galaxy_numbers, read_field
 from ..remnants.kicks import parse_kick
 from ..remnants.lifetimes import Lifetimes
 from ..remnants.population import population
 from ..sources.extinction import DustDisc
 from ..sources.luminosity import LuminosityFunction, luminosity_function
 from ..sources.model import Sources
-from ..sources.rules import LimitRule, parse_rule
+from ..sources.rules import ClumpRule, LimitRule, parse_rule
 
 __all__ = ["Model", "resolve"]
 
@@ -28,6 +30,9 @@ _resolved = {}
 class Model:
     """Everything a scenario means.
 
+    Elements are the Galaxy's components in order, then each component's kick bins. A class rides on an element with a
+    MassSpectrum: numbers per solar mass of the component's stated mass, times the share of the kick bin.
+
     Attributes
     ----------
     galaxy : Galaxy
@@ -36,7 +41,9 @@ class Model:
     own : dict of str to LensClass
         Lens classes beyond the five.
     sources : Sources
-    references : tuple of str
+    kicked : KickedLenses or None
+        The remnants' own fields; None where they follow the stars.
+    references, warnings : tuple of str
     """
 
     scenario: object
@@ -44,15 +51,29 @@ class Model:
     populations: tuple
     own: dict
     sources: Sources
+    kicked: KickedLenses | None
     references: tuple
+    warnings: tuple = ()
 
     @property
     def classes(self):
         """The five classes and the user's own, in order."""
         return [*CLASSES, *self.own]
 
+    @property
+    def n_stellar(self):
+        """Number of elements that are the Galaxy's components themselves."""
+        return len(self.galaxy.components)
+
+    @property
+    def component_of(self):
+        """Component index of every element, stellar ones first."""
+        hosts = [] if self.kicked is None else list(self.kicked.host)
+        return [*range(self.n_stellar), *hosts]
+
     @cached_property
     def _spectra(self):
+        m = self.n_stellar
         out = {}
         for i, (component, pop) in enumerate(zip(self.galaxy.components, self.populations)):
             for name in CLASSES:
@@ -60,11 +81,59 @@ class Model:
             for name, own in self.own.items():
                 rides = component.name in own.rides_on or component.element in own.rides_on
                 out[name, i] = own.spectrum(pop) if rides else None
+        if self.kicked is not None:
+            for i, pop in enumerate(self.populations):
+                if pop is None or i not in self.kicked.host:
+                    continue
+                for name, law in self.laws.items():
+                    shares = _shares(law, pop.spectra[name].mass, self.kicked.edges)
+                    first = m + list(self.kicked.host).index(i)
+                    out[name, i] = _times(pop.spectra[name], shares[0])
+                    # bin 0 of the fields is the synthesised unkicked population: a check, not used
+                    out[name, first] = None
+                    for k in range(1, len(self.kicked.edges)):
+                        out[name, first + k] = _times(pop.spectra[name], shares[k])
         return out
 
+    @cached_property
+    def laws(self):
+        """Kick law of neutron stars, and for black holes a law or (law, M_NS) of momentum scaling."""
+        star = parse_kick(self.scenario.kicks)
+        hole = self.scenario.bh_kicks
+        if hole == "same":
+            return {"neutron_star": star, "black_hole": star}
+        if hole != "momentum":
+            return {"neutron_star": star, "black_hole": parse_kick(hole)}
+        number = sum(p.spectra["neutron_star"].moment(0) for p in self.populations if p is not None)
+        mass = sum(p.spectra["neutron_star"].moment(1) for p in self.populations if p is not None)
+        return {"neutron_star": star, "black_hole": (star, mass / number if number > 0 else 1.4)}
+
     def spectrum(self, name, i):
-        """Return the MassSpectrum of a class on component i, or None."""
-        return self._spectra[name, i]
+        """Return the MassSpectrum of a class on element i, or None."""
+        return self._spectra.get((name, i))
+
+    def spectra(self):
+        """Return the MassSpectrum, or None, of each class (rows) on each element (columns)."""
+        return [[self.spectrum(name, i) for i in range(len(self.component_of))] for name in self.classes]
+
+    def changed(self, scenario):
+        """Return the model of a scenario that differs only in kick laws, masses or lens classes, sources kept."""
+        old = self.scenario
+        populations = self.populations
+        if (scenario.ifmr, scenario.imf) != (old.ifmr, old.imf):
+            populations = tuple(p for p, _ in _stars(scenario, self.galaxy, None))
+        own = {**self.galaxy.lens_class, **scenario.lens_class}
+        own = {name: LensClass.parse(name, table) for name, table in own.items()}
+        return replace(self, scenario=scenario, populations=populations, own=own)
+
+    def kinematics(self, name):
+        """Return the word for a class: stellar, kicked or unkicked."""
+        if name not in ("neutron_star", "black_hole"):
+            return "stellar"
+        if self.kicked is None:
+            return "unkicked"
+        law = self.laws[name]
+        return "unkicked" if (law[0] if isinstance(law, tuple) else law).name == "none" else "kicked"
 
     def mass_note(self):
         """Return a line on what the stated masses count and the ratio of total to luminous mass."""
@@ -76,6 +145,22 @@ class Model:
         for name, rows in parts.items():
             words.append(f"{name} counts {rows[0][0]} (total/luminous {np.mean([r[1] for r in rows]):.2f})")
         return "; ".join(words)
+
+
+def _shares(law, mass, edges):
+    """Share of each kick bin for remnants of each mass: unkicked, the bins; (bins + 1, n). The rest escaped."""
+    if not isinstance(law, tuple):
+        weights = law.bin_weights(edges)
+        return np.concatenate([[weights.unkicked], weights.inside])[:, None] * np.ones(mass.size)
+    out = np.empty((len(edges), mass.size))
+    for j, m in enumerate(mass):
+        weights = law[0].scaled(law[1] / m).bin_weights(edges) if law[0].name != "none" else law[0].bin_weights(edges)
+        out[0, j], out[1:, j] = weights.unkicked, weights.inside
+    return out
+
+
+def _times(spectrum, share):
+    return MassSpectrum(spectrum.mass, spectrum.number * share, spectrum.initial_mass)
 
 
 def resolve(scenario):
@@ -103,34 +188,59 @@ def resolve(scenario):
     return _resolved[key]
 
 
+def _stars(scenario, galaxy, band):
+    """Population and luminosity function (None where no band is asked) of each component; None, None without stars."""
+    lifetimes, ifmr = Lifetimes.read(scenario.lifetimes), Ifmr.read(scenario.ifmr)
+    users = LuminosityFunction.read(scenario.luminosity, band) if scenario.luminosity and band else None
+    made, out = {}, []
+    for component in galaxy.components:
+        key = (scenario.imf or component.imf, component.age, component.efold, component.counts)
+        if component.stars and key not in made:
+            imf, history = Imf.read(key[0]), History(*component.age, component.efold)
+            pop = population(history, imf, lifetimes, ifmr, component.counts)
+            made[key] = pop, users or (luminosity_function(band, history, pop, imf, lifetimes) if band else None)
+        out.append(made[key] if component.stars else (None, None))
+    return out
+
+
 def _build(scenario):
     galaxy = scenario.build_galaxy()
-    lifetimes, ifmr = Lifetimes.read(scenario.lifetimes), Ifmr.read(scenario.ifmr)
     rule = parse_rule(scenario.sources)
-    own = {name: LensClass.parse(name, table) for name, table in {**galaxy.lens_class, **scenario.lens_class}.items()}
-    band = rule.band if isinstance(rule, LimitRule) else "I"
-    users = LuminosityFunction.read(scenario.luminosity, band) if scenario.luminosity else None
-    populations, luminosities, made = [], [], {}
+    own = {**galaxy.lens_class, **scenario.lens_class}
+    own = {name: LensClass.parse(name, table) for name, table in own.items()}
+    stars = _stars(scenario, galaxy, rule.band if isinstance(rule, LimitRule) else "I")
+    luminosities = tuple(shine for _, shine in stars)
+    if isinstance(rule, ClumpRule) and any(s is not None and np.isnan(s.clump_per_msun) for s in luminosities):
+        raise InputError(
+            f"luminosity: '{scenario.luminosity}' does not say clump_per_msun, which the rule '{rule.text}' needs; "
+            "state it in the table's header"
+        )
+    sources = Sources(rule, luminosities, DustDisc.read(scenario.dust), scenario.extinction)
+    populations = [pop for pop, _ in stars]
     references = list(galaxy.references)
-    for component in galaxy.components:
-        if not component.stars:
-            populations.append(None)
-            luminosities.append(None)
-            continue
-        name = scenario.imf or component.imf
-        key = (name, component.age, component.efold, component.counts)
-        if key not in made:
-            imf = Imf.read(name)
-            history = History(*component.age, component.efold)
-            pop = population(history, imf, lifetimes, ifmr, component.counts)
-            shine = users if users else luminosity_function(band, history, pop, imf, lifetimes)
-            made[key] = pop, shine
-            references += imf.references
-        populations.append(made[key][0])
-        luminosities.append(made[key][1])
-    sources = Sources(rule, tuple(luminosities), DustDisc.read(scenario.dust), scenario.extinction)
-    references += [*lifetimes.references, *ifmr.references]
+    for name in dict.fromkeys(scenario.imf or c.imf for c in galaxy.components if c.stars):
+        references += Imf.read(name).references
+    references += [*Lifetimes.read(scenario.lifetimes).references, *Ifmr.read(scenario.ifmr).references]
     for law in (scenario.kicks, scenario.bh_kicks):
         if law not in ("same", "momentum", "none"):
             references += parse_kick(law).references
-    return Model(scenario, galaxy, tuple(populations), own, sources, tuple(dict.fromkeys(references)))
+    kicked, warnings = _kicked(scenario, galaxy)
+    references = tuple(dict.fromkeys(references))
+    return Model(scenario, galaxy, tuple(populations), own, sources, kicked, references, tuple(warnings))
+
+
+def _kicked(scenario, galaxy):
+    """The remnants' own fields, where the scenario has any, and what to say about them."""
+    if scenario.unkicked or not scenario.fields:
+        return None, []
+    field = read_field(scenario.fields)
+    kicked = KickedLenses.make(field, galaxy)
+    if kicked is None:
+        return None, [f"fields '{scenario.fields}' hold no component of galaxy '{galaxy.name}': all is unkicked"]
+    warnings = []
+    if field.provenance.get("galaxy_numbers") != galaxy_numbers(galaxy):
+        warnings.append(
+            f"fields '{scenario.fields}' were synthesised for other numbers of the Galaxy than this scenario's; "
+            "remnants follow those; make your own with 'lensrate synthesize'"
+        )
+    return kicked, warnings

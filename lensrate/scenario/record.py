@@ -3,11 +3,12 @@
 import hashlib
 import json
 import math
-from dataclasses import asdict, dataclass, field, fields, replace
+from dataclasses import asdict, dataclass, field, replace
+from dataclasses import fields as declared
 from functools import cached_property
 from pathlib import Path
 
-from ..datafiles import names, parse_toml, read_set
+from ..datafiles import field_checksum, field_names, names, parse_toml, read_set
 from ..errors import InputError, did_you_mean, one_of
 from ..galaxy.model import Galaxy
 from ..remnants.classes import LensClass
@@ -53,7 +54,8 @@ class Scenario:
     lifetimes: str = "standard"
     ifmr: str = "default"
     kicks: str = "igoshev2020"  # law of neutron stars
-    bh_kicks: str = "momentum"  # same, momentum, or a law
+    bh_kicks: str = "momentum"  # same, momentum (speeds scaled by M_NS / M_BH), or a law
+    fields: str = ""  # kick-resolved fields: shipped name or a .fits file; empty: none, all unkicked
     u_0_limit: float = 1.0
     numerics: dict = field(default_factory=dict)
     lens_class: dict = field(default_factory=dict)  # classes of the user's own, by name
@@ -61,7 +63,7 @@ class Scenario:
     component: tuple = ()  # further components, as in a Galaxy set
 
     def __post_init__(self):
-        for f in fields(self):
+        for f in declared(self):
             value = getattr(self, f.name)
             if f.type is str and not isinstance(value, str):
                 raise InputError(f"scenario: {f.name}: {value!r} given, must be text")
@@ -79,6 +81,8 @@ class Scenario:
                 one_of(f"scenario: {key}", text, names(kind))
         if self.imf and not self.imf.endswith(".toml"):
             one_of("scenario: imf", self.imf, names("imf"))
+        if self.fields and not self.fields.endswith(".fits"):
+            one_of("scenario: fields", self.fields, field_names())
         if not self.dust.endswith(".toml"):
             one_of("scenario: dust", self.dust, [n for n in names("sources") if n.startswith("dust")])
         hosts = self._galaxy_table["component"]
@@ -155,7 +159,7 @@ class Scenario:
         InputError
             See `read`.
         """
-        known = [f.name for f in fields(cls)]
+        known = [f.name for f in declared(cls)]
         for key in table:
             if key not in (*known, "base"):
                 raise InputError(
@@ -197,7 +201,7 @@ class Scenario:
         InputError
             Unknown field or impossible value.
         """
-        known = [f.name for f in fields(self)]
+        known = [f.name for f in declared(self)]
         for key in changes:
             one_of("scenario", key, known)
         return replace(self, **changes)
@@ -221,6 +225,11 @@ class Scenario:
                 target.update(_merge(target, changes))
         table["component"] = [*table["component"], *self.component]
         return table
+
+    @property
+    def unkicked(self):
+        """Whether no law of this scenario kicks anything."""
+        return self.kicks == "none" and self.bh_kicks in ("same", "momentum", "none")
 
     def build_galaxy(self):
         """Return the Galaxy of this scenario, its changes included.
@@ -257,6 +266,8 @@ class Scenario:
             "light": [read_set("sources", n) for n in ("giants", "dwarf_sequence", "extinction_law")],
             "imf": {n: read_set("imf", n) for n in sorted(used)},
         }
+        if self.fields and not self.unkicked:
+            full["sets"]["fields"] = field_checksum(self.fields)
         if self.luminosity:
             full["sets"]["luminosity"] = hashlib.sha256(Path(self.luminosity).read_bytes()).hexdigest()
         text = json.dumps(full, sort_keys=True, default=str, allow_nan=True)

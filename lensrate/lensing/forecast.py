@@ -1,0 +1,248 @@
+"""From integrals over elements to what is reported by class, component and element."""
+
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from ..errors import ConvergenceError
+from ..units import DAYS_PER_YEAR, FOUR_G_C2
+from . import distributions, rates
+
+__all__ = ["Integrals", "Lens", "assemble", "disc_share", "integrate", "optical_depth_along"]
+
+_UNKICKED = "neutron stars and black holes are unkicked: they ride on the stellar field of their birth component"
+_FAST = 1e-3  # share of remnants kicked beyond the last bin that is worth a word
+
+
+@dataclass(frozen=True)
+class Lens:
+    """What one class (or component, or element) of lenses does on a sightline.
+
+    Rates are per source star and year within u_0_limit; optical depth is for u < 1. Numbers that a t_E range limits
+    say so in the Sightline's `t_E_range`.
+    """
+
+    optical_depth: float
+    rate: float  # 1/yr
+    mean_t_E: float = np.nan  # d
+    median_t_E: float = np.nan  # d
+    share_of_events: float = np.nan
+    rate_standard_error: float | None = None  # sampling error of the fields; None for analytic ones
+    kinematics: str = "stellar"
+
+
+@dataclass(frozen=True, eq=False)
+class Integrals:
+    """What a sightline costs: everything of it that does not depend on masses, kick laws and numbers of lenses.
+
+    Elements are those of `scenario.Model`: the Galaxy's components, then their kick bins.
+    """
+
+    ready: rates.Line
+    tau: np.ndarray  # (E,) per stated Msun/kpc^3 of each element, lenses of 1 Msun
+    gamma: np.ndarray  # (E,) 1/yr
+    error: np.ndarray  # (E,) sampling error of gamma
+    grid: object  # Isogrid
+    T: np.ndarray  # (E, P, K)
+    unit: np.ndarray  # (E, n) rate per ln t_E of 1 Msun lenses
+
+
+def integrate(ready):
+    """Do all integrals of a sightline.
+
+    Parameters
+    ----------
+    ready : Line
+        From `rates.prepare`.
+
+    Returns
+    -------
+    Integrals
+    """
+    tau, gamma, _ = rates.moments(ready)
+    tau, gamma = tau.sum(axis=1), gamma.sum(axis=1)
+    error = np.zeros(tau.size)
+    grid, T = rates.rate_density(ready)
+    if ready.model.kicked is not None:
+        more_tau, more_gamma, more_error = rates.kicked_moments(ready)
+        tau, gamma = np.concatenate([tau, more_tau]), np.concatenate([gamma, more_gamma])
+        error = np.concatenate([error, more_error])
+        T = np.concatenate([T, rates.kicked_rate_density(ready, grid)])
+    return Integrals(ready, tau, gamma, error, grid, T, distributions.unit_timescales(grid, T))
+
+
+def assemble(model, integrals, u_0, limits, where):
+    """Weigh the integrals with masses, numbers and kick laws.
+
+    Parameters
+    ----------
+    model : Model
+        Supplies the mass spectrum of each class on each element.
+    integrals : Integrals
+        From `integrate`, for the same Galaxy and sources.
+    u_0 : float
+        Largest impact parameter.
+    limits : (float, float) or None
+        Range of t_E [d] that is reported.
+    where : str
+        Direction, for complaints.
+
+    Returns
+    -------
+    dict
+        Fields of `Sightline`.
+
+    Raises
+    ------
+    ConvergenceError
+        A rate came out negative or not finite.
+    """
+    spectra = model.spectra()
+    masses = distributions.MassGrid.deposit(integrals.grid.h, spectra)
+    t, pdf, pdf_e = distributions.timescales(integrals.grid, integrals.unit, masses)
+    root = np.array([[0.0 if s is None else s.moment(0.5) for s in row] for row in spectra])
+    mass = np.array([[0.0 if s is None else s.moment(1.0) for s in row] for row in spectra])
+    tau, gamma = mass * integrals.tau, u_0 * root * integrals.gamma  # (C, E)
+    error = u_0 * np.sqrt(np.sum((root * integrals.error) ** 2, axis=1))
+    pdf, pdf_e = u_0 * pdf, u_0 * pdf_e
+    if not (all(np.all(np.isfinite(x)) for x in (tau, gamma, pdf)) and np.all(gamma >= 0)):
+        raise ConvergenceError(f"sightline {where}: a rate is negative or not finite; check the scenario's numbers")
+    total = gamma.sum()
+    quadrature = abs(np.sum(pdf) * integrals.grid.h / total - 1.0) if total > 0 else 0.0
+    rows = _rows(t, pdf, tau.sum(axis=1), gamma.sum(axis=1), limits, u_0)
+    everything = _rows(t, pdf.sum(axis=0)[None], [tau.sum()], [total], limits, u_0)[0]
+    lenses = {}
+    for name, row, e in zip(model.classes, rows, error):
+        kind = model.kinematics(name)
+        share = row.rate / everything.rate if everything.rate > 0 else np.nan
+        # inside a range of t_E the sampling error keeps its ratio to the rate
+        e = float(e * row.rate / max(gamma[len(lenses)].sum(), 1e-300)) if kind == "kicked" else None
+        lenses[name] = replace(row, share_of_events=share, kinematics=kind, rate_standard_error=e)
+    kinds = {lens.kinematics for lens in lenses.values() if lens.rate > 0}
+    errors = [lens.rate_standard_error for lens in lenses.values() if lens.rate_standard_error is not None]
+    lenses["all"] = replace(
+        everything,
+        # the parts are sums of the same numbers, rounded: the whole is their sum
+        optical_depth=sum(lens.optical_depth for lens in lenses.values()),
+        rate=sum(lens.rate for lens in lenses.values()),
+        share_of_events=1.0 if everything.rate > 0 else np.nan,
+        kinematics=kinds.pop() if len(kinds) == 1 else "mixed",
+        rate_standard_error=float(np.hypot.reduce(errors)) if errors else None,
+    )
+    elements, components = _parts(model, t, pdf_e, tau.sum(axis=0), gamma.sum(axis=0), limits, u_0)
+    return {
+        "lenses": lenses,
+        "components": components,
+        "elements": elements,
+        "t_E": t,
+        "rate_per_ln_t_E": pdf,
+        "quadrature_error": float(quadrature),
+        "field_mismatch": _mismatch(model, integrals),
+        "warnings": (*integrals.ready.sources.warnings, *model.warnings, *_notes(model, lenses)),
+    }
+
+
+def _rows(t, pdf, tau, gamma, limits, u_0):
+    """A Lens for each row, limited to a range of t_E if asked."""
+    out = []
+    for f, a, g in zip(pdf, tau, gamma):
+        a, g = float(a), float(g)
+        if not g > 0:
+            out.append(Lens(a, 0.0))
+            continue
+        q = distributions.Quantiles(t, f)
+        if limits is None:
+            out.append(Lens(a, g, 2.0 / np.pi * a * u_0 / g * DAYS_PER_YEAR, q.quantile(0.5)))
+            continue
+        whole = q.rate()
+        kept = q.rate(*limits) / whole if whole > 0 else 0.0
+        mean = q.mean(*limits)
+        # an event's share of the optical depth goes with its duration
+        a *= kept * mean / q.mean() if kept > 0 else 0.0
+        out.append(Lens(a, g * kept, mean, q.quantile(0.5, *limits)))
+    return out
+
+
+def _parts(model, t, pdf_e, tau_e, gamma_e, limits, u_0):
+    """Optical depth and rate by element of the Galaxy and by component, kick bins added to their component."""
+    if limits is None:
+        rows = [Lens(float(a), float(g)) for a, g in zip(tau_e, gamma_e)]
+    else:
+        rows = _rows(t, pdf_e, tau_e, gamma_e, limits, u_0)
+    elements, components = {}, {}
+    for row, i in zip(rows, model.component_of):
+        component = model.galaxy.components[i]
+        for parts, name in ((elements, component.element), (components, component.name)):
+            old = parts.get(name, Lens(0.0, 0.0))
+            parts[name] = replace(old, optical_depth=old.optical_depth + row.optical_depth, rate=old.rate + row.rate)
+    return elements, components
+
+
+def _mismatch(model, integrals):
+    """Synthesised unkicked rate over the stars' own, minus one, weighted as neutron stars are born."""
+    if model.kicked is None:
+        return None
+    m, host = model.n_stellar, list(model.kicked.host)
+    wanted = found = 0.0
+    for i, pop in enumerate(model.populations):
+        if i in host:
+            weight = pop.spectra["neutron_star"].moment(0.5)
+            wanted += weight * integrals.gamma[i]
+            found += weight * integrals.gamma[m + host.index(i)]
+    return found / wanted - 1.0 if wanted > 0 else None
+
+
+def _notes(model, lenses):
+    notes = []
+    dark = [n for n in ("neutron_star", "black_hole") if lenses[n].rate > 0]
+    if any(lenses[n].kinematics == "unkicked" for n in dark):
+        notes.append(_UNKICKED)
+    if model.kicked is not None:
+        for name, law in model.laws.items():
+            lost = law.bin_weights(model.kicked.edges).above if not isinstance(law, tuple) else 0.0
+            if lost > _FAST:
+                notes.append(
+                    f"{lost:.1%} of {name.replace('_', ' ')}s are kicked faster than {model.kicked.edges[-1]:g} km/s: "
+                    "counted as escaped"
+                )
+    return notes
+
+
+def disc_share(ready):
+    """Return the share of sources that are not bulge, or None where the sources are no stars of the Galaxy."""
+    components, shares = ready.model.galaxy.components, ready.source_shares()
+    if len(shares) != len(components):
+        return None
+    return float(sum(s for s, c in zip(shares, components) if not c.bulge))
+
+
+def optical_depth_along(model, ready, n=400):
+    """Return optical depth per kpc of lens distance by component.
+
+    Parameters
+    ----------
+    model : Model
+    ready : Line
+    n : int
+        Points.
+
+    Returns
+    -------
+    D, parts : ndarray (n,), dict of str to ndarray (n,)
+        Distances [kpc], optical depth per kpc.
+    """
+    far = ready.edges[-1] if ready.sources.fixed_distance else 12.0
+    D = np.linspace(0.0, far, n + 1)[1:]
+    density = ready.model.galaxy.profile(ready.line, D)[0]
+    if model.kicked is not None:
+        rows = model.kicked.profile(ready.line, D)[0]
+        density = np.concatenate([density, rows.reshape(-1, 2, n).sum(axis=1)])
+    w, D_S = ready.src[0].sum(axis=0), ready.D_S
+    inverse = np.array([np.sum(w[D_S > d] * (1.0 / d - 1.0 / D_S[D_S > d])) for d in D])
+    geometry = np.pi * FOUR_G_C2 * D**2 * inverse
+    mass = np.array([[0.0 if s is None else s.moment(1.0) for s in row] for row in model.spectra()]).sum(axis=0)
+    out = {}
+    for i, weight, rho in zip(model.component_of, mass, density):
+        name = model.galaxy.components[i].name
+        out[name] = out.get(name, 0.0) + weight * geometry * rho
+    return D, out
