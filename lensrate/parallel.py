@@ -6,7 +6,7 @@ from concurrent.futures import ThreadPoolExecutor
 __all__ = ["run_map"]
 
 
-def run_map(func, items, jobs=1, executor=None, progress=None):
+def run_map(func, items, jobs=1, executor=None, progress=None, stop=None):
     """Apply `func` to each item and return the results in the order of the items.
 
     Parameters
@@ -19,8 +19,11 @@ def run_map(func, items, jobs=1, executor=None, progress=None):
         Local threads, where no executor is given.
     executor : object with ``map``, optional
         For example `concurrent.futures.ThreadPoolExecutor` or a Dask client's executor.
-    progress : str, optional
-        Label of a progress bar; none is drawn unless stderr is a terminal.
+    progress : str or callable, optional
+        Label of a progress bar, which is drawn only where stderr is a terminal; or what is called, with the item and
+        its result, after each one in order.
+    stop : threading.Event, optional
+        Set when the work is broken off, so that `func` in other threads can leave early.
 
     Returns
     -------
@@ -32,12 +35,22 @@ def run_map(func, items, jobs=1, executor=None, progress=None):
         pool = executor = ThreadPoolExecutor(min(jobs, len(items)))
     try:
         results = executor.map(func, items) if executor is not None else map(func, items)
+        if callable(progress):
+            done = []
+            for item, result in zip(items, results):
+                done.append(result)
+                progress(item, result)
+            return done
         if not progress or not sys.stderr.isatty():
             return list(results)
         import click
 
         with click.progressbar(results, length=len(items), label=progress, file=sys.stderr) as bar:
             return list(bar)
+    except BaseException:
+        if stop is not None:
+            stop.set()
+        raise
     finally:
         if pool is not None:
             pool.shutdown(wait=True, cancel_futures=True)

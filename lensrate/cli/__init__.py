@@ -10,6 +10,7 @@ from ..errors import InputError, LensrateError
 from .base import Group
 from .scenario import scenario
 from .sightline import sightline
+from .synthesize import synthesize
 from .verify import verify
 
 __all__ = ["cli", "main"]
@@ -28,7 +29,7 @@ def cli():
     """
 
 
-for command in (sightline, scenario, verify):
+for command in (sightline, scenario, synthesize, verify):
     cli.add_command(command)
 
 

@@ -19,13 +19,26 @@ from ..parallel import run_map
 from ..units import KPC_PER_MYR
 from .orbits import step
 
-__all__ = ["Cells", "Equilibrium", "cells_of", "own_velocities", "richardson_lucy", "rotation_table", "solve"]
+__all__ = [
+    "CHUNK",
+    "TRAIN_GYR",
+    "Cells",
+    "Equilibrium",
+    "cells_of",
+    "own_velocities",
+    "richardson_lucy",
+    "rotation_table",
+    "solve",
+]
 
 _SHELL_SHARES = np.concatenate([[0, 0.01, 0.03], np.linspace(0.07, 0.91, 9), [0.95, 0.98, 0.995]])
 _HEIGHT_SHARES = np.array([0, 0.15, 0.3, 0.45, 0.6, 0.75, 0.88, 0.96, 0.995])
-_CHUNK = 64  # bundles done as one job, whatever the number of threads
+#: bundles done as one job, whatever the number of threads
+CHUNK = 64
 _STRIDE = 8  # steps between notes: longer strides waste orbits, shorter ones add nothing
 _SNAPSHOTS = 4  # per orbit
+#: training window [Gyr] of components that are no bar, and of a bar
+TRAIN_GYR = (4.0, 8.0)
 
 
 @dataclass(frozen=True)
@@ -184,7 +197,18 @@ def richardson_lucy(occupancy, target, iterations):
 
 
 def solve(
-    component, galaxy, potential, rng, *, bundles=2048, iterations=300, train_gyr=None, eta=0.1, jobs=1, executor=None
+    component,
+    galaxy,
+    potential,
+    rng,
+    *,
+    bundles=2048,
+    iterations=300,
+    train_gyr=None,
+    eta=0.1,
+    jobs=1,
+    executor=None,
+    progress=None,
 ):
     """Find the equilibrium of one component.
 
@@ -201,10 +225,10 @@ def solve(
         Of Richardson and Lucy.
     train_gyr : float, optional
         Length of the training window, after half a Gyr dropped; the judging window is half as long and begins half
-        a training window later. 8 for bars, 4 for the rest.
+        a training window later. 8 for bars, 4 for the rest: see `TRAIN_GYR`.
     eta : float
         Step, see `orbits.step`.
-    jobs, executor
+    jobs, executor, progress
         See `parallel.run_map`.
 
     Returns
@@ -212,16 +236,16 @@ def solve(
     Equilibrium
     """
     cells = cells_of(component, galaxy, potential)
-    pieces = -(-bundles // _CHUNK)
-    train = (train_gyr or (8.0 if isinstance(component.density, Bar) else 4.0)) * 1e3 * KPC_PER_MYR
+    pieces = -(-bundles // CHUNK)
+    train = (train_gyr or TRAIN_GYR[isinstance(component.density, Bar)]) * 1e3 * KPC_PER_MYR
     drop = 0.5e3 * KPC_PER_MYR
     kinds, pars = potential.packed
 
     def run(piece):
         number, rng = piece
-        shares = (number + (np.arange(_CHUNK) + 0.5) / _CHUNK) / pieces
+        shares = (number + (np.arange(CHUNK) + 0.5) / CHUNK) / pieces
         states, times = _start(component, galaxy, potential, cells, shares, rng)
-        trained, later = (np.empty((_CHUNK, cells.target.size)) for _ in range(2))
+        trained, later = (np.empty((CHUNK, cells.target.size)) for _ in range(2))
         snapshots = np.empty((*times.shape, 6))
         orbit = (kinds, pars, potential.omega, step(eta), states)
         grid = (_STRIDE, cells.scale, cells.m_edges, cells.t_edges, cells.n_phi)
@@ -229,7 +253,7 @@ def solve(
         kernels.occupy(*orbit, 0.5 * train, train, *grid, times[:, :0], later, snapshots[:, :0])
         return trained, later, snapshots
 
-    parts = run_map(run, enumerate(rng.spawn(pieces)), jobs, executor)
+    parts = run_map(run, enumerate(rng.spawn(pieces)), jobs, executor, progress)
     trained, later, snapshots = (np.concatenate([p[i] for p in parts]) for i in range(3))
     weights = richardson_lucy(trained, cells.target, iterations)
     mismatch = {"start": _rms(trained.mean(axis=0), cells), "trained": _rms(weights @ trained, cells)}

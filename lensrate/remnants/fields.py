@@ -20,6 +20,7 @@ __all__ = ["STEPS", "Grid", "RemnantField"]
 STEPS = np.array([0.01, 0.25, 0.02])
 _BATCH_STEP = 1e-3
 _FORMAT = "lensrate remnant field 1"
+_WAY_OUT = "fetch it again, or make one with 'lensrate synthesize'"
 _ENDS = ("escaped", "beyond_20_kpc", "outside_grid")
 
 
@@ -305,17 +306,24 @@ class RemnantField:
                 # the file is opened here, since astropy leaves it open where a checksum is wrong
                 with open(path, "rb") as handle, fits.open(handle, checksum=True, memmap=False) as hdus:
                     if hdus[0].header.get("LRFIELD") != _FORMAT:
-                        raise DataFileError(f"{path}: not a file that this version of lensrate wrote as '{_FORMAT}'")
-                    made = json.loads(hdus["MADE"].data.tobytes().decode())
-                    one, two, batches = (np.array(hdus[n].data, dtype=np.int16) for n in ("ONE", "TWO", "BATCHES"))
-                    ends, heights = (np.array(hdus[n].data, dtype=float) for n in ("ENDS", "HEIGHTS"))
+                        found = hdus[0].header.get("LRFIELD", "no such mark")
+                        raise DataFileError(
+                            f"{path}: not a file of form '{_FORMAT}', which is read here (found: {found}); {_WAY_OUT}"
+                        )
+                    return cls._from_hdus(hdus)
         except DataFileError:
             raise
         except FileNotFoundError:
-            raise DataFileError(f"{path}: no such file; make one with `lensrate synthesize`") from None
-        except (OSError, AstropyWarning, KeyError, ValueError, TypeError, IndexError, EOFError) as error:
-            reason = " ".join(str(error).split())[:160]
-            raise DataFileError(f"{path}: damaged or not a field file ({reason})") from None
+            raise DataFileError(f"{path}: no such file; make one with 'lensrate synthesize'") from None
+        except Exception as error:  # a damaged file makes astropy raise many kinds; all mean that it cannot be used
+            reason = " ".join(str(error).split())[:120]
+            raise DataFileError(f"{path}: damaged or not a field file ({reason}); {_WAY_OUT}") from None
+
+    @classmethod
+    def _from_hdus(cls, hdus):
+        made = json.loads(hdus["MADE"].data.tobytes().decode())
+        one, two, batches = (np.array(hdus[n].data, dtype=np.int16) for n in ("ONE", "TWO", "BATCHES"))
+        ends, heights = (np.array(hdus[n].data, dtype=float) for n in ("ENDS", "HEIGHTS"))
         grid = Grid(**made["grid"])
         shape = (len(made["components"]), len(made["kick_edges_kms"]))
         cells = (grid.n_z, grid.n_phi)

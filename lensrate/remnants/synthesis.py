@@ -6,6 +6,10 @@ result is the same whatever the number of threads.
 
 import hashlib
 import json
+import shutil
+import threading
+import zipfile
+import zlib
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -19,17 +23,17 @@ from ..io import whole_file
 from ..kernels import fields as kernels
 from ..parallel import run_map
 from .births import KICK_EDGES, analytic, draw, kicked, self_held, window
-from .equilibrium import Equilibrium, cells_of, solve
+from .cost import PILOT, steps
+from .equilibrium import CHUNK, Equilibrium, cells_of, solve
 from .fields import Grid, RemnantField
 from .kicked import galaxy_numbers
 from .moments import batch_ratios, encode, split_speeds
 from .orbits import states_energies, step
 
-__all__ = ["Settings", "synthesize"]
+__all__ = ["REGIONS", "Settings", "forget", "stellar_components", "synthesize"]
 
 _RING = 1.5  # kpc on either side of the Sun's radius, where heights are counted
 _HEIGHTS = np.concatenate([[0.0], np.geomspace(0.01, 50.0, 61), [np.inf]])
-_PILOT = 8  # one tracer in so many finds the speeds that divide the two Gaussians
 
 
 @dataclass(frozen=True)
@@ -86,10 +90,10 @@ def synthesize(galaxy, potential, settings=None, *, jobs=1, executor=None, progr
     settings : Settings, optional
     jobs, executor
         See `parallel.run_map`.
-    progress : str, optional
-        Label of a progress bar.
+    progress : callable, optional
+        Called after each piece with the shares, 0 to 1, of the work that is done and that was found done before.
     checkpoint : str or Path, optional
-        Folder that keeps finished pieces; a run with the same inputs takes them up again.
+        Folder that keeps finished pieces; a run with the same inputs takes them up again. See `forget`.
 
     Returns
     -------
@@ -107,28 +111,38 @@ def synthesize(galaxy, potential, settings=None, *, jobs=1, executor=None, progr
             f"potential '{potential.name}': its bar stands at {potential.bar_angle:.4g}, the stars' bar of galaxy "
             f"'{galaxy.name}' at {bar.angle:.4g}; change one of them"
         )
-    components = [c for c in galaxy.components if c.stars and not isinstance(c.density, Uniform)]
-    if not components:
-        raise InputError(f"galaxy '{galaxy.name}': no component of stars with an end; nothing to synthesise")
+    components = stellar_components(galaxy)
     pieces = _Pieces(checkpoint, _made(galaxy, potential, settings))
+    work = _Work({c.element: steps(c, galaxy, potential, settings) for c in components}, progress)
     streams = np.random.SeedSequence(settings.seed).spawn(len(components))
     plans = []
-    for c, stream in zip(components, streams):
-        equilibrium = None if self_held(c) else _held(c, galaxy, potential, settings, stream, pieces, jobs, executor)
-        plans += [(c, equilibrium, i, s) for i, s in enumerate(stream.spawn(len(settings.kick_edges)))]
+    for place, (c, stream) in enumerate(zip(components, streams)):
+        equilibrium = None
+        if not self_held(c):
+            key = f"{place}_equilibrium"
+            equilibrium = _held(c, key, galaxy, potential, settings, stream, pieces, work, jobs, executor)
+        kicks = enumerate(stream.spawn(len(settings.kick_edges)))
+        plans += [(c, f"{place}_{i}", equilibrium, i, s) for i, s in kicks]
+    # threads leave early when the run is broken off; other executors pickle their work, which an event forbids
+    stop = threading.Event() if executor is None else None
 
     def run(plan):
-        component, equilibrium, number, stream = plan
-        key = f"{component.element}_{number}"
+        component, key, equilibrium, number, stream = plan
         found = pieces.get(key)
-        return found or pieces.keep(key, _element(component, equilibrium, number, stream, galaxy, potential, settings))
+        if found is not None:
+            return found, True
+        made = _element(component, equilibrium, number, stream, galaxy, potential, settings, stop)
+        return pieces.keep(key, made), False
 
-    done = run_map(run, plans, jobs, executor, progress)
+    def tell(plan, result):
+        work.add(plan[0].element, 1 + plan[3], 1.0, result[1])
+
+    done = [arrays for arrays, _ in run_map(run, plans, jobs, executor, tell, stop)]
     shape = (len(components), len(settings.kick_edges))
     stacked = {k: np.stack([d[k] for d in done]).reshape(*shape, *done[0][k].shape) for k in done[0]}
     mismatch = {}
     for i, c in enumerate(components):
-        equilibrium = plans[i * shape[1]][1]
+        equilibrium = plans[i * shape[1]][2]
         held = {**equilibrium.mismatch, "effective_bundles": equilibrium.effective} if equilibrium else {}
         regions = _regions(c, galaxy, potential, settings.grid, stacked["density"][i, 0])
         mismatch[c.element] = {"equilibrium": held, "regions": regions}
@@ -148,23 +162,55 @@ def synthesize(galaxy, potential, settings=None, *, jobs=1, executor=None, progr
     )
 
 
-def _held(component, galaxy, potential, settings, stream, pieces, jobs, executor):
+def stellar_components(galaxy):
+    """Return the components that a synthesis follows.
+
+    Raises
+    ------
+    InputError
+        There is none.
+    """
+    components = [c for c in galaxy.components if c.stars and not isinstance(c.density, Uniform)]
+    if not components:
+        raise InputError(f"galaxy '{galaxy.name}': no component of stars with an end; nothing to synthesise")
+    return components
+
+
+class _Work:
+    """Steps of orbits done so far, told to whoever asked."""
+
+    def __init__(self, by_element, tell):
+        self.by_element, self.tell = by_element, tell
+        self.total = sum(n.sum() for n in by_element.values())
+        self.done = self.found = 0.0
+
+    def add(self, element, number, share, found):
+        steps = self.by_element[element][number] * share
+        self.done += steps
+        self.found += steps if found else 0.0
+        if self.tell is not None:
+            self.tell(self.done / self.total, self.found / self.total)
+
+
+def _held(component, key, galaxy, potential, settings, stream, pieces, work, jobs, executor):
     """Return a component's equilibrium, found now or kept from before."""
     rng = np.random.default_rng(stream.spawn(1)[0])
-    key = f"{component.element}_equilibrium"
     kept = pieces.get(key)
     if kept is None:
         options = {"bundles": settings.bundles, "iterations": settings.iterations, "eta": settings.eta}
+        parts = -(-settings.bundles // CHUNK)
+        options["progress"] = lambda *_: work.add(component.element, 0, 1 / parts, False)
         found = solve(component, galaxy, potential.for_orbits(), rng, jobs=jobs, executor=executor, **options)
         mismatch = np.array(json.dumps(found.mismatch))
         pieces.keep(key, {"states": found.states, "weights": found.weights, "mismatch": mismatch})
         return found
+    work.add(component.element, 0, 1.0, True)
     return Equilibrium(
         kept["states"], kept["weights"], float(1 / np.sum(kept["weights"] ** 2)), json.loads(str(kept["mismatch"]))
     )
 
 
-def _element(component, equilibrium, number, stream, galaxy, potential, settings):
+def _element(component, equilibrium, number, stream, galaxy, potential, settings, stop=None):
     """Follow the tracers of one element; return stored arrays, shares and its density."""
     grid, edges = settings.grid, settings.kick_edges
     felt = potential if self_held(component) else potential.for_orbits()
@@ -174,6 +220,8 @@ def _element(component, equilibrium, number, stream, galaxy, potential, settings
     ring = np.array([galaxy.R0 - _RING, galaxy.R0 + _RING, np.log(_HEIGHTS[1]), bins])
 
     def follow(rng, n, split, sums, heights, ends):
+        if stop is not None and stop.is_set():
+            raise KeyboardInterrupt
         if equilibrium is None:
             rows = analytic(component, galaxy, felt, n, rng)
         else:
@@ -189,7 +237,7 @@ def _element(component, equilibrium, number, stream, galaxy, potential, settings
     cells = (2, grid.n_R, grid.n_z, grid.n_phi, 10)
     rngs = [np.random.default_rng(s) for s in stream.spawn(settings.batches + 1)]
     sums, heights, ends = np.zeros(cells), np.zeros(_HEIGHTS.size - 1), np.zeros(4)
-    follow(rngs[0], max(64, settings.tracers // _PILOT), np.empty((0, grid.n_z, grid.n_phi)), sums, heights, ends)
+    follow(rngs[0], max(64, settings.tracers // PILOT), np.empty((0, grid.n_z, grid.n_phi)), sums, heights, ends)
     split = split_speeds(sums[0], grid)
     total, heights, ends = np.zeros(cells), np.zeros(_HEIGHTS.size - 1), np.zeros(4)
     weights = np.empty((settings.batches, *cells[1:4]))
@@ -213,7 +261,7 @@ def _element(component, equilibrium, number, stream, galaxy, potential, settings
 
 
 #: regions in which the synthesised stars are held against the stars of the Galaxy set: R and |z| between [kpc]
-_REGIONS = {
+REGIONS = {
     "R<1,|z|<0.3": (0, 1, 0, 0.3),
     "R<1,0.3<|z|<0.8": (0, 1, 0.3, 0.8),
     "1<R<3,|z|<0.3": (1, 3, 0, 0.3),
@@ -241,7 +289,7 @@ def _regions(component, galaxy, potential, grid, density):
     stars = stars / cells.mass
     R, z, _ = grid.centres()
     out = {}
-    for name, (r0, r1, z0, z1) in _REGIONS.items():
+    for name, (r0, r1, z0, z1) in REGIONS.items():
         here = ((R[:, None] >= r0) & (R[:, None] < r1) & (z >= z0) & (z < z1))[:, :, None]
         wanted = float(np.sum(stars * here))
         if wanted > 2e-3:
@@ -269,6 +317,26 @@ def _made(galaxy, potential, settings):
     )
 
 
+def _key(made):
+    return hashlib.sha256(json.dumps(made, sort_keys=True).encode()).hexdigest()[:16]
+
+
+def forget(checkpoint, field):
+    """Remove the finished pieces that a field was made of, and their folder if nothing else is in it.
+
+    Parameters
+    ----------
+    checkpoint : str or Path
+        As given to `synthesize`.
+    field : RemnantField
+        As it was returned.
+    """
+    folder = Path(checkpoint)
+    shutil.rmtree(folder / _key(field.provenance), ignore_errors=True)
+    if folder.is_dir() and not any(folder.iterdir()):
+        folder.rmdir()
+
+
 class _Pieces:
     """Finished elements in a folder; without a folder nothing is kept."""
 
@@ -276,23 +344,26 @@ class _Pieces:
         self.made = made
         self.folder = None
         if folder is not None:
-            self.folder = Path(folder) / hashlib.sha256(json.dumps(made, sort_keys=True).encode()).hexdigest()[:16]
+            self.folder = Path(folder) / _key(made)
             try:
                 self.folder.mkdir(parents=True, exist_ok=True)
             except OSError as error:
                 raise DataFileError(f"checkpoint: folder '{self.folder}' cannot be made ({error.strerror})") from None
 
     def get(self, key):
+        """Return the arrays of a piece, None where it is missing or damaged: it is then made again."""
         path = self.folder / f"{key}.npz" if self.folder else None
         if path is None or not path.is_file():
             return None
         try:
-            with np.load(path) as kept:
+            # opened here, since numpy leaves a damaged file open
+            with open(path, "rb") as handle, np.load(handle) as kept:
                 return {k: kept[k] for k in kept.files}
-        except (OSError, ValueError, EOFError):
-            return None  # a damaged piece is made again
+        except (OSError, ValueError, EOFError, KeyError, RuntimeError, zipfile.BadZipFile, zlib.error):
+            return None
 
     def keep(self, key, arrays):
+        """Write a piece, whole or not at all; return its arrays."""
         if self.folder is not None:
             with whole_file(self.folder / f"{key}.npz") as temporary:
                 np.savez_compressed(temporary, **arrays)

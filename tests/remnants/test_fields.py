@@ -168,7 +168,7 @@ def test_synthesis_does_not_depend_on_threads_and_resumes(small, tmp_path):
     for other in (again, resumed):
         for name in ("one", "two", "batches", "heights"):
             assert np.array_equal(getattr(small, name), getattr(other, name))
-    assert len(list(tmp_path.glob("*/thick_disc_*.npz"))) == 5  # four elements and their equilibrium
+    assert len(list(tmp_path.glob("*/*.npz"))) == 5  # four elements and their equilibrium
     assert resumed.mismatch == small.mismatch
     other = synthesize(THICK, POTENTIAL, replace(SMALL, seed=4), checkpoint=tmp_path)
     assert not np.array_equal(small.one, other.one)
