@@ -179,16 +179,16 @@ def _parts(model, t, pdf_e, tau_e, gamma_e, limits, u_0):
 
 
 def _mismatch(model, integrals):
-    """Synthesised unkicked rate over the stars' own, minus one, weighted as neutron stars are born."""
+    """Synthesised unkicked optical depth over the stars' own, minus one, weighted as neutron stars are born."""
     if model.kicked is None:
         return None
     m, host = model.n_stellar, list(model.kicked.host)
     wanted = found = 0.0
     for i, pop in enumerate(model.populations):
         if i in host:
-            weight = pop.spectra["neutron_star"].moment(0.5)
-            wanted += weight * integrals.gamma[i]
-            found += weight * integrals.gamma[m + host.index(i)]
+            weight = pop.spectra["neutron_star"].moment(1.0)
+            wanted += weight * integrals.tau[i]
+            found += weight * integrals.tau[m + host.index(i)]
     return found / wanted - 1.0 if wanted > 0 else None
 
 

@@ -7,6 +7,7 @@ import astropy.units as u
 import numpy as np
 
 from .._version import __version__
+from ..datafiles import field_checksum
 from ..errors import InputError, one_of
 from ..scenario import Scenario, resolve
 from ..units import check_range, strip
@@ -40,8 +41,8 @@ class Sightline:
     quadrature_error : float
         Relative difference of the total rate between the two independent quadratures.
     field_mismatch : float or None
-        Systematic error of the kicked rates: neutron stars on the synthesised unkicked field over those on the
-        stars' own, minus one, on this sightline; None without fields.
+        Systematic error of the kicked fields: optical depth of unkicked neutron stars on the synthesised field over
+        that on the stars' own, minus one, on this sightline; None without fields.
     """
 
     l: u.Quantity
@@ -111,10 +112,26 @@ class Sightline:
             "components": parts,
             "quadrature_error": self.quadrature_error,
             "field_mismatch": _none(self.field_mismatch),
+            "fields": self._fields(),
+            "velocities": self.velocities(),
             "warnings": list(self.warnings),
             "references": list(self.references),
             "version": self.version,
         }
+
+    def velocities(self):
+        """Return a line that says which velocities are used where."""
+        stars = "sources, stars, brown dwarfs and white dwarfs: the Galaxy set's kinematic model (white dwarfs' kicks of "
+        stars += "under 1 km/s, El-Badry & Rix 2018, are neglected)"
+        if self._fields() is None:
+            return f"{stars}; neutron stars and black holes: the same, unkicked"
+        return f"{stars}; neutron stars and black holes: their own orbits in the Galaxy's potential"
+
+    def _fields(self):
+        """Name and checksum of the kick-resolved fields in use, or None."""
+        if self._model is None or self._model.kicked is None:
+            return None
+        return {"name": self.scenario.fields, "sha256": field_checksum(self.scenario.fields)}
 
     def meta(self):
         """Return how this was made, for the metadata of tables and pictures.
@@ -133,6 +150,10 @@ class Sightline:
             "scenario_hash": self.scenario.hash,
             "scenario_text": self.scenario.to_toml(),
             "seed": None,
+            "fields": self._fields(),
+            "velocities": self.velocities(),
+            "field_mismatch": _none(self.field_mismatch),
+            "quadrature_error": self.quadrature_error,
             "mass_note": self.mass_note,
             "warnings": list(self.warnings),
             "references": list(self.references),

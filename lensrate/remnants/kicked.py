@@ -111,7 +111,9 @@ class KickedLenses:
         ndarray, shape (6, 2 * elements, n)
             The density is that of the stated mass [Msun/kpc^3] if all of it moved like this element.
         """
-        out = np.ascontiguousarray(self.field.profile(line, D)[:, self.rows])
+        out = self.field.profile(line, D)
+        if not np.array_equal(self.rows, np.arange(out.shape[1])):
+            out = np.ascontiguousarray(out[:, self.rows])
         out[0] *= np.repeat(self.mass, 2)[:, None]
         return out
 

@@ -124,7 +124,8 @@ class Model:
             populations = tuple(p for p, _ in _stars(scenario, self.galaxy, None))
         own = {**self.galaxy.lens_class, **scenario.lens_class}
         own = {name: LensClass.parse(name, table) for name, table in own.items()}
-        return replace(self, scenario=scenario, populations=populations, own=own)
+        references = _references(scenario, self.galaxy)
+        return replace(self, scenario=scenario, populations=populations, own=own, references=references)
 
     def kinematics(self, name):
         """Return the word for a class: stellar, kicked or unkicked."""
@@ -217,16 +218,20 @@ def _build(scenario):
         )
     sources = Sources(rule, luminosities, DustDisc.read(scenario.dust), scenario.extinction)
     populations = [pop for pop, _ in stars]
-    references = list(galaxy.references)
+    kicked, warnings = _kicked(scenario, galaxy)
+    references = _references(scenario, galaxy)
+    return Model(scenario, galaxy, tuple(populations), own, sources, kicked, references, tuple(warnings))
+
+
+def _references(scenario, galaxy):
+    out = list(galaxy.references)
     for name in dict.fromkeys(scenario.imf or c.imf for c in galaxy.components if c.stars):
-        references += Imf.read(name).references
-    references += [*Lifetimes.read(scenario.lifetimes).references, *Ifmr.read(scenario.ifmr).references]
+        out += Imf.read(name).references
+    out += [*Lifetimes.read(scenario.lifetimes).references, *Ifmr.read(scenario.ifmr).references]
     for law in (scenario.kicks, scenario.bh_kicks):
         if law not in ("same", "momentum", "none"):
-            references += parse_kick(law).references
-    kicked, warnings = _kicked(scenario, galaxy)
-    references = tuple(dict.fromkeys(references))
-    return Model(scenario, galaxy, tuple(populations), own, sources, kicked, references, tuple(warnings))
+            out += parse_kick(law).references
+    return tuple(dict.fromkeys(out))
 
 
 def _kicked(scenario, galaxy):

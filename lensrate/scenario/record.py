@@ -55,7 +55,7 @@ class Scenario:
     ifmr: str = "default"
     kicks: str = "igoshev2020"  # law of neutron stars
     bh_kicks: str = "momentum"  # same, momentum (speeds scaled by M_NS / M_BH), or a law
-    fields: str = ""  # kick-resolved fields: shipped name or a .fits file; empty: none, all unkicked
+    fields: str = "default"  # kick-resolved fields: shipped name or a .fits file; empty: none, all unkicked
     u_0_limit: float = 1.0
     numerics: dict = field(default_factory=dict)
     lens_class: dict = field(default_factory=dict)  # classes of the user's own, by name
