@@ -8,6 +8,7 @@ import click
 from .._version import __version__
 from ..errors import InputError, LensrateError
 from .base import Group
+from .census import census
 from .scenario import scenario
 from .sightline import sightline
 from .synthesize import synthesize
@@ -29,7 +30,7 @@ def cli():
     """
 
 
-for command in (sightline, scenario, synthesize, verify):
+for command in (sightline, census, synthesize, scenario, verify):
     cli.add_command(command)
 
 

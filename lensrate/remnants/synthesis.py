@@ -30,10 +30,10 @@ from .kicked import galaxy_numbers
 from .moments import batch_ratios, encode, split_speeds
 from .orbits import states_energies, step
 
-__all__ = ["REGIONS", "Settings", "forget", "stellar_components", "synthesize"]
+__all__ = ["HEIGHTS", "REGIONS", "Settings", "forget", "stellar_components", "synthesize"]
 
 _RING = 1.5  # kpc on either side of the Sun's radius, where heights are counted
-_HEIGHTS = np.concatenate([[0.0], np.geomspace(0.01, 50.0, 61), [np.inf]])
+HEIGHTS = np.concatenate([[0.0], np.geomspace(0.01, 50.0, 61), [np.inf]])
 
 
 @dataclass(frozen=True)
@@ -155,7 +155,7 @@ def synthesize(galaxy, potential, settings=None, *, jobs=1, executor=None, progr
         batches=stacked["batches"],
         ends={k: stacked["ends"][..., i] for i, k in enumerate(("escaped", "beyond_20_kpc", "outside_grid"))},
         heights=stacked["heights"],
-        height_edges=_HEIGHTS,
+        height_edges=HEIGHTS,
         bar_angle=float(potential.bar_angle.to_value(u.rad)),
         mismatch=mismatch,
         provenance=pieces.made,
@@ -216,8 +216,8 @@ def _element(component, equilibrium, number, stream, galaxy, potential, settings
     felt = potential if self_held(component) else potential.for_orbits()
     kinds, pars = felt.packed
     ages, ds = window(component), step(settings.eta)
-    bins = (_HEIGHTS.size - 3) / np.log(_HEIGHTS[-2] / _HEIGHTS[1])
-    ring = np.array([galaxy.R0 - _RING, galaxy.R0 + _RING, np.log(_HEIGHTS[1]), bins])
+    bins = (HEIGHTS.size - 3) / np.log(HEIGHTS[-2] / HEIGHTS[1])
+    ring = np.array([galaxy.R0 - _RING, galaxy.R0 + _RING, np.log(HEIGHTS[1]), bins])
 
     def follow(rng, n, split, sums, heights, ends):
         if stop is not None and stop.is_set():
@@ -236,10 +236,10 @@ def _element(component, equilibrium, number, stream, galaxy, potential, settings
 
     cells = (2, grid.n_R, grid.n_z, grid.n_phi, 10)
     rngs = [np.random.default_rng(s) for s in stream.spawn(settings.batches + 1)]
-    sums, heights, ends = np.zeros(cells), np.zeros(_HEIGHTS.size - 1), np.zeros(4)
+    sums, heights, ends = np.zeros(cells), np.zeros(HEIGHTS.size - 1), np.zeros(4)
     follow(rngs[0], max(64, settings.tracers // PILOT), np.empty((0, grid.n_z, grid.n_phi)), sums, heights, ends)
     split = split_speeds(sums[0], grid)
-    total, heights, ends = np.zeros(cells), np.zeros(_HEIGHTS.size - 1), np.zeros(4)
+    total, heights, ends = np.zeros(cells), np.zeros(HEIGHTS.size - 1), np.zeros(4)
     weights = np.empty((settings.batches, *cells[1:4]))
     n = -(-settings.tracers // settings.batches)
     for b, rng in enumerate(rngs[1:]):

@@ -1,4 +1,4 @@
-"""Pictures: axes in, axes out; the only module that imports matplotlib. Nothing is computed here but colours."""
+"""Pictures of one sightline: axes in, axes out. Nothing is computed here but colours."""
 
 import json
 
@@ -8,9 +8,9 @@ import numpy as np
 from matplotlib.backends.backend_agg import FigureCanvasAgg
 from matplotlib.figure import Figure
 
-from .errors import one_of
-from .io import PICTURES, check_target, whole_file
-from .remnants.classes import LABELS
+from ..errors import one_of
+from ..io import PICTURES, check_target, whole_file
+from ..remnants.classes import LABELS
 
 __all__ = ["depth", "joint", "overview", "save_picture", "sightline", "stacked", "timescales"]
 
