@@ -11,6 +11,7 @@ from ..remnants.imf import Imf
 from ..remnants.kicks import parse_kick
 from ..remnants.lifetimes import Lifetimes
 from ..remnants.population import population
+from .kicked import COMPUTE as KICKED
 
 __all__ = ["COMPUTE", "bound_fraction"]
 
@@ -160,3 +161,4 @@ for _name in CLASSES:
     COMPUTE[f"B7_rate_{_name}"] = partial(_share, _name, 0.5)
     if _name in ("white_dwarf", "neutron_star", "black_hole"):
         COMPUTE[f"B7_rate_{_name}_published"] = partial(_share, _name, 0.5)
+COMPUTE.update(KICKED)
