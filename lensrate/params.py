@@ -100,7 +100,11 @@ def _quantity(entry, where, unit):
     if isinstance(entry, dict):
         if "value" not in entry:
             raise InputError(f"{where}: a table needs 'value' (and 'unit', 'source')")
-        value, given = entry["value"], entry.get("unit", "")
+        for key in entry:
+            if key not in ("value", "unit", "source"):
+                near = did_you_mean(key, ("value", "unit", "source"))
+                raise InputError(f"{where}: unknown key '{key}'{near} (known: value, unit, source)")
+        value, given = entry["value"], entry.get("unit")
     else:
         value, given = entry, None
     if isinstance(value, bool) or not isinstance(value, (int, float)):

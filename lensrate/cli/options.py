@@ -44,6 +44,8 @@ def parse_extinction(items):
     out = {}
     for item in items:
         band, equals, value = item.partition("=")
+        if band.strip() in out:
+            raise InputError(f"--extinction: {band.strip()} is given twice")
         try:
             out[band.strip()] = float(value)
         except ValueError:

@@ -58,6 +58,7 @@ def sightline(
         raise click.UsageError("give either L B or --table FILE")
     if lon is not None and lat is None:
         raise click.UsageError("two numbers are needed: L B (or RA Dec with --icrs)")
+    _no_idle_options(table_file, plot)
     if save:
         check_target(save, TABLES, overwrite)
     if plot:
@@ -92,6 +93,15 @@ def sightline(
     if not quiet:
         for warning in result.warnings:
             click.echo(wrap(f"note: {warning}"), err=True)
+
+
+def _no_idle_options(table_file, plot):
+    """Refuse options that were typed and would do nothing."""
+    context = click.get_current_context()
+    idle = {"by": (table_file, "one sightline"), "picture": (not plot, "--plot"), "jobs": (not table_file, "--table")}
+    for option, (useless, partner) in idle.items():
+        if useless and context.get_parameter_source(option).name == "COMMANDLINE":
+            raise click.UsageError(f"--{option} has no effect here: it goes with {partner}")
 
 
 def direction(lon, lat, icrs):
@@ -183,37 +193,46 @@ def _many(table_file, icrs, scenario, t_E_range, jobs, save, as_json, overwrite,
     import astropy.units as u
 
     from ..io import dump_json, read_rows, write_table
-    from ..lensing.many import directions_of, sightlines
+    from ..lensing.many import directions_of, forecasts, gather
 
-    rows = read_rows(table_file, "--table")
-    l, b, measured = directions_of(rows, icrs)
-    table = sightlines(
+    l, b, measured, carried = directions_of(read_rows(table_file, "--table"), icrs)
+    results = forecasts(
         l, b, scenario, extinction=measured, t_E_range=tuple(t_E_range) * u.day if t_E_range else None,
         jobs=jobs, progress=None if quiet else "sightlines",
     )  # fmt: skip
+    table = gather(results, scenario, carried)
+    rows = [r.to_dict() for r in results]
+    for i, row in enumerate(rows):
+        row["row"] = {c: str(carried[c][i]) for c in carried.colnames}
     if save:
-        write_table(table, save, overwrite, payload={"sightlines": [dict(r) for r in table.meta["rows"]]})
+        write_table(table, save, overwrite, payload={"sightlines": rows})
     if as_json:
-        click.echo(dump_json(table.meta["rows"]))
+        click.echo(dump_json(rows))
         return
     meta = table.meta
+    many = "sightline" if len(table) == 1 else "sightlines"
     click.echo(
-        f"lensrate {meta['version']}   {len(table)} sightlines   "
+        f"lensrate {meta['version']}   {len(table)} {many}   "
         f"scenario {safe(meta['scenario'])} ({meta['scenario_hash']})"
     )
     click.echo(meta["header"])
     click.echo("")
-    titles = ["l", "b", "tau [1e-6]", "rate [1e-6/yr]", "<t_E> [d]", "NS share", "BH share", "D_S [kpc]", "per arcmin2"]
+    bands = [c for c in table.colnames if c.startswith("A_")]
+    titles = ["l", "b", *bands, "tau/1e-6", "rate/1e-6 yr", "<t_E>/d", "NS share", "BH share", "D_S/kpc", "/arcmin2"]
     body = []
-    for r in table.meta["rows"]:
-        lens = r["lenses"]
+    for i, (r, row) in enumerate(zip(results, rows)):
+        dark = (number(r.lenses[n].share_of_events) for n in ("neutron_star", "black_hole"))
+        total = r.lenses["all"]
         body.append(
-            [f"{r['l_deg']:.3f}", f"{r['b_deg']:.3f}", number(lens["all"]["optical_depth"] * 1e6),
-             number(lens["all"]["rate_per_star_per_yr"] * 1e6), number(lens["all"]["mean_t_E_d"]),
-             number(lens["neutron_star"]["share_of_events"]), number(lens["black_hole"]["share_of_events"]),
-             f"{r['sources']['mean_distance_kpc']:.2f}", number(r["sources"]["source_density_per_arcmin2"], 4)]
+            [f"{row['l_deg']:.3f}", f"{row['b_deg']:.3f}", *(f"{table[c][i].value:.2f}" for c in bands),
+             number(total.optical_depth * 1e6), number(total.rate * 1e6), number(total.mean_t_E), *dark,
+             f"{r.sources['mean_distance_kpc']:.2f}", number(r.sources["source_density_per_arcmin2"], 4)]
         )  # fmt: skip
-    click.echo(columns(titles, body, left=0))
+    if carried.colnames:
+        # the first further column, usually a name, tells the rows apart
+        first = carried.colnames[0]
+        titles, body = [first, *titles], [[safe(str(carried[first][i]))[:12], *row] for i, row in enumerate(body)]
+    click.echo(columns(titles, body, left=bool(carried.colnames)))
     if not quiet:
         for warning in meta["warnings"]:
             click.echo(wrap(f"note: {warning}"), err=True)

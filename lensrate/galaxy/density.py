@@ -26,7 +26,6 @@ __all__ = [
 ]
 
 BAR_PROFILES = {"exp": 0.0, "gauss": 1.0, "sech2": 2.0}
-_INT_EXP_ELLIPSOID = 8.0 * np.pi  # int exp(-m) d^3m over ellipsoidal surfaces
 
 
 @dataclass(frozen=True)
@@ -77,7 +76,7 @@ class Density(Params):
 
 @dataclass(frozen=True)
 class ExpDisc(Density):
-    """Double exponential disc given by its total mass or its density in the plane at the Sun."""
+    """Double exponential disc given by its density in the plane at the Sun."""
 
     rho_sun: u.Quantity = param("Msun / kpc3", "density in the plane at the Sun's radius")
     h_R: u.Quantity = param("kpc", "scale length")

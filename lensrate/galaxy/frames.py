@@ -115,8 +115,8 @@ def galactic_from_icrs(ra, dec):
     --------
     icrs_from_galactic
     """
-    ra, dec = strip("ra", ra, u.rad), strip("dec", dec, u.rad, low=-np.pi / 2, high=np.pi / 2)
-    return _rotate(_ICRS_TO_GALACTIC, ra, dec)
+    ra, dec = strip("ra", ra, u.deg), strip("dec", dec, u.deg, low=-90.0, high=90.0)
+    return _rotate(_ICRS_TO_GALACTIC, np.radians(ra), np.radians(dec))
 
 
 def icrs_from_galactic(l, b):
@@ -141,8 +141,8 @@ def icrs_from_galactic(l, b):
     --------
     galactic_from_icrs
     """
-    l, b = strip("l", l, u.rad), strip("b", b, u.rad, low=-np.pi / 2, high=np.pi / 2)
-    return _rotate(_ICRS_TO_GALACTIC.T, l, b)
+    l, b = strip("l", l, u.deg), strip("b", b, u.deg, low=-90.0, high=90.0)
+    return _rotate(_ICRS_TO_GALACTIC.T, np.radians(l), np.radians(b))
 
 
 def _rotate(matrix, lon, lat):

@@ -38,7 +38,7 @@ class Component:
     stars: bool = True  # made of stars and their remnants; otherwise only lens classes that ride on it count
     sources: bool = True
     bulge: bool = False  # counts as bulge for the clump rule; the rest is 'disc' in the share of disc sources
-    group: int = 0  # source rows of one group are merged for the finer densities
+    group: int = -1  # source rows of one group are merged for the finer densities; below 0: a group of its own
 
 
 @dataclass(frozen=True)
@@ -219,13 +219,21 @@ class Galaxy:
         place = [np.atleast_1d(q.to_value(u.kpc)) for q in (x, y, z)]
         return sum(c.density.at(*place, self.R0) for c in chosen) * u.Msun / u.kpc**3
 
-    def component_names(self):
-        """Return the component names in order, each once."""
-        return list(dict.fromkeys(c.name for c in self.components))
-
     def bar(self):
         """Return the first bar's density record, or None."""
         return next((c.density for c in self.components if isinstance(c.density, Bar)), None)
+
+
+def _efold(value, where):
+    if isinstance(value, bool) or not isinstance(value, (int, float)) or value != value or value == 0:
+        raise InputError(f"{where}: {value!r} given, must be a number of Gyr other than 0 (inf: constant rate)")
+    return float(value)
+
+
+def _group(value, where):
+    if isinstance(value, bool) or not isinstance(value, int):
+        raise InputError(f"{where}: {value!r} given, must be a whole number")
+    return value
 
 
 def _rotation(table, where):
@@ -248,6 +256,11 @@ def _pad(rows):
     return out
 
 
+_SIGNED = ("drift", "angle", "v_rot", "fall", "fall_R", "fall_z")
+#: numbers that may be zero; every other one is a length, a mass, a density or a dispersion
+_MAY_VANISH = ("R_flat", "R_frozen", "z_ref", "rho_dark", "share_sech", "rho", "column", "rho_sun", "core")
+
+
 def _record(table, kinds, where):
     if not isinstance(table, dict) or "kind" not in table:
         raise InputError(f"{where}: needs a table with 'kind' (known: {', '.join(kinds)})")
@@ -256,13 +269,13 @@ def _record(table, kinds, where):
     profile = {"profile": rest.pop("profile")} if "profile" in rest and kinds[kind] is Bar else {}
     record = kinds[kind].from_table(rest, where) if not profile else _bar(rest, profile, where)
     for key, value in vars(record).items():
-        # lengths, masses and dispersions are never negative; drift below zero is a code
-        if (
-            isinstance(value, u.Quantity)
-            and value.value < 0
-            and key not in ("drift", "angle", "v_rot", "fall", "fall_R", "fall_z")
-        ):
-            raise InputError(f"{where}.{key}: {value} given, must not be negative")
+        if not isinstance(value, u.Quantity) or key in _SIGNED:
+            continue
+        if key in _MAY_VANISH or (key in ("mass", "rho_centre") and kinds[kind] is Bar):
+            if value.value < 0:
+                raise InputError(f"{where}.{key}: {value} given, must not be negative")
+        elif not value.value > 0:
+            raise InputError(f"{where}.{key}: {value} given, must be above 0")
     return record
 
 
@@ -303,17 +316,23 @@ def _component(row, where):
     ):
         raise InputError(f"{where}.age: {age!r} given, must be [youngest, oldest] in Gyr between 0 and 14")
     one_of(f"{where}.counts", row.get("counts", "total"), COUNTS)
+    density = _record(row["density"], DENSITIES, f"{where}.density")
+    motion = row["kinematics"]
+    if isinstance(density, Bar) and isinstance(motion, dict) and motion.get("kind") == "bar" and "angle" not in motion:
+        # a bar's velocities follow its body unless the set says otherwise
+        motion = {**motion, "angle": float(density.angle.value)}
+    stars = bool(row.get("stars", True))
     return Component(
         name=str(row["name"]),
         element=str(row.get("element", row["name"])),
-        density=_record(row["density"], DENSITIES, f"{where}.density"),
-        kinematics=_record(row["kinematics"], KINEMATICS, f"{where}.kinematics"),
+        density=density,
+        kinematics=_record(motion, KINEMATICS, f"{where}.kinematics"),
         imf=str(row.get("imf", "kroupa2001")),
         age=(float(age[0]), float(age[1])),
-        efold=float(row.get("efold", "inf")),
+        efold=_efold(row.get("efold", float("inf")), f"{where}.efold"),
         counts=row.get("counts", "total"),
-        stars=bool(row.get("stars", True)),
-        sources=bool(row.get("sources", True)),
+        stars=stars,
+        sources=bool(row.get("sources", stars)),
         bulge=bool(row.get("bulge", False)),
-        group=int(row.get("group", 0)),
+        group=_group(row.get("group", -1), f"{where}.group"),
     )

@@ -1,4 +1,4 @@
-"""The one decorator of all kernels, and the exponential they share.
+"""The one decorator of all kernels.
 
 numba's cache notices an edit of the decorated function's own file only, so a kernel that calls
 another file's kernel would keep stale machine code. The cache folder is therefore named after the

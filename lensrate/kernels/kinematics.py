@@ -30,6 +30,15 @@ def circular_speed(R, rot):
 
 
 @kernel
+def _onset(R, R_start):
+    """0 inside R_start, 1 beyond 1.25 R_start, smooth between."""
+    if R_start <= 0.0:
+        return 1.0
+    t = min(max((R / R_start - 1.0) / 0.25, 0.0), 1.0)
+    return t * t * (3.0 - 2.0 * t)
+
+
+@kernel
 def disc_motion(R, rot, s_R, s_phi, s_z, fall, R_frozen, R0, drift, h_R, R_flat):
     """(v_phi, s_R, s_phi, s_z): dispersions fall as exp(-fall (R - R0)), frozen inside R_frozen.
 
@@ -41,7 +50,8 @@ def disc_motion(R, rot, s_R, s_phi, s_z, fall, R_frozen, R0, drift, h_R, R_flat)
     v_c = circular_speed(R, rot)
     if drift >= 0.0:
         return v_c - drift * v_c / circular_speed(R0, rot) if drift > 0.0 else v_c, s_R, s_phi, s_z
-    slope = (1.0 / h_R if R > R_flat else 0.0) + (2.0 * fall if R > R_frozen else 0.0)
+    # the slopes set in gradually over a quarter of the radius, so that the mean motion has no step
+    slope = _onset(R, R_flat) / h_R + 2.0 * fall * _onset(R, R_frozen)
     lag = s_R * s_R / (2.0 * max(v_c, 1.0)) * (s_phi * s_phi / (s_R * s_R) - 1.0 + R * slope)
     return max(v_c - lag, 0.0), s_R, s_phi, s_z
 

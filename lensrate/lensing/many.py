@@ -11,7 +11,9 @@ from ..sources.bands import BANDS
 from ..units import check_range
 from .sightline import sightline
 
-__all__ = ["directions_of", "sightlines"]
+__all__ = ["directions_of", "forecasts", "gather", "sightlines"]
+
+_EXTINCTIONS = tuple(f"A_{band}" for band in BANDS)
 
 
 def directions_of(table, icrs=False):
@@ -20,7 +22,8 @@ def directions_of(table, icrs=False):
     Parameters
     ----------
     table : astropy.table.Table
-        Columns l, b (or ra, dec) in degrees unless they carry a unit; optional A_V, A_I, A_J, A_H, A_Ks in mag.
+        Columns l, b (or ra, dec) in degrees unless they carry a unit; optional A_V, A_I, A_J, A_H, A_Ks in mag, where
+        an empty cell leaves the dust disc's value. Other columns are carried along.
     icrs : bool
         Take ra, dec.
 
@@ -29,52 +32,88 @@ def directions_of(table, icrs=False):
     l, b : Quantity, shape (n,)
     extinction : list of dict
         Measured A by band, empty where there is none.
+    carried : astropy.table.Table
+        The table's other columns.
 
     Raises
     ------
     InputError
-        Missing column, text, NaN or a latitude beyond 90, with the row number.
+        Missing column, unknown extinction, text, NaN or a latitude beyond 90, with the row number.
     """
     wanted = ("ra", "dec") if icrs or ("l" not in table.colnames and "ra" in table.colnames) else ("l", "b")
     values = []
     for name in wanted:
         if name not in table.colnames:
-            raise InputError(
-                f"table: no column '{name}'{did_you_mean(name, table.colnames)} (columns: {', '.join(table.colnames)})"
-            )
+            near = did_you_mean(name, table.colnames)
+            raise InputError(f"table: no column '{name}'{near} (columns: {', '.join(table.colnames)})")
         values.append(_column(table, name, u.deg))
-    limit = 90.0
     for i, value in enumerate(values[1]):
-        if abs(value) > limit:
+        if abs(value) > 90.0:
             raise InputError(f"table: row {i + 1}, column {wanted[1]}: {value:g} deg given, must be between -90 and 90")
     lon, lat = (v * u.deg for v in values)
     if wanted[0] == "ra":
         lon, lat = galactic_from_icrs(lon, lat)
     extinction = [{} for _ in values[0]]
-    for band in BANDS:
-        if f"A_{band}" in table.colnames:
-            for row, a in zip(extinction, _column(table, f"A_{band}", u.mag)):
-                row[band] = float(a)
-    return lon, lat, extinction
+    for name in table.colnames:
+        if not name.startswith(("A_", "a_")):
+            continue
+        if name not in _EXTINCTIONS:
+            near = did_you_mean(name, _EXTINCTIONS)
+            raise InputError(f"table: column '{name}' is no known extinction{near} (known: {', '.join(_EXTINCTIONS)})")
+        for row, a in zip(extinction, _column(table, name, u.mag, blanks=True)):
+            if np.isfinite(a):
+                row[name[2:]] = float(a)
+    used = {*wanted, *_EXTINCTIONS}
+    return lon, lat, extinction, table[[c for c in table.colnames if c not in used]]
 
 
-def _column(table, name, unit):
+def _column(table, name, unit, blanks=False):
     column = table[name]
+    empty = np.zeros(len(table), dtype=bool)
     if hasattr(column, "mask") and np.any(column.mask):
-        raise InputError(f"table: row {int(np.argmax(column.mask)) + 1}, column {name}: no value")
+        if not blanks:
+            raise InputError(f"table: row {int(np.argmax(column.mask)) + 1}, column {name}: no value")
+        empty = np.asarray(column.mask)
+        column = column.filled(0)
     try:
-        value = u.Quantity(column, column.unit or unit).to_value(unit)
-        value = np.asarray(value, dtype=float)
+        value = np.atleast_1d(np.asarray(u.Quantity(column, column.unit or unit).to_value(unit), dtype=float)).copy()
     except (TypeError, ValueError, u.UnitConversionError):
         raise InputError(f"table: column {name} must hold numbers in {unit}") from None
     bad = ~np.isfinite(value)
     if bad.any():
         raise InputError(f"table: row {int(np.argmax(bad)) + 1}, column {name}: {value[bad][0]} is not a finite number")
-    return np.atleast_1d(value)
+    value[empty] = np.nan
+    return value
+
+
+def forecasts(l, b, scenario="default", *, extinction=None, t_E_range=None, jobs=1, executor=None, progress=None):
+    """Forecast many directions; parameters as `sightlines`.
+
+    Returns
+    -------
+    list of Sightline
+    """
+    if not isinstance(scenario, Scenario):
+        scenario = Scenario.read(scenario)
+    l, b = np.atleast_1d(u.Quantity(l)), np.atleast_1d(u.Quantity(b))
+    check_range("b", b.to_value(u.deg), "deg", -90.0, 90.0)
+    extinction = extinction if extinction is not None else [{}] * l.size
+    if not (l.size == b.size == len(extinction)):
+        raise InputError(
+            f"sightlines: {l.size} longitudes, {b.size} latitudes, {len(extinction)} extinctions given; "
+            "equal numbers are needed"
+        )
+    resolve(scenario)
+
+    def one(i):
+        return sightline(l[i], b[i], scenario, extinction=extinction[i] or None, t_E_range=t_E_range)
+
+    # the first alone, so that threads do not compile the same kernels at once
+    return [one(0), *run_map(one, range(1, l.size), jobs, executor, progress)]
 
 
 def sightlines(l, b, scenario="default", *, extinction=None, t_E_range=None, jobs=1, executor=None, progress=None):
-    """Forecast many directions.
+    """Forecast many directions into one table.
 
     Parameters
     ----------
@@ -96,62 +135,78 @@ def sightlines(l, b, scenario="default", *, extinction=None, t_E_range=None, job
     Returns
     -------
     astropy.table.QTable
-        A row per direction; ``meta["rows"]`` holds each one's `Sightline.to_dict`.
+        A row per direction.
 
     Raises
     ------
     InputError, ConvergenceError
         As `sightline`.
     """
-    from astropy.table import QTable
-
     if not isinstance(scenario, Scenario):
         scenario = Scenario.read(scenario)
-    l, b = np.atleast_1d(u.Quantity(l)), np.atleast_1d(u.Quantity(b))
-    check_range("b", b.to_value(u.deg), "deg", -90.0, 90.0)
-    extinction = extinction if extinction is not None else [{}] * l.size
-    if not (l.size == b.size == len(extinction)):
-        raise InputError(
-            f"sightlines: {l.size} longitudes, {b.size} latitudes, {len(extinction)} extinctions given; "
-            "equal numbers are needed"
-        )
-    resolve(scenario)
+    options = {"extinction": extinction, "t_E_range": t_E_range, "jobs": jobs, "executor": executor}
+    return gather(forecasts(l, b, scenario, progress=progress, **options), scenario)
 
-    def one(i):
-        return sightline(l[i], b[i], scenario, extinction=extinction[i] or None, t_E_range=t_E_range)
 
-    # the first alone, so that threads do not compile the same kernels at once
-    results = [one(0), *run_map(one, range(1, l.size), jobs, executor, progress)]
-    table = QTable()
-    table["l"] = l.to(u.deg)
-    table["b"] = b.to(u.deg)
-    rows = [r.to_dict() for r in results]
-    for r, row in zip(results, rows):
-        for key, value in r.sources["extinction"].items():
-            row[f"A_{key}"] = value
+def gather(results, scenario, carried=None):
+    """Put forecasts into one table, a row each.
+
+    Parameters
+    ----------
+    results : list of Sightline
+        All of the same classes.
+    scenario : Scenario
+        What they share; a row with an extinction of its own has its own hash in column scenario_hash.
+    carried : astropy.table.Table, optional
+        Further columns to stand first, for example names.
+
+    Returns
+    -------
+    astropy.table.QTable
+    """
+    from astropy.table import QTable
+
+    table = QTable() if carried is None else QTable(carried, copy=True)
+    table["l"] = np.array([r.l.to_value(u.deg) for r in results]) * u.deg
+    table["b"] = np.array([r.b.to_value(u.deg) for r in results]) * u.deg
+    for band in dict.fromkeys(band for r in results for band in r.sources["extinction"]):
+        table[f"A_{band}"] = np.array([r.sources["extinction"].get(band, np.nan) for r in results]) * u.mag
     for name in results[0].lenses:
-        table[f"optical_depth_{name}"] = np.array([r.lenses[name].optical_depth for r in results])
-        table[f"rate_{name}"] = np.array([r.lenses[name].rate for r in results]) / u.yr
-        table[f"mean_t_E_{name}"] = np.array([r.lenses[name].mean_t_E for r in results]) * u.day
-        table[f"median_t_E_{name}"] = np.array([r.lenses[name].median_t_E for r in results]) * u.day
+        lenses = [r.lenses[name] for r in results]
+        table[f"optical_depth_{name}"] = np.array([x.optical_depth for x in lenses])
+        table[f"rate_{name}"] = np.array([x.rate for x in lenses]) / u.yr
+        table[f"mean_t_E_{name}"] = np.array([x.mean_t_E for x in lenses]) * u.day
+        table[f"median_t_E_{name}"] = np.array([x.median_t_E for x in lenses]) * u.day
     table["mean_source_distance"] = np.array([r.sources["mean_distance_kpc"] for r in results]) * u.kpc
     density = [r.sources["source_density_per_arcmin2"] for r in results]
-    if density[0] is not None:
+    if all(d is not None for d in density):
         table["source_density"] = np.array(density) / u.arcmin**2
-    for band in results[0].sources["extinction"]:
-        table[f"A_{band}"] = np.array([r.sources["extinction"][band] for r in results]) * u.mag
+    table["scenario_hash"] = [r.scenario.hash for r in results]
     meta = results[0].meta()
-    for key in ("l_deg", "b_deg"):
+    for key in ("l_deg", "b_deg", "quadrature_error", "field_mismatch"):
         meta.pop(key)
-    rule = results[0].sources["rule"]
-    meta["header"] = results[0].header() if not density[0] or len(results) == 1 else _common_header(results[0], rule)
-    meta["warnings"] = list(dict.fromkeys(w for r in results for w in r.warnings))
-    table.meta.update(meta)
-    table.meta["rows"] = rows
+    limit = results[0].header().split("; ", 1)[1]
+    bands = ", ".join(f"A_{band} by row" for band in results[0].sources["extinction"]) or "no dust used"
+    table.meta.update(
+        {
+            **meta,
+            "header": f"sources {results[0].sources['rule']} ({bands}); {limit}",
+            "scenario": scenario.name,
+            "scenario_hash": scenario.hash,
+            "scenario_text": scenario.to_toml(),
+            "warnings": _together(results),
+        }
+    )
     return table
 
 
-def _common_header(result, rule):
-    limit = result.header().split("; ", 1)[1]
-    bands = ", ".join(f"A_{b} by row" for b in result.sources["extinction"]) or "no dust used"
-    return f"sources {rule} ({bands}); {limit}"
+def _together(results):
+    """Each warning once; one that differs only in its numbers is shown for its first row, with a count."""
+    kinds = {}
+    for r in results:
+        for w in r.warnings:
+            kinds.setdefault("".join(c for c in w if not c.isdigit()), []).append(w)
+    return [
+        ws[0] if len(ws) == 1 or len(set(ws)) == 1 else f"{ws[0]} (and {len(ws) - 1} rows more)"
+        for ws in kinds.values()
+    ]

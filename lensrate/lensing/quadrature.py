@@ -5,55 +5,16 @@ density lives on a grid uniform in ln pi_rel and ln mu_rel whose steps make ever
 each of its rows has its own source-distance panels, which include the images of the lens's kinks.
 """
 
-from dataclasses import dataclass, field, fields
+from dataclasses import dataclass
 from functools import cache
 
 import numpy as np
 
-from ..errors import InputError
+from ..scenario.numerics import Numerics
 
 __all__ = ["Isogrid", "Numerics", "lens_pairs", "panel_edges", "panel_nodes", "row_nodes"]
 
 LN10 = np.log(10.0)
-
-
-@dataclass(frozen=True)
-class Numerics:
-    """Steps and ranges of the quadratures; every one may be halved to see that nothing reported moves."""
-
-    step_dex: float = field(default=0.05, metadata={"range": (0.005, 0.2)})  # of mu_rel and t_E; pi_rel and M: twice it
-    nodes: int = field(default=5, metadata={"range": (2, 24)})  # Gauss-Legendre nodes per panel, two more for totals
-    directions: float = field(default=3.0, metadata={"range": (1.0, 12.0)})  # density of directions on a circle of mu
-    half_circle: int = field(default=16, metadata={"range": (8, 64)})  # directions of the mean speed
-    q_max: float = field(default=18.0, metadata={"range": (8.0, 60.0)})  # exponents beyond are dropped
-    weight_cut: float = field(
-        default=1e-6, metadata={"range": (0.0, 1e-3)}
-    )  # nodes lighter than this share of the peak
-    D_max: float = field(default=100.0, metadata={"range": (1.0, 500.0)})  # kpc, where the stars of the model end
-    merge_sources: bool = True  # moment-match source rows of one group for the rate density
-
-    def __post_init__(self):
-        for f in fields(self):
-            if "range" in f.metadata:
-                low, high = f.metadata["range"]
-                value = getattr(self, f.name)
-                if isinstance(value, bool) or not isinstance(value, (int, float)) or not low <= value <= high:
-                    raise InputError(f"numerics.{f.name}: {value!r} given, must be between {low:g} and {high:g}")
-                if f.type is int and not float(value).is_integer():
-                    raise InputError(f"numerics.{f.name}: {value!r} given, must be a whole number")
-
-    def halved(self):
-        """Return numerics with every step halved, for convergence tests."""
-        return Numerics(
-            self.step_dex / 2,
-            2 * self.nodes,
-            2 * self.directions,
-            2 * self.half_circle,
-            2 * self.q_max,
-            self.weight_cut / 100,
-            self.D_max,
-            self.merge_sources,
-        )
 
 
 @dataclass(frozen=True)

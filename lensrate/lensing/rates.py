@@ -220,7 +220,9 @@ def _merged(model, src, two=False):
     """Source rows moment-matched into the components' groups, or into disc and bulge."""
     if src.shape[1] == 1:
         return src
-    group = [int(c.bulge) if two else c.group for c in model.galaxy.components]
+    components = model.galaxy.components
+    own = [c.group if c.group >= 0 else 10_000 + i for i, c in enumerate(components)]
+    group = [int(c.bulge) for c in components] if two else own
     _, group = np.unique(group, return_inverse=True)
     out = np.empty((6, group.max() + 1, src.shape[2]))
     profiles.merge_rows(src, group, out)

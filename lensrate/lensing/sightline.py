@@ -2,6 +2,7 @@
 
 from dataclasses import dataclass, field
 from functools import cached_property
+from html import escape
 
 import astropy.units as u
 import numpy as np
@@ -121,7 +122,9 @@ class Sightline:
 
     def velocities(self):
         """Return a line that says which velocities are used where."""
-        stars = "sources, stars, brown dwarfs and white dwarfs: the Galaxy set's kinematic model (white dwarfs' kicks of "
+        stars = (
+            "sources, stars, brown dwarfs and white dwarfs: the Galaxy set's kinematic model (white dwarfs' kicks of "
+        )
         stars += "under 1 km/s, El-Badry & Rix 2018, are neglected)"
         if self._fields() is None:
             return f"{stars}; neutron stars and black holes: the same, unkicked"
@@ -181,8 +184,9 @@ class Sightline:
 
         rows = {"class": self.lenses, "component": self.components, "element": self.elements}
         rows = rows[one_of("by", by, rows)]
+        first = "lens" if by == "class" else by
         table = QTable()
-        table["lens"] = list(rows)
+        table[first] = list(rows)
         table["optical_depth"] = np.array([r.optical_depth for r in rows.values()])
         table["rate"] = np.array([r.rate for r in rows.values()]) / u.yr
         if by == "class":
@@ -195,7 +199,7 @@ class Sightline:
             table["share_of_events"] = np.array([r.share_of_events for r in rows.values()])
             table["kinematics"] = [r.kinematics for r in rows.values()]
         described = {
-            "lens": by,
+            first: f"lens {by}",
             "optical_depth": "for u < 1",
             "rate": f"events per source star and year, u_0 < {self.u_0_limit:g}",
             "rate_standard_error": "sampling error of the fields; nan: analytic",
@@ -225,7 +229,7 @@ class Sightline:
         import pandas as pd
 
         return pd.DataFrame({c: getattr(table[c], "value", np.asarray(table[c])) for c in table.colnames}).set_index(
-            "lens"
+            table.colnames[0]
         )
 
     def timescales(self):
@@ -326,22 +330,30 @@ class Sightline:
 
     def _repr_html_(self):
         l, b = self.l.to_value(u.deg), self.b.to_value(u.deg)
-        where = f"l = {l:g}, b = {b:g} deg, scenario {self.scenario.name} ({self.scenario.hash})"
-        head = f"<p>lensrate: {where}<br>{self.header()}</p>"
-        return head + self.to_table()._repr_html_()
+        name = escape(self.scenario.name)
+        where = f"l = {l:g}, b = {b:g} deg, scenario {name} ({self.scenario.hash})"
+        head = f"<p>lensrate: {where}<br>{escape(self.header())}</p>"
+        return head + _rounded(self.to_table())._repr_html_()
+
+    def __repr__(self):
+        total = self.lenses["all"]
+        numbers = f"tau={total.optical_depth:.3g}, rate={total.rate:.3g}/yr, mean t_E={total.mean_t_E:.3g} d"
+        return (
+            f"<Sightline l={self.l:.4g}, b={self.b:.4g}, scenario '{self.scenario.name}': {self.header()}: {numbers}>"
+        )
 
 
-def sightline(l, b, scenario="default", *, sources=None, extinction=None, kicks=None, t_E_range=None):
+def sightline(l, b=None, scenario="default", *, sources=None, extinction=None, kicks=None, t_E_range=None):
     """Forecast optical depth, event rate and timescales toward one direction.
 
     Parameters
     ----------
     l, b : Quantity
-        Galactic longitude and latitude.
+        Galactic longitude and latitude; or one SkyCoord instead of both.
     scenario : Scenario or str
         Every assumption; a name or file is read.
     sources, extinction, kicks : optional
-        Shorthand for ``scenario.replace``: source rule, {band: A in mag}, kick law of neutron stars.
+        Shorthand for ``scenario.replace``: source rule, {band: A in mag or Quantity}, kick law of neutron stars.
     t_E_range : (Quantity, Quantity), optional
         Limit every reported mean, median, rate and share to these timescales; optical depths too, by the share of
         t_E-weighted events.
@@ -362,9 +374,12 @@ def sightline(l, b, scenario="default", *, sources=None, extinction=None, kicks=
     Optical depth and rate by a product rule in source and lens distance, Gamma = 2 u_0 int n_L D_L^2 <theta_E mu_rel>;
     distributions from the mass-free rate density; mean t_E = (2/pi) tau/Gamma, exact for u_0 < 1.
     """
-    l_rad, b_rad = _direction(l, b)
+    l, b = _direction(l, b)
+    l_rad, b_rad = np.radians(l), np.radians(b)
     if not isinstance(scenario, Scenario):
         scenario = Scenario.read(scenario)
+    if extinction is not None:
+        extinction = {k: a.to_value(u.mag) if isinstance(a, u.Quantity) else a for k, a in extinction.items()}
     changes = {"sources": sources, "extinction": extinction, "kicks": kicks}
     changes = {k: v for k, v in changes.items() if v is not None}
     if changes:
@@ -374,7 +389,7 @@ def sightline(l, b, scenario="default", *, sources=None, extinction=None, kicks=
     line = model.galaxy.sightline(l_rad, b_rad)
     toward = model.sources.toward(l_rad, b_rad, model.galaxy)
     integrals = integrate(rates.prepare(model, line, toward, Numerics(**scenario.numerics)))
-    return _record(l << u.deg, b << u.deg, scenario, model, integrals, limits)
+    return _record(l * u.deg, b * u.deg, scenario, model, integrals, limits)
 
 
 def _record(l, b, scenario, model, integrals, limits):
@@ -403,10 +418,13 @@ def _record(l, b, scenario, model, integrals, limits):
 
 
 def _direction(l, b):
-    l_rad = strip("l", l, u.rad, shape=())
-    b_deg = strip("b", b, u.deg, shape=())
-    check_range("b", np.array(b_deg), "deg", -90.0, 90.0)
-    return l_rad, np.radians(b_deg)
+    if hasattr(l, "galactic") and b is None:
+        l, b = l.galactic.l, l.galactic.b
+    elif b is None:
+        raise InputError("b: missing; give l and b as Quantities, or one SkyCoord")
+    l, b = strip("l", l, u.deg, shape=()), strip("b", b, u.deg, shape=())
+    check_range("b", np.array(b), "deg", -90.0, 90.0)
+    return l, b
 
 
 def _t_E_range(given):
@@ -422,6 +440,13 @@ def _t_E_range(given):
     if not low < high:
         raise InputError(f"t_E_range: {low:g} to {high:g} d given, the first must be below the second")
     return low, high
+
+
+def _rounded(table):
+    for name in table.colnames:
+        if table[name].dtype.kind == "f":
+            table[name].info.format = ".4g"
+    return table
 
 
 def _none(x):

@@ -2,9 +2,11 @@
 
 from dataclasses import dataclass, replace
 from functools import cached_property
+from threading import Lock
 
 import numpy as np
 
+from ..datafiles import read_set
 from ..errors import InputError
 from ..galaxy.model import Galaxy
 from ..remnants.classes import CLASSES, LensClass, MassSpectrum
@@ -24,6 +26,7 @@ __all__ = ["Model", "resolve"]
 
 _KEEP = 16  # resolved scenarios kept in memory
 _resolved = {}
+_lock = Lock()
 
 
 @dataclass(frozen=True, eq=False)
@@ -182,17 +185,26 @@ def resolve(scenario):
         A number, name or file that the scenario points at cannot be used.
     """
     key = scenario.hash
-    if key not in _resolved:
+    with _lock:
+        if key in _resolved:
+            return _resolved[key]
+    # a field's own extinction changes nothing but the sources: the rest is shared
+    if scenario.extinction:
+        plain = resolve(scenario.replace(extinction={}))
+        model = replace(plain, scenario=scenario, sources=replace(plain.sources, measured=scenario.extinction))
+    else:
+        model = _build(scenario)
+    with _lock:
         while len(_resolved) >= _KEEP:
             _resolved.pop(next(iter(_resolved)))
-        _resolved[key] = _build(scenario)
-    return _resolved[key]
+        _resolved[key] = model
+    return model
 
 
 def _stars(scenario, galaxy, band):
     """Population and luminosity function (None where no band is asked) of each component; None, None without stars."""
     lifetimes, ifmr = Lifetimes.read(scenario.lifetimes), Ifmr.read(scenario.ifmr)
-    users = LuminosityFunction.read(scenario.luminosity, band) if scenario.luminosity and band else None
+    users = _users_function(scenario, band) if scenario.luminosity and band else None
     made, out = {}, []
     for component in galaxy.components:
         key = (scenario.imf or component.imf, component.age, component.efold, component.counts)
@@ -202,6 +214,17 @@ def _stars(scenario, galaxy, band):
             made[key] = pop, users or (luminosity_function(band, history, pop, imf, lifetimes) if band else None)
         out.append(made[key] if component.stars else (None, None))
     return out
+
+
+def _users_function(scenario, band):
+    """A luminosity function of the user's own, in the band of the source rule."""
+    shine = LuminosityFunction.read(scenario.luminosity)
+    if shine.band != band:
+        raise InputError(
+            f"luminosity: '{scenario.luminosity}' is in {shine.band} and the source rule in {band}; "
+            f"take a table in {band}, or a rule like limit:{shine.band}=21"
+        )
+    return shine
 
 
 def _build(scenario):
@@ -228,6 +251,11 @@ def _references(scenario, galaxy):
     for name in dict.fromkeys(scenario.imf or c.imf for c in galaxy.components if c.stars):
         out += Imf.read(name).references
     out += [*Lifetimes.read(scenario.lifetimes).references, *Ifmr.read(scenario.ifmr).references]
+    for name in ("dwarf_sequence", "giants", "extinction_law", scenario.dust):
+        if not (scenario.luminosity and name in ("dwarf_sequence", "giants")):
+            out.append(read_set("sources", name)["reference"])
+    if galaxy.potential:
+        out.append(read_set("potential", galaxy.potential)["reference"])
     for law in (scenario.kicks, scenario.bh_kicks):
         if law not in ("same", "momentum", "none"):
             out += parse_kick(law).references

@@ -6,6 +6,7 @@ import math
 from dataclasses import asdict, dataclass, field, replace
 from dataclasses import fields as declared
 from functools import cached_property
+from html import escape
 from pathlib import Path
 
 from ..datafiles import field_checksum, field_names, names, parse_toml, read_set
@@ -15,20 +16,12 @@ from ..remnants.classes import LensClass
 from ..remnants.kicks import parse_kick
 from ..sources.bands import BANDS
 from ..sources.rules import parse_rule
+from .numerics import Numerics
 
 __all__ = ["Scenario"]
 
 _BH_KICKS = ("same", "momentum")
-_NUMERICS = {
-    "step_dex": (0.005, 0.2),
-    "nodes": (2, 24),
-    "directions": (1.0, 12.0),
-    "half_circle": (8, 64),
-    "q_max": (8.0, 60.0),
-    "weight_cut": (0.0, 1e-3),
-    "D_max": (1.0, 500.0),
-    "merge_sources": (False, True),
-}
+_FILES = ("galaxy", "dust", "luminosity", "imf", "lifetimes", "ifmr", "fields")  # may name a user's file
 _PICKED = {"galaxy": "galaxy", "lifetimes": "lifetimes", "ifmr": "ifmr"}
 
 
@@ -69,12 +62,20 @@ class Scenario:
                 raise InputError(f"scenario: {f.name}: {value!r} given, must be text")
             if f.type is dict and not isinstance(value, dict):
                 raise InputError(f"scenario: {f.name}: {value!r} given, must be a table")
+        if not isinstance(self.component, (list, tuple)) or not all(isinstance(c, dict) for c in self.component):
+            raise InputError(f"scenario: component: {self.component!r} given, must be a list of tables, [[component]]")
         object.__setattr__(self, "component", tuple(self.component))
+        if self.luminosity and not Path(self.luminosity).is_file():
+            raise InputError(f"scenario: luminosity: no file '{self.luminosity}'")
         self._check_numbers()
         parse_rule(self.sources)
         parse_kick(self.kicks)
         if self.bh_kicks not in _BH_KICKS:
-            parse_kick(self.bh_kicks)
+            try:
+                parse_kick(self.bh_kicks)
+            except InputError as error:
+                near = did_you_mean(self.bh_kicks.partition(":")[0], _BH_KICKS)
+                raise InputError(f"bh_kicks: {error}; or one of {', '.join(_BH_KICKS)}{near}") from None
         for kind, key in _PICKED.items():
             text = getattr(self, key)
             if not text.endswith(".toml"):
@@ -99,17 +100,7 @@ class Scenario:
             one_of("scenario: extinction", band, BANDS)
             if isinstance(a, bool) or not isinstance(a, (int, float)) or not (math.isfinite(a) and 0 <= a <= 60):
                 raise InputError(f"scenario: extinction.{band}: {a!r} given, must be between 0 and 60 mag")
-        for key, value in self.numerics.items():
-            one_of("scenario: numerics", key, _NUMERICS)
-            low, high = _NUMERICS[key]
-            if (
-                isinstance(low, bool) != isinstance(value, bool)
-                or not isinstance(value, (int, float))
-                or not low <= value <= high
-            ):
-                raise InputError(f"scenario: numerics.{key}: {value!r} given, must be between {low} and {high}")
-            if isinstance(low, int) and not isinstance(value, int):
-                raise InputError(f"scenario: numerics.{key}: {value!r} given, must be a whole number")
+        Numerics.from_dict(self.numerics)
 
     @classmethod
     def read(cls, name="default"):
@@ -169,13 +160,17 @@ class Scenario:
             raise InputError(f"{where}: 'base' goes in circles or deeper than 8 files")
         rest = {k: v for k, v in table.items() if k != "base"}
         rest.setdefault("name", stem)
+        for key in _FILES:
+            if isinstance(rest.get(key), str) and Path(rest[key]).suffix:
+                # beside the file that names it, not beside wherever the program was started
+                rest[key] = str(Path(where).parent / rest[key])
         if "base" not in table:
             return cls(**rest)
+        rest.setdefault("title", "")
         base = table["base"]
         if not isinstance(base, str):
             raise InputError(f"{where}: base: {base!r} given, must be a scenario's name or file")
         if base.endswith(".toml"):
-            # beside the file that names it, not beside wherever the program was started
             path = Path(where).parent / base if not Path(base).is_absolute() else Path(base)
             start = cls.from_dict(parse_toml(path), str(path), path.stem, _depth + 1)
         else:
@@ -257,6 +252,11 @@ class Scenario:
         full = self.to_dict()
         for key in ("name", "title"):
             full.pop(key)
+        for key in ("kicks", "bh_kicks"):
+            if full[key] not in _BH_KICKS:
+                law = parse_kick(full[key])
+                full[key] = [law.kind, law.values, law.weights]
+        full["sources"] = parse_rule(self.sources).text
         used = {self.imf or row.get("imf", "kroupa2001") for row in self._galaxy_table["component"]}
         full["sets"] = {
             "galaxy": self._galaxy_table,
@@ -266,11 +266,13 @@ class Scenario:
             "light": [read_set("sources", n) for n in ("giants", "dwarf_sequence", "extinction_law")],
             "imf": {n: read_set("imf", n) for n in sorted(used)},
         }
+        if self._galaxy_table.get("potential"):
+            full["sets"]["potential"] = read_set("potential", self._galaxy_table["potential"])
         if self.fields and not self.unkicked:
             full["sets"]["fields"] = field_checksum(self.fields)
         if self.luminosity:
             full["sets"]["luminosity"] = hashlib.sha256(Path(self.luminosity).read_bytes()).hexdigest()
-        text = json.dumps(full, sort_keys=True, default=str, allow_nan=True)
+        text = json.dumps(_plain_numbers(full), sort_keys=True, default=str, allow_nan=True)
         return hashlib.sha256(text.encode()).hexdigest()[:12]
 
     def to_toml(self):
@@ -287,8 +289,18 @@ class Scenario:
         return f"Scenario('{self.name}', {chosen}, hash={self.hash})"
 
     def _repr_html_(self):
-        rows = "".join(f"<tr><td>{k}</td><td>{v}</td></tr>" for k, v in self.to_dict().items() if v not in ("", {}, []))
+        stated = {k: v for k, v in self.to_dict().items() if v not in ("", {}, [])}
+        rows = "".join(f"<tr><td>{k}</td><td>{escape(str(v))}</td></tr>" for k, v in stated.items())
         return f"<table><caption>scenario {self.hash}</caption>{rows}</table>"
+
+
+def _plain_numbers(value):
+    """Every number as a float, so that 1 and 1.0 are the same assumption."""
+    if isinstance(value, dict):
+        return {k: _plain_numbers(v) for k, v in value.items()}
+    if isinstance(value, (list, tuple)):
+        return [_plain_numbers(v) for v in value]
+    return float(value) if isinstance(value, int) and not isinstance(value, bool) else value
 
 
 def _merge(old, new):
@@ -318,7 +330,11 @@ def _toml(table, prefix=()):
 
 
 def _key(key):
-    return key if key.replace("_", "").replace("-", "").isalnum() and key.isascii() else json.dumps(key)
+    return (
+        key
+        if key.replace("_", "").replace("-", "").isalnum() and key.isascii()
+        else json.dumps(key, ensure_ascii=False)
+    )
 
 
 def _value(value):
@@ -330,4 +346,4 @@ def _value(value):
         return "[" + ", ".join(_value(v) for v in value) + "]"
     if isinstance(value, (int, float)):
         return repr(value)
-    return json.dumps(str(value), ensure_ascii=True)
+    return json.dumps(str(value), ensure_ascii=False)

@@ -60,8 +60,20 @@ def test_json_keeps_its_contract():
     for key in ("optical_depth", "rate_per_star_per_yr"):
         assert sum(c[key] for c in result["components"].values()) == pytest.approx(total[key], rel=1e-9)
         assert sum(result["lenses"][c][key] for c in list(result["lenses"])[:-1]) == pytest.approx(total[key], rel=1e-9)
-    assert result["lenses"]["neutron_star"]["kinematics"] == "unkicked"
-    assert any("unkicked" in w for w in result["warnings"]) and len(result["references"]) > 10 and result["version"]
+    words = {
+        "star": "stellar",
+        "white_dwarf": "stellar",
+        "neutron_star": "kicked",
+        "black_hole": "kicked",
+        "all": "mixed",
+    }
+    assert {n: result["lenses"][n]["kinematics"] for n in words} == words
+    assert result["lenses"]["star"]["rate_standard_error"] is None and "orbits" in result["velocities"]
+    assert 0 < result["lenses"]["neutron_star"]["rate_standard_error"] < 1e-9
+    assert len(result["references"]) > 10 and result["version"] and len(result["fields"]["sha256"]) == 64
+    unkicked = forecast("1.0", "-3.9", "--kicks", "none")
+    assert unkicked["lenses"]["neutron_star"]["kinematics"] == "unkicked" and unkicked["fields"] is None
+    assert any("unkicked" in w for w in unkicked["warnings"])
 
 
 def test_negative_numbers_are_taken_as_typed():
@@ -90,9 +102,9 @@ def test_equatorial_input():
 def test_people_get_a_table_with_its_conditions():
     code, out, err = run("sightline", "1", "-3", "--extinction", "I=1.0", "--t-E-range", "2", "300")
     assert code == 0
-    for words in ("limit:I=21", "A_I = 1.00", "u_0 < 1", "2 < t_E < 300 d", "heliocentric", "neutron star", "unkicked"):
+    for words in ("limit:I=21", "A_I = 1.00", "u_0 < 1", "2 < t_E < 300 d", "heliocentric", "neutron star", "kicked"):
         assert words in out
-    assert "unkicked" in err and max(map(len, out.splitlines() + err.splitlines())) <= 100
+    assert "igoshev2020" in out and max(map(len, out.splitlines() + err.splitlines())) <= 100
     by_element = run("sightline", "1", "-3", "--by", "element", *FAST)[1]
     assert "thin_disc_5_10" in by_element
     assert run("sightline", "1", "-3", "--quiet")[2] == ""
@@ -146,16 +158,25 @@ def test_pictures_are_written_with_their_provenance(tmp_path):
 
 def test_many_sightlines(tmp_path):
     path = tmp_path / "fields.csv"
-    path.write_text("name,l,b,A_I\nM01,1.0,-2.9,1.25\nM02,359.0,-2.0,2.0\n")
+    path.write_text("name,l,b,A_I\nM01,1.0,-2.9,1.25\nM02,359.0,-2.0,2.0\nM03,2.0,-4.0,\n")
     code, out, err = run("sightline", "--table", path, "--json", "--jobs", "2")
     assert code == 0, err
     rows = json.loads(out)
     one = forecast("1.0", "-2.9", "--extinction", "I=1.25")
     assert rows[0]["lenses"] == one["lenses"] and rows[0]["sources"]["extinction"] == {"I": 1.25}
-    assert rows[1]["sources"]["extinction"] == {"I": 2.0}
+    assert rows[1]["sources"]["extinction"] == {"I": 2.0} and rows[1]["row"] == {"name": "M02"}
+    assert rows[0]["scenario_hash"] == one["scenario_hash"] != rows[2]["scenario_hash"]
+    dust = forecast("2.0", "-4.0")
+    assert rows[2]["sources"]["extinction"] == dust["sources"]["extinction"]
     assert run("sightline", "--table", path, "--save", tmp_path / "r.fits", "-q")[0] == 0
     saved = Table.read(tmp_path / "r.fits")
-    assert saved["rate_all"][0] == one["lenses"]["all"]["rate_per_star_per_yr"]
+    assert saved["rate_all"][0] == one["lenses"]["all"]["rate_per_star_per_yr"] and list(saved["name"]) == [
+        "M01",
+        "M02",
+        "M03",
+    ]
+    # the table's own provenance is what the rows share
+    assert json.loads(saved.meta["MADE"])["scenario_hash"] == dust["scenario_hash"] == saved["scenario_hash"][2]
     code, out, _ = run("sightline", "--table", path, "-q")
     assert code == 0 and "A_I by row" in out and max(map(len, out.splitlines())) <= 100
 
@@ -198,6 +219,10 @@ BAD = [
     (["1", "-3", "--extinction", "1.2"], "I=1.25"),
     (["1", "-3", "--extinction", "I=-1"], "extinction"),
     (["1", "-3", "--extinction", "R=1"], "R"),
+    (["1", "-3", "--extinction", "I=1", "--extinction", "I=2"], "twice"),
+    (["1", "-3", "--picture", "depth"], "--picture"),
+    (["1", "-3", "--jobs", "2"], "--jobs"),
+    (["1", "-3", "--bh-kicks", "momentm"], "momentum"),
     (["1", "-3", "--u-0-limit", "0"], "u_0_limit"),
     (["1", "-3", "--t-E-range", "300", "2"], "t_E_range"),
     (["1", "-3", "--save", "out.xls"], ".ecsv"),
@@ -224,6 +249,7 @@ def test_bad_input_is_one_clear_line(args, word, tmp_path, monkeypatch):
         ("l,lat\n1,-3\n", "column 'b'"),
         ("l,b\n1,south\n", "column b must hold numbers"),
         ("l,b,A_I\n1,-3,-2\n", "extinction"),
+        ("l,b,A_i\n1,-3,2\n", "did you mean 'A_I'"),
         ("", "no rows"),
         ("l,b\n1,-3,4\n", "cannot be read"),
         ("l,b\n", "no rows"),
@@ -253,6 +279,12 @@ def test_bad_tables_name_row_and_column(tmp_path, text, word):
             "did you mean 'halo'",
         ),
         ("sources = 3", "must be text"),
+        ("component = 3", "list of tables"),
+        ("luminosity = 'nofile.ecsv'", "no file"),
+        ("[change.halo.density]\nq = 0", "above 0"),
+        ("[change.thin_disc.density]\nsigma_W = 0", "above 0"),
+        ("[change.bulge.density]\nc = {value = 0.2, unti = 'kpc'}", "did you mean 'unit'"),
+        ("fields = 'mine.fits'", "no file"),
         ("this is not toml", "not a valid TOML"),
         ("base = 'loop.toml'", "circles"),
     ],
@@ -302,4 +334,4 @@ def test_garbage_in_options_is_refused_politely(option, text):
 def test_pipes_stay_clean():
     code = "from lensrate.cli import main; main(['sightline', '1', '-3', '--sources', 'distance:8', '--json'])"
     out = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True)
-    assert json.loads(out.stdout)["l_deg"] == 1.0 and "note:" in out.stderr
+    assert json.loads(out.stdout)["l_deg"] == 1.0 and out.stderr == ""

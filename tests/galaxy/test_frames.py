@@ -70,7 +70,7 @@ def test_special_distances():
 @pytest.mark.parametrize(
     ("l", "b", "words"),
     [
-        (10 * u.deg, 91 * u.deg, "b: 1.588.. rad given"),
+        (10 * u.deg, 91 * u.deg, "b: 91 deg given"),
         (np.nan * u.deg, 0 * u.deg, "l: nan"),
         (10, 0 * u.deg, "l: 10 has no unit"),
         (1 * u.kpc, 0 * u.deg, "l: unit 'kpc'"),
