@@ -10,6 +10,7 @@ __all__ = ["Progress", "duration", "size"]
 _EVERY = 30.0  # seconds between lines where stderr is no terminal
 _REDRAW = 0.2
 _WIDTH = 30
+_TELLING = 0.004  # share of the work from which the time left is foretold
 
 
 class Progress:
@@ -41,7 +42,7 @@ class Progress:
             return
         self.last = now
         fresh = done - found
-        left = f", about {duration((now - self.start) * (1 - done) / fresh)} left" if fresh > 1e-9 and done < 1 else ""
+        left = f", about {duration((now - self.start) * (1 - done) / fresh)} left" if fresh > _TELLING and done < 1 else ""
         text = f"{100 * min(done, 1):.0f} %{left}"
         if self.bar:
             full = int(_WIDTH * min(done, 1))
