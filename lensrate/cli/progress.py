@@ -42,8 +42,9 @@ class Progress:
             return
         self.last = now
         fresh = done - found
-        left = f", about {duration((now - self.start) * (1 - done) / fresh)} left" if fresh > _TELLING and done < 1 else ""
-        text = f"{100 * min(done, 1):.0f} %{left}"
+        text = f"{100 * min(done, 1):.0f} %"
+        if fresh > _TELLING and done < 1:
+            text += f", about {duration((now - self.start) * (1 - done) / fresh)} left"
         if self.bar:
             full = int(_WIDTH * min(done, 1))
             bar = "#" * full + "." * (_WIDTH - full)
