@@ -159,11 +159,26 @@ def write_table(table, path, overwrite=False, payload=None):
                 # a header drops nested metadata: one JSON string in ASCII keeps all of it
                 out.meta["MADE"] = json.dumps(meta, ensure_ascii=True)
             elif ending == ".vot":
-                out.meta["description"] = json.dumps(meta, ensure_ascii=True)
+                _write_votable(out, json.dumps(meta, ensure_ascii=True), temporary)
+                return path
             else:
                 out.meta.update(meta)
             _write_astropy(out, temporary, ending)
     return path
+
+
+def _write_votable(table, made, path):
+    import warnings
+
+    from astropy.io.votable import from_table
+    from astropy.io.votable.tree import Info
+
+    votable = from_table(table)
+    # an attribute keeps the text as it is; a description would be wrapped
+    votable.infos.append(Info(name="MADE", value=made))
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore")
+        votable.to_xml(str(path))
 
 
 def _write_astropy(table, path, ending):

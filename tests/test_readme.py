@@ -42,6 +42,8 @@ def test_scenario_example_runs(tmp_path, monkeypatch):
     Path("mine.toml").write_text(block("toml")[0])
     out = run("lensrate sightline 1.0 -3.9 --scenario mine.toml -q")
     assert "free planet" in out
+    Path("dark.toml").write_text(block("toml")[1])
+    assert "primordial black hole" in run("lensrate sightline 280.46 -32.89 --scenario dark.toml -q")
 
 
 def test_commands_and_files_are_there():

@@ -5,12 +5,16 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from ..errors import ConvergenceError
+from ..galaxy.density import CoredHalo, PowerHalo
 from ..units import DAYS_PER_YEAR, FOUR_G_C2
 from . import distributions, rates
 
 __all__ = ["Integrals", "Lens", "assemble", "disc_share", "integrate", "optical_depth_along"]
 
 _UNKICKED = "neutron stars and black holes are unkicked: they ride on the stellar field of their birth component"
+_ROUGH = 3e-3  # difference of the quadratures that is worth a word
+_FOREIGN = 20.0  # kpc, sources beyond are hardly the Galaxy's own
+_EMPTY = 1e-2  # sources per square arcminute
 _FAST = 1e-3  # share of remnants kicked beyond the last bin that is worth a word
 
 
@@ -138,7 +142,12 @@ def assemble(model, integrals, u_0, limits, where):
         "rate_per_ln_t_E": pdf,
         "quadrature_error": float(quadrature),
         "field_mismatch": _mismatch(model, integrals),
-        "warnings": (*integrals.ready.sources.warnings, *model.warnings, *_notes(model, lenses)),
+        "warnings": (
+            *integrals.ready.sources.warnings,
+            *model.warnings,
+            *_notes(model, lenses),
+            *_line_notes(integrals.ready, float(quadrature)),
+        ),
     }
 
 
@@ -208,12 +217,39 @@ def _notes(model, lenses):
     return notes
 
 
+def _line_notes(ready, quadrature):
+    """What is particular to this direction and its sources."""
+    notes, far = [], ready.mean_distance()
+    if quadrature > _ROUGH:
+        notes.append(
+            f"the two quadratures differ by {quadrature:.1%} in the total rate: medians may be off by as much; "
+            "smaller numerics.step_dex and more numerics.nodes in the scenario cure it"
+        )
+    if ready.sources.fixed_distance and far > _FOREIGN:
+        notes.append(f"sources at {far:g} kpc move as the Galaxy's own stars there, not as another galaxy's")
+    density = ready.per_arcmin2() if ready.sources.counts_stars else 1.0
+    if density < _EMPTY:
+        notes.append(f"only {density:.1e} sources per square arcminute pass '{ready.sources.rule.text}' here")
+    if ready.model.kicked is not None:
+        grid = ready.model.kicked.field.grid
+        D = np.linspace(0.0, far, 200)
+        x, y, z = ready.line.xyz(D)
+        outside = (np.hypot(x, y) > grid.R_max) | (np.abs(z) > grid.z_max)
+        if np.mean(outside) > 0.3:
+            notes.append(
+                f"beyond {D[np.argmax(outside)]:.1f} kpc this sightline is outside the fields (R < {grid.R_max:g}, "
+                f"|z| < {grid.z_max:g} kpc): kicked remnants there are left out"
+            )
+    return notes
+
+
 def disc_share(ready):
-    """Return the share of sources that are not bulge, or None where the sources are no stars of the Galaxy."""
+    """Return the share of sources in the discs, or None where the sources are no stars of the Galaxy."""
     components, shares = ready.model.galaxy.components, ready.source_shares()
     if len(shares) != len(components):
         return None
-    return float(sum(s for s, c in zip(shares, components) if not c.bulge))
+    halos = (CoredHalo, PowerHalo)
+    return float(sum(s for s, c in zip(shares, components) if not c.bulge and not isinstance(c.density, halos)))
 
 
 def optical_depth_along(model, ready, n=400):
@@ -245,4 +281,5 @@ def optical_depth_along(model, ready, n=400):
     for i, weight, rho in zip(model.component_of, mass, density):
         name = model.galaxy.components[i].name
         out[name] = out.get(name, 0.0) + weight * geometry * rho
-    return D, out
+    # at the observer itself there is none
+    return np.concatenate([[0.0], D]), {name: np.concatenate([[0.0], f]) for name, f in out.items()}

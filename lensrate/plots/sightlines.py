@@ -32,7 +32,10 @@ _STYLES = {
     "all": "-",
 }
 _OTHERS = ("#009E73", "#0072B2", "#D55E00", "#F0E442")
-_COMPONENTS = ("#0072B2", "#56B4E9", "#D55E00", "#E69F00", "#009E73", "#CC79A7")
+# none of the classes' colours, since both stand in one figure
+_COMPONENTS = ("#0072B2", "#009E73", "#D55E00", "#882255", "#44AA99", "#999933")
+_COMPONENT_STYLES = ("-", "--", "-.", (0, (1.2, 1)), (0, (5, 1, 1, 1, 1, 1)), (0, (8, 2)))
+_OTHER_STYLES = ((0, (3, 1, 1, 1, 1, 1)), (0, (8, 2)), (0, (1, 3)), (0, (4, 4)))
 _KINDS = ("overview", "timescales", "stacked", "depth", "pi_E", "theta_E")
 _FLOOR = 1e-5  # share of the peak below which the log axis ends
 
@@ -51,11 +54,28 @@ def _colour(name, i=0):
     return _COLOURS.get(name, _OTHERS[i % len(_OTHERS)])
 
 
+def _style(name, i=0):
+    return _STYLES.get(name, _OTHER_STYLES[i % len(_OTHER_STYLES)])
+
+
+def _smooth(t, f, fine=8):
+    """Points between those of a distribution, cubic in ln t, for drawing only."""
+    x = np.linspace(0, len(t) - 1, fine * (len(t) - 1) + 1)
+    i = np.minimum(x.astype(int), len(t) - 2)
+    s = x - i
+    padded = np.concatenate([[f[0]], f, [f[-1]]])
+    d = 0.5 * (padded[2:] - padded[:-2])
+    f0, f1, d0, d1 = f[i], f[i + 1], d[i], d[i + 1]
+    g = f0 + s * (d0 + s * (3 * (f1 - f0) - 2 * d0 - d1 + s * (2 * (f0 - f1) + d0 + d1)))
+    return np.exp(np.interp(x, np.arange(len(t)), np.log(t))), np.maximum(g, 0.0)
+
+
 def _title(result):
     l, b = result.l.to_value("deg"), result.b.to_value("deg")
     kinds = sorted({lens.kinematics for lens in result.lenses.values() if lens.kinematics in ("kicked", "unkicked")})
     note = f"; NS, BH {kinds[0]}" if kinds else ""
-    return f"l = {l:g}°, b = {b:g}°, {result.sources['rule']}, u₀ < {result.u_0_limit:g}, {result.frame}{note}"
+    what = f"{result.sources['rule']}, u₀ < {result.u_0_limit:g}, {result.frame}{note}"
+    return f"l = {l:g}°, b = {b:g}°, scenario {result.scenario.name} ({result.scenario.hash})\n{what}"
 
 
 def timescales(result, ax=None, **line):
@@ -81,11 +101,8 @@ def timescales(result, ax=None, **line):
     for name, pdf in zip(result.classes, result.rate_per_ln_t_E):
         if not pdf.max() > 0:
             continue
-        ax.plot(
-            result.t_E,
-            pdf,
-            **{"color": _colour(name, own), "ls": _STYLES.get(name, "-"), "lw": 1.6, "label": _label(name), **line},
-        )
+        style = {"color": _colour(name, own), "ls": _style(name, own), "lw": 1.6, "label": _label(name)}
+        ax.plot(result.t_E, pdf, **{**style, **line})
         own += name not in _COLOURS
     _timescale_axis(ax, result, total)
     ax.set_yscale("log")
@@ -113,11 +130,11 @@ def stacked(result, ax=None, **fill):
     """
     ax = _axes(ax)
     hatches = {"white_dwarf": "//", "neutron_star": "..", "black_hole": None, "brown_dwarf": "\\\\"}
-    base, own = np.zeros_like(result.t_E), 0
+    t, base, own = _smooth(result.t_E, 0.0 * result.t_E)[0], 0.0, 0
     # the rarest at the bottom, where a thin layer is still seen
     order = sorted(range(len(result.classes)), key=lambda c: result.rate_per_ln_t_E[c].sum())
     for c in order:
-        name, pdf = result.classes[c], result.rate_per_ln_t_E[c]
+        name, pdf = result.classes[c], _smooth(result.t_E, result.rate_per_ln_t_E[c])[1]
         if not pdf.max() > 0:
             continue
         style = {
@@ -127,10 +144,10 @@ def stacked(result, ax=None, **fill):
             "hatch": hatches.get(name),
             "label": _label(name),
         }
-        ax.fill_between(result.t_E, base, base + pdf, **{**style, **fill})
+        ax.fill_between(t, base, base + pdf, **{**style, **fill})
         base, own = base + pdf, own + (name not in _COLOURS)
-    ax.plot(result.t_E, base, color="black", lw=0.8)
-    _timescale_axis(ax, result, base)
+    ax.plot(t, base, color="black", lw=0.8)
+    _timescale_axis(ax, result, result.rate_per_ln_t_E.sum(axis=0))
     ax.set_ylim(0, base.max() * 1.08)
     ax.set_ylabel(r"$\mathrm{d}\Gamma/\mathrm{d}\ln t_\mathrm{E}$  [yr$^{-1}$ per source]")
     ax.legend(frameon=False, fontsize="small")
@@ -143,7 +160,7 @@ def _timescale_axis(ax, result, total):
     ax.set_xlim(result.t_E[shown][0], result.t_E[shown][-1])
     ax.set_xlabel(r"$t_\mathrm{E}$  [d]")
     if result.t_E_range:
-        ax.axvspan(*result.t_E_range, color="0.93", zorder=0, lw=0)
+        ax.axvspan(*result.t_E_range, color="0.93", zorder=0, lw=0, label="reported range")
     ax.set_title(_title(result), fontsize="small")
 
 
@@ -169,10 +186,13 @@ def depth(result, ax=None, **line):
     ax.plot(D, total, color=_COLOURS["all"], lw=3.5, alpha=0.6, label="all")
     for i, (name, values) in enumerate(parts.items()):
         if values.max() > 2e-3 * total.max():
-            style = {"color": _COMPONENTS[i % len(_COMPONENTS)], "ls": ("-", "--", "-.", ":")[i % 4], "lw": 1.6}
+            style = {"color": _COMPONENTS[i % 6], "ls": _COMPONENT_STYLES[i % 6], "lw": 1.6}
             ax.plot(D, values, **{**style, "label": name.replace("_", " "), **line})
-    ax.set_xlim(0, D[-1])
-    ax.set_ylim(0, total.max() * 1.08 or 1)
+    along = np.cumsum(total)
+    # drawn as far as anything is to be seen
+    ax.set_xlim(0, D[min(np.searchsorted(along, 0.998 * along[-1]), D.size - 1)])
+    ax.set_ylim(0, total.max() * 1.15 or 1)
+    ax.ticklabel_format(axis="y", style="sci", scilimits=(0, 0), useMathText=True)
     ax.set_xlabel(r"lens distance $D_\mathrm{L}$  [kpc]")
     ax.set_ylabel(r"$\mathrm{d}\tau/\mathrm{d}D_\mathrm{L}$  [kpc$^{-1}$]")
     ax.set_title(_title(result), fontsize="small")
@@ -212,9 +232,9 @@ def joint(result, ax=None, y="pi_E", **contour):
         inside = np.cumsum(rank) / rank.sum()
         levels = [rank[np.searchsorted(inside, share)] for share in (0.9, 0.5)]
         colour = _colour(name, own)
-        style = {"colors": [colour], "linestyles": [_STYLES.get(name, "-")], "linewidths": [0.9, 1.9]}
+        style = {"colors": [colour], "linestyles": [_style(name, own)], "linewidths": [0.9, 1.9]}
         ax.contour(x, v, z.T, levels=sorted(levels), **{**style, **contour})
-        handles.append(ax.plot([], [], color=colour, ls=_STYLES.get(name, "-"), label=_label(name))[0])
+        handles.append(ax.plot([], [], color=colour, ls=_style(name, own), label=_label(name))[0])
         where = np.argwhere(z > levels[0] * 0.3)
         extent.append((x[where[:, 0].min()], x[where[:, 0].max()], v[where[:, 1].min()], v[where[:, 1].max()]))
         own += name not in _COLOURS
@@ -222,11 +242,12 @@ def joint(result, ax=None, y="pi_E", **contour):
     ax.set_xscale("log")
     ax.set_yscale("log")
     ax.set_xlim(e[:, 0].min(), e[:, 1].max())
-    ax.set_ylim(e[:, 2].min(), e[:, 3].max())
+    ax.set_ylim(e[:, 2].min(), e[:, 3].max() * 3)
     ax.set_xlabel(r"$t_\mathrm{E}$  [d]")
     ax.set_ylabel(r"$\pi_\mathrm{E}$" if y == "pi_E" else r"$\theta_\mathrm{E}$  [mas]")
-    ax.set_title(_title(result) + "; 50, 90 % of each class", fontsize="small")
-    ax.legend(handles=handles, frameon=False, fontsize="small")
+    ax.set_title(_title(result) + "; thick 50 %, thin 90 % of each class", fontsize="small")
+    # events lie along one diagonal, so one corner is free
+    ax.legend(handles=handles, frameon=False, fontsize="small", loc="upper right" if y == "pi_E" else "upper left")
     return ax
 
 
@@ -243,7 +264,7 @@ def overview(result):
 
 def sightline(result, ax=None, kind="timescales", **style):
     """Draw one of the pictures of a sightline by name; see `Sightline.plot`."""
-    one_of("kind", kind, _KINDS[1:])
+    one_of("kind", kind, _KINDS[1:])  # an overview has two axes, so it is a figure: see `overview`
     if kind in ("pi_E", "theta_E"):
         return joint(result, ax=ax, y=kind, **style)
     return {"timescales": timescales, "stacked": stacked, "depth": depth}[kind](result, ax=ax, **style)

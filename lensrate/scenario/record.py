@@ -235,6 +235,15 @@ class Scenario:
         """
         return Galaxy.from_dict(self._galaxy_table, self.galaxy)
 
+    def galaxy_toml(self):
+        """Return the Galaxy set with this scenario's changes as TOML that `Galaxy.read` takes.
+
+        Returns
+        -------
+        str
+        """
+        return _toml(self._galaxy_table)
+
     def to_dict(self):
         """Return the full statement as plain tables, fit for JSON or TOML.
 
@@ -313,7 +322,10 @@ def _merge(old, new):
 def _toml(table, prefix=()):
     plain, tables, lists = [], [], []
     for key, value in table.items():
-        if isinstance(value, dict):
+        if isinstance(value, dict) and "value" in value:
+            inner = ", ".join(f"{_key(k)} = {_value(v)}" for k, v in value.items())
+            plain.append(f"{_key(key)} = {{ {inner} }}")
+        elif isinstance(value, dict):
             if value:
                 tables.append((key, value))
         elif isinstance(value, list) and value and isinstance(value[0], dict):
