@@ -39,6 +39,7 @@ def main(args=None):
     try:
         # without its standalone mode click returns the code that a command exits with
         code = cli.main(args=args, prog_name="lensrate", standalone_mode=False)
+        sys.stdout.flush()
         sys.exit(code if isinstance(code, int) else 0)
     except click.ClickException as error:
         error.show(sys.stderr)
@@ -55,6 +56,9 @@ def main(args=None):
         sys.exit(2)
     except LensrateError as error:
         _complain(error)
+        sys.exit(1)
+    except OSError as error:
+        _complain(f"output could not be written ({error.strerror or error})")
         sys.exit(1)
     except MemoryError:
         _complain("not enough memory for this run; take fewer sightlines at a time or a larger step_dex")

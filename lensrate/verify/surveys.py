@@ -35,17 +35,17 @@ def _totals(l, b, rule):
     numerics = Numerics(**model.scenario.numerics)
     ready = rates.prepare(model, galaxy.sightline(l, b), model.sources.toward(l, b, galaxy), numerics)
     tau, gamma, _ = rates.moments(ready)
+    tau, gamma = tau.sum(axis=1), gamma.sum(axis=1)
+    if model.kicked is not None:
+        more_tau, more_gamma, _ = rates.kicked_moments(ready)
+        tau, gamma = np.concatenate([tau, more_tau]), np.concatenate([gamma, more_gamma])
     mass, root = (_moments(model, power) for power in (1.0, 0.5))
-    return float(mass @ tau.sum(axis=1)), float(root @ gamma.sum(axis=1)) * model.scenario.u_0_limit
+    return float(mass @ tau), float(root @ gamma) * model.scenario.u_0_limit
 
 
 def _moments(model, power):
-    """Sum of number times mass^power over the classes, by component, per stated solar mass."""
-    out = np.zeros(len(model.galaxy.components))
-    for i in range(out.size):
-        spectra = (model.spectrum(name, i) for name in model.classes)
-        out[i] = sum(s.moment(power) for s in spectra if s is not None)
-    return out
+    """Sum of number times mass^power over the classes, by element, per stated solar mass."""
+    return np.array([sum(s.moment(power) for s in column if s is not None) for column in zip(*model.spectra())])
 
 
 @cache
