@@ -94,12 +94,17 @@ def find(relative):
 
 def names(kind):
     """Return the sorted names of the shipped sets of one kind ("galaxy", "kicks", ...)."""
-    return sorted(p.stem for p in (data_folder() / kind).glob("*.toml"))
+    return list(_names(data_folder(), kind, ".toml"))
+
+
+@cache
+def _names(folder, kind, ending):
+    return tuple(sorted(p.stem for p in (folder / kind).glob(f"*{ending}")))
 
 
 def field_names():
     """Return the sorted names of the shipped kick-resolved fields."""
-    return sorted(p.stem for p in (data_folder() / "fields").glob("*.fits"))
+    return list(_names(data_folder(), "fields", ".fits"))
 
 
 def field_path(name):

@@ -72,3 +72,39 @@ def merge_rows(src, group, out):
             out[3, g, i] = c0 * f
             out[4, g, i] = c1 * f
             out[5, g, i] = c2 * f
+
+
+@kernel
+def interpolate_rows(step, table, D, out):
+    """Fill out (6, rows, N) at distances D from a table (6, rows, n) at step, 2 step, ...; nothing beyond its end.
+
+    Linear in every number; before the first point the first one's density and motion hold, scaled as the distance.
+    """
+    n = table.shape[2]
+    cell = np.empty(D.size, dtype=np.int64)
+    part = np.empty(D.size)
+    scale = np.empty(D.size)
+    for i in range(D.size):
+        x = D[i] / step - 1.0
+        near = x < 0.0
+        cell[i] = 0 if near else min(int(x), n - 1)
+        part[i] = 0.0 if near else x - cell[i]
+        # proper motions of a given velocity go with the inverse of the distance
+        scale[i] = step / D[i] if near else 1.0
+    for r in range(table.shape[1]):
+        rho = table[0, r]
+        for i in range(D.size):
+            j, t = cell[i], part[i]
+            if j >= n - 1:
+                for q in range(6):
+                    out[q, r, i] = 0.0
+                continue
+            out[0, r, i] = (1.0 - t) * rho[j] + t * rho[j + 1]
+            if out[0, r, i] <= 0.0:
+                continue
+            # where one end is empty its motion means nothing
+            u = 0.0 if rho[j + 1] <= 0.0 else (1.0 if rho[j] <= 0.0 else t)
+            f = scale[i]
+            for q in range(1, 6):
+                value = (1.0 - u) * table[q, r, j] + u * table[q, r, j + 1]
+                out[q, r, i] = value * f if q < 3 else value * f * f

@@ -76,80 +76,88 @@ def moments(outer, D_S, src, D_L, w_L, lens, element, four_g_c2, kappa, mas, n_d
 
 
 @kernel
-def pair_moments(outer, D_S, src, D_L, w_L, lens, element, four_g_c2, kappa, mas, n_dir, tau, gamma):
-    """As `moments`, but add to tau and gamma (E, N) the part of each pair, summed over source rows."""
+def lens_moments(D_L, w_L, lens, element, first, D_S, src, four_g_c2, kappa, mas, n_dir, tau, gamma):
+    """Optical depth and rate by element and lens node, each with source nodes of its own behind it.
+
+    D_L, w_L (M,) nodes and weights [kpc], lens (6, L, M); sources of node m are first[m]:first[m + 1] of D_S (N,) and
+    src (6, S, N), whose weights carry the source quadrature. Adds to tau and gamma (E, M).
+    """
     cos = np.empty(n_dir)
     sin = np.empty(n_dir)
     for i in range(n_dir):
         cos[i] = math.cos(math.pi * i / n_dir)
         sin[i] = math.sin(math.pi * i / n_dir)
-    for r in range(element.size):
-        e = element[r]
-        for p in range(outer.size):
-            n = lens[0, r, p]
+    for m in range(D_L.size):
+        d = D_L[m]
+        for r in range(element.size):
+            n = lens[0, r, m]
             if n <= 0.0:
                 continue
-            j = outer[p]
-            d = D_L[p]
-            pi_rel = 1.0 / d - 1.0 / D_S[j]
-            if pi_rel <= 0.0:
-                continue
-            g_tau = w_L[p] * math.pi * four_g_c2 * d * d * pi_rel * n
-            g_rate = w_L[p] * 2.0 * d * d * math.sqrt(kappa * pi_rel) * mas * mas * n
-            for s in range(src.shape[1]):
-                w = src[0, s, j]
-                if w <= 0.0:
-                    continue
-                tau[e, p] += g_tau * w
-                gamma[e, p] += (
-                    g_rate
-                    * w
-                    * mean_speed(
-                        lens[1, r, p] - src[1, s, j],
-                        lens[2, r, p] - src[2, s, j],
-                        lens[3, r, p] + src[3, s, j],
-                        lens[4, r, p] + src[4, s, j],
-                        lens[5, r, p] + src[5, s, j],
+            e = element[r]
+            g_tau = w_L[m] * math.pi * four_g_c2 * d * d * n
+            g_rate = w_L[m] * 2.0 * d * d * mas * mas * n
+            for p in range(first[m], first[m + 1]):
+                pi_rel = 1.0 / d - 1.0 / D_S[p]
+                root = math.sqrt(kappa * max(pi_rel, 0.0))
+                for s in range(src.shape[1]):
+                    w = src[0, s, p]
+                    if w <= 0.0:
+                        continue
+                    tau[e, m] += g_tau * pi_rel * w
+                    gamma[e, m] += g_rate * root * w * mean_speed(
+                        lens[1, r, m] - src[1, s, p],
+                        lens[2, r, m] - src[2, s, p],
+                        lens[3, r, m] + src[3, s, p],
+                        lens[4, r, m] + src[4, s, p],
+                        lens[5, r, m] + src[5, s, p],
                         cos,
                         sin,
                     )
-                )
 
 
 @kernel
-def _add_directions(weight, ml, mb, ixx, ixy, iyy, log_norm, first, step, n_dir, mu, ka, kb, q_max, out):
-    """Add weight * N2(mu e_phi) summed over n_dir directions from angle `first`, for mu[ka:kb]."""
+def _add_directions(
+    weight, ml, mb, ixx, ixy, iyy, log_norm, first, step, n_dir, both, mu, inverse_step, ka, kb, q_max, out
+):
+    """Add weight * N2(mu e_phi) summed over n_dir directions from angle `first`, for mu[ka:kb].
+
+    With `both` the opposite of each direction is added too, which shares most of the work. inverse_step: 1 over the
+    step of ln mu.
+    """
     target = out[ka:kb]
     x = mu[ka:kb]
     if x.size == 0:
         return
     lo, hi = x[0], x[x.size - 1]
-    for i in range(n_dir):
-        phi = first + step * i
-        c, s = math.cos(phi), math.sin(phi)
+    c, s = math.cos(first), math.sin(first)
+    dc, ds = math.cos(step), math.sin(step)
+    hx, hy = ixx * ml + ixy * mb, ixy * ml + iyy * mb
+    c0 = 0.5 * (hx * ml + hy * mb)
+    shift = c0 - log_norm
+    for _ in range(n_dir):
         a = 0.5 * (ixx * c * c + 2.0 * ixy * c * s + iyy * s * s)
-        b = (ixx * ml + ixy * mb) * c + (ixy * ml + iyy * mb) * s
-        c0 = 0.5 * (ixx * ml * ml + 2.0 * ixy * ml * mb + iyy * mb * mb)
+        b = hx * c + hy * s
         # mu with a mu^2 - b mu + c0 < q_max
         disc = b * b - 4.0 * a * (c0 - q_max)
-        if disc <= 0.0:
-            continue
-        root = math.sqrt(disc)
-        top = (b + root) / (2.0 * a)
-        bottom = (b - root) / (2.0 * a)
-        if top <= lo or bottom >= hi:
-            continue
-        k0, k1 = 0, x.size
-        ratio = x[1] / x[0] if x.size > 1 else 2.0
-        if bottom > lo:
-            k0 = int(math.log(bottom / lo) / math.log(ratio))
-        if top < hi:
-            k1 = min(x.size, int(math.log(top / lo) / math.log(ratio)) + 2)
-        t = target[k0:k1]
-        y = x[k0:k1]
-        shift = c0 - log_norm
-        for k in range(t.size):
-            t[k] += weight * fexp(b * y[k] - a * y[k] * y[k] - shift)
+        if disc > 0.0:
+            root = math.sqrt(disc)
+            half = 0.5 / a
+            for side in range(2 if both else 1):
+                if side == 1:
+                    b = -b
+                top, bottom = (b + root) * half, (b - root) * half
+                if top > lo and bottom < hi:
+                    k0, k1 = 0, x.size
+                    if bottom > lo:
+                        k0 = int(math.log(bottom / lo) * inverse_step)
+                    if top < hi:
+                        k1 = min(x.size, int(math.log(top / lo) * inverse_step) + 2)
+                    t = target[k0:k1]
+                    y = x[k0:k1]
+                    for k in range(t.size):
+                        t[k] += weight * fexp(b * y[k] - a * y[k] * y[k] - shift)
+        # the next direction, by turning the last one
+        c, s = c * dc - s * ds, s * dc + c * ds
 
 
 @kernel
@@ -207,7 +215,7 @@ def rate_density(pi, row, geometry, src, lens, element, mu, directions, q_max, w
     # an element a thousand times fainter than the brightest one needs no finer cut of its own
     peak = np.maximum(peak, 1e-3 * peak.max())
     tmp = np.empty(K)
-    step_mu = math.log(mu[1] / mu[0])
+    inverse_step = 1.0 / math.log(mu[1] / mu[0])
     for r in range(element.size):
         e = element[r]
         for p in range(row.size):
@@ -226,11 +234,17 @@ def rate_density(pi, row, geometry, src, lens, element, mu, directions, q_max, w
                 # on small circles the exponent hardly varies: 8 directions are exact below mu_low
                 bx, by = ixx * ml + ixy * mb, ixy * ml + iyy * mb
                 mu_low = min(1.2 / max(math.sqrt(bx * bx + by * by), 1e-30), s_min)
-                k_low = min(max(int(math.log(mu_low / mu[0]) / step_mu), 0), K)
+                k_low = min(max(int(math.log(mu_low / mu[0]) * inverse_step), 0), K)
                 dphi = 2.0 * math.pi / 8
-                _add_directions(w * dphi, ml, mb, ixx, ixy, iyy, log_norm, 0.0, dphi, 8, mu, 0, k_low, q_max, tmp)
+                _add_directions(
+                    w * dphi, ml, mb, ixx, ixy, iyy, log_norm, 0.0, dphi, 4, True, mu, inverse_step, 0, k_low,
+                    q_max, tmp,
+                )  # fmt: skip
                 dphi = 2.0 * math.pi / n
-                _add_directions(w * dphi, ml, mb, ixx, ixy, iyy, log_norm, 0.0, dphi, n, mu, k_low, K, q_max, tmp)
+                _add_directions(
+                    w * dphi, ml, mb, ixx, ixy, iyy, log_norm, 0.0, dphi, n // 2, True, mu, inverse_step, k_low, K,
+                    q_max, tmp,
+                )  # fmt: skip
             if used:
                 out = T[e, row[p]]
                 for k in range(K):
@@ -248,6 +262,7 @@ def event_rate_density(pi, row, cell, geometry, src, lens, row_weight, mu, n_phi
     """
     K = mu.size
     tmp = np.empty((n_phi, K))
+    inverse_step = 1.0 / math.log(mu[1] / mu[0])
     peak = 0.0
     for r in range(row_weight.size):
         for p in range(row.size):
@@ -275,8 +290,9 @@ def event_rate_density(pi, row, cell, geometry, src, lens, row_weight, mu, n_phi
                 for j in range(n_phi):
                     first = (j * per_cell + 0.5) * dphi
                     _add_directions(
-                        w * dphi, ml, mb, ixx, ixy, iyy, log_norm, first, dphi, per_cell, mu, 0, K, q_max, tmp[j]
-                    )
+                        w * dphi, ml, mb, ixx, ixy, iyy, log_norm, first, dphi, per_cell, False, mu, inverse_step, 0, K,
+                        q_max, tmp[j],
+                    )  # fmt: skip
         if used:
             for j in range(n_phi):
                 out = R[row[p], c, j]

@@ -20,6 +20,8 @@ class MassGrid:
 
     k0: int
     weight: np.ndarray  # (classes, elements, n)
+    root: np.ndarray  # (classes, elements) sum of number sqrt(M), exact
+    mass: np.ndarray  # (classes, elements) sum of number M, exact
 
     @classmethod
     def deposit(cls, h, spectra):
@@ -36,30 +38,42 @@ class MassGrid:
         -------
         MassGrid
         """
-        masses = [s.mass for row in spectra for s in row if s is not None and s.mass.size]
-        if not masses:
-            return cls(0, np.zeros((len(spectra), len(spectra[0]) if spectra else 0, 4)))
-        low, high = min(m.min() for m in masses), max(m.max() for m in masses)
+        shape = (len(spectra), len(spectra[0]) if spectra else 0)
+        root, mass = np.zeros(shape), np.zeros(shape)
+        every = ((c, e, s) for c, row in enumerate(spectra) for e, s in enumerate(row))
+        filled = [(c, e, s) for c, e, s in every if s is not None and s.mass.size]
+        # kick bins share one array of masses: what depends on it alone is done once
+        arrays = {id(s.mass): s.mass for _, _, s in filled}
+        if not arrays:
+            return cls(0, np.zeros((*shape, 4)), root, mass)
+        low, high = min(m.min() for m in arrays.values()), max(m.max() for m in arrays.values())
         k0 = int(np.floor(np.log(low) / (2 * h))) - 1
         n = int(np.floor(np.log(high) / (2 * h))) + 3 - k0
-        weight = np.zeros((len(spectra), len(spectra[0]), n))
-        for c, row in enumerate(spectra):
-            for e, s in enumerate(row):
-                if s is None or not s.mass.size or not np.any(s.number):
-                    continue
-                x = np.log(s.mass) / (2 * h)
-                i = np.floor(x).astype(int)
-                t = x - i
-                lagrange = (
-                    -t * (t - 1) * (t - 2) / 6,
-                    (t + 1) * (t - 1) * (t - 2) / 2,
-                    -(t + 1) * t * (t - 2) / 2,
-                    (t + 1) * t * (t - 1) / 6,
-                )
-                w = s.number * np.sqrt(s.mass)
-                for j, a in enumerate(lagrange):
-                    np.add.at(weight[c, e], i - 1 + j - k0, w * a)
-        return cls(k0, weight)
+        laid = {key: _lagrange(m, h, k0, n) for key, m in arrays.items()}
+        weight = np.zeros((*shape, n))
+        for c, e, s in filled:
+            roots, matrix = laid[id(s.mass)]
+            w = s.number * roots
+            root[c, e], mass[c, e] = w.sum(), s.number @ s.mass
+            weight[c, e] = w @ matrix
+        return cls(k0, weight, root, mass)
+
+
+def _lagrange(mass, h, k0, n):
+    """Square roots of masses, and the matrix that spreads each over four grid masses."""
+    x = np.log(mass) / (2 * h)
+    i = np.floor(x).astype(int)
+    t = x - i
+    parts = (
+        -t * (t - 1) * (t - 2) / 6,
+        (t + 1) * (t - 1) * (t - 2) / 2,
+        -(t + 1) * t * (t - 2) / 2,
+        (t + 1) * t * (t - 1) / 6,
+    )
+    matrix = np.zeros((mass.size, n))
+    for j, a in enumerate(parts):
+        matrix[np.arange(mass.size), i - 1 + j - k0] = a
+    return np.sqrt(mass), matrix
 
 
 def timescale_grid(grid):
@@ -76,7 +90,7 @@ def unit_timescales(grid, T):
     return out * 2 * grid.h
 
 
-def timescales(grid, unit, masses):
+def timescales(grid, unit, masses, by_element=True):
     """Return t_E [d] (n,) and the rate per ln t_E by class (classes, n) and by element (E, n).
 
     Parameters
@@ -87,6 +101,8 @@ def timescales(grid, unit, masses):
         From `unit_timescales`.
     masses : MassGrid
         Mass spectra.
+    by_element : bool
+        Whether the distribution of each element is wanted too.
 
     Returns
     -------
@@ -96,14 +112,15 @@ def timescales(grid, unit, masses):
     weight = masses.weight
     n, m = weight.shape[2], unit.shape[1]
     t = timescale_grid(grid)[0] * np.exp(grid.h * (np.arange(m + n - 1) + masses.k0))
-    by_class, by_element = np.zeros((weight.shape[0], t.size)), np.zeros((unit.shape[0], t.size))
+    by_class, elements = np.zeros((weight.shape[0], t.size)), np.zeros((unit.shape[0] if by_element else 0, t.size))
     together = weight.sum(axis=0)
     for k in range(n):
         if np.any(weight[:, :, k]):
             by_class[:, k : k + m] += weight[:, :, k] @ unit
-            by_element[:, k : k + m] += together[:, k, None] * unit
+            if by_element:
+                elements[:, k : k + m] += together[:, k, None] * unit
     # positive but for the Lagrange weights' undershoot at sharp mass edges
-    return t, np.maximum(by_class, 0.0), np.maximum(by_element, 0.0)
+    return t, np.maximum(by_class, 0.0), np.maximum(elements, 0.0)
 
 
 def joint(grid, T, masses, which):

@@ -101,13 +101,10 @@ def assemble(model, integrals, u_0, limits, where):
     ConvergenceError
         A rate came out negative or not finite.
     """
-    spectra = model.spectra()
-    masses = distributions.MassGrid.deposit(integrals.grid.h, spectra)
-    t, pdf, pdf_e = distributions.timescales(integrals.grid, integrals.unit, masses)
-    root = np.array([[0.0 if s is None else s.moment(0.5) for s in row] for row in spectra])
-    mass = np.array([[0.0 if s is None else s.moment(1.0) for s in row] for row in spectra])
-    tau, gamma = mass * integrals.tau, u_0 * root * integrals.gamma  # (C, E)
-    error = u_0 * np.sqrt(np.sum((root * integrals.error) ** 2, axis=1))
+    masses = distributions.MassGrid.deposit(integrals.grid.h, model.spectra())
+    t, pdf, pdf_e = distributions.timescales(integrals.grid, integrals.unit, masses, limits is not None)
+    tau, gamma = masses.mass * integrals.tau, u_0 * masses.root * integrals.gamma  # (C, E)
+    error = u_0 * np.sqrt(np.sum((masses.root * integrals.error) ** 2, axis=1))
     pdf, pdf_e = u_0 * pdf, u_0 * pdf_e
     if not (all(np.all(np.isfinite(x)) for x in (tau, gamma, pdf)) and np.all(gamma >= 0)):
         raise ConvergenceError(f"sightline {where}: a rate is negative or not finite; check the scenario's numbers")
@@ -174,16 +171,16 @@ def _rows(t, pdf, tau, gamma, limits, u_0):
 
 def _parts(model, t, pdf_e, tau_e, gamma_e, limits, u_0):
     """Optical depth and rate by element of the Galaxy and by component, kick bins added to their component."""
-    if limits is None:
-        rows = [Lens(float(a), float(g)) for a, g in zip(tau_e, gamma_e)]
-    else:
+    if limits is not None:
         rows = _rows(t, pdf_e, tau_e, gamma_e, limits, u_0)
-    elements, components = {}, {}
-    for row, i in zip(rows, model.component_of):
-        component = model.galaxy.components[i]
-        for parts, name in ((elements, component.element), (components, component.name)):
-            old = parts.get(name, Lens(0.0, 0.0))
-            parts[name] = replace(old, optical_depth=old.optical_depth + row.optical_depth, rate=old.rate + row.rate)
+        tau_e, gamma_e = (np.array([getattr(r, key) for r in rows]) for key in ("optical_depth", "rate"))
+    host, members = np.array(model.component_of), model.galaxy.components
+    tau, rate = (np.bincount(host, x, minlength=len(members)) for x in (tau_e, gamma_e))
+    elements = {c.element: Lens(float(a), float(g)) for c, a, g in zip(members, tau, rate)}
+    components = {}
+    for c, a, g in zip(members, tau, rate):
+        old = components.get(c.name, Lens(0.0, 0.0))
+        components[c.name] = Lens(old.optical_depth + float(a), old.rate + float(g))
     return elements, components
 
 
@@ -272,7 +269,7 @@ def optical_depth_along(model, ready, n=400):
     density = ready.model.galaxy.profile(ready.line, D)[0]
     if model.kicked is not None:
         rows = model.kicked.profile(ready.line, D)[0]
-        density = np.concatenate([density, rows.reshape(-1, 2, n).sum(axis=1)])
+        density = np.concatenate([density, rows.reshape(len(model.kicked.host), -1, n).sum(axis=1)])
     w, D_S = ready.src[0].sum(axis=0), ready.D_S
     inverse = np.array([np.sum(w[D_S > d] * (1.0 / d - 1.0 / D_S[D_S > d])) for d in D])
     geometry = np.pi * FOUR_G_C2 * D**2 * inverse

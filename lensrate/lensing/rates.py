@@ -1,6 +1,7 @@
 """Rates of one sightline by element: the product rule for optical depth and rate, the isogrid for everything finer."""
 
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 
@@ -8,7 +9,7 @@ from ..errors import ConvergenceError
 from ..kernels import profile as profiles
 from ..kernels import rates as kernels
 from ..units import FOUR_G_C2, KAPPA, KMS_PER_MASYR_KPC, MAS
-from .quadrature import Isogrid, lens_pairs, panel_edges, panel_nodes, row_nodes
+from .quadrature import Isogrid, legendre, lens_pairs, panel_edges, panel_nodes, row_nodes
 
 __all__ = [
     "Line",
@@ -39,6 +40,11 @@ class Line:
     D_S: np.ndarray  # (J,) kpc
     src: np.ndarray  # (6, S, J)
     norm: float  # sum of source weights before normalisation: sources per sr, where the rule counts them
+
+    @cached_property
+    def kicked_table(self):
+        """Profile of the kicked lenses along the sightline."""
+        return _Table(self)
 
     @property
     def elements(self):
@@ -140,9 +146,46 @@ def moments(ready):
     return tau, gamma, np.divide(distance, total, out=np.full(E, np.nan), where=total > 0)
 
 
-_KICKED_NODES = 4  # per panel: kicked populations are smooth
-_KICKED_GAP = 0.3  # kpc, panels shorter than this are joined for them
+_TABLE_STEP = 0.03  # kpc; the fields' cells are several times as large
+_LENS_PANEL = 0.4  # kpc
+_LENS_NODES = 3
+_KICKED_NODES = 4  # per panel of sources
+_KICKED_GAP = 0.3  # kpc, source panels shorter than this are joined
 _KICKED_DIRECTIONS = 12
+
+
+class _Table:
+    """Profile of the kicked lenses along a sightline, evaluated once and interpolated after that."""
+
+    def __init__(self, ready):
+        kicked = ready.model.kicked
+        self.end = min(_leaving(kicked.field.grid, ready.line, ready.edges[-1]), ready.edges[-1])
+        # through the innermost Galaxy cells are as small as a few hundredths of a kpc
+        fine = 3 if _through_the_centre(ready) else 1
+        n = max(int(np.ceil(self.end / _TABLE_STEP * fine)), 2)
+        self.step = self.end / n
+        self.values = kicked.profile(ready.line, self.step * np.arange(1, n + 1) * (1 - 1e-12))
+
+    def at(self, D):
+        """Return the profile at distances D [kpc], (6, rows, n)."""
+        out = np.empty((6, self.values.shape[1], D.size))
+        profiles.interpolate_rows(self.step, self.values, np.ascontiguousarray(D), out)
+        return out
+
+
+def _through_the_centre(ready):
+    """Whether the sightline passes the centre within 0.4 kpc before it ends."""
+    tangent = ready.line.tangent_distance()
+    return 0 < tangent < ready.edges[-1] and np.linalg.norm(ready.line.xyz(tangent)) < 0.4
+
+
+def _leaving(grid, line, far):
+    """Distance [kpc] at which a sightline leaves the fields' grid, or `far`."""
+    exits = line.radius_crossings(grid.R_max)
+    n = line.axes[0, 2]
+    if abs(n) > 1e-9:
+        exits += [d for d in ((grid.z_max - line.origin[2]) / n, (-grid.z_max - line.origin[2]) / n) if d > 0]
+    return min([*exits, far])
 
 
 def kicked_moments(ready):
@@ -160,28 +203,54 @@ def kicked_moments(ready):
     error : ndarray, shape (K,)
         Standard error of gamma from the scatter of the fields' batches.
     """
-    kicked, numerics = ready.model.kicked, ready.numerics
-    edges = _joined(ready.edges)
-    n = max(_KICKED_NODES, numerics.nodes - 1)
+    kicked, table = ready.model.kicked, ready.kicked_table
+    n = max(_KICKED_NODES, ready.numerics.nodes - 1)
+    D_L, w_L = panel_nodes(_lens_edges(ready, table.end), _LENS_NODES + (2 if _through_the_centre(ready) else 0))
+    first, D_S, src = _behind(ready, D_L, _joined(ready.edges), n)
+    tau, gamma = np.zeros((len(kicked.host), D_L.size)), np.zeros((len(kicked.host), D_L.size))
+    kernels.lens_moments(
+        D_L, w_L, table.at(D_L), kicked.element_of_row, first, D_S, src, FOUR_G_C2, KAPPA, MAS, _KICKED_DIRECTIONS,
+        tau, gamma,
+    )  # fmt: skip
+    by_batch = np.einsum("bkn,kn->bk", kicked.batch_factors(ready.line, D_L), gamma)
+    error = by_batch.std(axis=0, ddof=1) / np.sqrt(len(by_batch))
+    return tau.sum(axis=1), gamma.sum(axis=1), error
+
+
+def _lens_edges(ready, end):
+    """Panel edges for kicked lenses: even, with those of the model's narrow places, gathered at the observer."""
+    panels = max(int(np.ceil(end / _LENS_PANEL)), 1) * max(1, ready.numerics.nodes // 5)
+    even = np.linspace(0.0, end, panels + 1)
+    # the rate goes with the square root of the distance there
+    near = even[1] * np.array([0.01, 0.06, 0.25])
+    narrow = ready.kinks[(ready.kinks > even[1]) & (ready.kinks < end)]
+    edges = np.sort(np.concatenate([even, near, narrow]))
+    return edges[np.concatenate([[True], np.diff(edges) > 1e-3])]
+
+
+def _behind(ready, D_L, edges, n):
+    """Source nodes behind each lens node, the first panel mapped so that the square root at D_S = D_L is taken out."""
     if ready.sources.fixed_distance:
-        D, w = ready.D_S, np.ones(1)
+        behind = D_L < ready.sources.fixed_distance
+        first = np.concatenate([[0], np.cumsum(behind)])
+        D = np.full(int(first[-1]), ready.sources.fixed_distance)
+        w = np.ones(D.size)
     else:
-        D, w = panel_nodes(edges, n)
+        x, weight = legendre(n)
+        nodes, weights, counts = [], [], []
+        for d in D_L:
+            e = edges[edges > d * 1.0001]
+            width = np.diff(e)[:, None]
+            nodes += [d + (e[0] - d) * x**2, (e[:-1, None] + width * x).ravel()]
+            weights += [2 * (e[0] - d) * x * weight, (width * weight).ravel()]
+            counts.append(nodes[-1].size + n)
+        first = np.concatenate([[0], np.cumsum(counts)])
+        D, w = np.concatenate(nodes), np.concatenate(weights)
     src = _source_rows(ready.model, ready.line, ready.sources, D)
     src[0] *= w / ready.norm
-    src = _merged(ready.model, src, two=True)
-    light = src[0].sum(axis=0) > 1e-7 * src[0].sum()
-    D, src = np.ascontiguousarray(D[light]), np.ascontiguousarray(src[:, :, light])
-    outer, D_L, w_L = lens_pairs(D, edges, n)
-    lens = kicked.profile(ready.line, D_L)
-    pair_tau, pair_gamma = np.zeros((len(kicked.host), D_L.size)), np.zeros((len(kicked.host), D_L.size))
-    kernels.pair_moments(
-        outer, D, src, D_L, w_L, lens, kicked.element_of_row, FOUR_G_C2, KAPPA, MAS, _KICKED_DIRECTIONS,
-        pair_tau, pair_gamma,
-    )  # fmt: skip
-    by_batch = np.einsum("bkn,kn->bk", kicked.batch_factors(ready.line, D_L), pair_gamma)
-    error = by_batch.std(axis=0, ddof=1) / np.sqrt(len(by_batch))
-    return pair_tau.sum(axis=1), pair_gamma.sum(axis=1), error
+    # sources that make up less than 1e-7 of all behind a lens are not worth their time
+    src[0][:, src[0].sum(axis=0) < 1e-9] = 0.0
+    return first, D, _merged(ready.model, src, two=True)
 
 
 def kicked_rate_density(ready, grid):
@@ -191,13 +260,16 @@ def kicked_rate_density(ready, grid):
         D = np.full(grid.pi.size, ready.sources.fixed_distance)
         row, w = np.arange(grid.pi.size), np.ones(grid.pi.size)
     else:
-        row, D, w = row_nodes(grid.pi, _joined(ready.edges), np.empty(0), max(_KICKED_NODES, numerics.nodes - 1))
+        end = np.array([ready.kicked_table.end])
+        kinks = np.concatenate([end, ready.kinks]) if _through_the_centre(ready) else end
+        edges = ready.edges if _through_the_centre(ready) else _joined(ready.edges)
+        row, D, w = row_nodes(grid.pi, edges, kinks, max(_KICKED_NODES, numerics.nodes - 1))
     src = _source_rows(ready.model, ready.line, ready.sources, D)
     src[0] *= w / ready.norm
     light = src[0].sum(axis=0) > 1e-7 * src[0].sum(axis=0).max()
     row, D, src = row[light], D[light], _merged(ready.model, np.ascontiguousarray(src[:, :, light]), two=True)
     kicked = ready.model.kicked
-    lens = kicked.profile(ready.line, 1.0 / (grid.pi[row] + 1.0 / D))
+    lens = ready.kicked_table.at(1.0 / (grid.pi[row] + 1.0 / D))
     geometry = np.empty(D.size)
     kernels.node_weights(grid.pi, row, D, KAPPA, MAS, geometry)
     T = np.zeros((len(kicked.host), grid.pi.size, grid.mu.size))

@@ -1,7 +1,7 @@
 """A scenario resolved: Galaxy, populations and source model built once and shared by everything that runs on it."""
 
 from dataclasses import dataclass, replace
-from functools import cached_property
+from functools import cached_property, lru_cache
 from threading import Lock
 
 import numpy as np
@@ -156,11 +156,14 @@ def _shares(law, mass, edges):
     if not isinstance(law, tuple):
         weights = law.bin_weights(edges)
         return np.concatenate([[weights.unkicked], weights.inside])[:, None] * np.ones(mass.size)
-    out = np.empty((len(edges), mass.size))
-    for j, m in enumerate(mass):
-        weights = law[0].scaled(law[1] / m).bin_weights(edges) if law[0].name != "none" else law[0].bin_weights(edges)
-        out[0, j], out[1:, j] = weights.unkicked, weights.inside
-    return out
+    return np.array([_scaled_shares(law[0], law[1] / m, tuple(edges)) for m in mass]).T
+
+
+@lru_cache(maxsize=4096)
+def _scaled_shares(law, factor, edges):
+    """Shares of a law at speeds times a factor; black holes of every component have the same few masses."""
+    weights = (law if law.name == "none" else law.scaled(factor)).bin_weights(np.array(edges))
+    return (weights.unkicked, *weights.inside)
 
 
 def _times(spectrum, share):

@@ -86,6 +86,8 @@ class Scenario:
             one_of("scenario: fields", self.fields, field_names())
         if not self.dust.endswith(".toml"):
             one_of("scenario: dust", self.dust, [n for n in names("sources") if n.startswith("dust")])
+        if not self.lens_class:
+            return
         hosts = self._galaxy_table["component"]
         known = {row.get("name") for row in hosts} | {row.get("element") for row in hosts} - {None}
         for name, table in self.lens_class.items():
