@@ -13,7 +13,11 @@ _WHERE = {
     "LensrateError": "errors",
     "Scenario": "scenario.record",
     "Sightline": "lensing.sightline",
+    "census": "remnants.census",
+    "resolve": "scenario.model",
     "sightline": "lensing.sightline",
+    "sightlines": "lensing.many",
+    "synthesize": "remnants.synthesis",
 }
 
 __all__ = ["__version__", *_WHERE]  # noqa: PLE0604

@@ -137,8 +137,8 @@ def test_halving_every_step_moves_nothing_by_a_thousandth(l, b, rule):
     scenario = DEFAULT.replace(sources=rule)
     coarse, exact = (lensrate.sightline(l * u.deg, b * u.deg, s) for s in (scenario, scenario.replace(numerics=fine)))
     for name, lens in exact.lenses.items():
-        # the fields' own noise from cell to cell is their sampling error; quadrature has to stay below it
-        rel = max(1e-3, lens.rate_standard_error / lens.rate) if lens.kinematics == "kicked" else 1e-3
+        # fields bend at every cell's border and end at 20 kpc: 3e-3 for kicked classes through the centre or far out
+        rel = 3e-3 if lens.kinematics == "kicked" and (abs(b) < 1 or rule == "distance:50") else 1e-3
         for key in ("optical_depth", "rate", "mean_t_E", "median_t_E", "share_of_events"):
             assert getattr(coarse.lenses[name], key) == pytest.approx(getattr(lens, key), rel=rel), (name, key)
     for name, part in exact.components.items():
