@@ -45,8 +45,11 @@ def verify(group, as_json, save, overwrite, quiet):
 def _print(rows):
     for name in dict.fromkeys(r.group for r in rows):
         group = [r for r in rows if r.group == name]
-        body = [[_short(r.quantity), number(r.published, 5), number(r.computed, 5), r.unit, r.verdict] for r in group]
-        head, *lines = columns(["  quantity", "published", "computed", "unit", "verdict"], body).splitlines()
+        body = [
+            [_short(r.quantity), number(r.published, 5), _allowed(r), number(r.computed, 5), r.unit, r.verdict]
+            for r in group
+        ]
+        head, *lines = columns(["  quantity", "published", "allowed", "computed", "unit", "verdict"], body).splitlines()
         click.echo(f"\n{name}\n{head}")
         source = None
         for r, line in zip(group, lines):
@@ -69,7 +72,13 @@ def _print(rows):
             click.echo(wrap(f"{r.quantity}: {r.verdict}; {r.note or r.tolerance if r.failed else r.why}"))
 
 
-def _short(quantity, width=42):
+def _allowed(row):
+    """Half the accepted interval, so that a reader sees how much 'agrees' allows."""
+    low, high = row.accepted
+    return f"+-{number((high - low) / 2, 2)}" if low > float("-inf") and high < float("inf") else "one side"
+
+
+def _short(quantity, width=38):
     """Indent under the source; leave out the end of a long one, at a word."""
     if len(quantity) > width:
         quantity = quantity[: width - 3].rsplit(" ", 1)[0] + " ..."
