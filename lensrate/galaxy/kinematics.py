@@ -1,5 +1,7 @@
 """Velocity distributions of stellar components, as declared records; the arithmetic is in kernels/kinematics.py."""
 
+import hashlib
+import json
 from dataclasses import dataclass
 from functools import cache
 from typing import ClassVar
@@ -7,7 +9,11 @@ from typing import ClassVar
 import astropy.units as u
 import numpy as np
 
+from ..datafiles import read_set
+from ..errors import DataFileError
+from ..io import whole_file
 from ..kernels import kinematics as kernels
+from ..kernels._jit import CACHE
 from ..params import Params, param
 from .potential import Potential
 
@@ -44,9 +50,25 @@ class PotentialRotation:
 
 @cache
 def _speeds(name):
+    """Table of a potential's circular speed; kept beside the compiled kernels, since it takes half a second."""
+    stated = json.dumps(read_set("potential", name), sort_keys=True, default=str)
+    path = CACHE / f"speeds_{hashlib.sha256(stated.encode()).hexdigest()[:16]}.npy"
     R = np.arange(0.0, 60.05, _SPEED_STEP)
+    try:
+        kept = np.load(path, allow_pickle=False)
+        if kept.shape == (R.size + 2,) and np.all(np.isfinite(kept)):
+            return kept
+    except (OSError, ValueError, EOFError):
+        pass  # not there yet, or damaged: made again
     speed = Potential.read(name).for_orbits().circular_speed(R[1:] * u.kpc).to_value(u.km / u.s)
-    return np.concatenate([[kernels.TABLE, _SPEED_STEP, 0.0], speed])
+    table = np.concatenate([[kernels.TABLE, _SPEED_STEP, 0.0], speed])
+    try:
+        path.parent.mkdir(parents=True, exist_ok=True)
+        with whole_file(path) as temporary:
+            np.save(temporary, table)
+    except (OSError, DataFileError):
+        pass  # a folder that cannot be written costs half a second a run
+    return table
 
 
 @dataclass(frozen=True)

@@ -11,7 +11,6 @@ from functools import cache, cached_property
 
 import astropy.units as u
 import numpy as np
-from scipy.optimize import nnls
 
 from ..datafiles import read_set
 from ..errors import InputError, did_you_mean, one_of
@@ -144,6 +143,8 @@ def confocal_shells(lengths, shells):
     Range of s and fitting points (to 60 kpc for a bar of 0.4 kpc) scale with the lengths: our choice. Far outside
     the points the sum falls off faster than a point mass; a tenth of the weight on the depth makes up for it.
     """
+    from scipy.optimize import nnls  # slow to import, and a forecast does without
+
     lengths = np.array(lengths)
     size = np.prod(lengths) ** (1 / 3)
     rng = np.random.default_rng(20)

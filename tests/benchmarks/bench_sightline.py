@@ -55,6 +55,8 @@ def against_quad():
     def fast():
         outer, D_L, w_L = lens_pairs(line.D_S, line.edges, line.numerics.nodes + 2)
         lens = np.ascontiguousarray(line.model.galaxy.profile(line.line, D_L)[:, i : i + 1])
+        for array in out:
+            array[:] = 0.0
         kernels.moments(outer, line.D_S, src, D_L, w_L, lens, element, FOUR_G_C2, KAPPA, MAS, 16, *out)
 
     return slow, median(fast), abs(out[1][0, 0] / exact - 1)
