@@ -2,8 +2,10 @@
 
 Grid: cells even in asinh(R / a_R), in asinh(|z| / a_z) and in azimuth over half a turn from the bar's major axis.
 Orbits are folded by the two exact symmetries only, half a turn about the axis and z -> -z. Velocities are inertial,
-along R, along the disc's rotation (clockwise seen from +z) and along z. A cell holds one Gaussian, or inside the
-first `n_two` radii two: what moves faster and what moves slower along the rotation than the cell's mean.
+along R, along the disc's rotation (clockwise seen from +z) and along z. A cell of the first `n_four` radii holds four
+Gaussians, of what moves about the cell's mean into each of four equal cones around the corners of a tetrahedron; the
+cells beyond hold two, of what moves faster and what moves slower along the rotation. One Gaussian would reach beyond
+the speeds that are bound. Below z = 0 stands the mirror image, which swaps the first two cones.
 """
 
 import math
@@ -15,14 +17,17 @@ from .kinematics import project
 from .orbits import PX, PY, PZ, ROWS, TIME, WEIGHT, load, release, take_steps
 from .potential import LANES, potential_at
 
-__all__ = ["EMPTY", "Q", "deposit_orbits", "field_profile", "field_rows"]
+__all__ = ["EMPTY", "PARTS", "Q", "deposit_orbits", "field_profile", "field_rows"]
 
-#: numbers of a cell: ln density; mean v_R, v_rot, v_z; dispersions R, rot, z; correlations R-rot, R-z, rot-z
+#: numbers of a Gaussian: share of the cell; mean v_R, v_rot, v_z; dispersions R, rot, z; correlations R-rot, R-z, rot-z
 Q = 10
+#: Gaussians of a cell at most
+PARTS = 4
 #: stored ln density of a cell that no orbit visited, and what it is read as
 EMPTY = -32768
 _LN_NOTHING = -60.0
 _CHECKS = 16  # notes between looks at the energy
+_SQRT2 = math.sqrt(2.0)
 
 
 @kernel
@@ -30,6 +35,19 @@ def _cell(value, scale, n_per_unit, n):
     """Return the cell of asinh(value / scale), n or more if beyond."""
     r = value / scale
     return int(math.log(r + math.sqrt(r * r + 1.0)) * n_per_unit) if r < 1e6 else n
+
+
+@kernel
+def _part(inner, x_r, x_t, x_z):
+    """Return the part of a cell that a velocity belongs to, given from the mean in units of the dispersions.
+
+    Corners of the tetrahedron: (R, rot, z) = (0, 1, +-sqrt 2), (+-sqrt 2, -1, 0); two parts are numbers 0 and 2.
+    """
+    if not inner:
+        return 0 if x_t > 0.0 else 2
+    if _SQRT2 * (abs(x_z) - abs(x_r)) + 2.0 * x_t > 0.0:
+        return 0 if x_z > 0.0 else 1
+    return 2 if x_r > 0.0 else 3
 
 
 @kernel
@@ -48,8 +66,9 @@ def _add_moments(row, w, v_r, v_t, v_z):
 
 @kernel
 def deposit_orbits(
-    kinds, pars, omega, ds, states, young, old, growth, stride, grid, split, ring, moments, heights, ends
-):
+    kinds, pars, omega, ds, states, young, old, growth, stride, grid, n_four, frame, ring,
+    moments, fourth, heights, ends,
+):  # fmt: skip
     """Follow tracers from birth and add what they are at every age of a window to the grid.
 
     Parameters
@@ -66,12 +85,16 @@ def deposit_orbits(
         Steps between deposits.
     grid : ndarray, shape (7,)
         a_R, cells per unit of asinh, number of them; the same for |z|; cells in azimuth.
-    split : ndarray, shape (n_two, n_z, n_phi)
-        Speed along the rotation that divides the two Gaussians.
+    n_four : int
+        Radii whose cells are divided in four.
+    frame : ndarray, shape (n_R, n_z, n_phi, 6)
+        Velocity about which a cell is divided, and the inverse of its dispersions.
     ring : ndarray, shape (4,)
         Radii [kpc] between which heights are counted; logarithm of the least height, bins per unit of logarithm.
-    moments : ndarray, shape (2, n_R, n_z, n_phi, 10)
-        Added to: weight, sums of v, of their squares and products.
+    moments : ndarray, shape (4, n_R, n_z, n_phi, 10)
+        Added to, by part: weight, sums of v, of their squares and products.
+    fourth : ndarray, shape (n_R, n_z, n_phi)
+        Added to: (x_R^2 + x_z^2)^2, with x from the frame's velocity in units of its dispersions.
     heights : ndarray, shape (h,)
         Added to: weight of bound bodies in the ring by |z|; first and last take what lies beyond.
     ends : ndarray, shape (4,)
@@ -124,14 +147,17 @@ def deposit_orbits(
                     continue
                 ip = int(math.atan2(y, x) / math.pi * n_phi + 2 * n_phi) % n_phi
                 per_r = 1.0 / max(radius, 1e-12)
-                v_t = (y * px - x * py) * per_r
-                side = 1 if ir < split.shape[0] and v_t < split[ir, iz, ip] else 0
-                _add_moments(moments[side, ir, iz, ip], w, (x * px + y * py) * per_r, v_t, pz if z >= 0.0 else -pz)
+                v_r, v_t = (x * px + y * py) * per_r, (y * px - x * py) * per_r
+                v_z = pz if z >= 0.0 else -pz
+                f = frame[ir, iz, ip]
+                x_r, x_t, x_z = (v_r - f[0]) * f[3], (v_t - f[1]) * f[4], (v_z - f[2]) * f[5]
+                _add_moments(moments[_part(ir < n_four, x_r, x_t, x_z), ir, iz, ip], w, v_r, v_t, v_z)
+                fourth[ir, iz, ip] += w * (x_r * x_r + x_z * x_z) ** 2
 
 
 @kernel
-def _corners(grid, radius, phi, z, index, weight, sign):
-    """Find the eight cells around a point, their weights, and the sign of what is odd in z; return False outside."""
+def _corners(grid, radius, phi, z, index, weight, mirrored):
+    """Find the eight cells around a point, their weights, which of them lie beyond z = 0; return False outside."""
     n_r, n_z, n_phi = int(grid[2]), int(grid[5]), int(grid[6])
     u = radius / grid[0]
     v = abs(z) / grid[3]
@@ -146,7 +172,6 @@ def _corners(grid, radius, phi, z, index, weight, sign):
     iv = min(int(math.floor(v)), n_z - 2)
     ip = int(math.floor(p))
     fu, fv, fp = u - iu, v - iv, p - ip
-    side = 1.0 if z >= 0.0 else -1.0
     c = 0
     for a in range(2):
         for b in range(2):
@@ -156,42 +181,58 @@ def _corners(grid, radius, phi, z, index, weight, sign):
                 index[c, 0] = iu + a
                 index[c, 1] = max(iz, 0)
                 index[c, 2] = (ip + d + n_phi) % n_phi
-                sign[c] = side if iz >= 0 else -side
+                mirrored[c] = iz < 0
                 weight[c] = (fu if a else 1.0 - fu) * (fv if b else 1.0 - fv) * (fp if d else 1.0 - fp)
                 c += 1
     return True
 
 
 @kernel
-def _gaussian(one, two, steps, g, index, weight, sign, out):
-    """Interpolate one Gaussian of one element: out gets density, means (3), dispersion tensor R rot z Rrot Rz rotz."""
-    n_two = two.shape[0]
-    inner = index[0, 0] < n_two
-    out[:] = 0.0
-    if not inner and g == 1:
-        return
+def _density(ln_rho, step, index, weight):
+    """Interpolate ln of the density of one element; nothing where most of the cells around are empty."""
     ln = 0.0
     for c in range(8):
+        code = ln_rho[index[c, 0], index[c, 1], index[c, 2]]
+        ln += weight[c] * (_LN_NOTHING if code == EMPTY else code * step)
+    return math.exp(ln) if ln > 0.5 * _LN_NOTHING else 0.0
+
+
+@kernel
+def _gaussian(four, two, steps, g, index, weight, mirrored, side, out):
+    """Interpolate a Gaussian of one element: out gets share, means (3), dispersion tensor R rot z Rrot Rz rotz."""
+    n_four = four.shape[0]
+    inner = index[0, 0] < n_four
+    # where cells with four stand beside cells with two, displacements halve and second moments must not
+    border = 1.0 if inner and index[7, 0] >= n_four else 0.0
+    out[:] = 0.0
+    for c in range(8):
         i, j, k = index[c, 0], index[c, 1], index[c, 2]
-        row = two[i, j, k] if g == 1 and i < n_two else one[i, j, k]
-        w, odd = weight[c], sign[c]
-        if row[0] == EMPTY:
-            ln += w * _LN_NOTHING
-        else:
-            ln += w * row[0] * steps[0]
-            if inner and i >= n_two:  # a cell with one Gaussian stands beside cells with two: it gives each a half
-                ln -= w * math.log(2.0)
+        w, odd = weight[c], side
+        if i < n_four:
+            row = four[i, j, k, 1 - g if mirrored[c] and g < 2 else g]
+            out[0] += w * row[0] * steps[3]
+        else:  # the halves of the cells beyond stand for two cones each
+            row = two[i - n_four, j, k, g // 2]
+            out[0] += w * row[0] * steps[3] * (0.5 if inner else 1.0)
+        if mirrored[c]:
+            odd = -odd
+        m_r, m_t, m_z = row[1] * steps[1], row[2] * steps[1], odd * row[3] * steps[1]
         s_r, s_t, s_z = row[4] * steps[1], row[5] * steps[1], row[6] * steps[1]
-        out[1] += w * row[1] * steps[1]
-        out[2] += w * row[2] * steps[1]
-        out[3] += w * odd * row[3] * steps[1]
-        out[4] += w * s_r * s_r
-        out[5] += w * s_t * s_t
-        out[6] += w * s_z * s_z
-        out[7] += w * s_r * s_t * row[7] * steps[2]
-        out[8] += w * odd * s_r * s_z * row[8] * steps[2]
-        out[9] += w * odd * s_t * s_z * row[9] * steps[2]
-    out[0] = math.exp(ln) if ln > 0.5 * _LN_NOTHING else 0.0
+        out[1] += w * m_r
+        out[2] += w * m_t
+        out[3] += w * m_z
+        out[4] += w * (s_r * s_r + border * m_r * m_r)
+        out[5] += w * (s_t * s_t + border * m_t * m_t)
+        out[6] += w * (s_z * s_z + border * m_z * m_z)
+        out[7] += w * (s_r * s_t * row[7] * steps[2] + border * m_r * m_t)
+        out[8] += w * (odd * s_r * s_z * row[8] * steps[2] + border * m_r * m_z)
+        out[9] += w * (odd * s_t * s_z * row[9] * steps[2] + border * m_t * m_z)
+    out[4] -= border * out[1] * out[1]
+    out[5] -= border * out[2] * out[2]
+    out[6] -= border * out[3] * out[3]
+    out[7] -= border * out[1] * out[2]
+    out[8] -= border * out[1] * out[3]
+    out[9] -= border * out[2] * out[3]
 
 
 @kernel
@@ -211,7 +252,7 @@ def _to_cartesian(v, ex, ey, out):
 
 
 @kernel
-def field_rows(points, axis_angle, grid, steps, one, two, out):
+def field_rows(points, axis_angle, grid, steps, ln_rho, four, two, out):
     """Read density and velocity of every element at points.
 
     Parameters
@@ -222,35 +263,42 @@ def field_rows(points, axis_angle, grid, steps, one, two, out):
         Azimuth of the bar's major axis in the Galactocentric frame.
     grid : ndarray, shape (7,)
         As for `deposit_orbits`.
-    steps : ndarray, shape (3,)
-        What one unit stands for: of ln density, of velocity [km/s], of correlation.
-    one, two : ndarray of int16, shape (e, n_R, n_z, n_phi, 10) and (e, n_two, n_z, n_phi, 10)
-    out : ndarray, shape (2 e, n, 10)
-        Gets density [1/kpc^3 per remnant born], mean velocity (3), tensor xx yy zz xy xz yz; rows 2 e and 2 e + 1
-        are the Gaussians of element e.
+    steps : ndarray, shape (4,)
+        What one unit stands for: of ln density, of velocity [km/s], of correlation, of share.
+    ln_rho : ndarray of int16, shape (e, n_R, n_z, n_phi)
+    four, two : ndarray of int16, shape (e, n_four, n_z, n_phi, 4, 10) and (e, n_R - n_four, n_z, n_phi, 2, 10)
+    out : ndarray, shape (4 e, n, 10)
+        Gets density [1/kpc^3 per remnant born], mean velocity (3), tensor xx yy zz xy xz yz; rows 4 e to 4 e + 3
+        are the Gaussians of element e, of which the second and fourth are empty where cells hold two.
     """
     index = np.empty((8, 3), dtype=np.int64)
-    weight, sign = np.empty(8), np.empty(8)
-    local = np.empty(Q)
+    weight, mirrored = np.empty(8), np.empty(8, dtype=np.bool_)
+    local = np.empty((PARTS, Q))
     for i in range(points.shape[0]):
         x, y, z = points[i, 0], points[i, 1], points[i, 2]
         radius = math.sqrt(x * x + y * y)
         ex, ey = (x / radius, y / radius) if radius > 1e-12 else (1.0, 0.0)
-        inside = _corners(grid, radius, math.atan2(y, x) - axis_angle, z, index, weight, sign)
-        for e in range(one.shape[0]):
-            for g in range(2):
-                row = out[2 * e + g, i]
-                row[:] = 0.0
-                if inside:
-                    _gaussian(one[e], two[e], steps, g, index, weight, sign, local)
-                    row[0] = local[0]
-                    if local[0] > 0.0:
-                        _to_cartesian(local, ex, ey, row[1:])
+        inside = _corners(grid, radius, math.atan2(y, x) - axis_angle, z, index, weight, mirrored)
+        side = 1.0 if z >= 0.0 else -1.0
+        step = 1 if inside and index[0, 0] < four.shape[1] else 2
+        for e in range(ln_rho.shape[0]):
+            rho = _density(ln_rho[e], steps[0], index, weight) if inside else 0.0
+            out[PARTS * e : PARTS * (e + 1), i] = 0.0
+            if rho > 0.0:
+                shares = 0.0
+                for g in range(0, PARTS, step):
+                    _gaussian(four[e], two[e], steps, g, index, weight, mirrored, side, local[g])
+                    shares += local[g, 0]
+                for g in range(0, PARTS, step):
+                    if local[g, 0] > 0.0:
+                        row = out[PARTS * e + g, i]
+                        row[0] = rho * local[g, 0] / shares
+                        _to_cartesian(local[g], ex, ey, row[1:])
 
 
 @kernel
-def field_profile(D, origin, axes, v_sun, k, axis_angle, grid, steps, one, two, out):
-    """Fill out (6, 2 e, n) along a sightline: density [1/kpc^3], mu_l, mu_b [mas/yr], C_ll, C_lb, C_bb [(mas/yr)^2].
+def field_profile(D, origin, axes, v_sun, k, axis_angle, grid, steps, ln_rho, four, two, out):
+    """Fill out (6, 4 e, n) along a sightline: density [1/kpc^3], mu_l, mu_b [mas/yr], C_ll, C_lb, C_bb [(mas/yr)^2].
 
     D: distances [kpc], (n,); origin, axes, v_sun, k as for `profile.stellar_profile`; the rest as for `field_rows`.
     """
@@ -260,7 +308,7 @@ def field_profile(D, origin, axes, v_sun, k, axis_angle, grid, steps, one, two, 
     for i in range(D.size):
         for j in range(3):
             point[0, j] = origin[j] + D[i] * axes[0, j]
-        field_rows(point, axis_angle, grid, steps, one, two, rows)
+        field_rows(point, axis_angle, grid, steps, ln_rho, four, two, rows)
         for r in range(out.shape[1]):
             out[:, r, i] = 0.0
             if rows[r, 0, 0] > 0.0:

@@ -13,6 +13,7 @@ from scipy.optimize import brentq
 
 from .._version import __version__
 from ..galaxy.density import stellar_mass
+from ..kernels.fields import PARTS
 from .cubes import block_sums, node_density
 from .fields import Grid
 from .synthesis import HEIGHTS
@@ -306,12 +307,12 @@ class _Elements:
         escaped = np.zeros(len(stars))
         first, rows, ring = len(stars), np.empty(0, dtype=int), None
         if field is not None:
-            rows = model.kicked.rows[::2] // 2
+            rows = model.kicked.elements
             cubes = node_density(field) * grid.volumes()
             cubes = cubes.reshape(field.n_elements, *cubes.shape[2:])[rows]
             escaped = np.concatenate([escaped, field.ends["escaped"].ravel()[rows]])
             within = np.concatenate([within, 1 - field.ends["beyond_20_kpc"].ravel()[rows]])
-            here = field.rows(*(place[:, None] * u.kpc))[0].value.reshape(-1, 2).sum(axis=1)
+            here = field.rows(*(place[:, None] * u.kpc))[0].value.reshape(-1, PARTS).sum(axis=1)
             local = np.concatenate([local, here[rows]])
             heights = np.concatenate([heights, field.heights.reshape(field.n_elements, -1)[rows]])
             layers = np.concatenate([layers, cubes.sum(axis=(1, 3))])

@@ -16,7 +16,7 @@ from .orbits import integrate, step
 
 __all__ = ["PILOT", "Estimate", "estimate", "steps"]
 
-PILOT = 8  # one tracer in so many finds the speeds that divide the two Gaussians
+PILOT = 8  # one tracer in so many finds the velocities about which cells are divided
 _GYR = 1e3 * KPC_PER_MYR
 _DROPPED = 0.5  # Gyr before an equilibrium's training window
 _FADES = 450.0  # km/s; orbits of faster kicks lead outward, where steps are long, and end beyond 100 kpc
@@ -85,11 +85,11 @@ def estimate(components, galaxy, potential, settings, jobs=1):
     total = sum(steps(c, galaxy, potential, settings).sum() for c in components)
     grid = settings.grid
     cells = grid.n_R * grid.n_z * grid.n_phi
-    # int16 numbers of one and two Gaussians and float64 density, each held once by element and once stacked
-    element = 2 * cells * (2 * 10 * (1 + grid.n_two / grid.n_R) + 8)
+    # int16 numbers of two and four Gaussians and float64 density, each held once by element and once stacked
+    element = 2 * cells * (2 * (1 + 20 * (1 + grid.n_four / grid.n_R)) + 8)
     kept = len(components) * len(settings.kick_edges) * element
     # a thread sums all of it, a batch, and works on copies of them
-    working = jobs * cells * 8 * (6 * 20 + settings.batches)
+    working = jobs * cells * 8 * (6 * 40 + settings.batches)
     bundles = settings.bundles * LANES * 8
     held = bundles * 4 * 6 * len(components) + settings.bundles * _CELLS * 8 * 4
     return Estimate(total * _seconds_a_step(potential, settings) * _OVERHEAD / jobs, _PROCESS + kept + working + held)

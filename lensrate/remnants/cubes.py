@@ -20,13 +20,7 @@ def node_density(field):
     ndarray, shape (components, kick bins + 1, n_R, n_z, n_phi)  [1/kpc^3 per remnant born]
         Zero where no orbit came.
     """
-
-    def plain(stored):
-        return np.where(stored == EMPTY, 0.0, np.exp(stored.astype(float) * STEPS[0]))
-
-    out = plain(field.one[..., 0])
-    out[:, :, : field.grid.n_two] += plain(field.two[..., 0])
-    return out
+    return np.where(field.ln_rho == EMPTY, 0.0, np.exp(field.ln_rho.astype(float) * STEPS[0]))
 
 
 def block_sums(array):

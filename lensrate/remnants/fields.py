@@ -16,10 +16,11 @@ from ..units import KMS_PER_MASYR_KPC, strip
 
 __all__ = ["STEPS", "Grid", "RemnantField"]
 
-#: what one unit of a stored integer stands for: of ln density, of velocity [km/s], of correlation
-STEPS = np.array([0.01, 0.25, 0.02])
+#: what one unit of a stored integer stands for: of ln density, of velocity [km/s], of correlation, of share
+STEPS = np.array([0.01, 1.0, 0.04, 0.002])
 _BATCH_STEP = 1e-3
-_FORMAT = "lensrate remnant field 1"
+_FORMAT = "lensrate remnant field 2"
+_TWO_GAUSSIANS = "lensrate remnant field 1"
 _WAY_OUT = "fetch it again, or make one with 'lensrate synthesize'"
 _ENDS = ("escaped", "beyond_20_kpc", "outside_grid")
 
@@ -34,8 +35,8 @@ class Grid:
         Ends, and lengths below which cells stay even.
     n_R, n_z, n_phi : int
         Cells; those in azimuth over half a turn. Even numbers.
-    R_two : float  [kpc]
-        Inside, a cell holds two Gaussians.
+    R_four : float  [kpc]
+        Inside, a cell holds four Gaussians, outside two.
     """
 
     R_max: float = 20.0
@@ -45,7 +46,7 @@ class Grid:
     z_scale: float = 0.15
     n_z: int = 24
     n_phi: int = 18
-    R_two: float = 3.0
+    R_four: float = 2.5
 
     def pack(self):
         """Return the kernel's row of seven numbers."""
@@ -54,9 +55,9 @@ class Grid:
         return np.array([self.R_scale, per_R, self.n_R, self.z_scale, per_z, self.n_z, self.n_phi], dtype=float)
 
     @property
-    def n_two(self):
-        """Number of radii whose cells hold two Gaussians."""
-        return min(self.n_R - 1, int(np.arcsinh(self.R_two / self.R_scale) * self.pack()[1]))
+    def n_four(self):
+        """Number of radii whose cells hold four Gaussians."""
+        return min(self.n_R - 1, int(np.arcsinh(self.R_four / self.R_scale) * self.pack()[1]))
 
     def edges(self):
         """Return the edges in R and |z| [kpc]."""
@@ -92,8 +93,10 @@ class RemnantField:
     kick_edges : ndarray, shape (k + 1,)  [km/s]
         Bin 0 of the fields is unkicked, bin i holds kicks between edges i - 1 and i.
     grid : Grid
-    one, two : ndarray of int16
-        Cells' numbers, shapes (c, k + 1, n_R, n_z, n_phi, 10) and (c, k + 1, n_two, n_z, n_phi, 10).
+    ln_rho : ndarray of int16, shape (c, k + 1, n_R, n_z, n_phi)
+        Of the cells' nodes.
+    four, two : ndarray of int16
+        Gaussians, shapes (c, k + 1, n_four, n_z, n_phi, 4, 10) and (c, k + 1, n_R - n_four, n_z, n_phi, 2, 10).
     batches : ndarray of int16, shape (c, k + 1, b, n_R / 2, n_z / 2, n_phi / 2)
         Each batch's density over the mean, in blocks of eight cells, in thousandths.
     ends : dict of str to ndarray, shape (c, k + 1)
@@ -111,7 +114,8 @@ class RemnantField:
     components: tuple
     kick_edges: np.ndarray
     grid: Grid
-    one: np.ndarray
+    ln_rho: np.ndarray
+    four: np.ndarray
     two: np.ndarray
     batches: np.ndarray
     ends: dict
@@ -124,7 +128,7 @@ class RemnantField:
     @property
     def n_elements(self):
         """Number of components times kick bins, the unkicked one included."""
-        return self.one.shape[0] * self.one.shape[1]
+        return self.ln_rho.shape[0] * self.ln_rho.shape[1]
 
     def element(self, component, kick_bin):
         """Return the number of an element, in the order of rows.
@@ -138,17 +142,17 @@ class RemnantField:
         Returns
         -------
         int
-            Its two Gaussians are rows 2 e and 2 e + 1 of `profile` and `rows`.
+            Its Gaussians are rows 4 e to 4 e + 3 of `profile` and `rows`.
         """
         one_of("component", component, self.components)
-        if not 0 <= kick_bin < self.one.shape[1]:
-            raise InputError(f"kick_bin: {kick_bin} given, 0 to {self.one.shape[1] - 1} allowed")
-        return self.components.index(component) * self.one.shape[1] + kick_bin
+        if not 0 <= kick_bin < self.ln_rho.shape[1]:
+            raise InputError(f"kick_bin: {kick_bin} given, 0 to {self.ln_rho.shape[1] - 1} allowed")
+        return self.components.index(component) * self.ln_rho.shape[1] + kick_bin
 
     def _arrays(self):
-        flat = (self.n_elements, *self.one.shape[2:])
         azimuth = np.pi - self.bar_angle  # of the near end, seen from the centre with the Sun at x < 0
-        return azimuth, self.grid.pack(), STEPS, self.one.reshape(flat), self.two.reshape(flat[0], *self.two.shape[2:])
+        flat = (a.reshape(self.n_elements, *a.shape[2:]) for a in (self.ln_rho, self.four, self.two))
+        return azimuth, self.grid.pack(), STEPS, *flat
 
     def profile(self, line, D):
         """Return density and motion along a sightline, like `Galaxy.profile`.
@@ -160,16 +164,16 @@ class RemnantField:
 
         Returns
         -------
-        ndarray, shape (6, 2 * n_elements, *D.shape)
+        ndarray, shape (6, 4 * n_elements, *D.shape)
             Density [1/kpc^3 per remnant born], mu_l, mu_b [mas/yr], C_ll, C_lb, C_bb [(mas/yr)^2], seen from the Sun.
         """
         D = np.ascontiguousarray(D, dtype=float)
-        out = np.empty((6, 2 * self.n_elements, D.size))
+        out = np.empty((6, kernels.PARTS * self.n_elements, D.size))
         kernels.field_profile(D.ravel(), line.origin, line.axes, line.v_sun, KMS_PER_MASYR_KPC, *self._arrays(), out)
         return out.reshape(6, -1, *D.shape)
 
     def rows(self, x, y, z):
-        """Return density and velocity of every element's two Gaussians at points.
+        """Return density and velocity of every element's Gaussians at points.
 
         Parameters
         ----------
@@ -178,14 +182,14 @@ class RemnantField:
 
         Returns
         -------
-        density : Quantity [1 / kpc3], shape (2 * n_elements, n)
-            Per remnant born.
-        mean : Quantity [km / s], shape (2 * n_elements, n, 3)
-        tensor : Quantity [km2 / s2], shape (2 * n_elements, n, 6)
+        density : Quantity [1 / kpc3], shape (4 * n_elements, n)
+            Per remnant born; none where cells hold fewer.
+        mean : Quantity [km / s], shape (4 * n_elements, n, 3)
+        tensor : Quantity [km2 / s2], shape (4 * n_elements, n, 6)
             xx yy zz xy xz yz.
         """
         points = np.column_stack([np.atleast_1d(strip(n, q, "kpc")) for n, q in zip("xyz", (x, y, z))])
-        out = np.empty((2 * self.n_elements, len(points), 10))
+        out = np.empty((kernels.PARTS * self.n_elements, len(points), kernels.Q))
         kernels.field_rows(points, *self._arrays(), out)
         return out[..., 0] / u.kpc**3, out[..., 1:4] * (u.km / u.s), out[..., 4:] * (u.km / u.s) ** 2
 
@@ -205,10 +209,10 @@ class RemnantField:
         Quantity [1 / kpc3], shape (n,)
         """
         weights = np.asarray(kick_weights, dtype=float)
-        if weights.shape != (self.one.shape[1],):
-            raise InputError(f"kick_weights: shape {weights.shape} given, ({self.one.shape[1]},) needed")
+        if weights.shape != (self.ln_rho.shape[1],):
+            raise InputError(f"kick_weights: shape {weights.shape} given, ({self.ln_rho.shape[1]},) needed")
         first = self.element(component, 0)
-        rho = self.rows(x, y, z)[0].reshape(self.n_elements, 2, -1).sum(axis=1)
+        rho = self.rows(x, y, z)[0].reshape(self.n_elements, kernels.PARTS, -1).sum(axis=1)
         return weights @ rho[first : first + weights.size]
 
     def batch_factors(self, x, y, z):
@@ -266,12 +270,12 @@ class RemnantField:
         primary = fits.PrimaryHDU()
         primary.header["LRFIELD"] = (_FORMAT, "what this file is")
         hdus = [primary, fits.ImageHDU(np.frombuffer(json.dumps(made).encode(), dtype=np.uint8), name="MADE")]
-        for name, cube in (("ONE", self.one), ("TWO", self.two), ("BATCHES", self.batches)):
-            # a tile is one number of all cells of an element: neighbours are alike, high bytes nearly constant
-            flat = np.moveaxis(cube, -1, 2) if name != "BATCHES" else cube
-            flat = np.ascontiguousarray(flat).reshape(cube.shape[0] * cube.shape[1] * flat.shape[2], -1)
+        cubes = {"LN_RHO": self.ln_rho, "BATCHES": self.batches}
+        cubes |= {name: _last_first(cube) for name, cube in (("FOUR", self.four), ("TWO", self.two))}
+        for name, cube in cubes.items():
+            flat = cube.reshape(-1, np.prod(cube.shape[-3:]))
             tile = (1, flat.shape[1])
-            hdus.append(fits.CompImageHDU(flat, name=name, compression_type="GZIP_2", tile_shape=tile))
+            hdus.append(fits.CompImageHDU(flat, name=name, compression_type="RICE_1", tile_shape=tile))
         hdus.append(fits.ImageHDU(np.stack([self.ends[k] for k in _ENDS]), name="ENDS"))
         hdus.append(fits.ImageHDU(self.heights, name="HEIGHTS"))
         with whole_file(path) as temporary:
@@ -305,6 +309,8 @@ class RemnantField:
                 warnings.simplefilter("error", AstropyWarning)  # a wrong checksum is a warning there, an error here
                 # the file is opened here, since astropy leaves it open where a checksum is wrong
                 with open(path, "rb") as handle, fits.open(handle, checksum=True, memmap=False) as hdus:
+                    if hdus[0].header.get("LRFIELD") == _TWO_GAUSSIANS:
+                        return cls._from_two_gaussians(hdus)
                     if hdus[0].header.get("LRFIELD") != _FORMAT:
                         found = hdus[0].header.get("LRFIELD", "no such mark")
                         raise DataFileError(
@@ -322,18 +328,51 @@ class RemnantField:
     @classmethod
     def _from_hdus(cls, hdus):
         made = json.loads(hdus["MADE"].data.tobytes().decode())
-        one, two, batches = (np.array(hdus[n].data, dtype=np.int16) for n in ("ONE", "TWO", "BATCHES"))
-        ends, heights = (np.array(hdus[n].data, dtype=float) for n in ("ENDS", "HEIGHTS"))
         grid = Grid(**made["grid"])
         shape = (len(made["components"]), len(made["kick_edges_kms"]))
         cells = (grid.n_z, grid.n_phi)
+        ln_rho, four, two = (np.array(hdus[n].data, dtype=np.int16) for n in ("LN_RHO", "FOUR", "TWO"))
+        return cls._from_parts(
+            hdus, made, grid, ln_rho.reshape(*shape, grid.n_R, *cells),
+            _first_last(four.reshape(*shape, 4, 10, grid.n_four, *cells)),
+            _first_last(two.reshape(*shape, 2, 10, grid.n_R - grid.n_four, *cells)),
+        )  # fmt: skip
+
+    @classmethod
+    def _from_two_gaussians(cls, hdus):
+        """Read the earlier form, whose inner cells hold a faster and a slower Gaussian and outer ones one."""
+        made = json.loads(hdus["MADE"].data.tobytes().decode())
+        made["grid"] = {k: v for k, v in made["grid"].items() if k != "R_two"}
+        grid = Grid(**made["grid"])
+        shape, cells = (len(made["components"]), len(made["kick_edges_kms"])), (grid.n_z, grid.n_phi)
+        stored = (np.array(hdus[n].data, dtype=np.int16) for n in ("ONE", "TWO"))
+        fast, slow = (np.moveaxis(a.reshape(*shape, 10, -1, *cells), 2, -1).astype(float) for a in stored)
+        n_two = slow.shape[2]
+        both = np.stack([fast, np.concatenate([slow, fast[:, :, n_two:]], axis=2)], axis=-2)
+        ln = np.where(both[..., 0] == kernels.EMPTY, -np.inf, both[..., 0] * STEPS[0])
+        ln[:, :, n_two:] -= np.log(2)
+        whole = np.logaddexp(ln[..., 0], ln[..., 1])
+        share = np.exp(ln - np.where(np.isfinite(whole), whole, 0.0)[..., None])
+        both[..., 0] = np.where(np.isfinite(whole)[..., None], share, 0.5) / STEPS[3]
+        both[..., 1:] *= np.repeat([0.25 / STEPS[1], 0.02 / STEPS[2]], (6, 3))
+        ln_rho = np.where(np.isfinite(whole), whole / STEPS[0], kernels.EMPTY)
+        ln_rho, both = (np.rint(a).astype(np.int16) for a in (ln_rho, both))
+        four = np.repeat(both[:, :, : grid.n_four], 2, axis=-2)
+        four[..., 0] //= 2
+        return cls._from_parts(hdus, made, grid, ln_rho, four, np.ascontiguousarray(both[:, :, grid.n_four :]))
+
+    @classmethod
+    def _from_parts(cls, hdus, made, grid, ln_rho, four, two):
+        ends, heights = (np.array(hdus[n].data, dtype=float) for n in ("ENDS", "HEIGHTS"))
+        batches = np.array(hdus["BATCHES"].data, dtype=np.int16)
         return cls(
             components=tuple(made["components"]),
             kick_edges=np.array(made["kick_edges_kms"]),
             grid=grid,
-            one=np.ascontiguousarray(np.moveaxis(one.reshape(*shape, 10, grid.n_R, *cells), 2, -1)),
-            two=np.ascontiguousarray(np.moveaxis(two.reshape(*shape, 10, grid.n_two, *cells), 2, -1)),
-            batches=batches.reshape(*shape, -1, grid.n_R // 2, grid.n_z // 2, grid.n_phi // 2),
+            ln_rho=ln_rho,
+            four=four,
+            two=two,
+            batches=batches.reshape(*ln_rho.shape[:2], -1, grid.n_R // 2, grid.n_z // 2, grid.n_phi // 2),
             ends=dict(zip(_ENDS, ends)),
             heights=heights,
             height_edges=np.array(made["height_edges_kpc"]),
@@ -341,3 +380,13 @@ class RemnantField:
             mismatch=made["mismatch"],
             provenance=made["provenance"],
         )
+
+
+def _last_first(gaussians):
+    """Put a cell's part and number before the cells: neighbouring cells are alike, which packs well."""
+    return np.ascontiguousarray(np.moveaxis(gaussians, (-2, -1), (2, 3)))
+
+
+def _first_last(gaussians):
+    """Undo `_last_first`, so that the numbers of a Gaussian are neighbours in memory."""
+    return np.ascontiguousarray(np.moveaxis(gaussians, (2, 3), (-2, -1)))

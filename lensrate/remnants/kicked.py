@@ -8,6 +8,7 @@ import numpy as np
 
 from ..datafiles import field_path
 from ..galaxy.density import stellar_mass
+from ..kernels.fields import PARTS
 from .fields import RemnantField
 
 __all__ = ["KickedLenses", "galaxy_numbers", "read_field"]
@@ -68,7 +69,7 @@ class KickedLenses:
     mass : ndarray, shape (elements,)
         Stated mass of each element's component [Msun]: a field is per remnant born, a spectrum per stated Msun.
     rows : ndarray of int
-        Rows of the field's profile that belong to the elements, two Gaussians each.
+        Rows of the field's profile that belong to the elements, `PARTS` Gaussians each.
     """
 
     field: RemnantField
@@ -87,7 +88,7 @@ class KickedLenses:
                 first = field.element(component.element, 0)
                 host += [i] * bins
                 mass += [stellar_mass(component.density, galaxy.R0)] * bins
-                rows += range(2 * first, 2 * (first + bins))
+                rows += range(PARTS * first, PARTS * (first + bins))
         if not host:
             return None
         return cls(field, tuple(host), np.asarray(field.kick_edges), np.array(mass), np.array(rows))
@@ -95,10 +96,15 @@ class KickedLenses:
     @property
     def element_of_row(self):
         """Kicked element of each row."""
-        return np.repeat(np.arange(len(self.host)), 2)
+        return np.repeat(np.arange(len(self.host)), PARTS)
+
+    @property
+    def elements(self):
+        """Numbers of the elements in the field."""
+        return self.rows[::PARTS] // PARTS
 
     def profile(self, line, D):
-        """Return density and motion of every element's two Gaussians, like `Galaxy.profile`.
+        """Return density and motion of every element's Gaussians, like `Galaxy.profile`.
 
         Parameters
         ----------
@@ -108,15 +114,15 @@ class KickedLenses:
 
         Returns
         -------
-        ndarray, shape (6, 2 * elements, n)
+        ndarray, shape (6, PARTS * elements, n)
             The density is that of the stated mass [Msun/kpc^3] if all of it moved like this element.
         """
         out = self.field.profile(line, D)
         if not np.array_equal(self.rows, np.arange(out.shape[1])):
             out = np.ascontiguousarray(out[:, self.rows])
-        out[0] *= np.repeat(self.mass, 2)[:, None]
+        out[0] *= np.repeat(self.mass, PARTS)[:, None]
         return out
 
     def batch_factors(self, line, D):
         """Return each batch's density over the mean along a sightline, shape (batches, elements, n)."""
-        return self.field.batch_factors(*line.xyz(D))[:, self.rows[::2] // 2]
+        return self.field.batch_factors(*line.xyz(D))[:, self.elements]

@@ -96,7 +96,7 @@ def _densities(model, field, grid, angle):
         stars.append(component.density.at(x, y, z, R0) / mass if np.isfinite(mass) else np.zeros(R.shape))
     if field is None:
         return np.array(stars)
-    kicked = node_density(field).reshape(field.n_elements, *R.shape)[model.kicked.rows[::2] // 2]
+    kicked = node_density(field).reshape(field.n_elements, *R.shape)[model.kicked.elements]
     return np.concatenate([np.array(stars), kicked])
 
 

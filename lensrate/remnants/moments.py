@@ -6,27 +6,40 @@ from ..kernels.fields import EMPTY
 from ..kernels.orbits import FAR, SOFT
 from .fields import STEPS
 
-__all__ = ["batch_ratios", "encode", "node_correction", "split_speeds", "velocity_numbers"]
+__all__ = ["batch_ratios", "encode", "frames", "gaussians", "node_correction"]
 
-_LEND = 20.0  # deposits' worth of the neighbourhood's velocities lent to each cell, so that rare cells stay sane
+_LEND = 20.0  # deposits' worth of the neighbourhood's velocities lent to a part, so that rare cells stay sane
+_SHRINK = np.linspace(0.0, 1.0, 21)
 
 
 def _lent(sums, grid):
-    """Return sums with `_LEND` deposits of the ring's mean velocity moments added, or of the whole element's."""
-    ring = sums.sum(axis=2, keepdims=True)
-    column = ring.sum(axis=1, keepdims=True)
-    whole = sums.sum(axis=(0, 1, 2), keepdims=True)
+    """Return sums with `_LEND` deposits a part of the ring's velocity moments added, or of the whole element's.
+
+    Parts, the first axis, share what is lent as they share the ring.
+    """
+    ring = sums.sum(axis=3, keepdims=True)
+    column = ring.sum(axis=2, keepdims=True)
+    whole = sums.sum(axis=(1, 2, 3), keepdims=True)
     R, z, _ = grid.centres()
     slowness = 1 / np.hypot(np.hypot(R[:, None], z), SOFT) + 1 / FAR
     unit = 1 / slowness[:, :, None, None]  # weight of one deposit
-    lent = whole / whole[..., :1] if whole.flat[0] > 0 else np.eye(10)[0] * np.ones((1, 1, 1, 10))
+    unit = _LEND * len(sums) * unit
+    weight = whole[..., :1].sum(axis=0)
+    lent = whole / weight if weight.flat[0] > 0 else np.eye(10)[0] * np.ones_like(whole) / len(sums)
     for wider in (column, ring):
-        lent = (wider + _LEND * unit * lent) / (wider[..., :1] + _LEND * unit)
-    return sums + _LEND * unit * lent
+        lent = (wider + unit * lent) / (wider[..., :1].sum(axis=0) + unit)
+    return sums + unit * lent
 
 
-def split_speeds(sums, grid):
-    """Return the speed along the rotation at which inner cells are divided: the mean, steadied by the ring.
+def _numbers(lent):
+    """Return means and covariances of sums, shapes (..., 3) and (..., 3, 3); zeros where there is nothing."""
+    m = lent[..., 1:] / np.where(lent[..., :1] > 0, lent[..., :1], 1.0)
+    second = m[..., [3, 6, 7, 6, 4, 8, 7, 8, 5]].reshape(*m.shape[:-1], 3, 3)
+    return m[..., :3], second - m[..., :3, None] * m[..., None, :3]
+
+
+def frames(sums, grid):
+    """Return the velocities about which cells are divided, steadied by the ring, and inverse dispersions.
 
     Parameters
     ----------
@@ -36,22 +49,79 @@ def split_speeds(sums, grid):
 
     Returns
     -------
-    ndarray, shape (n_two, n_z, n_phi)
+    ndarray, shape (n_R, n_z, n_phi, 6)
+        Along R, rotation and z.
     """
-    lent = _lent(sums, grid)[: grid.n_two]
-    return np.ascontiguousarray(lent[..., 2] / lent[..., 0])
+    mean, covariance = _numbers(_lent(sums[None], grid)[0])
+    variance = np.diagonal(covariance, axis1=-2, axis2=-1)
+    return np.concatenate([mean, 1 / np.sqrt(np.maximum(variance, 1.0))], axis=-1)
 
 
-def velocity_numbers(sums, grid):
-    """Return means, dispersions and correlations of cells, shape (..., 9), in km/s and pure numbers."""
+def gaussians(sums, grid, frame=None, fourth=None):
+    """Return share, means, dispersions and correlations of the parts of cells.
+
+    Parameters
+    ----------
+    sums : ndarray, shape (p, n_R, n_z, n_phi, 10)
+    grid : Grid
+    frame, fourth : ndarray, optional
+        As for `kernels.fields.deposit_orbits`: the parts are drawn together until the fourth moment fits.
+
+    Returns
+    -------
+    ndarray, shape (p, n_R, n_z, n_phi, 10)
+        In km/s and pure numbers.
+
+    Notes
+    -----
+    Gaussians of sharply cut parts fall off too early where the whole has the wings of a Gaussian or more. All
+    displacements from the cell's mean are then shrunk by one factor f in each ring, and what they lose in variance,
+    (1 - f^2) of the covariance between the parts, is given to each part, which leaves the cell's second moments as
+    they are. The fourth moment that decides is the one across the rotation: wings along it are the parts' own.
+    """
     lent = _lent(sums, grid)
-    m = lent[..., 1:] / lent[..., :1]
-    mean = m[..., :3]
-    sigma = np.sqrt(np.maximum(m[..., 3:6] - mean**2, 1.0))
+    share = lent[..., :1] / lent[..., :1].sum(axis=0)
+    mean, covariance = _numbers(lent)
+    whole = np.sum(share * mean, axis=0)
+    offset = mean - whole
+    between = np.sum(share[..., None] * offset[..., None] * offset[..., None, :], axis=0)
+    if fourth is not None:
+        f = _shrinkage(sums[..., 0].sum(axis=0), share[..., 0], whole, offset, covariance, between, frame, fourth)
+        mean = whole + f * offset
+        covariance = covariance + (1 - f**2)[..., None] * between
+    sigma = np.sqrt(np.maximum(np.diagonal(covariance, axis1=-2, axis2=-1), 1.0))
     pairs = ((0, 1), (0, 2), (1, 2))
-    cross = [m[..., 6 + i] - mean[..., a] * mean[..., b] for i, (a, b) in enumerate(pairs)]
-    scale = [sigma[..., a] * sigma[..., b] for a, b in pairs]
-    return np.concatenate([mean, sigma, np.clip(np.stack(cross, -1) / np.stack(scale, -1), -0.95, 0.95)], axis=-1)
+    cross = np.stack([covariance[..., a, b] / (sigma[..., a] * sigma[..., b]) for a, b in pairs], axis=-1)
+    return np.concatenate([share, mean, sigma, np.clip(cross, -0.95, 0.95)], axis=-1)
+
+
+def _shrinkage(weight, share, whole, offset, covariance, between, frame, fourth):
+    """Return the factor of displacements at which (x_R^2 + x_z^2)^2 of the Gaussians fits that of the deposits."""
+    across = [0, 2]
+    scale = frame[..., 3:][..., across]
+    whole = (whole - frame[..., :3])[..., across] * scale
+    offset = offset[..., across] * scale
+    square = scale[..., :, None] * scale[..., None, :]
+    covariance, between = (a[..., across, :][..., across] * square for a in (covariance, between))
+    model = []
+    for f in _SHRINK:
+        x, c = whole + f * offset, covariance + (1 - f**2) * between
+        trace = c[..., 0, 0] + c[..., 1, 1]
+        wing = 2 * np.sum(c**2, axis=(-2, -1)) + 4 * np.einsum("...i,...ij,...j", x, c, x)
+        model.append(_pooled(weight * np.sum(share * ((np.sum(x**2, axis=-1) + trace) ** 2 + wing), axis=0)))
+    model, wanted = np.array(model), _pooled(fourth)
+    over = np.count_nonzero(model > wanted, axis=0)  # the more the displacements shrink, the longer the wings
+    low = np.clip(over - 1, 0, len(_SHRINK) - 2)
+    upper, lower = (np.take_along_axis(model, (low + i)[None], axis=0)[0] for i in (0, 1))
+    part = (upper - wanted) / np.where(upper > lower, upper - lower, 1.0)
+    f = _SHRINK[low] + np.clip(part, 0, 1) * _SHRINK[1]
+    return np.where(wanted > 0, f, 1.0)[..., None]
+
+
+def _pooled(cells):
+    """Return sums over a ring and its neighbours in R and |z|, shape (n_R, n_z, 1)."""
+    padded = np.pad(cells.sum(axis=2), 1)
+    return sum(padded[i : i + cells.shape[0], j : j + cells.shape[1]] for i in range(3) for j in range(3))[..., None]
 
 
 def _smooth(array, axis):
@@ -112,33 +182,35 @@ def node_correction(ln_rho, grid):
     return total
 
 
-def encode(sums, scale, grid):
+def encode(sums, scale, grid, frame=None, fourth=None):
     """Turn an element's sums into stored integers.
 
     Parameters
     ----------
-    sums : ndarray, shape (2, n_R, n_z, n_phi, 10)
-        Deposits of the faster and the slower part.
+    sums : ndarray, shape (4, n_R, n_z, n_phi, 10)
+        Deposits of the parts.
     scale : float
         Turns a summed weight into a share of the born.
     grid : Grid
+    frame, fourth : ndarray, optional
+        See `gaussians`.
 
     Returns
     -------
-    one, two : ndarray of int16, shape (n_R, n_z, n_phi, 10) and (n_two, n_z, n_phi, 10)
+    ln_rho, four, two : ndarray of int16
+        Shapes (n_R, n_z, n_phi), (n_four, n_z, n_phi, 4, 10) and (n_R - n_four, n_z, n_phi, 2, 10).
     """
     with np.errstate(divide="ignore"):
-        ln_rho = np.log(sums[..., 0] * scale / grid.volumes())
-        whole = np.log(sums[..., 0].sum(axis=0) * scale / grid.volumes())
-    correction = node_correction(np.where(np.isfinite(whole), whole, np.nan), grid)
-    parts = []
-    for part, ln in zip(sums, ln_rho):
-        numbers = np.concatenate([(ln + correction)[..., None], velocity_numbers(part, grid)], axis=-1)
-        steps = np.repeat(STEPS, (1, 6, 3))
-        codes = np.clip(np.rint(np.nan_to_num(numbers / steps, neginf=0.0)), -32767, 32767).astype(np.int16)
-        codes[..., 0] = np.where(np.isfinite(ln), codes[..., 0], EMPTY)
-        parts.append(codes)
-    return parts[0], np.ascontiguousarray(parts[1][: grid.n_two])
+        ln = np.log(sums[..., 0].sum(axis=0) * scale / grid.volumes())
+    ln += node_correction(np.where(np.isfinite(ln), ln, np.nan), grid)
+    codes = np.rint(np.clip(np.nan_to_num(ln / STEPS[0], neginf=0.0), -32767, 32767))
+    ln_rho = np.where(np.isfinite(ln), codes, EMPTY).astype(np.int16)
+    n = grid.n_four
+    outer = gaussians(sums[::2] + sums[1::2], grid)[:, n:]
+    steps = STEPS[[3, 1, 1, 1, 1, 1, 1, 2, 2, 2]]
+    parts = (gaussians(sums, grid, frame, fourth)[:, :n], outer)
+    four, two = (np.rint(np.moveaxis(p, 0, -2) / steps).astype(np.int16) for p in parts)
+    return ln_rho, np.ascontiguousarray(four), np.ascontiguousarray(two)
 
 
 def batch_ratios(weights):

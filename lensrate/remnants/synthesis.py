@@ -27,7 +27,7 @@ from .cost import PILOT, steps
 from .equilibrium import CHUNK, Equilibrium, cells_of, solve
 from .fields import Grid, RemnantField
 from .kicked import galaxy_numbers
-from .moments import batch_ratios, encode, split_speeds
+from .moments import batch_ratios, encode, frames
 from .orbits import states_energies, step
 
 __all__ = ["HEIGHTS", "REGIONS", "Settings", "forget", "stellar_components", "synthesize"]
@@ -150,7 +150,8 @@ def synthesize(galaxy, potential, settings=None, *, jobs=1, executor=None, progr
         components=tuple(c.element for c in components),
         kick_edges=np.asarray(settings.kick_edges, dtype=float),
         grid=settings.grid,
-        one=stacked["one"],
+        ln_rho=stacked["ln_rho"],
+        four=stacked["four"],
         two=stacked["two"],
         batches=stacked["batches"],
         ends={k: stacked["ends"][..., i] for i, k in enumerate(("escaped", "beyond_20_kpc", "outside_grid"))},
@@ -219,7 +220,7 @@ def _element(component, equilibrium, number, stream, galaxy, potential, settings
     bins = (HEIGHTS.size - 3) / np.log(HEIGHTS[-2] / HEIGHTS[1])
     ring = np.array([galaxy.R0 - _RING, galaxy.R0 + _RING, np.log(HEIGHTS[1]), bins])
 
-    def follow(rng, n, split, sums, heights, ends):
+    def follow(rng, n, frame, sums, fourth, heights, ends):
         if stop is not None and stop.is_set():
             raise KeyboardInterrupt
         if equilibrium is None:
@@ -232,26 +233,29 @@ def _element(component, equilibrium, number, stream, galaxy, potential, settings
         order = np.argsort(states_energies(felt, rows)[:, 0], kind="stable")
         rows = np.ascontiguousarray(rows[order])
         span = (ages.young, ages.old, ages.growth, settings.stride)
-        kernels.deposit_orbits(kinds, pars, felt.omega, ds, rows, *span, grid.pack(), split, ring, sums, heights, ends)
+        cells = (grid.pack(), grid.n_four, frame)
+        kernels.deposit_orbits(kinds, pars, felt.omega, ds, rows, *span, *cells, ring, sums, fourth, heights, ends)
 
-    cells = (2, grid.n_R, grid.n_z, grid.n_phi, 10)
+    cells = (kernels.PARTS, grid.n_R, grid.n_z, grid.n_phi, 10)
     rngs = [np.random.default_rng(s) for s in stream.spawn(settings.batches + 1)]
-    sums, heights, ends = np.zeros(cells), np.zeros(HEIGHTS.size - 1), np.zeros(4)
-    follow(rngs[0], max(64, settings.tracers // PILOT), np.empty((0, grid.n_z, grid.n_phi)), sums, heights, ends)
-    split = split_speeds(sums[0], grid)
+    sums, fourth, heights, ends = np.zeros(cells), np.zeros(cells[1:4]), np.zeros(HEIGHTS.size - 1), np.zeros(4)
+    follow(rngs[0], max(64, settings.tracers // PILOT), np.zeros((*cells[1:4], 6)), sums, fourth, heights, ends)
+    frame = frames(sums.sum(axis=0), grid)
+    fourth[:] = 0.0
     total, heights, ends = np.zeros(cells), np.zeros(HEIGHTS.size - 1), np.zeros(4)
     weights = np.empty((settings.batches, *cells[1:4]))
     n = -(-settings.tracers // settings.batches)
     for b, rng in enumerate(rngs[1:]):
         sums[:] = 0.0
-        follow(rng, n, split, sums, heights, ends)
+        follow(rng, n, frame, sums, fourth, heights, ends)
         weights[b] = sums[..., 0].sum(axis=0)
         total += sums
     scale = settings.stride * ds / (ages.total * ends[0])
-    one, two = encode(total, scale, grid)
+    ln_rho, four, two = encode(total, scale, grid, frame, fourth)
     inside = total[..., 0].sum() * scale
     return {
-        "one": one,
+        "ln_rho": ln_rho,
+        "four": four,
         "two": two,
         "batches": batch_ratios(weights),
         "heights": heights * scale,

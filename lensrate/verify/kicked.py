@@ -49,7 +49,7 @@ def _both_height():
     model = _census().model
     field = model.kicked.field
     first = len(model.galaxy.components)
-    heights = field.heights.reshape(field.n_elements, -1)[model.kicked.rows[::2] // 2]
+    heights = field.heights.reshape(field.n_elements, -1)[model.kicked.elements]
     numbers = sum(element_numbers(n, model)[first:] for n in _DARK)
     return 1e3 * exponential_height(numbers @ heights, field.height_edges)
 
@@ -70,7 +70,7 @@ def _in_disc(R_max=20.0, z_max=0.2):
     field = model.kicked.field
     held = (node_density(field) * field.grid.volumes()).sum(axis=(2, 4)).reshape(field.n_elements, -1)
     first = len(model.galaxy.components)
-    layers = element_numbers("neutron_star", model)[first:] @ held[model.kicked.rows[::2] // 2]
+    layers = element_numbers("neutron_star", model)[first:] @ held[model.kicked.elements]
     below = np.concatenate([[0.0], np.cumsum(layers)])
     return float(np.interp(z_max, field.grid.edges()[1], below)) / _of("neutron_star", "born")
 

@@ -1,12 +1,13 @@
-"""How well two Gaussians a cell stand for the tracers: rate and tails of t_E, summed over a kick law.
+"""How well the Gaussians of a cell stand for the tracers: rate and tails of t_E, summed over a kick law.
 
     python tests/benchmarks/bench_closure.py [tracers per component] [fields]
 
 Three components are followed with kicks drawn from a law; wherever a tracer passes a place on one of five sightlines
 its velocity is noted. The relative motion to bulge-like sources of 8.2 kpc then gives the rate (mean speed) and the
 distribution of t_E at that place, once from the tracers themselves and once from the shipped fields' Gaussians.
-None of the sightlines was used when the rule for the Gaussians was chosen. The table ends with what each sightline
-sees: the means over places and components, weighted as their neutron stars contribute to the rate.
+Both fill the same ball around the place. None of the sightlines was used when the rule for the Gaussians was chosen.
+The table ends with what each sightline sees: the means over places and components, weighted as their neutron stars
+contribute to the rate.
 """
 
 import sys
@@ -28,10 +29,12 @@ from lensrate.units import KMS_PER_MASYR_KPC
 
 SIGHTLINES = [(2.0, -2.0), (-4.0, 3.0), (8.0, -4.0), (0.5, 2.0), (-1.5, -5.0)]
 DISTANCES = (4.0, 6.0, 7.0, 8.2)
-COMPONENTS = ("thin_disc_5_10", "thick_disc", "bulge")
+WIDTHS = (3.0, 1.5, 1.1, 0.9)  # kpc of the sightline that a distance stands for
+COMPONENTS = ("thin_disc", "thick_disc", "bulge")  # of the thin disc its oldest part
 LAW = "igoshev2020"
 RADIUS = 0.2  # kpc around a place
 SOURCE = 110.0  # km/s, dispersion of the sources per axis, at 8.2 kpc
+BALL = 100  # points at which the fields are read there
 FAR = 8.5  # kpc, distance of the sources in the geometry of the rate
 DRAWS = 8  # source velocities per note
 
@@ -82,21 +85,21 @@ def speeds(velocity, weight, line, D, rng):
 
 
 def from_field(field, component, shares, point, n, rng):
-    """Velocities drawn from the fields' Gaussians at a place, kick bins weighted by a law."""
+    """Velocities drawn from the fields' Gaussians around a place, kick bins weighted by a law, and the density."""
     import astropy.units as u
 
-    rho, mean, tensor = field.rows(*(np.array([q]) * u.kpc for q in point))
+    ball = rng.normal(size=(BALL, 3))
+    ball *= RADIUS * rng.uniform(size=(BALL, 1)) ** (1 / 3) / np.linalg.norm(ball, axis=1)[:, None]
+    rho, mean, tensor = (q.value for q in field.rows(*((point + ball).T * u.kpc)))
+    per_element = len(rho) // field.n_elements
     first = field.element(component, 0)
-    rows = np.arange(2 * first, 2 * (first + len(shares)))
-    weight = np.repeat(shares, 2) * rho[rows, 0].value
-    counts = rng.multinomial(n, weight / weight.sum())
-    out = []
-    for r, c in zip(rows, counts):
-        if c:
-            xx, yy, zz, xy, xz, yz = tensor[r, 0].value
-            cov = np.array([[xx, xy, xz], [xy, yy, yz], [xz, yz, zz]])
-            out.append(rng.multivariate_normal(mean[r, 0].value, cov, size=c, check_valid="ignore"))
-    return np.concatenate(out), weight.sum()
+    rows = slice(per_element * first, per_element * (first + len(shares)))
+    weight = np.repeat(shares, per_element)[:, None] * rho[rows]
+    mean, tensor = mean[rows][weight > 0], tensor[rows][weight > 0]
+    chosen = rng.choice(len(mean), size=n, p=weight[weight > 0] / weight.sum())
+    root = np.linalg.cholesky(tensor[:, [0, 3, 4, 3, 1, 5, 4, 5, 2]].reshape(-1, 3, 3))
+    drawn = mean[chosen] + np.einsum("nij,nj->ni", root[chosen], rng.normal(size=(n, 3)))
+    return drawn, weight.sum() / BALL
 
 
 def tails(speed, rate):
@@ -119,8 +122,8 @@ def main(tracers=400_000, fields="default"):
     print(f"{tracers} tracers a component, law {LAW}, fields {fields}; errors of Gaussians against tracers in per cent")
     print("component        l     b    D   notes   rate  +-   long 5 %  short 5 %")
     summary = []
-    for name in COMPONENTS:
-        component = next(c for c in galaxy.components if c.element == name)
+    for component in {c.name: c for c in galaxy.components if c.name in COMPONENTS}.values():
+        name = component.element
         mass = stellar_mass(component.density, galaxy.R0)
         equilibrium = solve(component, galaxy, felt, rng, bundles=4096, jobs=2)
         ages = window(component)
@@ -150,7 +153,7 @@ def main(tracers=400_000, fields="default"):
             low, high = tails(a, ra)
             long = rb[b < low].sum() / rb.sum() / 0.05 - 1
             short = rb[b > high].sum() / rb.sum() / 0.05 - 1
-            lensing = D**2 * np.sqrt(max(1 / D - 1 / FAR, 0.0)) * rb.mean()
+            lensing = WIDTHS[p % len(DISTANCES)] * D**2 * np.sqrt(max(1 / D - 1 / FAR, 0.0)) * rb.mean()
             summary.append((p // len(DISTANCES), mass * density * lensing, rate, long, short))
             l, b_ = SIGHTLINES[p // len(DISTANCES)]
             where = f"{name:15s} {l:5.1f} {b_:5.1f} {D:4.1f} {len(mine):7d}"

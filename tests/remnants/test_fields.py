@@ -9,9 +9,10 @@ import pytest
 from lensrate.errors import DataFileError, InputError
 from lensrate.galaxy.model import Galaxy
 from lensrate.galaxy.potential import Potential
+from lensrate.kernels.fields import _part
 from lensrate.remnants.equilibrium import cells_of
 from lensrate.remnants.fields import Grid, RemnantField
-from lensrate.remnants.moments import batch_ratios, encode, velocity_numbers
+from lensrate.remnants.moments import batch_ratios, encode, frames, gaussians
 from lensrate.remnants.synthesis import Settings, synthesize
 
 GALAXY = Galaxy.read("default")
@@ -36,21 +37,33 @@ def cell_masses(density, grid, nodes=6):
 
 
 def gaussian_field(name):
-    """A field of known density and of one Gaussian everywhere, drawn as a pair where cells hold two."""
+    """A field of known density and of one Gaussian everywhere, drawn as several that are alike."""
     mass = cell_masses(BY_NAME[name].density, GRID) / cells_of(BY_NAME[name], GALAXY, POTENTIAL).mass
     mean, tensor = np.array([5.0, 150.0, -3.0]), np.array([60.0**2, 50.0**2, 40.0**2, 900.0, -300.0, 200.0])
     pairs = [mean[0] ** 2, mean[1] ** 2, mean[2] ** 2, mean[0] * mean[1], mean[0] * mean[2], mean[1] * mean[2]]
     moments = np.concatenate([[1.0], mean, tensor + pairs])
-    half = np.where(np.arange(GRID.n_R) < GRID.n_two, 0.5, 0.0)[:, None, None]
-    sums = np.stack([mass * (1 - half), mass * half])[..., None] * moments * 1e6
-    one, two = encode(sums, 1e-6, GRID)
+    inner = (np.arange(GRID.n_R) < GRID.n_four)[:, None, None]
+    parts = np.where(inner, 0.25, np.array([0.5, 0.0, 0.5, 0.0]).reshape(4, 1, 1, 1))
+    return as_field(name, *encode((parts * mass)[..., None] * moments * 1e6, 1e-6, GRID)), mean, tensor
+
+
+def as_field(name, ln_rho, four, two):
+    """A field of one element."""
     blocks = np.full((1, 1, 2, GRID.n_R // 2, GRID.n_z // 2, GRID.n_phi // 2), 1000, dtype=np.int16)
     ends = {k: np.zeros((1, 1)) for k in ("escaped", "beyond_20_kpc", "outside_grid")}
     edges = np.array([0.0, 1.0, np.inf])
     return RemnantField(
-        (name,), np.array([0.0]), GRID, one[None, None], two[None, None], blocks, ends, np.zeros((1, 1, 2)), edges,
-        np.radians(27), {}, {"seed": 1},
-    ), mean, tensor
+        (name,), np.array([0.0]), GRID, ln_rho[None, None], four[None, None], two[None, None], blocks, ends,
+        np.zeros((1, 1, 2)), edges, np.radians(27), {}, {"seed": 1},
+    )
+
+
+def whole_moments(field, place, element=0):
+    """Mean velocity and dispersion tensor of an element's Gaussians together."""
+    rho, v, c = (q.value[4 * element : 4 * element + 4, 0] for q in field.rows(*(np.array([q]) * u.kpc for q in place)))
+    second = c[:, [0, 3, 4, 3, 1, 5, 4, 5, 2]].reshape(4, 3, 3) + v[:, :, None] * v[:, None]
+    mean = rho @ v / rho.sum()
+    return mean, np.tensordot(rho, second, 1) / rho.sum() - np.outer(mean, mean)
 
 
 def test_volumes_fill_the_cylinder():
@@ -83,7 +96,8 @@ def test_velocities_come_back_and_fold_by_the_exact_symmetries():
     assert c[0, 0] == pytest.approx([rr, tt, zz, -rt, -rz, tz], abs=60)
     assert c[0, 1] == pytest.approx([rr, tt, zz, -rt, rz, -tz], abs=60)
     assert c[0, 2] == pytest.approx([rr, tt, zz, -rt, rz, -tz], abs=60)
-    assert np.all(rho.value[1, :3] == 0) and rho.value[1, 3] == pytest.approx(rho.value[0, 3], rel=0.02)
+    assert np.all(rho.value[[1, 3], :3] == 0) and np.all(rho.value[2, :3] == rho.value[0, :3])
+    assert rho.value[:, 3] == pytest.approx(np.full(4, rho.value[0, 3]), rel=1e-9)
     outside = field.rows([25.0] * u.kpc, [0.0] * u.kpc, [0.0] * u.kpc)[0]
     assert np.all(outside.value == 0)
 
@@ -109,9 +123,61 @@ def test_rare_cells_borrow_from_their_ring():
     moments = np.array([1.0, 10, 150, 0, 100 + 2500, 150**2 + 1600, 900, 1500, 0, 0])
     sums[10, 3] = 1e4 * moments
     sums[10, 3, 5] = moments * 1e-3
-    numbers = velocity_numbers(sums, GRID)
-    assert numbers[10, 3, 5] == pytest.approx([10, 150, 0, 50, 40, 30, 0, 0, 0], abs=0.1)
-    assert np.all(np.isfinite(numbers)) and np.all(numbers[..., 3:6] > 0)
+    numbers = gaussians(sums[None], GRID)[0]
+    assert numbers[10, 3, 5] == pytest.approx([1, 10, 150, 0, 50, 40, 30, 0, 0, 0], abs=0.1)
+    assert np.all(np.isfinite(numbers)) and np.all(numbers[..., 4:7] > 0)
+
+
+def ball_deposits(rng, n, power, scale):
+    """Velocities with density r^power exp(-r^2 / 2), the same in every cell, divided as orbits are."""
+    direction = rng.normal(size=(n, 3))
+    r = np.sqrt(2 * rng.gamma(0.5 * (3 + power), size=n))
+    v = direction / np.linalg.norm(direction, axis=1)[:, None] * r[:, None] * scale + [10.0, 80.0, 0.0]
+    products = [v[:, a] * v[:, b] for a, b in ((0, 0), (1, 1), (2, 2), (0, 1), (0, 2), (1, 2))]
+    rows = np.column_stack([np.ones(n), v, *products])
+    frame = frames(np.tile(rows.sum(axis=0), (GRID.n_R, GRID.n_z, GRID.n_phi, 1)), GRID)
+    x = (v - frame[0, 0, 0, :3]) * frame[0, 0, 0, 3:]
+    part = np.array([_part.py_func(True, *row) for row in x])
+    sums = np.zeros((4, GRID.n_R, GRID.n_z, GRID.n_phi, 10))
+    sums[:] = np.array([rows[part == i].sum(axis=0) for i in range(4)])[:, None, None, None]
+    fourth = np.full(sums.shape[1:4], np.sum((x[:, 0] ** 2 + x[:, 2] ** 2) ** 2))
+    return v, part, sums, frame, fourth
+
+
+@pytest.mark.parametrize("power", [0, 2])
+def test_four_gaussians_keep_the_second_and_fit_the_fourth_moments(power):
+    rng = np.random.default_rng(8)
+    v, part, sums, frame, fourth = ball_deposits(rng, 40_000, power, 60.0)
+    assert np.bincount(part) / part.size == pytest.approx(np.full(4, 0.25), abs=0.01)  # equal cones
+    share, m, s, c = np.split(gaussians(sums, GRID, frame, fourth)[:, 3, 3, 3], (1, 4, 7), axis=1)
+    pairs = c[:, [0, 0, 1, 0, 0, 2, 1, 2, 0]].reshape(4, 3, 3)
+    tensor = s[:, :, None] * s[:, None] * np.where(np.eye(3) == 1, 1.0, pairs)
+    mean = np.sum(share * m, axis=0)
+    second = np.sum(share[..., None] * (tensor + (m - mean)[:, :, None] * (m - mean)[:, None]), axis=0)
+    assert mean == pytest.approx(v.mean(axis=0), abs=0.1)
+    assert second == pytest.approx(np.cov(v.T), abs=0.005 * second[0, 0])
+    drawn = np.concatenate(
+        [rng.multivariate_normal(a, t, round(100_000 * w)) for a, t, w in zip(m, tensor, share[:, 0])]
+    )
+    # across the rotation <w^4> / <w^2>^2 is 2 for a Gaussian, and for r^2 exp(-r^2 / 2),
+    # whose r^2 is a chi square of five, 35 (8 / 15) / (5 (2 / 3))^2
+    across = np.sum((drawn - mean)[:, ::2] ** 2, axis=1)
+    wanted = {0: 2.0, 2: 1.68}[power]
+    assert np.mean(across**2) / np.mean(across) ** 2 == pytest.approx(wanted, rel=0.02)
+
+
+def test_cells_with_four_and_two_gaussians_agree_on_second_moments_everywhere():
+    v, _, sums, frame, fourth = ball_deposits(np.random.default_rng(8), 40_000, 2, 60.0)
+    sums[0, GRID.n_four :] += sums[1, GRID.n_four :]
+    sums[2, GRID.n_four :] += sums[3, GRID.n_four :]
+    sums[1::2, GRID.n_four :] = 0.0
+    field = as_field("ball", *encode(sums, 1e-9, GRID, frame, fourth))
+    border = GRID.edges()[0][GRID.n_four]
+    # at the middle of four, across the border to two, in the plane where each cell meets its mirror image, and below it
+    for place in ([-1.0, 0, 0.5], [-border, 0, 0.5], [-3.0, 0, 0.5], [-1.0, 0, 0.0], [-1.0, 0, 0.005], [-1.0, 0, -0.5]):
+        mean, tensor = whole_moments(field, place)
+        assert mean == pytest.approx([-10, 80, 0], abs=1)
+        assert tensor == pytest.approx(np.cov(v.T) * np.outer([-1, 1, 1], [-1, 1, 1]), abs=0.015 * 6000)
 
 
 def test_batches_measure_the_scatter():
@@ -125,7 +191,7 @@ def test_file_round_trip(tmp_path):
     field, _, _ = gaussian_field("bulge")
     path = field.write(tmp_path / "field.fits")
     again = RemnantField.read(path)
-    for name in ("one", "two", "batches", "heights", "kick_edges", "height_edges"):
+    for name in ("ln_rho", "four", "two", "batches", "heights", "kick_edges", "height_edges"):
         assert np.array_equal(getattr(field, name), getattr(again, name))
     assert again.components == ("bulge",) and again.provenance == {"seed": 1} and again.grid == GRID
     with pytest.raises(InputError, match="exists"):
@@ -166,12 +232,12 @@ def test_synthesis_does_not_depend_on_threads_and_resumes(small, tmp_path):
     again = synthesize(THICK, POTENTIAL, SMALL, jobs=2, checkpoint=tmp_path)
     resumed = synthesize(THICK, POTENTIAL, SMALL, checkpoint=tmp_path)
     for other in (again, resumed):
-        for name in ("one", "two", "batches", "heights"):
+        for name in ("ln_rho", "four", "two", "batches", "heights"):
             assert np.array_equal(getattr(small, name), getattr(other, name))
     assert len(list(tmp_path.glob("*/*.npz"))) == 5  # four elements and their equilibrium
     assert resumed.mismatch == small.mismatch
     other = synthesize(THICK, POTENTIAL, replace(SMALL, seed=4), checkpoint=tmp_path)
-    assert not np.array_equal(small.one, other.one)
+    assert not np.array_equal(small.ln_rho, other.ln_rho)
 
 
 def test_unkicked_tracers_stay_where_the_stars_are(small):
@@ -181,10 +247,10 @@ def test_unkicked_tracers_stay_where_the_stars_are(small):
         assert regions[name] == pytest.approx(1, abs=0.1)
     assert small.ends["outside_grid"][0, 0] < 0.05
     # Bensby+ 2003 (seen): lag 46 km/s, dispersions 67, 38, 35 km/s; only the density was asked of the weights
-    _, v, c = (q.value[0, 0] for q in small.rows([-8.2] * u.kpc, [0.0] * u.kpc, [0.2] * u.kpc))
+    v, c = whole_moments(small, [-8.2, 0.0, 0.2])
     assert v[1] == pytest.approx(233 - 46, abs=15) and abs(v[0]) < 20
-    assert np.sqrt(c[0]) == pytest.approx(67, rel=0.2)
-    assert np.sqrt(c[2]) == pytest.approx(35, rel=0.2)
+    assert np.sqrt(c[0, 0]) == pytest.approx(67, rel=0.2)
+    assert np.sqrt(c[2, 2]) == pytest.approx(35, rel=0.2)
 
 
 def test_kicks_puff_up_and_expel(small):
