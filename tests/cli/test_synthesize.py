@@ -18,7 +18,7 @@ from lensrate.errors import DataFileError
 from lensrate.remnants.fields import RemnantField
 
 SMALL = ["--tracers", "256", "--bundles", "64", "--iterations", "10"]
-ARRAYS = ("ONE", "TWO", "BATCHES", "ENDS", "HEIGHTS")
+ARRAYS = ("LN_RHO", "FOUR", "TWO", "BATCHES", "ENDS", "HEIGHTS")
 
 
 def run(*args):
@@ -133,8 +133,8 @@ def test_damaged_and_foreign_files_are_refused_by_name(made, tmp_path):
     fits.PrimaryHDU(np.zeros((3, 3))).writeto(tmp_path / "foreign.fits")
     shutil.copy(made[0], tmp_path / "later.fits")
     with fits.open(tmp_path / "later.fits", mode="update", checksum=True) as hdus:
-        hdus[0].header["LRFIELD"] = "lensrate remnant field 2"
-    for name, word in (("foreign.fits", "no such mark"), ("later.fits", "field 2")):
+        hdus[0].header["LRFIELD"] = "lensrate remnant field 3"
+    for name, word in (("foreign.fits", "no such mark"), ("later.fits", "field 3")):
         with pytest.raises(DataFileError, match=word) as refused:
             RemnantField.read(tmp_path / name)
         assert name in str(refused.value) and "lensrate synthesize" in str(refused.value)
