@@ -16,7 +16,7 @@ def kicked_scenario(tmp_path_factory):
     """Path of a scenario of a young disc, an old disc and a bulge with quickly made fields."""
     folder = tmp_path_factory.mktemp("kicked")
     head, *rows = (data_folder() / "galaxy" / "default.toml").read_text().split("[[component]]\n")
-    kept = [r for r in rows if any(f'"{n}"' in r for n in ("thin_disc_0_1", "thin_disc_5_10", "bulge"))]
+    kept = [r for r in rows if any(f'"{n}"' in r for n in ("thin_disc_young", "thin_disc_old", "bulge"))]
     (folder / "galaxy.toml").write_text("[[component]]\n".join([head, *kept]))
     path = folder / "small.toml"
     path.write_text(f'base = "default"\nfields = ""\ngalaxy = "{folder / "galaxy.toml"}"\n')

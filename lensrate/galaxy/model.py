@@ -24,7 +24,7 @@ COUNTS = ("total", "luminous", "stars+brown dwarfs")
 class Component:
     """One element of the stellar Galaxy: a density, a velocity distribution and how its stars were born.
 
-    `name` groups elements for reports (thin_disc), `element` tells them apart (thin_disc_0_1).
+    `name` groups elements for reports (thin_disc), `element` tells them apart (thin_disc_young).
     """
 
     name: str

@@ -106,7 +106,7 @@ def test_people_get_a_table_with_its_conditions():
         assert words in out
     assert "igoshev2020" in out and max(map(len, out.splitlines() + err.splitlines())) <= 100
     by_element = run("sightline", "1", "-3", "--by", "element", *FAST)[1]
-    assert "thin_disc_5_10" in by_element
+    assert "thin_disc_old" in by_element
     assert run("sightline", "1", "-3", "--quiet")[2] == ""
 
 

@@ -42,7 +42,7 @@ def scenario(tmp_path_factory):
     """A Galaxy of a young and an old disc only, so that orbits are few."""
     folder = tmp_path_factory.mktemp("galaxy")
     head, *rows = (data_folder() / "galaxy" / "default.toml").read_text().split("[[component]]\n")
-    kept = [r for r in rows if "thin_disc_0_1" in r or 'name = "thick_disc"' in r]
+    kept = [r for r in rows if "thin_disc_young" in r or 'name = "thick_disc"' in r]
     (folder / "galaxy.toml").write_text("[[component]]\n".join([head, *kept]))
     path = folder / "two.toml"
     path.write_text(f'base = "default"\ngalaxy = "{folder / "galaxy.toml"}"\n')
@@ -60,7 +60,7 @@ def made(scenario, tmp_path_factory):
 
 def test_report_and_provenance(made, scenario):
     path, out, err = made
-    assert "thin_disc_0_1" in out and "error" in out and max(map(len, (out + err).splitlines())) <= 100
+    assert "thin_disc_young" in out and "error" in out and max(map(len, (out + err).splitlines())) <= 100
     assert "memory" in err and "100 %" in err
     assert [p.name for p in path.parent.iterdir()] == ["two.fits"]
     made = RemnantField.read(path).provenance

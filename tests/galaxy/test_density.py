@@ -35,7 +35,7 @@ class TestThickDisc(DensityContract):
 
 
 class TestIsothermalDisc(DensityContract):
-    density = DEFAULT["thin_disc_5_10"]
+    density = DEFAULT["thin_disc_old"]
     lengths = (2.6, 0.5)
     column = 19.5472 * PC2
     mass = disc_mass(column, 2.6, 4.0)
@@ -46,7 +46,7 @@ class TestIsothermalDisc(DensityContract):
 
 
 class TestYoungDisc(DensityContract):
-    density = DEFAULT["thin_disc_0_1"]
+    density = DEFAULT["thin_disc_young"]
     lengths = (2.6, 0.1)
     column = density.column.to_value(u.Msun / u.kpc**2)
     mass = disc_mass(column, 2.6, 4.0)

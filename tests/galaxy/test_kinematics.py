@@ -106,7 +106,7 @@ def test_drift_at_the_sun():
 
 
 def test_disc_dispersions_fall_and_freeze():
-    component = element("thin_disc_5_10")
+    component = element("thin_disc_old")
     R = np.array([0.3, 1.5, 8.178, 12.0])
     _, tensor = motion(component, DEFAULT, 0.0, R, 0.0)
     # on the y axis the radial direction is y
@@ -166,5 +166,5 @@ def test_kinds_are_unique_and_fields_fit_the_kernel():
     assert len(set(kinds)) == len(kinds)
     bar = BarMotion(1, 2, 3, 0.1, 0.2, 0.3, 90, 5, 6).pack(8.0, None)
     assert bar == pytest.approx([1, 2, 3, 0.1, 0.2, 0.3, np.pi / 2, 5, 6])
-    disc = DiscMotion(1, 2, 3, 0.1, 0.2, 7).pack(8.0, element("thin_disc_0_1").density)
+    disc = DiscMotion(1, 2, 3, 0.1, 0.2, 7).pack(8.0, element("thin_disc_young").density)
     assert disc == pytest.approx([1, 2, 3, 0.1, 0.2, 8.0, 7, 2.6, 4.0])

@@ -11,7 +11,7 @@ from lensrate.scenario import Scenario, resolve
 from lensrate.units import DAYS_PER_YEAR, KAPPA, MAS
 
 PHI = 2 * np.pi * (np.arange(192) + 0.5) / 192
-LENSES = {"thin_disc_5_10": 3, "bulge": 5}
+LENSES = {"thin_disc_old": 3, "bulge": 5}
 
 
 def ready(l, b, sources, **numerics):

@@ -133,9 +133,9 @@ def test_young_remnants_follow_the_disc_more_closely(scenario):
     volume = field.grid.volumes()
     cubes = node_density(field) * volume
     remnants = np.tensordot(cubes[:, 1:], law.inside, axes=([1], [0])).sum(axis=-1)
-    stars = cubes[field.components.index("thin_disc_0_1"), 0].sum(axis=-1)
+    stars = cubes[field.components.index("thin_disc_young"), 0].sum(axis=-1)
     overlap = {name: np.minimum(remnants[i], stars).sum() / stars.sum() for i, name in enumerate(field.components)}
-    assert overlap["thin_disc_0_1"] > 1.1 * overlap["thin_disc_5_10"]
+    assert overlap["thin_disc_young"] > 1.1 * overlap["thin_disc_old"]
 
 
 def test_maps_hold_the_objects_inside_their_frame(scenario, count):

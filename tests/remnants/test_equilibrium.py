@@ -55,7 +55,7 @@ def test_cells_of_a_bar_hold_the_mass_of_drawn_points():
     assert cells.mass == pytest.approx(BY_NAME["bulge"].density.mass.value, rel=2e-3)
 
 
-@pytest.mark.parametrize("name", ["thick_disc", "thin_disc_5_10", "nuclear_disc", "halo"])
+@pytest.mark.parametrize("name", ["thick_disc", "thin_disc_old", "nuclear_disc", "halo"])
 def test_analytic_births_fill_the_cells(name):
     cells = cells_of(BY_NAME[name], GALAXY, POTENTIAL)
     n = 40_000
@@ -108,7 +108,7 @@ def test_kicks_fill_their_bin_evenly_and_in_all_directions():
 
 def test_windows_of_ages():
     gyr = 1e3 * KPC_PER_MYR
-    bulge, thin = window(BY_NAME["bulge"]), window(BY_NAME["thin_disc_5_10"])
+    bulge, thin = window(BY_NAME["bulge"]), window(BY_NAME["thin_disc_old"])
     assert (bulge.young / gyr, bulge.old / gyr, bulge.growth) == pytest.approx((8, 10, 0))
     assert (thin.young / gyr, thin.old / gyr, thin.growth * gyr) == pytest.approx((5, 10, 1 / 8.5))
     ages = np.linspace(thin.young, thin.old, 20_001)
