@@ -3,7 +3,17 @@
 Standing here, this file also puts its folder (with contracts.py) on the import path.
 """
 
+import contextlib
+import tempfile
+
 import pytest
+
+# galpy writes a settings file into the home folder when first imported: it gets a folder of its own
+with tempfile.TemporaryDirectory() as _folder, pytest.MonkeyPatch.context() as _patch:
+    _patch.setenv("HOME", _folder)
+    with contextlib.suppress(ImportError):
+        import galpy.orbit
+        import galpy.potential  # noqa: F401
 
 from lensrate.datafiles import data_folder
 from lensrate.galaxy.potential import Potential

@@ -11,6 +11,7 @@ os.environ.setdefault("OMP_NUM_THREADS", "1")
 
 import platform
 import sys
+import tempfile
 import time
 import warnings
 from pathlib import Path
@@ -21,6 +22,8 @@ import numpy as np
 sys.path[:0] = [str(Path(__file__).parents[1] / "remnants"), str(Path(__file__).parents[1])]
 warnings.simplefilter("ignore")
 
+# galpy writes a settings file into the home folder when first imported
+os.environ["HOME"] = tempfile.mkdtemp()
 from galpy.orbit import Orbit
 from galpy.potential import MiyamotoNagaiPotential, NFWPotential, PlummerPotential, SoftenedNeedleBarPotential
 from test_orbits import population
