@@ -20,9 +20,12 @@ __all__ = ["STEPS", "Grid", "RemnantField"]
 STEPS = np.array([0.01, 1.0, 0.04, 0.002])
 _BATCH_STEP = 1e-3
 _FORMAT = "lensrate remnant field 2"
-_TWO_GAUSSIANS = "lensrate remnant field 1"
 _WAY_OUT = "fetch it again, or make one with 'lensrate synthesize'"
 _ENDS = ("escaped", "beyond_20_kpc", "outside_grid")
+
+
+#: largest error of a column through the default grid's own cells, measured in tests/remnants/test_fields.py
+GRID_ERROR = 0.005
 
 
 @dataclass(frozen=True)
@@ -309,8 +312,6 @@ class RemnantField:
                 warnings.simplefilter("error", AstropyWarning)  # a wrong checksum is a warning there, an error here
                 # the file is opened here, since astropy leaves it open where a checksum is wrong
                 with open(path, "rb") as handle, fits.open(handle, checksum=True, memmap=False) as hdus:
-                    if hdus[0].header.get("LRFIELD") == _TWO_GAUSSIANS:
-                        return cls._from_two_gaussians(hdus)
                     if hdus[0].header.get("LRFIELD") != _FORMAT:
                         found = hdus[0].header.get("LRFIELD", "no such mark")
                         raise DataFileError(
@@ -332,47 +333,16 @@ class RemnantField:
         shape = (len(made["components"]), len(made["kick_edges_kms"]))
         cells = (grid.n_z, grid.n_phi)
         ln_rho, four, two = (np.array(hdus[n].data, dtype=np.int16) for n in ("LN_RHO", "FOUR", "TWO"))
-        return cls._from_parts(
-            hdus, made, grid, ln_rho.reshape(*shape, grid.n_R, *cells),
-            _first_last(four.reshape(*shape, 4, 10, grid.n_four, *cells)),
-            _first_last(two.reshape(*shape, 2, 10, grid.n_R - grid.n_four, *cells)),
-        )  # fmt: skip
-
-    @classmethod
-    def _from_two_gaussians(cls, hdus):
-        """Read the earlier form, whose inner cells hold a faster and a slower Gaussian and outer ones one."""
-        made = json.loads(hdus["MADE"].data.tobytes().decode())
-        made["grid"] = {k: v for k, v in made["grid"].items() if k != "R_two"}
-        grid = Grid(**made["grid"])
-        shape, cells = (len(made["components"]), len(made["kick_edges_kms"])), (grid.n_z, grid.n_phi)
-        stored = (np.array(hdus[n].data, dtype=np.int16) for n in ("ONE", "TWO"))
-        fast, slow = (np.moveaxis(a.reshape(*shape, 10, -1, *cells), 2, -1).astype(float) for a in stored)
-        n_two = slow.shape[2]
-        both = np.stack([fast, np.concatenate([slow, fast[:, :, n_two:]], axis=2)], axis=-2)
-        ln = np.where(both[..., 0] == kernels.EMPTY, -np.inf, both[..., 0] * STEPS[0])
-        ln[:, :, n_two:] -= np.log(2)
-        whole = np.logaddexp(ln[..., 0], ln[..., 1])
-        share = np.exp(ln - np.where(np.isfinite(whole), whole, 0.0)[..., None])
-        both[..., 0] = np.where(np.isfinite(whole)[..., None], share, 0.5) / STEPS[3]
-        both[..., 1:] *= np.repeat([0.25 / STEPS[1], 0.02 / STEPS[2]], (6, 3))
-        ln_rho = np.where(np.isfinite(whole), whole / STEPS[0], kernels.EMPTY)
-        ln_rho, both = (np.rint(a).astype(np.int16) for a in (ln_rho, both))
-        four = np.repeat(both[:, :, : grid.n_four], 2, axis=-2)
-        four[..., 0] //= 2
-        return cls._from_parts(hdus, made, grid, ln_rho, four, np.ascontiguousarray(both[:, :, grid.n_four :]))
-
-    @classmethod
-    def _from_parts(cls, hdus, made, grid, ln_rho, four, two):
         ends, heights = (np.array(hdus[n].data, dtype=float) for n in ("ENDS", "HEIGHTS"))
         batches = np.array(hdus["BATCHES"].data, dtype=np.int16)
         return cls(
             components=tuple(made["components"]),
             kick_edges=np.array(made["kick_edges_kms"]),
             grid=grid,
-            ln_rho=ln_rho,
-            four=four,
-            two=two,
-            batches=batches.reshape(*ln_rho.shape[:2], -1, grid.n_R // 2, grid.n_z // 2, grid.n_phi // 2),
+            ln_rho=ln_rho.reshape(*shape, grid.n_R, *cells),
+            four=_first_last(four.reshape(*shape, 4, 10, grid.n_four, *cells)),
+            two=_first_last(two.reshape(*shape, 2, 10, grid.n_R - grid.n_four, *cells)),
+            batches=batches.reshape(*shape, -1, grid.n_R // 2, grid.n_z // 2, grid.n_phi // 2),
             ends=dict(zip(_ENDS, ends)),
             heights=heights,
             height_edges=np.array(made["height_edges_kpc"]),
