@@ -159,7 +159,7 @@ def report(result, by):
         head.append(
             wrap(
                 f"kicks: {laws}; sampling error of their rates {', '.join(parts) or 'none'}; "
-                f"systematic: fields hold the stars here to {result.field_mismatch:+.1%}"
+                f"grid 0.5%; systematic: fields hold the stars here to {result.field_mismatch:+.1%}"
             )
         )
     if result.mass_note:

@@ -51,7 +51,7 @@ _LN2_LOW = 1.90821492927058770002e-10
 _TWO52 = 4503599627370496.0
 
 
-@kernel(fastmath={"contract"})
+@kernel
 def log(x):
     """Return ln x to 1e-15 absolute and relative; for positive normal numbers only.
 

@@ -33,11 +33,9 @@ FAR = 20.0  # kpc
 ROWS = 14
 _X, _Y, _Z, _AX, _AY, _AZ = (row * LANES for row in range(6))
 PX, PY, PZ, WEIGHT, TIME = (row * LANES for row in range(9, 14))
-#: multiply and add in one instruction
-_FMA = {"contract"}
 
 
-@kernel(fastmath=_FMA)
+@kernel
 def _drift(s, omega, ds):
     """Move along straight lines for dt = ds / W, seen from axes that turn by omega dt."""
     for i in range(LANES):
@@ -60,7 +58,7 @@ def _drift(s, omega, ds):
         s[TIME + i] += dt
 
 
-@kernel(fastmath=_FMA)
+@kernel
 def _kick(kinds, pars, s, ds):
     """Change p for dt = ds / Om(x), and W by the change of Om along the mean motion."""
     for i in range(LANES):

@@ -33,8 +33,6 @@ PLUMMER = 4  # GM, b
 NEEDLE_BAR = 5  # GM, a, b, c
 HOMEOIDS = 6  # GM, three lengths, K, then K times (weight, 1/(a1^2+u), 1/(a2^2+u), 1/(a3^2+u))
 _LEAST = -690.0  # exponents that the fast exponential takes
-#: multiply and add in one instruction; nothing else of fast arithmetic, so that not-a-number stays visible
-_FMA = {"contract"}
 _HEAD = 5  # where the homeoids' K groups of four begin
 
 #: points handled at once by the lane kernels
@@ -49,7 +47,7 @@ def miyamoto_nagai_potential(x, y, z, gm, a, b):
     return -gm / math.sqrt(x * x + y * y + s * s)
 
 
-@kernel(fastmath=_FMA)
+@kernel
 def miyamoto_nagai_acceleration(x, y, z, gm, a, b):
     """Return the three components of -grad Phi [(km/s)^2/kpc]."""
     zb = math.sqrt(z * z + b * b)
@@ -77,7 +75,7 @@ def nfw_potential(x, y, z, gm, a):
     return -gm * math.log1p(r / a) / r
 
 
-@kernel(fastmath=_FMA)
+@kernel
 def nfw_acceleration(x, y, z, gm, a):
     """Return the three components of -grad Phi [(km/s)^2/kpc]; the centre's cusp is rounded below 1e-6 kpc."""
     r2 = x * x + y * y + z * z + 1e-12
@@ -104,7 +102,7 @@ def cutoff_power_potential(x, y, z, gm, alpha, cut):
     return -gm * (regularised_gamma(1.5 - 0.5 * alpha, t) / r + outside)
 
 
-@kernel(fastmath=_FMA)
+@kernel
 def cutoff_power_acceleration(x, y, z, gm, alpha, cut):
     """Return the three components of -grad Phi [(km/s)^2/kpc]; the centre's cusp is rounded below 1e-6 kpc."""
     r2 = x * x + y * y + z * z + 1e-12
@@ -125,7 +123,7 @@ def plummer_potential(x, y, z, gm, b):
     return -gm / math.sqrt(x * x + y * y + z * z + b * b)
 
 
-@kernel(fastmath=_FMA)
+@kernel
 def plummer_acceleration(x, y, z, gm, b):
     """Return the three components of -grad Phi [(km/s)^2/kpc]."""
     d2 = x * x + y * y + z * z + b * b
@@ -149,7 +147,7 @@ def needle_bar_potential(x, y, z, gm, a, b, c):
     return gm / (2.0 * a) * math.log((x - a + near) / (x + a + far))
 
 
-@kernel(fastmath=_FMA)
+@kernel
 def needle_bar_acceleration(x, y, z, gm, a, b, c):
     """Return the three components of -grad Phi [(km/s)^2/kpc]."""
     zc = math.sqrt(c * c + z * z)
@@ -190,7 +188,7 @@ def homeoids_potential(x, y, z, p):
     return -total
 
 
-@kernel(fastmath=_FMA)
+@kernel
 def homeoids_acceleration(x, y, z, p):
     """Return the three components of -grad Phi [(km/s)^2/kpc]."""
     fx, fy, fz = 0.0, 0.0, 0.0
@@ -316,7 +314,7 @@ def source_at(kinds, pars, x, y, z):
     return total
 
 
-@kernel(fastmath=_FMA)
+@kernel
 def _add_homeoids(p, s):
     """Add the homeoids' acceleration to lanes; K outside, lanes inside, so that each K vectorises."""
     for i in range(LANES):
@@ -338,7 +336,7 @@ def _add_homeoids(p, s):
         s[_AZ + i] -= s[_Z + i] * s[_T3 + i]
 
 
-@kernel(fastmath=_FMA)
+@kernel
 def add_lane_accelerations(kinds, pars, s):
     """Add the summed acceleration at 16 points of the bar's frame.
 

@@ -10,6 +10,7 @@ import numpy as np
 from .._version import __version__
 from ..datafiles import field_checksum
 from ..errors import InputError, one_of
+from ..remnants.fields import GRID_ERROR, Grid
 from ..scenario import Scenario, resolve
 from ..units import check_range, strip
 from . import distributions, rates
@@ -134,7 +135,13 @@ class Sightline:
         """Name and checksum of the kick-resolved fields in use, or None."""
         if self._model is None or self._model.kicked is None:
             return None
-        return {"name": self.scenario.fields, "sha256": field_checksum(self.scenario.fields)}
+        field = self._model.kicked.field
+        return {
+            "name": self.scenario.fields,
+            "sha256": field_checksum(self.scenario.fields),
+            "tracers_per_element": field.provenance.get("tracers"),
+            "grid_error": GRID_ERROR if field.grid == Grid() else None,
+        }
 
     def meta(self):
         """Return how this was made, for the metadata of tables and pictures.

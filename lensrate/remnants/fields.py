@@ -14,7 +14,7 @@ from ..io import check_target, whole_file
 from ..kernels import fields as kernels
 from ..units import KMS_PER_MASYR_KPC, strip
 
-__all__ = ["STEPS", "Grid", "RemnantField"]
+__all__ = ["GRID_ERROR", "STEPS", "Grid", "RemnantField"]
 
 #: what one unit of a stored integer stands for: of ln density, of velocity [km/s], of correlation, of share
 STEPS = np.array([0.01, 1.0, 0.04, 0.002])

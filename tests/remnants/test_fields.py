@@ -11,7 +11,7 @@ from lensrate.galaxy.model import Galaxy
 from lensrate.galaxy.potential import Potential
 from lensrate.kernels.fields import _part
 from lensrate.remnants.equilibrium import cells_of
-from lensrate.remnants.fields import Grid, RemnantField
+from lensrate.remnants.fields import GRID_ERROR, Grid, RemnantField
 from lensrate.remnants.moments import batch_ratios, encode, frames, gaussians
 from lensrate.remnants.synthesis import Settings, synthesize
 
@@ -80,7 +80,7 @@ def test_the_grid_itself_errs_by_less_than_a_per_cent(name, worst):
         x, y, z = line.xyz(D)
         truth = BY_NAME[name].density.at(x, y, z, GALAXY.R0) / mass
         found = field.density(name, [1.0], x * u.kpc, y * u.kpc, z * u.kpc).value
-        assert found.sum() == pytest.approx(truth.sum(), rel=5e-3)
+        assert found.sum() == pytest.approx(truth.sum(), rel=GRID_ERROR)
         assert found == pytest.approx(truth, rel=worst)
 
 
