@@ -76,11 +76,10 @@ def report(result):
     from ..remnants.classes import LABELS
 
     scenario = result.model.scenario
+    fields = scenario.fields if result.model.kicked else "none: all unkicked"
     head = [
         f"lensrate {__version__}   scenario {safe(scenario.name)} ({scenario.hash})",
-        wrap(
-            f"kicks {scenario.kicks}, black holes {scenario.bh_kicks}; fields {scenario.fields or 'none: all unkicked'}"
-        ),
+        wrap(f"kicks {scenario.kicks}, black holes {scenario.bh_kicks}; fields {fields}"),
     ]
     titles = ["", "born", "bound", "< 20 kpc", "height", "exp. fit", "half mass", "local", "nearest", "mass"]
     body = [["", "", "", "", "[kpc]", "[kpc]", "[kpc]", "[pc^-3]", "[pc]", "[Msun]"]]
@@ -95,8 +94,11 @@ def report(result):
         e = c.sampling_errors
         if e:
             bound = "" if e["bound_fraction"] is None else f"bound +-{e['bound_fraction']:.1g}, "
-            local = 100 * e["local_density_per_pc3"] / c.local_density_per_pc3
-            errors.append(f"{label}: {bound}height +-{e['scale_height_kpc']:.1g} kpc, local +-{local:.1g} %")
+            local = c.local_density_per_pc3
+            part = f"{100 * e['local_density_per_pc3'] / local:.2g} %" if local and local > 0 else "unknown"
+            height = e["scale_height_kpc"]
+            height = "unknown" if height is None or height != height else f"+-{height:.1g} kpc"
+            errors.append(f"{label}: {bound}height {height}, local +-{part}")
     lines = [*head, "", columns(titles, body)]
     if errors:
         lines += ["", wrap("sampling errors of " + "; ".join(errors))]

@@ -11,7 +11,6 @@ from . import distributions, rates
 
 __all__ = ["Integrals", "Lens", "assemble", "disc_share", "integrate", "optical_depth_along"]
 
-_UNKICKED = "neutron stars and black holes are unkicked: they ride on the stellar field of their birth component"
 _ROUGH = 3e-3  # difference of the quadratures that is worth a word
 _FOREIGN = 20.0  # kpc, sources beyond are hardly the Galaxy's own
 _EMPTY = 1e-2  # sources per square arcminute
@@ -200,12 +199,17 @@ def _mismatch(model, integrals):
 
 def _notes(model, lenses):
     notes = []
-    dark = [n for n in ("neutron_star", "black_hole") if lenses[n].rate > 0]
-    if any(lenses[n].kinematics == "unkicked" for n in dark):
-        notes.append(_UNKICKED)
+    dark = [n for n in ("neutron_star", "black_hole") if lenses[n].rate > 0 and lenses[n].kinematics == "unkicked"]
+    if dark:
+        who = " and ".join(n.replace("_", " ") + "s" for n in dark)
+        notes.append(f"{who} are unkicked: they ride on the stellar field of their birth component")
     if model.kicked is not None:
-        for name, law in model.laws.items():
-            lost = law.bin_weights(model.kicked.edges).above if not isinstance(law, tuple) else 0.0
+        without = model.without_fields()
+        if without:
+            names = ", ".join(without)
+            notes.append(f"the fields hold no {names}: neutron stars and black holes born there are unkicked")
+        for name in model.laws:
+            lost = model.escaped_at_birth(name)
             if lost > _FAST:
                 notes.append(
                     f"{lost:.1%} of {name.replace('_', ' ')}s are kicked faster than {model.kicked.edges[-1]:g} km/s: "

@@ -248,7 +248,7 @@ def _behind(ready, D_L, edges, n):
         D, w = np.concatenate(nodes), np.concatenate(weights)
     src = _source_rows(ready.model, ready.line, ready.sources, D)
     src[0] *= w / ready.norm
-    # sources that make up less than 1e-7 of all behind a lens are not worth their time
+    # source nodes of less than 1e-9 of all sources are not worth their time
     src[0][:, src[0].sum(axis=0) < 1e-9] = 0.0
     return first, D, _merged(ready.model, src, two=True)
 
@@ -358,7 +358,8 @@ def event_rate_density(ready, element_weight, D_edges, n_phi=24):
     ready : Line
         From `prepare`.
     element_weight : ndarray, shape (E,)
-        Factor of each element, for example the number of lenses per stated Msun.
+        Factor of each element, for example the number of lenses per stated Msun: the Galaxy's components, then, in a
+        model with fields, their kick bins.
     D_edges : ndarray, shape (C + 1,)
         Edges of source-distance cells [kpc]; sources outside are left out.
     n_phi : int
@@ -372,11 +373,19 @@ def event_rate_density(ready, element_weight, D_edges, n_phi=24):
     """
     grid, row, D, src, lens, geometry = _nodes(ready)
     n = ready.numerics
+    weight = np.asarray(element_weight, dtype=float)
+    row_weight = weight[: lens.shape[1]]
+    if ready.model.kicked is not None and weight.size > lens.shape[1]:
+        # kick bins that count, as further rows
+        more = weight[lens.shape[1] :][ready.model.kicked.element_of_row]
+        counts = more > 0
+        kicked = ready.kicked_table.at(1.0 / (grid.pi[row] + 1.0 / D))[:, counts]
+        lens, row_weight = np.concatenate([lens, kicked], axis=1), np.concatenate([row_weight, more[counts]])
     cell = np.searchsorted(D_edges, D, side="right") - 1
     cell[(cell >= len(D_edges) - 1)] = -1
     R = np.zeros((grid.pi.size, len(D_edges) - 1, n_phi, grid.mu.size), dtype=np.float32)
     kernels.event_rate_density(
-        grid.pi, row, cell, geometry, src, lens, np.asarray(element_weight, dtype=float), grid.mu, int(n_phi),
+        grid.pi, row, cell, geometry, src, lens, row_weight, grid.mu, int(n_phi),
         float(n.directions), float(n.q_max), float(n.weight_cut), R,
     )  # fmt: skip
     return grid, R

@@ -8,7 +8,6 @@ import astropy.units as u
 import numpy as np
 
 from .._version import __version__
-from ..datafiles import field_checksum
 from ..errors import InputError, one_of
 from ..remnants.fields import GRID_ERROR, Grid
 from ..scenario import Scenario, resolve
@@ -127,9 +126,9 @@ class Sightline:
             "sources, stars, brown dwarfs and white dwarfs: the Galaxy set's kinematic model (white dwarfs' kicks of "
         )
         stars += "under 1 km/s, El-Badry & Rix 2018, are neglected)"
-        if self._fields() is None:
-            return f"{stars}; neutron stars and black holes: the same, unkicked"
-        return f"{stars}; neutron stars and black holes: their own orbits in the Galaxy's potential"
+        words = {"kicked": "their own orbits in the Galaxy's potential", "unkicked": "the same, unkicked"}
+        dark = (f"{n.replace('_', ' ')}s: {words[self.lenses[n].kinematics]}" for n in ("neutron_star", "black_hole"))
+        return "; ".join([stars, *dark])
 
     def _fields(self):
         """Name and checksum of the kick-resolved fields in use, or None."""
@@ -138,7 +137,7 @@ class Sightline:
         field = self._model.kicked.field
         return {
             "name": self.scenario.fields,
-            "sha256": field_checksum(self.scenario.fields),
+            "sha256": self._model.kicked.sha256,
             "tracers_per_element": field.provenance.get("tracers"),
             "grid_error": GRID_ERROR if field.grid == Grid() else None,
         }
@@ -345,9 +344,8 @@ class Sightline:
     def __repr__(self):
         total = self.lenses["all"]
         numbers = f"tau={total.optical_depth:.3g}, rate={total.rate:.3g}/yr, mean t_E={total.mean_t_E:.3g} d"
-        return (
-            f"<Sightline l={self.l:.4g}, b={self.b:.4g}, scenario '{self.scenario.name}': {self.header()}: {numbers}>"
-        )
+        name = f"'{self.scenario.name}' ({self.scenario.hash}), kicks {self.scenario.kicks}"
+        return f"<Sightline l={self.l:.4g}, b={self.b:.4g}, scenario {name}: {self.header()}: {numbers}>"
 
 
 def sightline(l, b=None, scenario="default", *, sources=None, extinction=None, kicks=None, t_E_range=None):

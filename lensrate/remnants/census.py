@@ -98,7 +98,7 @@ class Census:
             "scenario_hash": scenario.hash,
             "kicks": scenario.kicks,
             "bh_kicks": scenario.bh_kicks,
-            "fields": scenario.fields or None,
+            "fields": None if kicked is None else scenario.fields,
             "fields_made": None if kicked is None else kicked.field.provenance,
             "definitions": DEFINITIONS,
             "warnings": list(self.warnings),

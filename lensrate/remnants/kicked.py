@@ -1,21 +1,22 @@
 """The kick-resolved fields as lenses: rows of density and motion along a sightline, and their sampling error."""
 
 import hashlib
+import json
 from dataclasses import dataclass
 from functools import lru_cache
 
 import numpy as np
 
-from ..datafiles import field_path
+from ..datafiles import field_checksum, field_path, read_set
 from ..galaxy.density import stellar_mass
 from ..kernels.fields import PARTS
 from .fields import RemnantField
 
-__all__ = ["KickedLenses", "galaxy_numbers", "read_field"]
+__all__ = ["KickedLenses", "galaxy_numbers", "read_field", "read_with_checksum"]
 
 
 def galaxy_numbers(galaxy):
-    """Return a sha256 of what orbits depend on: densities, motions and ages of the components, the rotation curve.
+    """Return a sha256 of what orbits depend on: densities, motions and ages of the components, potential, rotation.
 
     Parameters
     ----------
@@ -26,7 +27,8 @@ def galaxy_numbers(galaxy):
     str
     """
     parts = [(c.element, c.density, c.kinematics, c.age, c.efold) for c in galaxy.components if c.stars]
-    return hashlib.sha256(repr((parts, galaxy.rotation, galaxy.sun.R0)).encode()).hexdigest()
+    potential = json.dumps(read_set("potential", galaxy.potential), sort_keys=True) if galaxy.potential else ""
+    return hashlib.sha256(repr((parts, galaxy.rotation, galaxy.sun.R0, potential)).encode()).hexdigest()
 
 
 def read_field(name):
@@ -46,13 +48,18 @@ def read_field(name):
     InputError, DataFileError
         Unknown name; missing, damaged or foreign file.
     """
+    return read_with_checksum(name)[0]
+
+
+def read_with_checksum(name):
+    """As `read_field`, with the file's sha256 at the time of reading."""
     path = field_path(name)
-    return _read(str(path), path.stat().st_mtime_ns)
+    return _read(str(path), path.stat().st_mtime_ns, name)
 
 
 @lru_cache(maxsize=2)
-def _read(path, _stamp):
-    return RemnantField.read(path)
+def _read(path, _stamp, name):
+    return RemnantField.read(path), field_checksum(name)
 
 
 @dataclass(frozen=True, eq=False)
@@ -70,6 +77,8 @@ class KickedLenses:
         Stated mass of each element's component [Msun]: a field is per remnant born, a spectrum per stated Msun.
     rows : ndarray of int
         Rows of the field's profile that belong to the elements, `PARTS` Gaussians each.
+    sha256 : str
+        Of the file, when it was read.
     """
 
     field: RemnantField
@@ -77,9 +86,10 @@ class KickedLenses:
     edges: np.ndarray
     mass: np.ndarray
     rows: np.ndarray
+    sha256: str = ""
 
     @classmethod
-    def make(cls, field, galaxy):
+    def make(cls, field, galaxy, sha256=""):
         """Match fields to a Galaxy's components by name; None if none matches."""
         bins = len(field.kick_edges)
         host, mass, rows = [], [], []
@@ -91,7 +101,7 @@ class KickedLenses:
                 rows += range(PARTS * first, PARTS * (first + bins))
         if not host:
             return None
-        return cls(field, tuple(host), np.asarray(field.kick_edges), np.array(mass), np.array(rows))
+        return cls(field, tuple(host), np.asarray(field.kick_edges), np.array(mass), np.array(rows), sha256)
 
     @property
     def element_of_row(self):

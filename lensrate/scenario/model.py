@@ -13,7 +13,7 @@ from ..remnants.classes import CLASSES, LensClass, MassSpectrum
 from ..remnants.history import History
 from ..remnants.ifmr import Ifmr
 from ..remnants.imf import Imf
-from ..remnants.kicked import KickedLenses, galaxy_numbers, read_field
+from ..remnants.kicked import KickedLenses, galaxy_numbers, read_with_checksum
 from ..remnants.kicks import parse_kick
 from ..remnants.lifetimes import Lifetimes
 from ..remnants.population import population
@@ -119,6 +119,22 @@ class Model:
         """Return the MassSpectrum, or None, of each class (rows) on each element (columns)."""
         return [[self.spectrum(name, i) for i in range(len(self.component_of))] for name in self.classes]
 
+    def without_fields(self):
+        """Return the components of stars that the kick-resolved fields do not hold."""
+        held = set(self.kicked.host)
+        rows = enumerate(zip(self.galaxy.components, self.populations))
+        return [c.element for i, (c, pop) in rows if pop is not None and i not in held]
+
+    def escaped_at_birth(self, name):
+        """Return the share of a class that is kicked faster than the fields' last bin."""
+        born = kept = 0.0
+        for i, pop in enumerate(self.populations):
+            if pop is not None and i in self.kicked.host and pop.spectra[name].mass.size:
+                shares = _shares(self.laws[name], pop.spectra[name].mass, self.kicked.edges).sum(axis=0)
+                born += pop.spectra[name].number.sum()
+                kept += pop.spectra[name].number @ shares
+        return 1.0 - kept / born if born > 0 else 0.0
+
     def changed(self, scenario):
         """Return the model of a scenario that differs only in kick laws, masses or lens classes, sources kept."""
         old = self.scenario
@@ -127,8 +143,12 @@ class Model:
             populations = tuple(p for p, _ in _stars(scenario, self.galaxy, None))
         own = {**self.galaxy.lens_class, **scenario.lens_class}
         own = {name: LensClass.parse(name, table) for name, table in own.items()}
-        references = _references(scenario, self.galaxy)
-        return replace(self, scenario=scenario, populations=populations, own=own, references=references)
+        references, warnings = _references(scenario, self.galaxy), self.warnings
+        if populations is not self.populations:
+            warnings = (*warnings, "re-weighted with other masses: the source stars are still those of the old ones")
+        return replace(
+            self, scenario=scenario, populations=populations, own=own, references=references, warnings=warnings
+        )
 
     def kinematics(self, name):
         """Return the word for a class: stellar, kicked or unkicked."""
@@ -269,8 +289,8 @@ def _kicked(scenario, galaxy):
     """The remnants' own fields, where the scenario has any, and what to say about them."""
     if scenario.unkicked or not scenario.fields:
         return None, []
-    field = read_field(scenario.fields)
-    kicked = KickedLenses.make(field, galaxy)
+    field, sha256 = read_with_checksum(scenario.fields)
+    kicked = KickedLenses.make(field, galaxy, sha256)
     if kicked is None:
         return None, [f"fields '{scenario.fields}' hold no component of galaxy '{galaxy.name}': all is unkicked"]
     warnings = []

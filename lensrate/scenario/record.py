@@ -75,7 +75,9 @@ class Scenario:
                 parse_kick(self.bh_kicks)
             except InputError as error:
                 near = did_you_mean(self.bh_kicks.partition(":")[0], _BH_KICKS)
-                raise InputError(f"bh_kicks: {error}; or one of {', '.join(_BH_KICKS)}{near}") from None
+                said = str(error).removeprefix("kicks: ")
+                hint = f" ({near[2:]})" if near else ""
+                raise InputError(f"bh_kicks{hint}: {said}; or {', '.join(_BH_KICKS)}") from None
         for kind, key in _PICKED.items():
             text = getattr(self, key)
             if not text.endswith(".toml"):

@@ -87,3 +87,12 @@ def test_help_states_every_definition():
     out = run("census", "--help")[1]
     for words in ("median |z| / ln 2", "0.554 n^(-1/3)", "negative energy", "2 kpc", "6 kpc", "1.5 kpc", "20 kpc"):
         assert words in " ".join(out.split()), words
+
+
+def test_a_law_that_expels_everything(kicked_scenario):
+    from click.testing import CliRunner
+
+    from lensrate.cli import cli
+
+    result = CliRunner().invoke(cli, ["census", "--scenario", str(kicked_scenario), "--kicks", "fixed:5000"])
+    assert result.exit_code == 0 and "neutron star" in result.stdout and "unknown" in result.stdout

@@ -102,6 +102,32 @@ def test_optical_depth_along_the_sightline_adds_up(baade):
     assert total == pytest.approx(baade.lenses["all"].optical_depth, rel=0.02)
 
 
+def test_event_rate_density_holds_the_kicked_too(baade):
+    """Summed over source distances and directions it is the rate density of the same weights."""
+    from lensrate.lensing import rates
+
+    ready, integrals = baade._integrals.ready, baade._integrals
+    weight = np.zeros(len(integrals.tau))
+    first = baade._model.n_stellar
+    weight[first + 7 :: 16] = 1.0  # one kick bin of every component
+    _, R = rates.event_rate_density(ready, weight, np.array([0.0, 7.0, 8.0, 9.0, 200.0]), n_phi=16)
+    wanted = np.tensordot(weight, integrals.T, axes=1)
+    assert R.sum(dtype=float) == pytest.approx(wanted.sum(), rel=5e-3)
+
+
+def test_what_the_fields_lack_is_said():
+    extra = {
+        "name": "extra",
+        "density": {"kind": "exp_disc", "rho_sun": {"value": 0.01, "unit": "Msun/pc3"}, "h_R": 2.6, "h_z": 0.3},
+        "kinematics": {"kind": "disc", "sigma_R": 35.0, "sigma_phi": 25.0, "sigma_z": 20.0},
+    }
+    result = lensrate.sightline(1 * u.deg, -3 * u.deg, DEFAULT.replace(component=(extra,)))
+    assert any("hold no extra" in w for w in result.warnings)
+    holes = lensrate.sightline(1 * u.deg, -3 * u.deg, DEFAULT.replace(bh_kicks="none"))
+    assert any(w.startswith("black holes are unkicked") for w in holes.warnings)
+    assert "neutron stars: their own orbits" in holes.velocities() and "black holes: the same" in holes.velocities()
+
+
 def test_a_law_is_well_sampled_by_fifteen_bins(baade):
     """Kick bins are flat inside; the rate against kick speed, interpolated, says what that costs a smooth law."""
     from scipy.interpolate import CubicSpline
