@@ -1,5 +1,7 @@
 """Identities, scalings and limits of the rate integrals, whatever the model."""
 
+from functools import cache
+
 import astropy.units as u
 import numpy as np
 import pytest
@@ -127,20 +129,29 @@ REPORTED = [
 ]  # fmt: skip
 
 
-@pytest.mark.slow
-@pytest.mark.parametrize("l, b, rule", REPORTED)
-def test_halving_every_step_moves_nothing_by_a_thousandth(l, b, rule):
+@cache
+def coarse_and_exact(l, b, rule):
     fine = {
         "step_dex": 0.025, "nodes": 8, "directions": 6.0, "half_circle": 32, "q_max": 36.0, "weight_cut": 1e-8,
         "merge_sources": False,
     }  # fmt: skip
     scenario = DEFAULT.replace(sources=rule)
-    coarse, exact = (lensrate.sightline(l * u.deg, b * u.deg, s) for s in (scenario, scenario.replace(numerics=fine)))
+    return tuple(lensrate.sightline(l * u.deg, b * u.deg, s) for s in (scenario, scenario.replace(numerics=fine)))
+
+
+def agree_to_a_thousandth(l, b, rule, kicked):
+    coarse, exact = coarse_and_exact(l, b, rule)
     for name, lens in exact.lenses.items():
-        # fields bend at every cell's border and end at 20 kpc: 3e-3 for kicked classes through the centre or far out
-        rel = 3e-3 if lens.kinematics == "kicked" and (abs(b) < 1 or rule == "distance:50") else 1e-3
-        for key in ("optical_depth", "rate", "mean_t_E", "median_t_E", "share_of_events"):
-            assert getattr(coarse.lenses[name], key) == pytest.approx(getattr(lens, key), rel=rel), (name, key)
+        if (lens.kinematics == "kicked") == kicked:
+            for key in ("optical_depth", "rate", "mean_t_E", "median_t_E", "share_of_events"):
+                assert getattr(coarse.lenses[name], key) == pytest.approx(getattr(lens, key), rel=1e-3), (name, key)
+    return coarse, exact
+
+
+@pytest.mark.slow
+@pytest.mark.parametrize("l, b, rule", REPORTED)
+def test_halving_every_step_moves_nothing_by_a_thousandth(l, b, rule):
+    coarse, exact = agree_to_a_thousandth(l, b, rule, kicked=False)
     for name, part in exact.components.items():
         # a component without a thousandth of the rate is as exact as the total needs
         if part.rate > 1e-3 * exact.lenses["all"].rate:
@@ -149,6 +160,16 @@ def test_halving_every_step_moves_nothing_by_a_thousandth(l, b, rule):
     for key in ("mean_distance_kpc", "disc_share", "source_density_per_arcmin2"):
         if coarse.sources[key]:
             assert coarse.sources[key] == pytest.approx(exact.sources[key], rel=1e-3), key
+
+
+ROUGH = pytest.mark.xfail(strict=True, reason="fields bend at every cell's border and end at 20 kpc: 2-3e-3 here")
+KICKED = [pytest.param(*r, marks=ROUGH) if r[1] == -0.3 or r[2] == "distance:50" else r for r in REPORTED]
+
+
+@pytest.mark.slow
+@pytest.mark.parametrize("l, b, rule", KICKED)
+def test_halving_every_step_moves_no_kicked_class_by_a_thousandth(l, b, rule):
+    agree_to_a_thousandth(l, b, rule, kicked=True)
 
 
 @settings(derandomize=True, max_examples=25, deadline=None)
