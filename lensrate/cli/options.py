@@ -15,7 +15,7 @@ def assumptions(command):
                          help="Named scenario or TOML file."),
             click.option("--kicks", metavar="LAW", help="Kick law of neutron stars: a published set or maxwell:265."),
             click.option("--bh-kicks", metavar="LAW", help="Kick law of black holes: same, momentum, or a law."),
-            click.option("--sources", metavar="RULE", help="Source rule: limit:I=21, clump, clump:all, distance:8.0."),
+            click.option("--sources", metavar="RULE", help="Source rule: limit:I=21, peak:I=19, clump, clump:all, distance:8.0."),
             click.option("--extinction", metavar="BAND=MAG", multiple=True,
                          help="The field's measured extinction, e.g. I=1.25; may be repeated."),
             click.option("--u-0-limit", type=float, metavar="U", help="Largest impact parameter in Einstein radii."),

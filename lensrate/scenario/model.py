@@ -20,7 +20,7 @@ from ..remnants.population import population
 from ..sources.extinction import DustDisc
 from ..sources.luminosity import LuminosityFunction, luminosity_function
 from ..sources.model import Sources
-from ..sources.rules import ClumpRule, LimitRule, parse_rule
+from ..sources.rules import ClumpRule, LimitRule, PeakRule, parse_rule
 
 __all__ = ["Model", "resolve"]
 
@@ -253,9 +253,11 @@ def _users_function(scenario, band):
 def _build(scenario):
     galaxy = scenario.build_galaxy()
     rule = parse_rule(scenario.sources)
+    if isinstance(rule, PeakRule):
+        rule = replace(rule, u_0_limit=scenario.u_0_limit)
     own = {**galaxy.lens_class, **scenario.lens_class}
     own = {name: LensClass.parse(name, table) for name, table in own.items()}
-    stars = _stars(scenario, galaxy, rule.band if isinstance(rule, LimitRule) else "I")
+    stars = _stars(scenario, galaxy, rule.band if isinstance(rule, (LimitRule, PeakRule)) else "I")
     luminosities = tuple(shine for _, shine in stars)
     if isinstance(rule, ClumpRule) and any(s is not None and np.isnan(s.clump_per_msun) for s in luminosities):
         raise InputError(

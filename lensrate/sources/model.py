@@ -6,7 +6,7 @@ import numpy as np
 
 from .extinction import DustDisc, Extinction, sightline_extinction
 from .luminosity import clump_magnitude
-from .rules import ClumpRule, DistanceRule, LimitRule
+from .rules import ClumpRule, DistanceRule, LimitRule, PeakRule
 
 __all__ = ["LineSources", "Sources"]
 
@@ -20,7 +20,7 @@ class LineSources:
 
     Attributes
     ----------
-    rule : ClumpRule, LimitRule or DistanceRule
+    rule : ClumpRule, LimitRule, PeakRule or DistanceRule
     shining : tuple
         LuminosityFunction of each component, None where it supplies no sources.
     dust : Extinction
@@ -65,7 +65,7 @@ class LineSources:
         """
         D = np.asarray(D, dtype=float)
         out = np.zeros((len(self.shining), D.size))
-        if isinstance(self.rule, LimitRule):
+        if isinstance(self.rule, (LimitRule, PeakRule)):
             with np.errstate(divide="ignore"):
                 absolute = self.rule.magnitude - 5.0 * np.log10(D) - _MODULUS_1_KPC - self.dust(D)
         for i, shine in enumerate(self.shining):
@@ -73,6 +73,8 @@ class LineSources:
                 continue
             if isinstance(self.rule, LimitRule):
                 out[i] = shine.brighter(absolute)
+            elif isinstance(self.rule, PeakRule):
+                out[i] = sum(share * shine.brighter(absolute + gain) for gain, share in zip(*self.rule.gains()))
             elif isinstance(self.rule, ClumpRule):
                 out[i] = shine.clump_per_msun
                 if not self.bulge[i]:
@@ -106,7 +108,7 @@ class LineSources:
         """Return distances [kpc] at which the weight jumps or the red clump crosses the limit, as panel edges."""
         if isinstance(self.rule, ClumpRule) and self.rule.discs:
             return self._clump_window()
-        if not isinstance(self.rule, LimitRule):
+        if not isinstance(self.rule, (LimitRule, PeakRule)):
             return ()
         lit = [s for s in self.shining if s is not None]
         if not lit:
@@ -127,7 +129,7 @@ class Sources:
 
     Attributes
     ----------
-    rule : ClumpRule, LimitRule or DistanceRule
+    rule : ClumpRule, LimitRule, PeakRule or DistanceRule
     luminosities : tuple
         LuminosityFunction of each component, or None.
     dust : DustDisc
@@ -145,7 +147,7 @@ class Sources:
     @property
     def band(self):
         """Band that the report of extinction is in."""
-        return self.rule.band if isinstance(self.rule, LimitRule) else "I"
+        return self.rule.band if isinstance(self.rule, (LimitRule, PeakRule)) else "I"
 
     def toward(self, l, b, galaxy):
         """Return the source weights of a sightline.
@@ -166,7 +168,7 @@ class Sources:
             shine if c.sources and (c.bulge or not bulge_only) else None
             for c, shine in zip(galaxy.components, self.luminosities)
         )
-        uses_dust = isinstance(self.rule, LimitRule)
+        uses_dust = isinstance(self.rule, (LimitRule, PeakRule))
         dust = sightline_extinction(
             self.dust, l, b, self.band, self.measured or None, galaxy.R0, float(galaxy.sun.z.to_value("kpc"))
         )

@@ -1,18 +1,21 @@
-"""Which stars count as sources: clump giants, stars above a magnitude limit, or all stars at one distance."""
+"""Which stars count as sources: clump giants, stars above a limit at baseline or at peak, all stars at one distance."""
 
 import math
 from dataclasses import dataclass
 
+import numpy as np
+
 from ..errors import InputError, did_you_mean
 from .bands import check_band
 
-__all__ = ["ClumpRule", "DistanceRule", "LimitRule", "parse_rule"]
+__all__ = ["ClumpRule", "DistanceRule", "LimitRule", "PeakRule", "parse_rule"]
 
 NEAREST = 0.05  # kpc; nearer than this there is nothing to lens the sources
 FARTHEST = 1000.0  # kpc
 _USAGE = {
     "clump": "clump or clump:all",
     "limit": "limit:BAND=MAGNITUDE, for example limit:I=21",
+    "peak": "peak:BAND=MAGNITUDE, for example peak:I=19",
     "distance": "distance:KPC, for example distance:8.0",
 }
 
@@ -57,6 +60,45 @@ class LimitRule:
 
 
 @dataclass(frozen=True)
+class PeakRule:
+    """Every star that an event brings above an apparent magnitude, extinction included.
+
+    A rate is then per star of a list that counts each star with its chance to be magnified enough, u_0 being even
+    between 0 and its limit.
+
+    Parameters
+    ----------
+    band : str
+        V, I, J, H or Ks.
+    magnitude : float
+        The limit at peak, of a source without blend [mag].
+    u_0_limit : float
+        Largest impact parameter.
+    """
+
+    band: str
+    magnitude: float
+    u_0_limit: float = 1.0
+
+    @property
+    def text(self):
+        """What `parse_rule` reads back."""
+        return f"peak:{self.band}={self.magnitude:.12g}"
+
+    def gains(self, n=12):
+        """Return magnitudes by which events brighten a star, and their shares, (n,) each.
+
+        Notes
+        -----
+        Gauss-Legendre in sqrt(u_0), which takes out the logarithm at u_0 = 0.
+        """
+        x, w = np.polynomial.legendre.leggauss(n)
+        s, w = 0.5 * (x + 1), 0.5 * w
+        u = self.u_0_limit * s**2
+        return 2.5 * np.log10((u * u + 2) / (u * np.sqrt(u * u + 4))), 2 * s * w
+
+
+@dataclass(frozen=True)
 class DistanceRule:
     """All sources at one distance, moving as the Galaxy's stars do there.
 
@@ -80,18 +122,18 @@ def parse_rule(text):
     Parameters
     ----------
     text : str
-        ``clump``, ``clump:all``, ``limit:I=21`` (bands V, I, J, H, Ks), or ``distance:8.0`` (kpc, at least 0.05).
+        ``clump``, ``clump:all``, ``limit:I=21`` or ``peak:I=19`` (bands V, I, J, H, Ks), or ``distance:8.0`` (kpc, at least 0.05).
 
     Returns
     -------
-    ClumpRule, LimitRule or DistanceRule
+    ClumpRule, LimitRule, PeakRule or DistanceRule
 
     Raises
     ------
     InputError
         Unknown rule or band (with the nearest known one), or an impossible number.
     """
-    if isinstance(text, (ClumpRule, LimitRule, DistanceRule)):
+    if isinstance(text, (ClumpRule, LimitRule, PeakRule, DistanceRule)):
         return text
     text = str(text).strip()
     word, colon, rest = text.partition(":")
@@ -113,7 +155,7 @@ def parse_rule(text):
     magnitude = _number(text, magnitude, word)
     if not 0 < magnitude <= 40:
         raise InputError(f"sources: '{text}': {magnitude:g} mag given, must be above 0 and at most 40 mag")
-    return LimitRule(band, magnitude)
+    return (LimitRule if word == "limit" else PeakRule)(band, magnitude)
 
 
 def _number(text, given, word):
