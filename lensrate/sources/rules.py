@@ -122,7 +122,8 @@ def parse_rule(text):
     Parameters
     ----------
     text : str
-        ``clump``, ``clump:all``, ``limit:I=21`` or ``peak:I=19`` (bands V, I, J, H, Ks), or ``distance:8.0`` (kpc, at least 0.05).
+        ``clump``, ``clump:all``, ``limit:I=21`` or ``peak:I=19`` (bands V, I, J, H, Ks), or ``distance:8.0`` (kpc, at
+        least 0.05).
 
     Returns
     -------
