@@ -12,7 +12,7 @@ import numpy as np
 from ..params import Params, param
 from ..units import strip
 
-__all__ = ["Sightline3D", "Sun", "galactic_from_icrs", "icrs_from_galactic"]
+__all__ = ["Sightline3D", "Sun", "galactic_from_icrs", "icrs_from_galactic", "sky_angle"]
 
 # rotation ICRS -> Galactic from the pole and node of the IAU 1958 system in J2000 as the Hipparcos Catalogue gives it
 # (ESA 1997, SP-1200, vol. 1, eq. 1.5.11); astropy's FK5 route agrees to 0.01 arcsec
@@ -143,6 +143,32 @@ def icrs_from_galactic(l, b):
     """
     l, b = strip("l", l, u.deg), strip("b", b, u.deg, low=-90.0, high=90.0)
     return _rotate(_ICRS_TO_GALACTIC.T, np.radians(l), np.radians(b))
+
+
+def sky_angle(l, b):
+    """Return the position angle of the direction of rising b, from North (ICRS) through East.
+
+    Parameters
+    ----------
+    l, b : Quantity, shapes that broadcast
+        Where on the sky; undefined at the poles of either frame.
+
+    Returns
+    -------
+    Quantity [rad]
+        With it v_N = v_b cos - v_l sin and v_E = v_b sin + v_l cos.
+
+    Raises
+    ------
+    InputError
+        Not an angle, not finite, or |b| > 90 deg.
+    """
+    l, b = np.radians(strip("l", l, u.deg)), np.radians(strip("b", b, u.deg, low=-90.0, high=90.0))
+    # the ICRS pole on the axes along l and b: cos(dec) is common to both and drops out
+    x, y, z = _ICRS_TO_GALACTIC[:, 2]
+    along_l = y * np.cos(l) - x * np.sin(l)
+    along_b = z * np.cos(b) - np.sin(b) * (x * np.cos(l) + y * np.sin(l))
+    return np.arctan2(-along_l, along_b) << u.rad
 
 
 def _rotate(matrix, lon, lat):
