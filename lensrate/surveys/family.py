@@ -1,0 +1,432 @@
+"""A family of assumptions: named axes, each a list of alternatives to what a base scenario says."""
+
+import hashlib
+import itertools
+import json
+import math
+from dataclasses import dataclass, field, replace
+from dataclasses import fields as declared
+from fnmatch import fnmatchcase
+from pathlib import Path
+from typing import NamedTuple
+
+from ..datafiles import parse_toml, read_set
+from ..errors import InputError, did_you_mean, one_of
+from ..scenario import Scenario
+
+__all__ = ["Alternative", "Axis", "Case", "Family"]
+
+_SCENARIO = {f.name: f.type for f in declared(Scenario) if f.name not in ("name", "title")}
+_GALACTIC = ("change", "galaxy", "component")
+_MOST = 50_000  # combinations; more are a slip
+_ROUNDING = 1e-6  # of a sum of weights
+
+
+class Case(NamedTuple):
+    """One scenario of a family and how it was made."""
+
+    choices: tuple  # ((axis, alternative), ...) away from the base; empty: the base itself
+    scenario: Scenario
+    weight: float | None  # product over its axes; None where an axis has no weights
+
+    @property
+    def label(self):
+        """The choices in words, "base" where there are none."""
+        return "; ".join(f"{axis}: {alternative}" for axis, alternative in self.choices) or "base"
+
+
+@dataclass(frozen=True)
+class Alternative:
+    """What an axis may say instead of the base.
+
+    Attributes
+    ----------
+    name : str
+        For tables and pictures.
+    changes : dict
+        Fields of `Scenario`; tables among them are laid over the base's key by key.
+    source : str
+        Paper, or 'our choice'.
+    weight : float or None
+        Degree of belief, within its axis.
+    """
+
+    name: str
+    changes: dict
+    source: str = ""
+    weight: float | None = None
+
+
+@dataclass(frozen=True)
+class Axis:
+    """One assumption and its alternatives.
+
+    Attributes
+    ----------
+    name, label : str
+        Its key, and words for people.
+    alternatives : tuple of Alternative
+    when : dict of str to str
+        The axis is left out unless these text fields of the base match (shell patterns).
+    combine : bool
+        Whether combinations vary it.
+    base_weight : float
+        Weight of the base itself, where the alternatives have weights.
+    """
+
+    name: str
+    alternatives: tuple = ()
+    label: str = ""
+    when: dict = field(default_factory=dict)
+    combine: bool = True
+    base_weight: float = 0.0
+
+    @property
+    def weighted(self):
+        """Whether its alternatives carry weights."""
+        return any(a.weight is not None for a in self.alternatives)
+
+
+@dataclass(frozen=True)
+class Family:
+    """Assumptions that are open, with what each of them might be.
+
+    Without weights a family is a range and nothing more: it has no standard deviation.
+
+    Examples
+    --------
+    >>> import lensrate
+    >>> base = lensrate.Scenario.read("default")
+    >>> kicks = lensrate.Family.read("kicks")
+    >>> [label for label, scenario in kicks.one_at_a_time(base)][:2]
+    ['base', 'kicks: hobbs2005']
+    """
+
+    name: str
+    axes: tuple = ()
+    title: str = ""
+    references: tuple = ()
+
+    @classmethod
+    def read(cls, name="default"):
+        """Read a shipped family by name, or a user's TOML file by path.
+
+        Parameters
+        ----------
+        name : str or Path
+            For example "default" or "kicks", or a path ending in ``.toml``.
+
+        Returns
+        -------
+        Family
+
+        Raises
+        ------
+        InputError
+            Unknown name or key (with the nearest known one), weights that do not sum to one, two axes that change
+            the same number.
+        """
+        text = str(name)
+        if text.endswith(".toml") or "/" in text or Path(text).is_file():
+            return cls.from_dict(parse_toml(text), text, Path(text).stem, Path(text).parent)
+        return cls.from_dict(read_set("families", text), f"family '{text}'", text)
+
+    @classmethod
+    def from_dict(cls, table, where="family", stem="unnamed", folder=None):
+        """Build from nested tables as a family file holds them.
+
+        Parameters
+        ----------
+        table : dict
+            Parsed TOML: title, references and ``axis``, a table of axes by name.
+        where : str
+            Named in complaints.
+        stem : str
+            Name where the table states none.
+        folder : Path, optional
+            Where relative file names in alternatives are looked for first.
+
+        Returns
+        -------
+        Family
+
+        Raises
+        ------
+        InputError
+            See `read`.
+        """
+        _check(where, table, {"name": str, "title": str, "references": list, "axis": dict})
+        axes = tuple(_axis(f"{where}: axis.{key}", key, row, folder) for key, row in table.get("axis", {}).items())
+        _refuse_conflicts(where, axes)
+        references = tuple(map(str, table.get("references", ())))
+        return cls(table.get("name", stem), axes, table.get("title", ""), references)
+
+    def only(self, names):
+        """Return the family with some axes only, in the order named.
+
+        Parameters
+        ----------
+        names : list of str
+            Axes to keep; every one then takes part in combinations.
+
+        Returns
+        -------
+        Family
+
+        Raises
+        ------
+        InputError
+            Unknown axis.
+        """
+        known = {a.name: a for a in self.axes}
+        kept = [known[one_of("axis", n, known)] for n in dict.fromkeys(names)]
+        return replace(self, axes=tuple(replace(a, combine=True) for a in kept))
+
+    def for_base(self, base):
+        """Return the family as it stands beside a base scenario.
+
+        Axes that do not fit the base are left out, alternatives that say the same as the base are dropped (their
+        weight goes to the base), and every alternative is checked.
+
+        Parameters
+        ----------
+        base : Scenario
+
+        Returns
+        -------
+        Family
+
+        Raises
+        ------
+        InputError
+            An alternative that makes no scenario, with its axis and name.
+        """
+        axes = []
+        for axis in self.axes:
+            if not all(fnmatchcase(getattr(base, key), pattern) for key, pattern in axis.when.items()):
+                continue
+            kept, weight = [], axis.base_weight
+            for a in axis.alternatives:
+                where = f"family '{self.name}': axis {axis.name}, '{a.name}'"
+                if _checked(base, a.changes, where).hash == base.hash:
+                    weight += a.weight or 0.0
+                else:
+                    kept.append(a)
+            axes.append(replace(axis, alternatives=tuple(kept), base_weight=weight))
+        return replace(self, axes=tuple(axes))
+
+    def left_out(self, base):
+        """Return the names of axes that do not fit a base scenario."""
+        fits = {a.name for a in self.for_base(base).axes}
+        return [a.name for a in self.axes if a.name not in fits]
+
+    def cases(self, base, combine=False):
+        """Return every case, the base first.
+
+        Parameters
+        ----------
+        base : Scenario
+        combine : bool
+            All combinations of the axes that combine, instead of one change at a time.
+
+        Returns
+        -------
+        list of Case
+
+        Raises
+        ------
+        InputError
+            As `for_base`; or too many combinations, with the number of each axis.
+        """
+        family = self.for_base(base)
+        if not combine:
+            rows = [Case((), base, None)]
+            for axis in family.axes:
+                rows += [Case(((axis.name, a.name),), _changed(base, a.changes), a.weight) for a in axis.alternatives]
+            return rows
+        axes = [a for a in family.axes if a.combine]
+        counts = [1 + len(a.alternatives) for a in axes]
+        if math.prod(counts) > _MOST:
+            each = ", ".join(f"{a.name} {n}" for a, n in zip(axes, counts))
+            raise InputError(
+                f"family '{self.name}': {math.prod(counts)} combinations ({each}), at most {_MOST} are made; "
+                "choose fewer axes (--axis), or set combine = false for some"
+            )
+        weighted = all(a.weighted for a in axes)
+        out = []
+        for chosen in itertools.product(*([None, *a.alternatives] for a in axes)):
+            away = [(axis, a) for axis, a in zip(axes, chosen) if a is not None]
+            scenario = base
+            for _, a in away:
+                scenario = _changed(scenario, a.changes)
+            shares = [axis.base_weight if a is None else a.weight for axis, a in zip(axes, chosen)]
+            weight = math.prod(shares) if weighted else None
+            out.append(Case(tuple((axis.name, a.name) for axis, a in away), scenario, weight))
+        return out
+
+    def one_at_a_time(self, base):
+        """Yield (label, scenario): the base, then each alternative alone.
+
+        Parameters
+        ----------
+        base : Scenario
+
+        Yields
+        ------
+        str, Scenario
+
+        Raises
+        ------
+        InputError
+            See `for_base`.
+        """
+        for case in self.cases(base):
+            yield case.label, case.scenario
+
+    def combinations(self, base):
+        """Yield (label, scenario) of every combination of base and alternatives, the base first.
+
+        Parameters
+        ----------
+        base : Scenario
+
+        Yields
+        ------
+        str, Scenario
+
+        Raises
+        ------
+        InputError
+            See `cases`.
+        """
+        for case in self.cases(base, combine=True):
+            yield case.label, case.scenario
+
+    def to_dict(self):
+        """Return the family as plain tables that `from_dict` takes."""
+        axes = {}
+        for a in self.axes:
+            row = {"label": a.label, "combine": a.combine, "when": a.when}
+            if a.weighted:
+                row["base_weight"] = a.base_weight
+            row["alternatives"] = [
+                {"name": x.name, "source": x.source, **({} if x.weight is None else {"weight": x.weight}), **x.changes}
+                for x in a.alternatives
+            ]
+            axes[a.name] = row
+        return {"name": self.name, "title": self.title, "references": list(self.references), "axis": axes}
+
+    @property
+    def hash(self):
+        """First 12 digits of the sha256 of the axes and their alternatives."""
+        text = json.dumps(self.to_dict()["axis"], sort_keys=True, default=str)
+        return hashlib.sha256(text.encode()).hexdigest()[:12]
+
+
+def _check(where, table, known):
+    """Raise unless `table` holds only known keys, of the right kind."""
+    if not isinstance(table, dict):
+        raise InputError(f"{where}: {table!r} given, must be a table")
+    for key, value in table.items():
+        if key not in known:
+            raise InputError(f"{where}: unknown key '{key}'{did_you_mean(key, known)} (known: {', '.join(known)})")
+        kind = known[key]
+        if not isinstance(value, kind) or (isinstance(value, bool) and kind is not bool):
+            words = {str: "text", dict: "a table", list: "a list", bool: "true or false"}.get(kind, "a number")
+            raise InputError(f"{where}: {key}: {value!r} given, must be {words}")
+
+
+def _axis(where, name, row, folder):
+    number = (int, float)
+    known = {"label": str, "when": dict, "combine": bool, "base_weight": number, "alternatives": list}
+    _check(where, row, known)
+    for key, pattern in row.get("when", {}).items():
+        one_of(f"{where}: when", key, [k for k, t in _SCENARIO.items() if t is str])
+        if not isinstance(pattern, str):
+            raise InputError(f"{where}: when.{key}: {pattern!r} given, must be text")
+    made = [
+        _alternative(f"{where}: alternative {i + 1}", a, folder) for i, a in enumerate(row.get("alternatives", ()))
+    ]
+    names = [a.name for a in made]
+    for n in names:
+        if names.count(n) > 1:
+            raise InputError(f"{where}: two alternatives are named '{n}'; give each its own name")
+    base_weight = float(row.get("base_weight", 0.0))
+    axis = Axis(name, tuple(made), row.get("label") or name.replace("_", " "), row.get("when", {}),
+                row.get("combine", True), base_weight)  # fmt: skip
+    if axis.weighted or "base_weight" in row:
+        without = [a.name for a in made if a.weight is None]
+        if without:
+            raise InputError(f"{where}: '{without[0]}' has no weight; weigh every alternative of an axis, or none")
+        total = base_weight + sum(a.weight for a in made)
+        if not (0 <= base_weight <= 1 and abs(total - 1) <= _ROUNDING):
+            raise InputError(
+                f"{where}: weights sum to {total:g} (base_weight {base_weight:g} included), they must sum to 1"
+            )
+    return axis
+
+
+def _alternative(where, row, folder):
+    _check(where, row, {"name": str, "source": str, "weight": (int, float), **dict.fromkeys(_SCENARIO, object)})
+    changes = {k: _beside(v, folder) for k, v in row.items() if k in _SCENARIO}
+    if not changes:
+        raise InputError(f"{where}: changes nothing; set fields of a scenario, for example kicks = \"hobbs2005\"")
+    weight = row.get("weight")
+    if weight is not None and not 0 <= weight <= 1:
+        raise InputError(f"{where}: weight: {weight!r} given, must be between 0 and 1")
+    name = row.get("name")
+    if name is None:
+        if len(changes) > 1 or not isinstance(next(iter(changes.values())), (str, int, float)):
+            raise InputError(f"{where}: needs a name")
+        name = str(next(iter(changes.values()))) or "none"
+    return Alternative(name, changes, row.get("source", ""), None if weight is None else float(weight))
+
+
+def _beside(value, folder):
+    """A file beside the family's own, where the text names one."""
+    if folder is not None and isinstance(value, str) and Path(value).suffix and (Path(folder) / value).is_file():
+        return str(Path(folder) / value)
+    return value
+
+
+def _refuse_conflicts(where, axes):
+    """Two axes may not set the same number: a combination of them would have no meaning."""
+    seen = {}
+    for axis in axes:
+        for path in {p for a in axis.alternatives for p in _paths(a.changes)}:
+            for old, other in seen.items():
+                n = min(len(old), len(path))
+                if other != axis.name and old[:n] == path[:n]:
+                    raise InputError(
+                        f"{where}: axes {other} and {axis.name} both set {'.'.join(path)}; put them into one axis"
+                    )
+            seen[path] = axis.name
+
+
+def _paths(table, prefix=()):
+    for key, value in table.items():
+        if isinstance(value, dict) and value and "value" not in value:
+            yield from _paths(value, (*prefix, key))
+        else:
+            yield (*prefix, key)
+
+
+def _changed(scenario, changes):
+    return scenario.replace(**{k: _over(getattr(scenario, k), v) for k, v in changes.items()})
+
+
+def _over(old, new):
+    """Return `new` laid over `old`, tables key by key; a number with its unit is replaced whole."""
+    if isinstance(old, dict) and isinstance(new, dict) and "value" not in new:
+        return {**old, **{k: _over(old.get(k), v) for k, v in new.items()}}
+    return new
+
+
+def _checked(base, changes, where):
+    try:
+        scenario = _changed(base, changes)
+        if any(key in _GALACTIC for key in changes):
+            scenario.build_galaxy()
+    except InputError as error:
+        raise InputError(f"{where}: {error}") from None
+    return scenario
