@@ -7,7 +7,17 @@ import numpy as np
 
 from ..errors import InputError
 
-__all__ = ["Circle", "Patch", "Polygon", "Rectangle", "from_plane", "overlap_share", "parse_shape", "to_plane"]
+__all__ = [
+    "Circle",
+    "Patch",
+    "Polygon",
+    "Rectangle",
+    "even_points",
+    "from_plane",
+    "overlap_share",
+    "parse_shape",
+    "to_plane",
+]
 
 _SQUARE_DEGREE = (math.pi / 180) ** 2
 _WIDEST = 60.0  # deg; the tangent plane serves no wider field
@@ -141,7 +151,7 @@ class Polygon:
 
     def nodes(self):
         """Return x, y and weights of an even grid of some twenty points inside."""
-        return _even_points(self)
+        return even_points(self)
 
 
 @dataclass(frozen=True)
@@ -172,7 +182,7 @@ def _signed(c):
     return 0.5 * np.sum(c[:, 0] * n[:, 1] - n[:, 0] * c[:, 1])
 
 
-def _even_points(shape, wanted=20):
+def even_points(shape, wanted=20):
     """Points of a square grid inside a shape, about `wanted` of them, with equal weights."""
     c = shape.outline()
     low, high = c.min(axis=0), c.max(axis=0)
@@ -305,7 +315,7 @@ def overlap_share(one, other, n=4000):
     -------
     float
     """
-    x, y, w = _even_points(one.shape, n) if not isinstance(one.shape, Patch) else one.shape.nodes()
+    x, y, w = even_points(one.shape, n) if not isinstance(one.shape, Patch) else one.shape.nodes()
     l, b = from_plane(*np.radians([one.l_deg, one.b_deg]), x, y)
     x, y, front = to_plane(*np.radians([other.l_deg, other.b_deg]), l, b)
     return float(np.sum(w * (front & other.shape.inside(x, y))))

@@ -1,0 +1,458 @@
+"""Expected events of a campaign: by field, class and season, absolute and scaled to what was observed."""
+
+from dataclasses import dataclass, field, fields, replace
+
+import astropy.units as u
+import numpy as np
+from scipy.stats import poisson
+
+from .._version import __version__
+from ..errors import InputError
+from ..lensing import rates
+from ..lensing.sightline import sightline
+from ..parallel import run_map
+from ..scenario import Scenario, resolve
+from ..scenario.numerics import Numerics
+from ..sources.rules import LimitRule, PeakRule, parse_rule
+from ..units import DAYS_PER_YEAR
+from .campaign import Campaign
+from .dust_map import DustMap
+
+__all__ = ["CampaignForecast", "FieldForecast", "campaign", "field_scenario"]
+
+_LINEAR = ("kicks", "bh_kicks", "ifmr", "imf", "lens_class")
+_OUTSIDE = 0.01  # share of a class's events beyond the efficiency curve that is worth a word
+_ONE_SIGMA = 0.158655  # tail below one standard deviation of a normal distribution
+
+
+@dataclass(frozen=True, eq=False)
+class FieldForecast:
+    """What one field is expected to give.
+
+    Attributes
+    ----------
+    field : Field
+    sightline : Sightline
+        Forecast at the field's centre.
+    sources : float
+        Sources monitored, or objects, where the efficiency is one per catalogued object.
+    counted : str
+        "stated", or "source model".
+    rate_factor : float
+        Source-weighted mean rate over the field against that at its centre, from the stars' own fields.
+    efficiency : ndarray, shape (classes,)
+        Mean efficiency of each class's events.
+    outside : ndarray, shape (classes,)
+        Share of each class's events whose timescale the efficiency curve does not reach.
+    expected : ndarray, shape (classes, seasons)
+        Events.
+    sampling : ndarray, shape (classes,)
+        Sampling error of the kick-resolved fields, in events.
+    """
+
+    field: object
+    sightline: object
+    sources: float
+    counted: str
+    rate_factor: float
+    efficiency: np.ndarray
+    outside: np.ndarray
+    expected: np.ndarray
+    sampling: np.ndarray
+
+    def scaled(self):
+        """Return events by class scaled to the observed number, share times observed; None where none is stated."""
+        total = self.expected.sum()
+        if self.field.observed_events is None or not total > 0:
+            return None
+        return self.field.observed_events * self.expected.sum(axis=1) / total
+
+
+@dataclass(frozen=True, eq=False)
+class CampaignForecast:
+    """Expected events of a campaign.
+
+    Attributes
+    ----------
+    campaign : Campaign
+    scenario : Scenario
+    classes : list of str
+    fields : tuple of FieldForecast
+    family : str
+        Name of the family of assumptions behind `ranges`, "" for none.
+    ranges : ndarray, shape (classes + 1, 2)
+        Least and most expected events over the family, the last row for all classes.
+    range_cases : list of str
+        Which case is least and most, as text, by row.
+    warnings, references : tuple of str
+    """
+
+    campaign: Campaign
+    scenario: Scenario
+    classes: list
+    fields: tuple
+    family: str = ""
+    ranges: np.ndarray | None = None
+    range_cases: tuple = ()
+    warnings: tuple = ()
+    references: tuple = ()
+    masses: object = None  # MassForecast, where facilities were given
+    seed: int | None = None
+    version: str = __version__
+    kick_yield: object = field(default=None, repr=False)
+
+    @property
+    def expected(self):
+        """Events by field, class and season, ndarray (fields, classes, seasons)."""
+        return np.array([f.expected for f in self.fields])
+
+    def by_class(self):
+        """Return events by class, the last for all, (classes + 1,)."""
+        each = self.expected.sum(axis=(0, 2))
+        return np.append(each, each.sum())
+
+    def scaled_by_class(self):
+        """Return events by class, and of all, scaled to observed counts; None where no field states any.
+
+        Fields without an observed number are left out, as `scaled_fields` says.
+        """
+        parts = [s for s in (f.scaled() for f in self.fields) if s is not None]
+        if not parts:
+            return None
+        each = np.sum(parts, axis=0)
+        return np.append(each, each.sum())
+
+    def scaled_fields(self):
+        """Return the names of fields that state an observed number."""
+        return [f.field.name for f in self.fields if f.field.observed_events is not None]
+
+    def header(self):
+        """Return what stands above every table."""
+        low = min(f.sightline.t_E[0] for f in self.fields)
+        eff = self.campaign.efficiency
+        span = "all t_E" if eff.name == "complete" else f"{max(eff.t_E[0], low):g} < t_E < {eff.t_E[-1]:g} d"
+        return f"{self.campaign.header()}; {span}; heliocentric; lenses of every class, luminous ones included"
+
+    def meta(self):
+        """Return how this was made, for the metadata of tables and pictures."""
+        return {
+            "program": "lensrate",
+            "version": self.version,
+            "header": self.header(),
+            "campaign": self.campaign.name,
+            "campaign_hash": self.campaign.hash,
+            "campaign_text": self.campaign.text,
+            "scenario": self.scenario.name,
+            "scenario_hash": self.scenario.hash,
+            "scenario_text": self.scenario.to_toml(),
+            "seed": self.seed,
+            "fields": self.fields[0].sightline._fields(),
+            "family": self.family or None,
+            "warnings": list(self.warnings),
+            "references": list(self.references),
+        }
+
+    def to_dict(self):
+        """Return plain numbers under the keys of ``lensrate campaign --json``."""
+        events, scaled = self.by_class(), self.scaled_by_class()
+        sampling = np.sum([f.sampling for f in self.fields], axis=0)
+        sampling = np.append(sampling, sampling.sum())
+        expected = {}
+        for i, name in enumerate([*self.classes, "all"]):
+            expected[name] = {
+                "events": float(events[i]),
+                "poisson_68": list(poisson_68(events[i])),
+                "assumptions_range": None if self.ranges is None else [float(x) for x in self.ranges[i]],
+                "field_sampling": float(sampling[i]),
+                "p_at_least_one": float(-np.expm1(-events[i])),
+                "scaled_to_observed": None if scaled is None else float(scaled[i]),
+            }
+        rows = []
+        for f in self.fields:
+            scaled = f.scaled()
+            by_season = {s.name: f.expected[:, j] for j, s in enumerate(self.campaign.calendar.seasons)}
+            rows.append(
+                {
+                    "name": f.field.name, "l_deg": f.field.l_deg, "b_deg": f.field.b_deg,
+                    "area_deg2": float(f.field.area_deg2), "sources": f.field.sources,
+                    "extinction": f.sightline.sources["extinction"], "n_sources": f.sources, "counted": f.counted,
+                    "rate_factor": f.rate_factor,
+                    "expected": dict(zip(self.classes, map(float, f.expected.sum(axis=1)))),
+                    "by_season": {s: dict(zip(self.classes, map(float, e))) for s, e in by_season.items()},
+                    "mean_efficiency": dict(zip(self.classes, map(float, f.efficiency))),
+                    "outside_efficiency": dict(zip(self.classes, map(float, f.outside))),
+                    "observed_events": f.field.observed_events,
+                    "scaled_to_observed": None if scaled is None else dict(zip(self.classes, map(float, scaled))),
+                }
+            )  # fmt: skip
+        return {
+            "name": self.campaign.name,
+            "header": self.header(),
+            "fields": rows,
+            "expected": expected,
+            "scaled_fields": self.scaled_fields(),
+            "mass_measured": {} if self.masses is None else self.masses.to_dict(),
+            "scenario": self.scenario.name,
+            "scenario_hash": self.scenario.hash,
+            "campaign_hash": self.campaign.hash,
+            "warnings": list(self.warnings),
+            "references": list(self.references),
+            "version": self.version,
+        }
+
+    def to_table(self, by="class"):
+        """Return a table of expected events.
+
+        Parameters
+        ----------
+        by : str
+            "class": a row per lens class; "field": a row per field, class and season.
+
+        Returns
+        -------
+        astropy.table.QTable
+
+        Raises
+        ------
+        InputError
+            Unknown `by`.
+        """
+        from ..errors import one_of
+        from .report import table_by_class, table_by_field
+
+        made = {"class": table_by_class, "field": table_by_field}[one_of("by", by, ("class", "field"))](self)
+        made.meta.update(self.meta())
+        return made
+
+    def to_pandas(self, by="class"):
+        """Return `to_table` as a pandas DataFrame, units dropped."""
+        return self.to_table(by).to_pandas()
+
+    def plot(self, **style):
+        """Draw the page of pictures; returns the matplotlib Figure's Axes in an array."""
+        import importlib
+
+        return importlib.import_module("lensrate.plots").campaign(self, **style)
+
+    def _repr_html_(self):
+        from html import escape
+
+        return f"<p>{escape(self.campaign.name)}<br>{escape(self.header())}</p>" + self.to_table()._repr_html_()
+
+
+def poisson_68(mean):
+    """Return the counts between which the central 68 % of Poisson outcomes lie."""
+    return int(poisson.ppf(_ONE_SIGMA, mean)), int(poisson.ppf(1 - _ONE_SIGMA, mean))
+
+
+def field_scenario(base, survey, f):
+    """Return the scenario of one field: its source rule, extinction and the campaign's u_0 limit laid over a base."""
+    changes = {"sources": f.sources, "u_0_limit": survey.u_0_limit}
+    if f.extinction:
+        changes["extinction"] = f.extinction
+    if survey.luminosity:
+        changes["luminosity"] = survey.luminosity
+    return base.replace(**changes)
+
+
+def campaign(survey, scenario=None, *, family=None, exact=False, jobs=1, executor=None, progress=None):
+    """Forecast the events of a campaign.
+
+    Parameters
+    ----------
+    survey : Campaign or str
+        A file or shipped name is read.
+    scenario : Scenario or str, optional
+        Assumptions; default those that the campaign names.
+    family : Family, optional
+        Assumptions to vary one at a time for a range.
+    exact : bool
+        Take all alternatives of the family, also those that need new integrals (seconds a field each); else only those
+        that re-weight the integrals done.
+    jobs : int
+        Local threads over fields.
+    executor : object with ``map``, optional
+        Instead of local threads.
+    progress : str, optional
+        Label of a progress bar.
+
+    Returns
+    -------
+    CampaignForecast
+
+    Raises
+    ------
+    InputError, ConvergenceError
+        As `Campaign.read` and `sightline`.
+    """
+    if not isinstance(survey, Campaign):
+        survey = Campaign.read(survey)
+    base = survey.scenario if scenario is None else scenario
+    if not isinstance(base, Scenario):
+        base = Scenario.read(base)
+    dust = [DustMap.read(f.extinction_map) if f.extinction_map else None for f in survey.fields]
+
+    def one(i):
+        return _field(survey, base, i, dust[i])
+
+    first = one(0)
+    rows = [first, *run_map(one, range(1, len(survey.fields)), jobs, executor, progress)]
+    classes = first.sightline.classes
+    out = CampaignForecast(
+        survey, base, classes, tuple(rows), warnings=_warnings(survey, rows, classes),
+        references=tuple(dict.fromkeys(r for f in rows for r in f.sightline.references)),
+    )  # fmt: skip
+    return out if family is None else _with_range(out, family, exact, jobs, executor)
+
+
+def _field(survey, base, i, dust):
+    f = survey.fields[i]
+    mine = field_scenario(base, survey, f)
+    if dust is not None:
+        rule = parse_rule(f.sources)
+        mine = mine.replace(extinction={rule.band: dust.mean(f)})
+    centre = sightline(f.l_deg * u.deg, f.b_deg * u.deg, mine)
+    density, factor = _over_field(f, mine, centre, dust)
+    area = f.area_deg2 * 3600.0 * survey.kept_share(i)
+    if f.monitored_stars is not None:
+        number, counted = f.monitored_stars * survey.kept_share(i), "stated"
+    elif f.star_density is not None:
+        number, counted = f.star_density * area, "stated"
+    else:
+        number, counted = density * area, "source model"
+    return _assembled(survey, f, centre, number, counted, factor)
+
+
+def _assembled(survey, f, centre, number, counted, factor):
+    curve = survey.efficiency
+    if curve.second == "I_S":
+        curve = curve.averaged(magnitude_share(centre._integrals.ready))
+    pdf = centre.rate_per_ln_t_E
+    total = pdf.sum(axis=1)
+    per = np.divide(1.0, total, out=np.zeros_like(total), where=total > 0)
+    mean = per * (pdf @ curve.of(centre.t_E))
+    outside = per * (pdf @ ~curve.inside(centre.t_E))
+    lenses = [centre.lenses[name] for name in centre.classes]
+    rate = np.array([lens.rate for lens in lenses]) * factor
+    error = np.array([lens.rate_standard_error or 0.0 for lens in lenses]) * factor
+    years = survey.calendar.exposure(curve.includes) / DAYS_PER_YEAR
+    expected = (number * rate * mean)[:, None] * years
+    return FieldForecast(
+        f, centre, float(number), counted, float(factor), mean, outside, expected, number * error * mean * years.sum()
+    )
+
+
+def _over_field(f, scenario, centre, dust):
+    """Mean source density [1/arcmin2] over a field, and source-weighted mean rate against the centre's.
+
+    Only the stars' own rate is followed over the field: remnants' kicked fields vary more slowly.
+    """
+    ready = centre._integrals.ready
+    if not ready.sources.counts_stars:
+        return np.nan, 1.0
+    l, b, w = f.directions() if dust is None else dust.directions(f)
+    if l.size == 1 and dust is None:
+        return ready.per_arcmin2(), 1.0
+    model = resolve(scenario)
+    numerics = Numerics(**scenario.numerics)
+    roots = np.array([0.0 if p is None else p.spectra["star"].moment(0.5) for p in model.populations])
+
+    def rate(line):
+        return float(roots @ rates.moments(line)[1].sum(axis=1))
+
+    density, rated = np.zeros(l.size), np.zeros(l.size)
+    for i in range(l.size):
+        local = model
+        if dust is not None:
+            local = resolve(scenario.replace(extinction={parse_rule(f.sources).band: dust.at(l[i], b[i])}))
+        direction = np.radians([l[i], b[i]])
+        toward = local.sources.toward(*direction, local.galaxy)
+        line = rates.prepare(local, local.galaxy.sightline(*direction), toward, numerics)
+        density[i], rated[i] = line.per_arcmin2(), rate(line)
+    mean = float(w @ density)
+    return mean, float(w @ (density * rated)) / mean / rate(ready)
+
+
+def magnitude_share(ready):
+    """Return a function: share of a sightline's sources brighter than apparent magnitudes.
+
+    Raises
+    ------
+    InputError
+        The source rule says nothing of magnitudes.
+    """
+    rule = ready.sources.rule
+    if not isinstance(rule, (LimitRule, PeakRule)):
+        raise InputError(f"efficiency: one that depends on I_S needs sources with a magnitude limit, not '{rule.text}'")
+    D, weight = ready.D_S, ready.src[0]
+    whole = ready.sources.per_msun(D)
+
+    def share(magnitude):
+        out = []
+        for m in np.atleast_1d(magnitude):
+            brighter = replace(ready.sources, rule=replace(rule, magnitude=float(min(m, rule.magnitude))))
+            part = brighter.per_msun(D)
+            out.append(np.sum(weight * np.divide(part, whole, out=np.zeros_like(part), where=whole > 0)))
+        return np.array(out)
+
+    return share
+
+
+def _with_range(forecast, family, exact, jobs, executor):
+    """Add the range over a family of assumptions, varied one at a time."""
+    rows, labels, skipped = [], [], 0
+    for case in family.cases(forecast.scenario):
+        old, new = forecast.scenario, case.scenario
+        changed = [k.name for k in fields(Scenario) if getattr(old, k.name) != getattr(new, k.name)]
+        if set(changed) <= set(_LINEAR):
+            changes = {k: getattr(case.scenario, k) for k in changed}
+            parts = [
+                _assembled(forecast.campaign, f.field, f.sightline.reforecast(**changes) if changes else f.sightline,
+                           f.sources, f.counted, f.rate_factor).expected.sum(axis=1)
+                for f in forecast.fields
+            ]  # fmt: skip
+        elif exact:
+            parts = [f.expected.sum(axis=1) for f in
+                     campaign(forecast.campaign, case.scenario, jobs=jobs, executor=executor).fields]  # fmt: skip
+        else:
+            skipped += 1
+            continue
+        each = np.sum(parts, axis=0)
+        rows.append(np.append(each, each.sum()))
+        labels.append(case.label)
+    table = np.array(rows)
+    ranges = np.column_stack([table.min(axis=0), table.max(axis=0)])
+    cases = tuple(f"{labels[i]} to {labels[j]}" for i, j in zip(table.argmin(axis=0), table.argmax(axis=0)))
+    notes = list(forecast.warnings)
+    if skipped:
+        notes.append(
+            f"the range leaves out {skipped} alternatives of family '{family.name}' that need new integrals; "
+            "ask for the exact range to have them"
+        )
+    return replace(
+        forecast, family=family.name, ranges=ranges, range_cases=cases, warnings=tuple(notes),
+        references=tuple(dict.fromkeys([*forecast.references, *family.references])),
+    )  # fmt: skip
+
+
+def _warnings(survey, rows, classes):
+    kinds = {}
+    for f in rows:
+        for w in f.sightline.warnings:
+            kinds.setdefault("".join(c for c in w if not c.isdigit()), []).append((f.field.name, w))
+    out = []
+    for said in kinds.values():
+        more = f" (and {len(said) - 1} fields more)" if len(said) > 1 and len({w for _, w in said}) > 1 else ""
+        everywhere = len(said) == len(rows) and not more
+        out.append(said[0][1] if everywhere else f"{said[0][0]}: {said[0][1]}{more}")
+    for i, name in enumerate(classes):
+        worst = max(rows, key=lambda f: f.outside[i])
+        if worst.outside[i] > _OUTSIDE:
+            low, high = survey.efficiency.t_E[0], survey.efficiency.t_E[-1]
+            out.append(
+                f"{worst.outside[i]:.0%} of the {name.replace('_', ' ')} events of field {worst.field.name} have a t_E "
+                f"outside the efficiency curve ({low:g}-{high:g} d): not counted, since nothing is known of them"
+            )
+    if any(f.field.extinction_map for f in rows):
+        out.append("the extinction map enters source counts and the stars' rate; lens classes share its mean elsewhere")
+    return tuple(out)
