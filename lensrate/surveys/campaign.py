@@ -154,7 +154,7 @@ class Campaign:
         if self.overlaps == "refuse":
             for i, j, share in self.shared:
                 raise InputError(
-                    f"fields '{self.fields[i].name}', '{self.fields[j].name}' share {share:.1%} of the first one's area; "
+                    f"fields '{self.fields[i].name}', '{self.fields[j].name}' share {share:.1%} of the former's area; "
                     "say overlaps = 'count_once' (the later field loses what it shares) or 'separate' "
                     "(the stars stated are different ones)"
                 )

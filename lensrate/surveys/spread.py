@@ -178,7 +178,7 @@ def spread(forecast, family="default", base="default", *, combinations=False, ax
         combined_weights=tuple(case.weight for case in every),
         left_out=tuple(a.name for a in whole.axes if a.name not in {x.name for x in here.axes}),
         about=dict(outcomes[0].about),
-        warnings=_gathered([o.warnings for o in outcomes], [c.label for c in cases]),
+        warnings=_gathered([o.warnings for o in outcomes], cases),
         references=tuple(dict.fromkeys(references)),
     )
 
@@ -195,12 +195,17 @@ def _check_outcomes(outcomes, cases):
             )
 
 
-def _gathered(warnings, labels):
+def _gathered(warnings, cases):
     """Each warning once, with the alternatives that have it where the base has not; numbers are of the first one."""
-    kinds = {}
-    for lines, label in zip(warnings, labels):
+    kinds, alone = {}, set()
+    for lines, case in zip(warnings, cases):
         for line in lines:
-            kinds.setdefault("".join(c for c in line if not c.isdigit()), []).append((line, label))
+            kind = "".join(c for c in line if not c.isdigit())
+            if len(case.choices) < 2:
+                alone.add(kind)
+            # a combination repeats what its parts were warned of
+            if len(case.choices) < 2 or kind not in alone:
+                kinds.setdefault(kind, []).append((line, case.label))
     out = []
     for seen in kinds.values():
         line, label = seen[0]

@@ -1,0 +1,200 @@
+"""What a campaign's forecast looks like in a proposal: headline, tables, LaTeX, methods paragraph, BibTeX."""
+
+import re
+
+import astropy.units as u
+import numpy as np
+
+from ..remnants.classes import LABELS
+
+__all__ = ["bibtex", "headline", "latex", "methods", "table_by_class", "table_by_field"]
+
+_CITED = re.compile(
+    r"^(?P<who>.+?) (?P<year>(18|19|20)\d\d), (?P<journal>[A-Za-z&. ]+?) (?P<volume>\d+), (?P<page>L?\d+)"
+)
+
+
+def table_by_class(forecast):
+    """Return a QTable, a row per lens class and one for all."""
+    from astropy.table import QTable
+
+    from .yields import poisson_68
+
+    events, scaled = forecast.by_class(), forecast.scaled_by_class()
+    sampling = np.sum([f.sampling for f in forecast.fields], axis=0)
+    poisson = np.array([poisson_68(e) for e in events])
+    table = QTable()
+    table["lens"] = [*forecast.classes, "all"]
+    table["events"] = events
+    table["poisson_low"], table["poisson_high"] = poisson.T
+    if forecast.ranges is not None:
+        table["range_low"], table["range_high"] = forecast.ranges.T
+    table["field_sampling"] = np.append(sampling, sampling.sum())
+    table["p_at_least_one"] = -np.expm1(-events)
+    if scaled is not None:
+        table["scaled_to_observed"] = scaled
+    described = {
+        "lens": "lens class",
+        "events": "expected events",
+        "poisson_low": "central 68 % of counts",
+        "poisson_high": "central 68 % of counts",
+        "range_low": f"least over family '{forecast.family}', one assumption at a time",
+        "range_high": f"most over family '{forecast.family}', one assumption at a time",
+        "field_sampling": "sampling error of the kick-resolved fields, events",
+        "p_at_least_one": "probability of one event or more",
+        "scaled_to_observed": f"share times observed, fields {', '.join(forecast.scaled_fields())}",
+    }
+    for name in table.colnames:
+        table[name].info.description = described[name]
+    return table
+
+
+def table_by_field(forecast):
+    """Return a QTable, a row per field, season and lens class."""
+    from astropy.table import QTable
+
+    seasons = forecast.campaign.calendar.seasons
+    rows = []
+    for f in forecast.fields:
+        scaled, total = f.scaled(), f.expected.sum(axis=1)
+        for i, name in enumerate(forecast.classes):
+            for j, season in enumerate(seasons):
+                share = f.expected[i, j] / total[i] if total[i] > 0 else 0.0
+                rows.append(
+                    (f.field.name, f.field.l_deg, f.field.b_deg, season.name, name, f.expected[i, j],
+                     np.nan if scaled is None else scaled[i] * share, f.efficiency[i], f.outside[i], f.sources)
+                )  # fmt: skip
+    names = ("field", "l", "b", "season", "lens", "events", "scaled_to_observed", "mean_efficiency",
+             "outside_efficiency", "n_sources")  # fmt: skip
+    table = QTable(rows=rows, names=names)
+    table["l"].unit = table["b"].unit = u.deg
+    return table
+
+
+def headline(forecast):
+    """Return one line: how many events, and how many of them remnants."""
+    events = dict(zip([*forecast.classes, "all"], forecast.by_class()))
+    ranges = None if forecast.ranges is None else dict(zip([*forecast.classes, "all"], forecast.ranges))
+
+    def said(name):
+        text = _short(events[name])
+        if ranges is not None:
+            text += f" ({_short(ranges[name][0])}-{_short(ranges[name][1])})"
+        return text
+
+    dark = [n for n in ("white_dwarf", "neutron_star", "black_hole") if n in events]
+    parts = ", ".join(f"{said(n)} by {n.replace('_', ' ')}s" for n in dark)
+    among = "; in brackets the range over assumptions" if ranges is not None else ""
+    return f"{forecast.campaign.name}: {said('all')} events, {parts}{among}"
+
+
+def _short(x):
+    return f"{x:.3g}" if x < 1000 else f"{x:.0f}"
+
+
+def latex(forecast):
+    """Return a LaTeX table of expected events by class."""
+    table = table_by_class(forecast)
+    ranged, scaled = "range_low" in table.colnames, "scaled_to_observed" in table.colnames
+    columns = "lrc" + "c" * ranged + "r" + "r" * scaled
+    titles = ["Lens", "Events", r"68\,\% counts"]
+    titles += ["Range"] * ranged + [r"$P(\geq 1)$"] + ["Scaled"] * scaled
+    lines = [
+        "% " + forecast.header(),
+        f"% scenario {forecast.scenario.name} ({forecast.scenario.hash}), lensrate {forecast.version}",
+        rf"\begin{{tabular}}{{{columns}}}",
+        r"\hline",
+        " & ".join(titles) + r" \\",
+        r"\hline",
+    ]
+    for row in table:
+        cells = [LABELS.get(row["lens"], str(row["lens"]).replace("_", " ")), _short(row["events"])]
+        cells.append(f"{row['poisson_low']}--{row['poisson_high']}")
+        if ranged:
+            cells.append(f"{_short(row['range_low'])}--{_short(row['range_high'])}")
+        p = row["p_at_least_one"]
+        cells.append(f"{p:.2f}" if p < 0.995 else r"$>$0.99")
+        if scaled:
+            cells.append(_short(row["scaled_to_observed"]))
+        lines.append(" & ".join(cells) + r" \\")
+    return "\n".join([*lines, r"\hline", r"\end{tabular}"])
+
+
+def methods(forecast):
+    """Return a paragraph for a proposal: what was computed, from what, and what it leaves out."""
+    s, c = forecast.scenario, forecast.campaign
+    first = forecast.fields[0].sightline
+    counted = {f.counted for f in forecast.fields}
+    stars = "stated by the survey" if counted == {"stated"} else "those of the source model" if (
+        counted == {"source model"}
+    ) else "stated by the survey where known, else those of the source model"  # fmt: skip
+    kicked = {first.lenses[n].kinematics for n in ("neutron_star", "black_hole")}
+    dark = (
+        "neutron stars and black holes follow density and velocity fields from their own orbits in the Galaxy's "
+        f"potential, for natal kicks after {s.kicks} (black holes: {s.bh_kicks})"
+        if "kicked" in kicked
+        else "neutron stars and black holes follow the stars of their birth component, without natal kicks"
+    )
+    n = len(c.calendar.seasons)
+    found = "every event is taken as found" if c.efficiency.name == "complete" else (
+        f"the detection efficiency is one per {c.efficiency.per.replace('_', ' ')} against t_E and includes "
+        f"{', '.join(c.efficiency.includes) or 'nothing else'}"
+    )  # fmt: skip
+    spread = (
+        f" The range is the least and most over the family of assumptions '{forecast.family}', each changed alone; it "
+        "is no standard deviation."
+        if forecast.ranges is not None
+        else ""
+    )
+    scaled = (
+        f" Numbers scaled to observed counts are the share of each class times the events found in "
+        f"{', '.join(forecast.scaled_fields())}."
+        if forecast.scaled_fields()
+        else ""
+    )
+    return (
+        f"Expected events of {c.name} were computed with lensrate {forecast.version} (scenario {s.name}, "
+        f"{s.hash}; Galaxy set {s.galaxy}). For the centre of each of the {len(c.fields)} fields the event rate per "
+        f"source and its distribution over t_E were integrated over lens and source distances and velocities, with "
+        f"sources {', '.join(dict.fromkeys(f.sources for f in c.fields))} and u_0 < {c.u_0_limit:g}; {dark}. The "
+        f"stars' own rate carries the change over a field's area. Numbers of sources are {stars}; {found}; the "
+        f"exposure is {c.calendar.exposure(c.efficiency.includes).sum():.0f} d in {n} season{'s' if n > 1 else ''}. "
+        f"Intervals are the central 68 % of Poisson counts.{spread}{scaled} Binary lenses and sources, finite source "
+        "size and blending beyond the stated efficiency are left out."
+    )
+
+
+def bibtex(references):
+    """Return BibTeX entries of reference strings, made from what they state.
+
+    Parameters
+    ----------
+    references : iterable of str
+        "Author year, Journal volume, page (topic); ...".
+
+    Returns
+    -------
+    str
+    """
+    entries, used = [], {}
+    for text in dict.fromkeys(part.strip() for r in references for part in r.split(";")):
+        found = _CITED.search(text.split(": ", 1)[-1])
+        if not found:
+            continue
+        who = found["who"].strip()
+        stem = re.sub(r"[^A-Za-z]", "", re.split(r"[,+& ]", who)[0]) + found["year"]
+        page = (found["journal"], found["volume"], found["page"])
+        if page in used.values():
+            continue
+        key = stem
+        while key in used:
+            key += "a" if key == stem else "b"
+        used[key] = page
+        who = who.replace(" et al.", " and others").replace("+", " and others").replace(" & ", " and ")
+        who = re.sub(r",\s*(?=[A-Z])", " and ", who)
+        journal = found["journal"].replace("&", r"\&")
+        entries.append(
+            f"@article{{{key},\n  author = {{{who}}},\n  year = {{{found['year']}}},\n  journal = {{{journal}}},\n"
+            f"  volume = {{{found['volume']}}},\n  pages = {{{found['page']}}}\n}}"
+        )
+    return "\n\n".join(entries)
