@@ -1,0 +1,226 @@
+"""From the rows of a table to events: every cell checked, bad rows told together, solutions of one event joined."""
+
+import astropy.units as u
+import numpy as np
+
+from ..errors import InputError, one_of
+from ..galaxy.frames import galactic_from_icrs
+from ..io import read_rows
+from .observed import _PLACES, _POSITIVE, FRAMES, MEASURED, PLAIN, Measure, Observed, Problems, Solution, check_columns
+from .posterior import header_of, read_draws, reference_epoch
+
+__all__ = ["read_events"]
+
+_APART = 0.01  # deg, solutions of one event agree in place
+
+
+def read_events(table, frame, t_0par, skip_bad, where, beside):
+    """Return the fields of a `Sample` from a table; see `Sample.read`."""
+    place, strangers = check_columns(table, where)
+    head = header_of(table)
+    problems, notes = Problems(where), []
+    n = len(table)
+    lon, lat = (_numbers(table, c, "deg", _PLACES[c], problems, needed=True) for c in place)
+    measured = {name: _measure(table, name, problems) for name in MEASURED}
+    plain = {name: _numbers(table, name, unit, span, problems) for name, (unit, span, _) in PLAIN.items()}
+    names, solutions, files = (_texts(table, c) for c in ("event", "solution", "samples"))
+    frames, epochs = _frames(table, head, frame, t_0par, where, problems, notes)
+    for one, other in (("pi_EN", "pi_EE"), ("mu_S_N", "mu_S_E")):
+        odd = np.isfinite(measured[one][0]) != np.isfinite(measured[other][0])
+        for i in np.flatnonzero(odd):
+            lone, missing = (one, other) if np.isfinite(measured[one][0][i]) else (other, one)
+            problems.add(i + 1, missing, f"no value, but {lone} has one; give both or neither")
+    both = np.isfinite(measured["pi_E"][0]) & np.isfinite(measured["pi_EN"][0])
+    # the size follows from the parts, which say more
+    measured["pi_E"][0][both] = np.nan
+    bare = ~np.isfinite(measured["t_E"][0]) & np.array([f == "" for f in files])
+    for i in np.flatnonzero(bare):
+        if i + 1 not in problems.rows:
+            problems.add(i + 1, "t_E", "no value, and no samples")
+    draws = {}
+    for i, name in enumerate(files):
+        if name and i + 1 not in problems.rows:
+            path = beside.parent / name
+            try:
+                draws[i] = read_draws(read_rows(path, f"samples of row {i + 1}"), f"samples '{name}'")
+            except InputError as error:
+                problems.add(i + 1, "samples", str(error))
+    groups = _groups(names, n)
+    for rows in groups.values():
+        first = rows[0]
+        for i in rows[1:]:
+            if abs(lat[i] - lat[first]) > _APART or abs(lon[i] - lon[first]) > _APART:
+                problems.add(i + 1, place[0], f"not the place of row {first + 1}, of the same event")
+            if (frames[i], epochs[i]) != (frames[first], epochs[first]):
+                problems.add(i + 1, "frame", f"not the frame of row {first + 1}, of the same event")
+    if problems.found and not skip_bad:
+        raise InputError(problems.text())
+    bad = {r - 1 for r in problems.rows}
+    events = []
+    for name, rows in groups.items():
+        rows = [i for i in rows if i not in bad]
+        if rows:
+            events.append(_event(name, rows, place, lon, lat, frames, epochs, measured, plain, solutions, draws))
+    if not events:
+        raise InputError(problems.text() if problems.found else f"{where}: no events")
+    if bad:
+        notes.append(f"left out: {problems.text().removeprefix(where + ': ')}")
+    if strangers:
+        notes.append(f"columns not used: {', '.join(strangers)}")
+    if both.any():
+        notes.append("pi_E is not used where pi_EN and pi_EE are given")
+    name = beside.name if beside.name not in ("", ".") else "table"
+    return {
+        "events": tuple(events),
+        "name": name,
+        "notes": tuple(notes),
+        "left_out": len(bad),
+        "invented": bool(head.get("invented", False)),
+    }
+
+
+def _event(name, rows, place, lon, lat, frames, epochs, measured, plain, solutions, draws):
+    first = rows[0]
+    l, b = float(lon[first]), float(lat[first])
+    if place[0] == "ra":
+        l, b = (float(x.to_value(u.deg)) for x in galactic_from_icrs(l * u.deg, b * u.deg))
+    out = []
+    for i in rows:
+        found = {
+            key: Measure(float(v[i]), float(lo[i]), float(hi[i]))
+            for key, (v, lo, hi) in measured.items()
+            if np.isfinite(v[i])
+        }
+        numbers = {key: float(v[i]) for key, v in plain.items() if np.isfinite(v[i])}
+        chi2, corr = numbers.pop("delta_chi2", 0.0), numbers.pop("pi_E_corr", 0.0)
+        numbers.pop("weight", None)
+        out.append(Solution(solutions[i], found, chi2, corr, draws.get(i), numbers))
+    weight = plain["weight"][first]
+    return Observed(
+        name, l, b, frames[first], epochs[first], tuple(out),
+        float(weight) if np.isfinite(weight) else 1.0, tuple(i + 1 for i in rows),
+    )  # fmt: skip
+
+
+def _groups(names, n):
+    """Rows of each event, in order of first appearance; without names each row is an event."""
+    groups = {}
+    for i in range(n):
+        groups.setdefault(names[i] or f"row {i + 1}", []).append(i)
+    return groups
+
+
+def _texts(table, name):
+    if name not in table.colnames:
+        return [""] * len(table)
+    column = table[name]
+    mask = np.asarray(getattr(column, "mask", np.zeros(len(table), bool)))
+    cells = np.asarray(column)
+    if cells.dtype.kind == "S":
+        cells = np.char.decode(cells, "utf-8")
+    return ["" if m else str(c).strip() for c, m in zip(cells, mask)]
+
+
+def _numbers(table, name, unit, span, problems, needed=False, above=False):
+    """A column as floats in `unit`, NaN where empty; complaints noted."""
+    n = len(table)
+    if name not in table.colnames:
+        return np.full(n, np.nan)
+    column = table[name]
+    mask = np.asarray(getattr(column, "mask", np.zeros(n, bool))).copy()
+    filled = column.filled() if hasattr(column, "filled") else column
+    value = np.full(n, np.nan)
+    try:
+        value[:] = np.asarray(u.Quantity(filled, column.unit or unit).to_value(unit), dtype=float)
+    except u.UnitConversionError:
+        raise InputError(f"{problems.where}: column {name} is in '{column.unit}', must be in '{unit}'") from None
+    except (TypeError, ValueError):
+        # some cell is text: find out which
+        for i, cell in enumerate(np.asarray(filled)):
+            text = cell.decode() if isinstance(cell, bytes) else str(cell)
+            if mask[i] or text.strip() in ("", "--", "nan"):
+                mask[i] = True
+                continue
+            try:
+                value[i] = float(text)
+            except ValueError:
+                problems.add(i + 1, name, f"'{text}' is not a number")
+                mask[i] = True
+    empty = mask | np.isnan(value)
+    value[empty] = np.nan
+    if needed:
+        for i in np.flatnonzero(empty):
+            if i + 1 not in problems.rows:
+                problems.add(i + 1, name, "no value")
+    low, high = span
+    with np.errstate(invalid="ignore"):
+        bad = ~empty & ~((value >= low) & (value <= high))
+        if above:
+            bad |= ~empty & ~(value > 0)
+    for i in np.flatnonzero(bad):
+        first = "above 0" if above and value[i] <= 0 else f"at least {low:g}"
+        problems.add(i + 1, name, f"{value[i]:g} {unit}".strip() + f" given, must be {first} and at most {high:g}")
+        value[i] = np.nan
+    return value
+
+
+def _measure(table, name, problems):
+    """Value, lower and upper error of a measured column, (n,) each."""
+    unit, span, _ = MEASURED[name]
+    n = len(table)
+    if name not in table.colnames:
+        for part in ("err", "lo", "hi"):
+            if f"{name}_{part}" in table.colnames:
+                raise InputError(f"{problems.where}: column '{name}_{part}' without '{name}'")
+        return tuple(np.full(n, np.nan) for _ in range(3))
+    before = set(problems.rows)
+    value = _numbers(table, name, unit, span, problems, above=name in _POSITIVE)
+    wide = (0.0, 1e9)
+    err, lo, hi = (_numbers(table, f"{name}_{p}", unit, wide, problems, above=True) for p in ("err", "lo", "hi"))
+    lo, hi = np.where(np.isfinite(lo), lo, err), np.where(np.isfinite(hi), hi, err)
+    lacking = np.isfinite(value) & ~(np.isfinite(lo) & np.isfinite(hi))
+    for i in np.flatnonzero(lacking):
+        # a bad error has been told already
+        if i + 1 in before or i + 1 not in problems.rows:
+            problems.add(i + 1, f"{name}_err", f"no error of {name}; give {name}_err, or {name}_lo and {name}_hi")
+    return value, lo, hi
+
+
+def _frames(table, head, frame, t_0par, where, problems, notes):
+    """Frame and epoch of each row."""
+    n = len(table)
+    said = head.get("frame")
+    if said is not None:
+        said = one_of(f"{where}: frame", str(said), FRAMES)
+        if frame is not None and frame != said:
+            raise InputError(f"{where}: its header says {said}, --frame says {frame}; correct one")
+    cells = _texts(table, "frame")
+    frames, unsaid = [], 0
+    for i, cell in enumerate(cells):
+        if cell and cell not in FRAMES:
+            problems.add(i + 1, "frame", f"'{cell}' given, must be heliocentric or geocentric")
+            cell = "heliocentric"
+        if not cell and said is None and frame is None:
+            unsaid += 1
+        frames.append(cell or said or frame or "heliocentric")
+    if unsaid:
+        who = "the sample" if unsaid == n else f"{unsaid} rows"
+        notes.append(
+            f"{who} does not say a frame: taken as heliocentric (published parallax fits are geocentric; see --frame)"
+        )
+    general = head.get("t_0par", t_0par)
+    own = _numbers(table, "t_0par", "", (0.0, 3e6), problems)
+    epochs = []
+    for i, name in enumerate(frames):
+        epoch = None
+        if name == "geocentric":
+            given = own[i] if np.isfinite(own[i]) else general
+            if given is None:
+                problems.add(i + 1, "t_0par", "geocentric, but no reference epoch [MJD]")
+            else:
+                try:
+                    epoch = reference_epoch(given, where)
+                except InputError as error:
+                    problems.add(i + 1, "t_0par", str(error).split("t_0par: ", 1)[-1])
+        epochs.append(epoch)
+    return frames, epochs
