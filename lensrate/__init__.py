@@ -8,15 +8,19 @@ from ._version import __version__
 _WHERE = {
     "ConvergenceError": "errors",
     "DataFileError": "errors",
+    "Family": "surveys.family",
     "Galaxy": "galaxy.model",
     "InputError": "errors",
     "LensrateError": "errors",
     "Scenario": "scenario.record",
     "Sightline": "lensing.sightline",
+    "Spread": "surveys.spread_result",
     "census": "remnants.census",
     "resolve": "scenario.model",
     "sightline": "lensing.sightline",
+    "sightline_spread": "surveys.spread",
     "sightlines": "lensing.many",
+    "spread": "surveys.spread",
     "synthesize": "remnants.synthesis",
 }
 

@@ -11,6 +11,7 @@ from .base import Group
 from .census import census
 from .scenario import scenario
 from .sightline import sightline
+from .spread import spread
 from .synthesize import synthesize
 from .verify import verify
 
@@ -30,7 +31,7 @@ def cli():
     """
 
 
-for command in (sightline, census, synthesize, scenario, verify):
+for command in (sightline, spread, census, synthesize, scenario, verify):
     cli.add_command(command)
 
 

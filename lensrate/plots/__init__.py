@@ -2,5 +2,19 @@
 
 from .galaxy import maps, save_maps
 from .sightlines import depth, joint, overview, save_picture, sightline, stacked, timescales
+from .spread import save_spread, spread_overview, tornado
 
-__all__ = ["depth", "joint", "maps", "overview", "save_maps", "save_picture", "sightline", "stacked", "timescales"]
+__all__ = [
+    "depth",
+    "joint",
+    "maps",
+    "overview",
+    "save_maps",
+    "save_picture",
+    "save_spread",
+    "sightline",
+    "spread_overview",
+    "stacked",
+    "timescales",
+    "tornado",
+]

@@ -4,22 +4,20 @@ import hashlib
 import itertools
 import json
 import math
-from dataclasses import dataclass, field, replace
-from dataclasses import fields as declared
+from dataclasses import dataclass, replace
 from fnmatch import fnmatchcase
 from pathlib import Path
 from typing import NamedTuple
 
 from ..datafiles import parse_toml, read_set
-from ..errors import InputError, did_you_mean, one_of
+from ..errors import InputError, one_of
 from ..scenario import Scenario
+from .axis import check_keys, parse_axis, refuse_conflicts
 
-__all__ = ["Alternative", "Axis", "Case", "Family"]
+__all__ = ["Case", "Family"]
 
-_SCENARIO = {f.name: f.type for f in declared(Scenario) if f.name not in ("name", "title")}
 _GALACTIC = ("change", "galaxy", "component")
 _MOST = 50_000  # combinations; more are a slip
-_ROUNDING = 1e-6  # of a sum of weights
 
 
 class Case(NamedTuple):
@@ -33,58 +31,6 @@ class Case(NamedTuple):
     def label(self):
         """The choices in words, "base" where there are none."""
         return "; ".join(f"{axis}: {alternative}" for axis, alternative in self.choices) or "base"
-
-
-@dataclass(frozen=True)
-class Alternative:
-    """What an axis may say instead of the base.
-
-    Attributes
-    ----------
-    name : str
-        For tables and pictures.
-    changes : dict
-        Fields of `Scenario`; tables among them are laid over the base's key by key.
-    source : str
-        Paper, or 'our choice'.
-    weight : float or None
-        Degree of belief, within its axis.
-    """
-
-    name: str
-    changes: dict
-    source: str = ""
-    weight: float | None = None
-
-
-@dataclass(frozen=True)
-class Axis:
-    """One assumption and its alternatives.
-
-    Attributes
-    ----------
-    name, label : str
-        Its key, and words for people.
-    alternatives : tuple of Alternative
-    when : dict of str to str
-        The axis is left out unless these text fields of the base match (shell patterns).
-    combine : bool
-        Whether combinations vary it.
-    base_weight : float
-        Weight of the base itself, where the alternatives have weights.
-    """
-
-    name: str
-    alternatives: tuple = ()
-    label: str = ""
-    when: dict = field(default_factory=dict)
-    combine: bool = True
-    base_weight: float = 0.0
-
-    @property
-    def weighted(self):
-        """Whether its alternatives carry weights."""
-        return any(a.weight is not None for a in self.alternatives)
 
 
 @dataclass(frozen=True)
@@ -155,9 +101,9 @@ class Family:
         InputError
             See `read`.
         """
-        _check(where, table, {"name": str, "title": str, "references": list, "axis": dict})
-        axes = tuple(_axis(f"{where}: axis.{key}", key, row, folder) for key, row in table.get("axis", {}).items())
-        _refuse_conflicts(where, axes)
+        check_keys(where, table, {"name": str, "title": str, "references": list, "axis": dict})
+        axes = tuple(parse_axis(f"{where}: axis.{key}", key, row, folder) for key, row in table.get("axis", {}).items())
+        refuse_conflicts(where, axes)
         references = tuple(map(str, table.get("references", ())))
         return cls(table.get("name", stem), axes, table.get("title", ""), references)
 
@@ -185,8 +131,9 @@ class Family:
     def for_base(self, base):
         """Return the family as it stands beside a base scenario.
 
-        Axes that do not fit the base are left out, alternatives that say the same as the base are dropped (their
-        weight goes to the base), and every alternative is checked.
+        Axes and alternatives that do not fit the base are left out (weights of the other alternatives are raised, so
+        that the sum is still one), alternatives that say the same as the base are dropped (their weight goes to the
+        base), and every alternative is checked.
 
         Parameters
         ----------
@@ -203,10 +150,10 @@ class Family:
         """
         axes = []
         for axis in self.axes:
-            if not all(fnmatchcase(getattr(base, key), pattern) for key, pattern in axis.when.items()):
+            if not _fits(base, axis.when):
                 continue
             kept, weight = [], axis.base_weight
-            for a in axis.alternatives:
+            for a in _fitting(axis, base, self.name):
                 where = f"family '{self.name}': axis {axis.name}, '{a.name}'"
                 if _checked(base, a.changes, where).hash == base.hash:
                     weight += a.weight or 0.0
@@ -310,7 +257,13 @@ class Family:
             if a.weighted:
                 row["base_weight"] = a.base_weight
             row["alternatives"] = [
-                {"name": x.name, "source": x.source, **({} if x.weight is None else {"weight": x.weight}), **x.changes}
+                {
+                    "name": x.name,
+                    "source": x.source,
+                    **({} if x.weight is None else {"weight": x.weight}),
+                    **({"when": x.when} if x.when else {}),
+                    **x.changes,
+                }
                 for x in a.alternatives
             ]
             axes[a.name] = row
@@ -323,92 +276,22 @@ class Family:
         return hashlib.sha256(text.encode()).hexdigest()[:12]
 
 
-def _check(where, table, known):
-    """Raise unless `table` holds only known keys, of the right kind."""
-    if not isinstance(table, dict):
-        raise InputError(f"{where}: {table!r} given, must be a table")
-    for key, value in table.items():
-        if key not in known:
-            raise InputError(f"{where}: unknown key '{key}'{did_you_mean(key, known)} (known: {', '.join(known)})")
-        kind = known[key]
-        if not isinstance(value, kind) or (isinstance(value, bool) and kind is not bool):
-            words = {str: "text", dict: "a table", list: "a list", bool: "true or false"}.get(kind, "a number")
-            raise InputError(f"{where}: {key}: {value!r} given, must be {words}")
+def _fits(base, when):
+    return all(fnmatchcase(getattr(base, key), pattern) for key, pattern in when.items())
 
 
-def _axis(where, name, row, folder):
-    number = (int, float)
-    known = {"label": str, "when": dict, "combine": bool, "base_weight": number, "alternatives": list}
-    _check(where, row, known)
-    for key, pattern in row.get("when", {}).items():
-        one_of(f"{where}: when", key, [k for k, t in _SCENARIO.items() if t is str])
-        if not isinstance(pattern, str):
-            raise InputError(f"{where}: when.{key}: {pattern!r} given, must be text")
-    made = [
-        _alternative(f"{where}: alternative {i + 1}", a, folder) for i, a in enumerate(row.get("alternatives", ()))
-    ]
-    names = [a.name for a in made]
-    for n in names:
-        if names.count(n) > 1:
-            raise InputError(f"{where}: two alternatives are named '{n}'; give each its own name")
-    base_weight = float(row.get("base_weight", 0.0))
-    axis = Axis(name, tuple(made), row.get("label") or name.replace("_", " "), row.get("when", {}),
-                row.get("combine", True), base_weight)  # fmt: skip
-    if axis.weighted or "base_weight" in row:
-        without = [a.name for a in made if a.weight is None]
-        if without:
-            raise InputError(f"{where}: '{without[0]}' has no weight; weigh every alternative of an axis, or none")
-        total = base_weight + sum(a.weight for a in made)
-        if not (0 <= base_weight <= 1 and abs(total - 1) <= _ROUNDING):
-            raise InputError(
-                f"{where}: weights sum to {total:g} (base_weight {base_weight:g} included), they must sum to 1"
-            )
-    return axis
-
-
-def _alternative(where, row, folder):
-    _check(where, row, {"name": str, "source": str, "weight": (int, float), **dict.fromkeys(_SCENARIO, object)})
-    changes = {k: _beside(v, folder) for k, v in row.items() if k in _SCENARIO}
-    if not changes:
-        raise InputError(f"{where}: changes nothing; set fields of a scenario, for example kicks = \"hobbs2005\"")
-    weight = row.get("weight")
-    if weight is not None and not 0 <= weight <= 1:
-        raise InputError(f"{where}: weight: {weight!r} given, must be between 0 and 1")
-    name = row.get("name")
-    if name is None:
-        if len(changes) > 1 or not isinstance(next(iter(changes.values())), (str, int, float)):
-            raise InputError(f"{where}: needs a name")
-        name = str(next(iter(changes.values()))) or "none"
-    return Alternative(name, changes, row.get("source", ""), None if weight is None else float(weight))
-
-
-def _beside(value, folder):
-    """A file beside the family's own, where the text names one."""
-    if folder is not None and isinstance(value, str) and Path(value).suffix and (Path(folder) / value).is_file():
-        return str(Path(folder) / value)
-    return value
-
-
-def _refuse_conflicts(where, axes):
-    """Two axes may not set the same number: a combination of them would have no meaning."""
-    seen = {}
-    for axis in axes:
-        for path in {p for a in axis.alternatives for p in _paths(a.changes)}:
-            for old, other in seen.items():
-                n = min(len(old), len(path))
-                if other != axis.name and old[:n] == path[:n]:
-                    raise InputError(
-                        f"{where}: axes {other} and {axis.name} both set {'.'.join(path)}; put them into one axis"
-                    )
-            seen[path] = axis.name
-
-
-def _paths(table, prefix=()):
-    for key, value in table.items():
-        if isinstance(value, dict) and value and "value" not in value:
-            yield from _paths(value, (*prefix, key))
-        else:
-            yield (*prefix, key)
+def _fitting(axis, base, name):
+    """Alternatives of an axis that fit a base; the base keeps its weight, theirs are raised for those left out."""
+    kept = [a for a in axis.alternatives if _fits(base, a.when)]
+    if len(kept) == len(axis.alternatives) or not axis.weighted:
+        return kept
+    total = sum(a.weight for a in kept)
+    if not total > 0:
+        raise InputError(
+            f"family '{name}': axis {axis.name}: no alternative with a weight fits this base; "
+            "set when for the whole axis"
+        )
+    return [replace(a, weight=a.weight * (1 - axis.base_weight) / total) for a in kept]
 
 
 def _changed(scenario, changes):

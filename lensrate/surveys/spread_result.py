@@ -364,7 +364,9 @@ class Spread:
         for name in table.colnames:
             if table[name].dtype.kind == "f":
                 table[name].info.format = ".4g"
-        return f"<p>{escape(head)}({self.base.hash})<br>{escape(self.header())}</p>" + table._repr_html_()
+        return f"<p>{escape(head)}({self.base.hash})<br>{escape(self.header())}</p>" + "\n".join(
+            table.pformat(html=True, max_lines=-1, max_width=-1)
+        )
 
     def __repr__(self):
         axes = ", ".join(a.name for a in self.family.axes)
