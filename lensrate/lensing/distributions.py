@@ -195,6 +195,10 @@ class Quantiles:
         tf = np.exp(self._x) * self._f
         self._cum_t = np.concatenate([[0.0], np.cumsum(0.5 * step * (tf[1:] + tf[:-1]))])
 
+    def below(self, t):
+        """Return the rate of events with a t_E below each of `t` [d], of its shape."""
+        return np.interp(np.log(t), self._x, self._cum)
+
     def rate(self, low=None, high=None):
         """Return the rate between two timescales [d]."""
         a, b = self._range(low, high)

@@ -11,6 +11,7 @@ import numpy as np
 
 from ..errors import InputError, did_you_mean, one_of
 from ..io import read_rows
+from ..lensing.distributions import Quantiles
 from ..sources.rules import LimitRule, parse_rule
 
 __all__ = ["INCLUDES", "PER", "SECOND", "Efficiency", "locate"]
@@ -19,6 +20,7 @@ PER = ("source", "catalogued_object")
 INCLUDES = ("seasons", "gaps", "blending", "parallax")
 SECOND = ("I_S", "u_0")  # what an efficiency may depend on beside t_E
 _STATEMENTS = ("per", "includes", "u_0_limit", "source_limit")
+_CELLS = 4  # of a quadrature over t_E, per point of the distribution
 _FAR = 1e6  # d, longer than any timescale of the forecasts
 
 
@@ -203,6 +205,32 @@ class Efficiency:
         values = self.weights(share) @ self.values
         stated = {key: getattr(self, key) for key in ("binned", "per", "includes", "u_0_limit", "source_limit", "name")}
         return Efficiency(self.t_E, values, **stated)
+
+    def mean(self, t_E, pdf):
+        """Return the mean efficiency of a distribution of timescales, and the share of it that the curve reaches.
+
+        Parameters
+        ----------
+        t_E : ndarray, shape (n,)
+            [d], even in the logarithm.
+        pdf : ndarray, shape (n,)
+            Rate per ln t_E, in any unit.
+
+        Returns
+        -------
+        mean, inside : float
+            Both 0 where there are no events.
+        """
+        shape = Quantiles(t_E, pdf)
+        total = shape.rate()
+        if not total > 0:
+            return 0.0, 0.0
+        cells = np.geomspace(t_E[0], t_E[-1], _CELLS * t_E.size)
+        # steps and ends of the curve fall between cells
+        cells = np.unique(np.concatenate([cells, self.t_E[(self.t_E > t_E[0]) & (self.t_E < t_E[-1])]]))
+        share = np.diff(shape.below(cells)) / total
+        middle = np.sqrt(cells[1:] * cells[:-1])
+        return float(share @ self.of(middle)), float(share @ self.inside(middle))
 
     def inside(self, t_E):
         """Return whether the curve says anything of these timescales [d]."""

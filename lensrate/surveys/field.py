@@ -12,7 +12,7 @@ from ..sources.bands import BANDS
 from ..sources.rules import parse_rule
 from .efficiency import locate
 from .photometry import positive
-from .sky import Patch, from_plane, parse_shape
+from .sky import from_plane, parse_shape
 
 __all__ = ["Field"]
 
@@ -98,15 +98,14 @@ class Field:
         if out.monitored_stars is not None and out.star_density is not None:
             raise InputError(f"{where}: monitored_stars and star_density_per_arcmin2 are both given; keep one")
         rule = parse_rule(sources)
-        if hasattr(rule, "band") and out.monitored_stars is None and not out.extinction and not mapped:
-            lowest = abs(out.b_deg) if isinstance(shape, Patch) else float(np.abs(out.directions()[1]).min())
+        if hasattr(rule, "band") and not out.extinction and not mapped:
+            edge = np.append(out.outline()[1], out.b_deg)
+            lowest = 0.0 if edge.min() < 0 < edge.max() else float(np.abs(edge).min())
             if lowest < _NEAR_PLANE:
                 raise InputError(
                     f"{where}: comes within {lowest:.2f} deg of the plane, where the smooth dust disc is not credible; "
-                    f"state its extinction, for example extinction = {{{rule.band} = 2.5}}"
+                    f"state its extinction, for example extinction = {{{rule.band} = 2.5}}, or a map of it"
                 )
-        if hasattr(rule, "band") and not out.extinction and not mapped and abs(out.b_deg) < _NEAR_PLANE:
-            raise InputError(f"{where}: lies inside |b| = {_NEAR_PLANE:g} deg; state its extinction, or a map of it")
         return out
 
     @property

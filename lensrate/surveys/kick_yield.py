@@ -155,8 +155,7 @@ def kick_yield(forecast, lens="neutron_star"):
             from .yields import magnitude_share
 
             curve = curve.averaged(magnitude_share(integrals.ready))
-        total = pdf.sum(axis=1)
-        mean = np.divide(pdf @ curve.of(t), total, out=np.zeros(bins), where=total > 0)
+        mean = np.array([curve.mean(t, part)[0] for part in pdf])
         years = forecast.campaign.calendar.exposure(curve.includes).sum() / 365.25
         exposure = f.sources * f.rate_factor * years * forecast.campaign.u_0_limit
         per_born += exposure * mean * np.sum(masses.root * integrals.gamma, axis=1)

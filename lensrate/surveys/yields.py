@@ -327,18 +327,22 @@ def _assembled(survey, f, centre, number, counted, factor):
     curve = survey.efficiency
     if curve.second == "I_S":
         curve = curve.averaged(magnitude_share(centre._integrals.ready))
-    pdf = centre.rate_per_ln_t_E
-    total = pdf.sum(axis=1)
-    per = np.divide(1.0, total, out=np.zeros_like(total), where=total > 0)
-    mean = per * (pdf @ curve.of(centre.t_E))
-    outside = per * (pdf @ ~curve.inside(centre.t_E))
+    mean, inside = np.array([curve.mean(centre.t_E, pdf) for pdf in centre.rate_per_ln_t_E]).T
     lenses = [centre.lenses[name] for name in centre.classes]
     rate = np.array([lens.rate for lens in lenses]) * factor
     error = np.array([lens.rate_standard_error or 0.0 for lens in lenses]) * factor
     years = survey.calendar.exposure(curve.includes) / DAYS_PER_YEAR
     expected = (number * rate * mean)[:, None] * years
     return FieldForecast(
-        f, centre, float(number), counted, float(factor), mean, outside, expected, number * error * mean * years.sum()
+        f,
+        centre,
+        float(number),
+        counted,
+        float(factor),
+        mean,
+        1.0 - inside,
+        expected,
+        number * error * mean * years.sum(),
     )
 
 
@@ -447,7 +451,7 @@ def _warnings(survey, rows, classes):
         out.append(said[0][1] if everywhere else f"{said[0][0]}: {said[0][1]}{more}")
     for i, name in enumerate(classes):
         worst = max(rows, key=lambda f: f.outside[i])
-        if worst.outside[i] > _OUTSIDE:
+        if worst.outside[i] > _OUTSIDE and worst.sightline.lenses[name].rate > 0:
             low, high = survey.efficiency.t_E[0], survey.efficiency.t_E[-1]
             out.append(
                 f"{worst.outside[i]:.0%} of the {name.replace('_', ' ')} events of field {worst.field.name} have a t_E "

@@ -1,0 +1,246 @@
+"""Campaigns: what they equal in simple cases, that nothing is counted twice, what is refused."""
+
+import copy
+
+import astropy.units as u
+import numpy as np
+import pytest
+from astropy.table import Table
+from scipy.stats import poisson
+
+import lensrate
+from lensrate import InputError, Scenario
+from lensrate.surveys import report
+from lensrate.surveys.campaign import Campaign
+from lensrate.surveys.family import Family
+from lensrate.surveys.kick_yield import kick_yield
+from lensrate.surveys.yields import campaign, poisson_68
+
+UNKICKED = Scenario.read("default").replace(kicks="none")
+PLAIN = {
+    "season": [{"start": "2031-01-01", "end": "2031-12-31"}],
+    "field": [
+        {"name": "A", "l": 1.0, "b": -2.9, "area_deg2": 1.0, "limit": "I=20", "extinction": {"I": 1.2},
+         "monitored_stars": 1e6}
+    ],
+}  # fmt: skip
+
+
+def plain(**field):
+    table = copy.deepcopy(PLAIN)
+    table["field"][0].update(field)
+    table["field"][0] = {k: v for k, v in table["field"][0].items() if v is not None}
+    return table
+
+
+@pytest.fixture(scope="module")
+def simple():
+    return campaign(Campaign.from_dict(plain()), UNKICKED)
+
+
+def test_one_field_all_year_is_sightline_times_stars_times_time(simple):
+    one = lensrate.sightline(1 * u.deg, -2.9 * u.deg, UNKICKED, sources="limit:I=20", extinction={"I": 1.2})
+    for name, events in zip(simple.classes, simple.by_class()):
+        assert events == pytest.approx(one.lenses[name].rate * 1e6 * 365 / 365.25, rel=1e-12)
+    assert simple.by_class()[-1] == pytest.approx(simple.expected.sum())
+
+
+def test_stars_from_the_source_model_are_density_times_area(simple):
+    counted = campaign(Campaign.from_dict(plain(monitored_stars=None)), UNKICKED).fields[0]
+    density = simple.fields[0].sightline.sources["source_density_per_arcmin2"]
+    assert counted.sources == pytest.approx(3600 * density, rel=1e-9) and counted.counted == "source model"
+    stated = campaign(Campaign.from_dict(plain(monitored_stars=None, star_density_per_arcmin2=density)), UNKICKED)
+    np.testing.assert_allclose(stated.fields[0].expected, counted.expected, rtol=1e-9)
+
+
+def test_short_seasons_gaps_and_a_small_u_0_scale_as_they_must(simple):
+    table = plain()
+    table["u_0_limit"] = 0.25
+    table["season"] = [
+        {"start": "2031-03-01", "end": "2031-03-01"},
+        {"start": "2031-04-01", "end": "2031-04-30", "gaps": [["2031-04-01", "2031-04-10"]]},
+    ]
+    short = campaign(Campaign.from_dict(table), UNKICKED)
+    whole = simple.expected[0, :, 0]
+    np.testing.assert_allclose(short.expected[0], np.outer(0.25 * whole, [1 / 365, 20 / 365]), rtol=1e-12)
+    assert poisson_68(1e-9) == (0, 0)
+
+
+def test_gaps_inside_the_efficiency_are_not_applied_again(tmp_path, simple):
+    curve = Table({"t_E": [1e-5, 1e6], "efficiency": [0.5, 0.5]})
+    sums = {}
+    for includes in ((), ("gaps",), ("seasons", "gaps")):
+        curve.meta = {"per": "source", "includes": list(includes)}
+        curve.write(tmp_path / "curve.ecsv", format="ascii.ecsv", overwrite=True)
+        table = plain()
+        table["season"] = [
+            {"start": "2031-01-01", "end": "2031-05-10", "gaps": [["2031-02-01", "2031-02-10"]]},
+            {"start": "2031-09-01", "end": "2031-12-31"},
+        ]
+        table["efficiency"] = {"file": "curve.ecsv"}
+        made = campaign(Campaign.from_dict(table, tmp_path / "c.toml"), UNKICKED)
+        sums[includes] = made.by_class()[-1] / simple.by_class()[-1]
+    days = {(): 130 - 10 + 122, ("gaps",): 130 + 122, ("seasons", "gaps"): 365}
+    for includes, ratio in sums.items():
+        assert ratio == pytest.approx(0.5 * days[includes] / 365, rel=1e-9)
+
+
+def test_a_step_in_efficiency_counts_the_events_of_its_timescales(tmp_path):
+    t_E = 20.0
+    curve = Table({"t_E_low": [1e-5, t_E], "t_E_high": [t_E, 1e6], "efficiency": [0.0, 1.0]})
+    curve.meta = {"per": "source", "includes": []}
+    curve.write(tmp_path / "step.ecsv", format="ascii.ecsv")
+    table = plain()
+    table["efficiency"] = {"file": "step.ecsv"}
+    made = campaign(Campaign.from_dict(table, tmp_path / "c.toml"), UNKICKED)
+    one = lensrate.sightline(
+        1 * u.deg, -2.9 * u.deg, UNKICKED, sources="limit:I=20", extinction={"I": 1.2}, t_E_range=(t_E, 1e5) * u.day
+    )
+    assert made.by_class()[-1] == pytest.approx(one.lenses["all"].rate * 1e6 * 365 / 365.25, rel=1e-3)
+
+
+def test_efficiency_by_magnitude_weighs_the_sources(tmp_path, simple):
+    t, m = np.meshgrid([1e-5, 1e6], [17.0, 19.0])
+    curve = Table({"t_E": t.ravel(), "I_S": m.ravel(), "efficiency": np.where(m < 18, 1.0, 0.0).ravel()})
+    curve.meta = {"per": "source", "includes": []}
+    curve.write(tmp_path / "mag.ecsv", format="ascii.ecsv")
+    table = plain()
+    table["efficiency"] = {"file": "mag.ecsv"}
+    part = campaign(Campaign.from_dict(table, tmp_path / "c.toml"), UNKICKED).fields[0]
+    density = [
+        lensrate.sightline(1 * u.deg, -2.9 * u.deg, UNKICKED, sources=f"limit:I={limit}", extinction={"I": 1.2})
+        .sources["source_density_per_arcmin2"] for limit in (18, 20)
+    ]  # fmt: skip
+    np.testing.assert_allclose(part.efficiency[part.efficiency > 0], density[0] / density[1], rtol=2e-3)
+
+
+def test_a_wide_field_is_the_sum_of_its_quarters():
+    wide = plain(area_deg2=None, width_deg=3.0, height_deg=3.0, monitored_stars=None, b=-4.0)
+    whole = campaign(Campaign.from_dict(wide), UNKICKED).by_class()[-1]
+    table = copy.deepcopy(wide)
+    table["field"] = [
+        {**wide["field"][0], "name": f"{i}{j}", "l": 1.0 + i, "b": -4.0 + j, "width_deg": 1.0, "height_deg": 1.0}
+        for i in (-1, 0, 1) for j in (-1, 0, 1)
+    ]  # fmt: skip
+    # squares on the sky do not tile: they overlap and gape by a few hundredths of a per cent
+    table["overlaps"] = "separate"
+    parts = campaign(Campaign.from_dict(table), UNKICKED).by_class()[-1]
+    assert whole == pytest.approx(parts, rel=5e-3)
+
+
+def test_overlapping_fields_are_counted_once_only_when_told():
+    table = plain(area_deg2=None, radius_deg=0.5, monitored_stars=None)
+    twin = {**table["field"][0], "name": "B"}
+    table["field"].append(twin)
+    with pytest.raises(InputError, match="overlaps = 'count_once'"):
+        Campaign.from_dict(table)
+    once = Campaign.from_dict({**table, "overlaps": "count_once"})
+    assert once.kept_share(0) == 1.0 and once.kept_share(1) == pytest.approx(0.0, abs=1e-12)
+    assert Campaign.from_dict({**table, "overlaps": "separate"}).kept_share(1) == 1.0
+
+
+def test_scaled_numbers_are_shares_of_the_observed(simple):
+    made = campaign(Campaign.from_dict(plain(observed_events=50)), UNKICKED)
+    share = made.by_class() / made.by_class()[-1]
+    np.testing.assert_allclose(made.scaled_by_class(), 50 * share)
+    assert simple.scaled_by_class() is None
+    row = made.to_dict()["expected"]["white_dwarf"]
+    assert row["p_at_least_one"] == pytest.approx(1 - poisson.pmf(0, row["events"]))
+
+
+def test_sources_limited_at_peak_lie_between_the_limit_and_its_brightest_reach():
+    def at(text):
+        return campaign(Campaign.from_dict(plain(limit=None, sources=text, monitored_stars=None)), UNKICKED).fields[0]
+
+    baseline, peak, deep = at("limit:I=18"), at("peak:I=18"), at("limit:I=23")
+    assert baseline.sources < peak.sources < deep.sources
+    assert at("peak:I=18").sightline.sources["rule"] == Campaign.from_dict(
+        plain(limit="I=18", limit_on="peak")
+    ).fields[0].sources  # fmt: skip
+
+
+@pytest.fixture(scope="module")
+def kicked():
+    return campaign(Campaign.from_dict(plain()), family=Family.read("kicks"))
+
+
+def test_the_kick_yield_summed_over_a_law_is_the_forecast(kicked):
+    curve = kick_yield(kicked)
+    for law in ("hobbs2005", "maxwell:100"):
+        own = kicked.fields[0].sightline.reforecast(kicks=law).lenses["neutron_star"].rate
+        assert curve.events(law) == pytest.approx(own * 1e6 * 365 / 365.25, rel=1e-3)
+    assert curve.per_born[0] > curve.per_born[-3] > 0
+    with pytest.raises(InputError, match="unkicked"):
+        kick_yield(campaign(Campaign.from_dict(plain()), UNKICKED))
+
+
+def test_the_range_holds_the_forecast_and_names_its_ends(kicked):
+    low, high = kicked.ranges.T
+    events = kicked.by_class()
+    assert np.all(low <= events * (1 + 1e-12)) and np.all(high >= events * (1 - 1e-12))
+    i = kicked.classes.index("neutron_star")
+    assert high[i] / low[i] > 1.2 and "kicks" in kicked.range_cases[i]
+    assert kicked.fields[0].sampling[i] > 0
+
+
+def test_a_proposal_can_quote_it(kicked):
+    text = report.methods(kicked)
+    assert kicked.scenario.hash in text and "limit:I=20" in text and "u_0 < 1" in text
+    assert report.latex(kicked).count(r"\\") == len(kicked.classes) + 2
+    entries = report.bibtex(kicked.references)
+    assert "@article{Kroupa2001" in entries and entries.count("{") == entries.count("}")
+    assert "neutron stars" in report.headline(kicked)
+    header = kicked.header()
+    for word in ("limit:I=20", "u_0 < 1", "heliocentric", "all t_E", "luminous"):
+        assert word in header
+    for by in ("class", "field"):
+        assert kicked.to_table(by).meta["scenario_hash"] == kicked.scenario.hash
+
+
+BAD = [
+    (plain(l=None), "l"),
+    (plain(l=None, b=None), "place is needed"),
+    (plain(area_deg2=-1.0), "area_deg2"),
+    (plain(limit="R=20"), "did you mean|known"),
+    (plain(limit="I=abc"), "finite number"),
+    (plain(extinction={"Q": 1.0}), "extinction"),
+    (plain(extinction={"I": -1.0}), "between 0 and 60"),
+    (plain(extinction=None, b=-1.2), "state its extinction"),
+    (plain(extinction=None, area_deg2=None, radius_deg=1.5, b=-2.9), "1.40 deg of the plane"),
+    (plain(monitored_stars=-5), "monitored_stars"),
+    (plain(star_density_per_arcmin2=5.0), "both given"),
+    (plain(observed_events=-1), "observed_events"),
+    (plain(radius=0.6), "did you mean 'radius_deg'"),
+    ({**plain(), "u_0_limit": 0.0}, "u_0_limit"),
+    ({**plain(), "overlaps": "once"}, "overlaps"),
+    ({**plain(), "photometry": {"band": "R", "cadence_d": 1.0}}, "photometry.band"),
+    ({**plain(), "photometry": {"band": "I", "cadence_d": 0.0}}, "cadence_d"),
+    ({**plain(), "efficiency": {"file": "none.ecsv"}}, "no file"),
+    ({**plain(), "season": []}, r"\[\[season\]\]"),
+    ({**plain(), "field": 3}, r"\[\[field\]\]"),
+    ({**plain(), "seasons": []}, "did you mean 'season'"),
+]
+
+
+@pytest.mark.parametrize("table, words", BAD)
+def test_campaigns_that_cannot_be(table, words):
+    with pytest.raises(InputError, match=words):
+        Campaign.from_dict(table)
+
+
+def test_an_efficiency_must_fit_the_sources(tmp_path):
+    curve = Table({"t_E": [1.0, 300.0], "efficiency": [0.1, 0.2]})
+    curve.meta = {"per": "catalogued_object", "includes": [], "source_limit": "I=19", "u_0_limit": 0.5}
+    curve.write(tmp_path / "curve.ecsv", format="ascii.ecsv")
+    for change, words in (({}, "u_0"), ({"u_0_limit": 0.5}, "I=20"), ({"u_0_limit": 0.5, "none": 1}, "objects")):
+        table = plain(monitored_stars=None if "none" in change else 1e6)
+        table |= {k: v for k, v in change.items() if k != "none"}
+        table["efficiency"] = {"file": "curve.ecsv"}
+        with pytest.raises(InputError, match=words):
+            Campaign.from_dict(table, tmp_path / "c.toml")
+
+
+def test_the_invented_survey_is_whole_and_marked():
+    survey = Campaign.read("marram")
+    assert "invented" in survey.name and len(survey.fields) == 4 and survey.hash == Campaign.read("marram").hash
+    assert np.isinf(survey.photometry.error(25.0)) and survey.photometry.error(19.0) == pytest.approx(0.0292, abs=2e-4)
