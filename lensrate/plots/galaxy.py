@@ -1,16 +1,12 @@
 """Pictures of the whole Galaxy: maps of stars and remnants from above and from the side."""
 
-import json
-
-import matplotlib
 import numpy as np
-from matplotlib.backends.backend_agg import FigureCanvasAgg
 from matplotlib.colors import LogNorm
-from matplotlib.figure import Figure
 
-from ..io import PICTURES, check_target, whole_file
+from ..io import PICTURES, check_target
 from ..remnants.classes import LABELS
 from ..remnants.maps import galaxy_maps
+from .saving import blank, write_figure
 
 __all__ = ["maps", "save_maps"]
 
@@ -35,8 +31,7 @@ def maps(census):
     model = census.model
     panels = galaxy_maps(model)
     R0 = model.galaxy.R0
-    figure = Figure(figsize=(1.2 + 2.55 * len(panels), 4.5), layout="constrained")
-    FigureCanvasAgg(figure)
+    figure = blank(1.2 + 2.55 * len(panels), 4.5)
     axes = figure.subplots(2, len(panels), sharex=True, sharey="row", height_ratios=[2.75, 1], squeeze=False)
     norm = LogNorm(*_RANGE, clip=True)
     for (top, side), panel in zip(axes.T, panels):
@@ -92,10 +87,5 @@ def save_maps(census, path, overwrite=False):
     InputError, DataFileError
         Unknown ending, existing file, or a file that could not be written.
     """
-    path = check_target(path, PICTURES, overwrite, "--plot")
-    figure = maps(census)
-    made = json.dumps(census.meta(), ensure_ascii=True, default=str)
-    key = {".png": "Description", ".pdf": "Subject", ".svg": "Description"}[path.suffix.lower()]
-    with whole_file(path) as temporary, matplotlib.rc_context({"svg.hashsalt": "lensrate", "pdf.fonttype": 42}):
-        figure.savefig(temporary, dpi=200, metadata={key: made})
-    return path
+    check_target(path, PICTURES, overwrite, "--plot")
+    return write_figure(maps(census), path, census.meta(), overwrite)

@@ -1,16 +1,12 @@
 """Pictures of one sightline: axes in, axes out. Nothing is computed here but colours."""
 
-import json
-
-import matplotlib
 import matplotlib.pyplot as plt
 import numpy as np
-from matplotlib.backends.backend_agg import FigureCanvasAgg
-from matplotlib.figure import Figure
 
 from ..errors import one_of
-from ..io import PICTURES, check_target, whole_file
+from ..io import PICTURES, check_target
 from ..remnants.classes import LABELS
+from .saving import blank, write_figure
 
 __all__ = ["depth", "joint", "overview", "save_picture", "sightline", "stacked", "timescales"]
 
@@ -253,8 +249,7 @@ def joint(result, ax=None, y="pi_E", **contour):
 
 def overview(result):
     """Return a figure with timescales by class and optical depth along the sightline, side by side."""
-    figure = Figure(figsize=(10.5, 4.2), layout="constrained")
-    FigureCanvasAgg(figure)
+    figure = blank(10.5, 4.2)
     left, right = figure.subplots(1, 2, width_ratios=[1.15, 1])
     timescales(result, ax=left)
     depth(result, ax=right)
@@ -294,16 +289,10 @@ def save_picture(result, path, kind="overview", overwrite=False):
         Unknown kind or ending, existing file, or a file that could not be written.
     """
     one_of("kind", kind, _KINDS)
-    path = check_target(path, PICTURES, overwrite, "--plot")
+    check_target(path, PICTURES, overwrite, "--plot")
     if kind == "overview":
         figure = overview(result)
     else:
-        # no window is opened: a canvas of its own, not pyplot's
-        figure = Figure(figsize=(6.0, 5.0 if kind.endswith("_E") else 4.2), layout="constrained")
-        FigureCanvasAgg(figure)
+        figure = blank(6.0, 5.0 if kind.endswith("_E") else 4.2)
         sightline(result, ax=figure.add_subplot(), kind=kind)
-    made = json.dumps(result.meta(), ensure_ascii=True)
-    key = {".png": "Description", ".pdf": "Subject", ".svg": "Description"}[path.suffix.lower()]
-    with whole_file(path) as temporary, matplotlib.rc_context({"svg.hashsalt": "lensrate", "pdf.fonttype": 42}):
-        figure.savefig(temporary, dpi=200, metadata={key: made})
-    return path
+    return write_figure(figure, path, result.meta(), overwrite)

@@ -1,16 +1,13 @@
 """Pictures of a spread over assumptions: a bar per axis, the assumption that matters most on top."""
 
-import json
 import math
 
-import matplotlib
 import matplotlib.pyplot as plt
-from matplotlib.backends.backend_agg import FigureCanvasAgg
-from matplotlib.figure import Figure
 from matplotlib.ticker import LogLocator, MaxNLocator, NullFormatter, ScalarFormatter
 
-from ..io import PICTURES, check_target, whole_file
+from ..io import PICTURES, check_target
 from ..remnants.classes import LABELS
+from .saving import blank, write_figure
 
 __all__ = ["PANELS", "save_spread", "spread_overview", "tornado"]
 
@@ -157,8 +154,7 @@ def spread_overview(result, panels=None):
     columns = 1 if len(panels) == 1 else 2
     rows = -(-len(panels) // columns)
     bars = len(result.family.axes) + (result.combined is not None)
-    figure = Figure(figsize=(6.4 * columns, 1.0 + rows * (0.9 + 0.36 * bars)), layout="constrained")
-    FigureCanvasAgg(figure)
+    figure = blank(6.4 * columns, 1.0 + rows * (0.9 + 0.36 * bars))
     axes = figure.subplots(rows, columns, squeeze=False).ravel()
     for ax, (number, lens) in zip(axes, panels):
         tornado(result, ax=ax, number=number, lens=lens)
@@ -196,10 +192,5 @@ def save_spread(result, path, panels=None, overwrite=False):
     InputError, DataFileError
         Unknown ending, number or lens; existing file, or a file that could not be written.
     """
-    path = check_target(path, PICTURES, overwrite, "--plot")
-    figure = spread_overview(result, panels)
-    made = json.dumps(result.meta(), ensure_ascii=True, default=str)
-    key = {".png": "Description", ".pdf": "Subject", ".svg": "Description"}[path.suffix.lower()]
-    with whole_file(path) as temporary, matplotlib.rc_context({"svg.hashsalt": "lensrate", "pdf.fonttype": 42}):
-        figure.savefig(temporary, dpi=200, metadata={key: made})
-    return path
+    check_target(path, PICTURES, overwrite, "--plot")
+    return write_figure(spread_overview(result, panels), path, result.meta(), overwrite)
