@@ -7,6 +7,8 @@ Epochs are MJD. The scale is TDB, but UTC or heliocentric dates may be given as 
 Earth by less than 1e-4 au.
 """
 
+from functools import lru_cache
+
 import astropy.units as u
 import erfa
 import numpy as np
@@ -16,6 +18,7 @@ from ..galaxy.frames import sky_angle
 from ..units import DAYS_PER_YEAR, check_range, strip
 
 __all__ = [
+    "EPOCHS",
     "earth_offset",
     "earth_on_sky",
     "earth_velocity",
@@ -26,13 +29,16 @@ __all__ = [
     "path_to_geocentric",
     "path_to_heliocentric",
     "sky_angle",
+    "sun_angle",
     "to_geocentric",
     "to_heliocentric",
     "to_north_east",
 ]
 
 _MJD_ZERO = 2400000.5
-_FIRST, _LAST = 15020.0, 88069.0  # 1900 to 2100, the span of the ephemeris
+#: 1900 to 2100, the span of the ephemeris [MJD]
+EPOCHS = _FIRST, _LAST = 15020.0, 88069.0
+_BLOCK = 256  # d, one day between nodes
 
 
 def earth_on_sky(mjd, ra, dec):
@@ -52,11 +58,10 @@ def earth_on_sky(mjd, ra, dec):
 
     Notes
     -----
-    Heliocentric ephemeris of `erfa.epv00` (Bretagnon & Francou 1988, A&A 202, 309, simplified), good to 1e-7 au.
+    Heliocentric ephemeris of `erfa.epv00` (Bretagnon & Francou 1988, A&A 202, 309, simplified), good to 1e-7 au, with
+    cubics between days that follow it to 1e-9 au.
     """
-    helio, _ = erfa.epv00(_MJD_ZERO, np.asarray(mjd, dtype=float))
-    x, y, z = (helio["p"][..., i] for i in range(3))
-    v_x, v_y, v_z = (helio["v"][..., i] for i in range(3))
+    (x, y, z), (v_x, v_y, v_z) = _heliocentric(mjd)
     ca, sa, cd, sd = np.cos(ra), np.sin(ra), np.cos(dec), np.sin(dec)
     return (
         cd * z - sd * (ca * x + sa * y),
@@ -111,6 +116,31 @@ def earth_velocity(mjd, ra, dec):
     """
     _, _, v_N, v_E = earth_on_sky(_epoch("mjd", mjd), *_target(ra, dec))
     return v_N * DAYS_PER_YEAR << u.au / u.yr, v_E * DAYS_PER_YEAR << u.au / u.yr
+
+
+def sun_angle(mjd, ra, dec):
+    """Return the angle between the Sun and a target as seen from Earth.
+
+    Parameters
+    ----------
+    mjd : float, ndarray or Time
+        Epochs [MJD], 1900 to 2100.
+    ra, dec : Quantity
+        Target, ICRS; all shapes broadcast.
+
+    Returns
+    -------
+    Quantity [deg]
+
+    Raises
+    ------
+    InputError
+        As `earth_offset`.
+    """
+    (x, y, z), _ = _heliocentric(_epoch("mjd", mjd))
+    a, d = _target(ra, dec)
+    toward = np.cos(d) * (np.cos(a) * x + np.sin(a) * y) + np.sin(d) * z
+    return np.degrees(np.arccos(np.clip(-toward / np.sqrt(x * x + y * y + z * z), -1.0, 1.0))) << u.deg
 
 
 def parallax_offset(mjd, t_0par, ra, dec):
@@ -290,6 +320,32 @@ def from_north_east(v_N, v_E, l, b):
     angle = sky_angle(l, b).to_value(u.rad)
     c, s = np.cos(angle), np.sin(angle)
     return c * v_E - s * v_N, s * v_E + c * v_N
+
+
+@lru_cache(maxsize=512)
+def _nodes(block):
+    """Place [au] and velocity [au/d] at the days of one block, its end included: (2, 3, 257)."""
+    # the last block reaches past the span; its nodes out there are never used
+    days = np.minimum(_FIRST + block * _BLOCK + np.arange(_BLOCK + 1.0), _LAST)
+    helio, _ = erfa.epv00(_MJD_ZERO, days)
+    return np.array([helio["p"].T, helio["v"].T])
+
+
+def _heliocentric(mjd):
+    """Place [au] and velocity [au/d] of Earth, each (3, ...): cubics through the nodes' places and velocities."""
+    day = np.asarray(mjd, dtype=float) - _FIRST
+    block = np.floor_divide(day, _BLOCK).astype(int)
+    needed, row = np.unique(block, return_inverse=True)
+    table = np.array([_nodes(int(b)) for b in needed]).reshape(-1, 2, 3, _BLOCK + 1)
+    day = day - block * _BLOCK
+    i = np.minimum(day.astype(int), _BLOCK - 1)
+    t = day - i
+    row = row.reshape(block.shape)
+    (x0, v0), (x1, v1) = (np.moveaxis(table[row, :, :, i + k], (-2, -1), (0, 1)) for k in (0, 1))
+    rise = x1 - x0
+    # x0 + t v0 + t^2 (3 rise - 2 v0 - v1) + t^3 (v0 + v1 - 2 rise)
+    a, b = 3.0 * rise - 2.0 * v0 - v1, v0 + v1 - 2.0 * rise
+    return x0 + t * (v0 + t * (a + t * b)), v0 + t * (2.0 * a + 3.0 * t * b)
 
 
 def _epoch(name, value, low=_FIRST, high=_LAST):

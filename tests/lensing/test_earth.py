@@ -1,6 +1,7 @@
 """Annual parallax against astropy's ephemeris, frames there and back, and the path that both frames must share."""
 
 import astropy.units as u
+import erfa
 import numpy as np
 import pytest
 from astropy.coordinates import SkyCoord, get_body_barycentric
@@ -38,6 +39,27 @@ def test_place_and_velocity_against_astropy(ra, dec):
     after, before = _astropy_offset(mjd + h, ra, dec), _astropy_offset(mjd - h, ra, dec)
     for v, a, b in zip(earth.earth_velocity(mjd, ra * u.deg, dec * u.deg), after, before):
         assert v.to_value(u.au / u.day) == pytest.approx((a - b) / (2 * h), abs=2e-7)
+
+
+def test_between_nodes_and_at_the_ends():
+    """Cubics between days against the series itself; no warning at either end of the span."""
+    mjd = np.concatenate([np.random.default_rng(2).uniform(15020, 88069, 40), [15020.0, 88068.9, 88069.0]])
+    helio, _ = erfa.epv00(2400000.5, mjd)
+    north, east, v_N, v_E = earth.earth_on_sky(mjd, 0.0, 0.5 * np.pi)
+    assert north == pytest.approx(-helio["p"][:, 0], abs=1e-9)
+    assert east == pytest.approx(helio["p"][:, 1], abs=1e-9)
+    assert v_N == pytest.approx(-helio["v"][:, 0], abs=1e-8)
+    assert v_E == pytest.approx(helio["v"][:, 1], abs=1e-8)
+    assert earth.earth_on_sky(np.zeros((3, 0)), 0.0, 0.0)[0].shape == (3, 0)
+    assert earth.earth_on_sky(60000.0, np.zeros(4), 0.0)[0].shape == (4,)
+
+
+def test_sun_angle():
+    t = Time(58000.0 + np.arange(0.0, 400.0, 23.0), format="mjd", scale="tdb")
+    theirs = SkyCoord(268 * u.deg, -29 * u.deg).cartesian.xyz.value
+    d = get_body_barycentric("sun", t, ephemeris="builtin") - get_body_barycentric("earth", t, ephemeris="builtin")
+    want = np.degrees(np.arccos(theirs @ (d.xyz / d.norm()).value))
+    assert earth.sun_angle(t, *BULGE).value == pytest.approx(want, abs=1e-4)
 
 
 def test_speed():
