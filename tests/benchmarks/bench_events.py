@@ -1,0 +1,120 @@
+"""Mock events: the sampler against a plain vectorised Monte Carlo in numpy of the same sightline.
+
+    python tests/benchmarks/bench_events.py
+
+One thread, processor time, best of several runs after a warm-up; ratios come from this one run.
+"""
+
+# ruff: noqa: E402  (one thread is set before the imports)
+import os
+
+os.environ.setdefault("OMP_NUM_THREADS", "1")
+os.environ.setdefault("NUMBA_NUM_THREADS", "1")
+
+import platform
+import time
+
+import astropy.units as u
+import numpy as np
+
+import lensrate
+from lensrate.lensing.sampler import Sampler
+from lensrate.units import DAYS_PER_YEAR, KAPPA, MAS
+
+N = 500_000
+
+
+def best(run, n=7):
+    run()
+    times = []
+    for _ in range(n):
+        start = time.thread_time()
+        run()
+        times.append(time.thread_time() - start)
+    return min(times)
+
+
+def plain(sampler, n, seed):
+    """Weighted events: row, source and both distances by inverse cumulative, Gaussian motions, numpy only."""
+    rng = np.random.default_rng(seed)
+    D, lens, _, D_src, src, *_ = sampler._tables
+    pairs = sampler._pairs["words"]
+    f = lens[..., 0]
+    cum = np.concatenate([np.zeros((len(f), 1)), np.cumsum(0.5 * (f[:, 1:] + f[:, :-1]) * np.diff(D), axis=1)], axis=1)
+    root = np.array([[0.0 if s is None else s.moment(0.5) for s in row] for row in sampler.model.spectra()])
+    weight = root[pairs[:, 0], pairs[:, 1]] * cum[pairs[:, 2], -1]
+    pair = rng.choice(weight.size, n, p=weight / weight.sum())
+    s = rng.choice(len(src), n, p=src[:, -1, 1] / src[:, -1, 1].sum())
+    r = pairs[pair, 2]
+    D_L, D_S, M = np.empty(n), np.empty(n), np.empty(n)
+    x, y = np.empty(n), np.empty(n)
+    for i in np.unique(r):
+        at = r == i
+        D_L[at] = np.interp(rng.random(at.sum()) * cum[i, -1], cum[i], D)
+    for i in np.unique(s):
+        at = s == i
+        D_S[at] = np.interp(rng.random(at.sum()) * src[i, -1, 1], src[i, :, 1], D_src)
+    spectra = sampler.model.spectra()
+    for q in np.unique(pairs[pair, 3]):
+        at = pairs[pair, 3] == q
+        c, e = pairs[np.flatnonzero(pairs[:, 3] == q)[0], :2]
+        p = spectra[c][e].number * np.sqrt(spectra[c][e].mass)
+        M[at] = rng.choice(spectra[c][e].mass, at.sum(), p=p / p.sum())
+    p = np.clip(np.searchsorted(D, D_L) - 1, 0, D.size - 2)
+    i = np.clip(np.searchsorted(D_src, D_S) - 1, 0, D_src.size - 2)
+    eta = ((D_L - D[p]) / (D[p + 1] - D[p]))[:, None]
+    tau = ((D_S - D_src[i]) / (D_src[i + 1] - D_src[i]))[:, None]
+    a = (1 - eta) * lens[r, p, 3:] + eta * lens[r, p + 1, 3:]
+    b = (1 - tau) * src[s, i, 3:] + tau * src[s, i + 1, 3:]
+    m = a[:, :2] / D_L[:, None] - b[:, :2] / D_S[:, None]
+    C = a[:, 2:] / D_L[:, None] ** 2 + b[:, 2:] / D_S[:, None] ** 2
+    z = rng.standard_normal((2, n))
+    first = np.sqrt(C[:, 0])
+    x = m[:, 0] + first * z[0]
+    y = m[:, 1] + C[:, 1] / first * z[0] + np.sqrt(np.maximum(C[:, 2] - C[:, 1] ** 2 / C[:, 0], 0)) * z[1]
+    mu = np.hypot(x, y)
+    pi_rel = np.maximum(1 / D_L - 1 / D_S, 0)
+    theta = np.sqrt(KAPPA * M * pi_rel)
+    with np.errstate(invalid="ignore"):
+        out = theta, pi_rel / theta, DAYS_PER_YEAR * theta / mu
+    u_0 = sampler.model.scenario.u_0_limit
+    unit = 2 * u_0 * np.sqrt(KAPPA) * MAS**2 * weight.sum() * src[:, -1, 1].sum() / n
+    return *out, unit * np.sqrt(np.maximum(1 - D_L / D_S, 0)) * mu
+
+
+def main():
+    print(f"{platform.processor() or platform.machine()}, Python {platform.python_version()}, one thread, (1, -3.9)")
+    forecast = lensrate.sightline(1 * u.deg, -3.9 * u.deg)
+    sampler = Sampler.of(forecast)
+    print(f"tables: {best(lambda: Sampler.of(forecast), 3):.2f} s")
+    w = plain(sampler, N, 1)[-1]
+    share = w.sum() ** 2 / (w.size * np.sum(w**2))
+    error = np.sqrt(w.size * np.var(w))
+    slow = N / best(lambda: plain(sampler, N, 1), 3)
+    print(f"numpy: {slow / 1e6:.2f} million a second, effective share {share:.2f}, ", end="")
+    print(f"rate {w.sum() / sampler.rate - 1:+.1e} +- {error / sampler.rate:.1e}")
+    for name, options in (
+        ("weighted, core columns", {}),
+        ("unweighted, core columns", {"weighted": False}),
+        ("weighted, source motion too", {"full": True}),
+        ("unweighted, source motion too", {"full": True, "weighted": False}),
+    ):
+        d = sampler.draw(N, 2, **options)
+        fast = N / best(lambda options=options: sampler.draw(N, 2, **options))
+        print(f"{name:30s} {fast / 1e6:5.2f} million a second, effective share {d.effective_share:.2f}, ", end="")
+        print(f"{fast / slow:5.1f} times numpy, {fast * d.effective_share / slow / share:5.1f} times in effective events")
+    mock_columns(forecast)
+
+
+def mock_columns(forecast):
+    """All columns of the catalogue, where the catalogue is there."""
+    mock = getattr(lensrate, "mock_events", None) if "mock_events" in lensrate.__all__ else None
+    if mock is None:
+        return
+    for weighted in (True, False):
+        seconds = best(lambda w=weighted: mock(forecast, number=N, seed=3, weighted=w), 4)
+        print(f"all columns, {'weighted' if weighted else 'unweighted'}: {N / seconds / 1e6:.2f} million a second")
+
+
+if __name__ == "__main__":
+    main()
