@@ -2,8 +2,14 @@
 
 import sys
 from concurrent.futures import ThreadPoolExecutor
+from contextlib import contextmanager
 
-__all__ = ["run_map"]
+from .errors import InputError, LensrateError
+
+__all__ = ["DaskExecutor", "cluster", "run_map"]
+
+_RETRIES = 3  # of a task whose worker was lost or failed
+_WAIT = 30  # s for a scheduler to answer
 
 
 def run_map(func, items, jobs=1, executor=None, progress=None, stop=None):
@@ -54,3 +60,67 @@ def run_map(func, items, jobs=1, executor=None, progress=None, stop=None):
     finally:
         if pool is not None:
             pool.shutdown(wait=True, cancel_futures=True)
+
+
+class DaskExecutor:
+    """An executor on a Dask cluster; build with `cluster`.
+
+    The function of a `map`, with everything it holds, is sent to each worker once; results come back in order, each as
+    soon as it and those before it are done. A task whose worker is lost is run again elsewhere.
+    """
+
+    def __init__(self, client):
+        self._client = client
+
+    def map(self, func, items):
+        """Yield func(item) for each item, in order."""
+        items = list(items)
+        if not items:
+            return
+        sent = self._client.scatter(func, broadcast=True, hash=False)
+        futures = self._client.map(_apply, items, func=sent, pure=False, retries=_RETRIES)
+        try:
+            for future in futures:
+                yield future.result()
+        finally:
+            self._client.cancel(futures)
+
+
+def _apply(item, func):
+    return func(item)
+
+
+@contextmanager
+def cluster(address):
+    """Give an executor on an existing Dask cluster, or None where no address is given.
+
+    Parameters
+    ----------
+    address : str or None
+        Of the scheduler, for example ``tcp://10.0.0.5:8786``, or a scheduler file.
+
+    Yields
+    ------
+    DaskExecutor or None
+
+    Raises
+    ------
+    InputError
+        Dask is not installed.
+    LensrateError
+        The scheduler does not answer.
+    """
+    if address is None:
+        yield None
+        return
+    try:
+        from distributed import Client
+    except ImportError:
+        raise InputError("--dask: Dask is not installed; pip install 'lensrate[dask]'") from None
+    try:
+        how = {"scheduler_file": address} if str(address).endswith(".json") else {"address": address}
+        client = Client(**how, timeout=_WAIT)
+    except (OSError, ValueError, TimeoutError) as error:
+        raise LensrateError(f"--dask: no scheduler answers at '{address}' ({type(error).__name__})") from None
+    with client:
+        yield DaskExecutor(client)

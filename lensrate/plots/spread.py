@@ -3,7 +3,7 @@
 import math
 
 import matplotlib.pyplot as plt
-from matplotlib.ticker import LogLocator, MaxNLocator, NullFormatter, ScalarFormatter
+from matplotlib.ticker import FuncFormatter, LogLocator, MaxNLocator, NullFormatter
 
 from ..io import PICTURES, check_target
 from ..remnants.classes import LABELS
@@ -118,8 +118,8 @@ def _limits(ax, known, log):
         ax.set_xscale("log")
         room = (high / low) ** 0.4
         ax.set_xlim(low / room, high * room)
-        ax.xaxis.set_major_locator(LogLocator(subs=(1, 2, 5)))
-        ax.xaxis.set_major_formatter(ScalarFormatter())
+        ax.xaxis.set_major_locator(LogLocator(subs=(1, 2, 5) if high < 30 * low else (1,)))
+        ax.xaxis.set_major_formatter(FuncFormatter(lambda x, _: f"{x:g}"))
         ax.xaxis.set_minor_formatter(NullFormatter())
     else:
         room = 0.4 * (high - low) or 0.1 * abs(high) or 1.0

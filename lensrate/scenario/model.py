@@ -57,6 +57,16 @@ class Model:
     kicked: KickedLenses | None
     references: tuple
     warnings: tuple = ()
+    changed_from: object = None  # scenario of the model that this one was `changed` from
+
+    @property
+    def built_from(self):
+        """Scenario whose sources and fields are in use."""
+        return self.changed_from or self.scenario
+
+    # what is sent to another process is the scenario: there it is built once and kept
+    def __reduce__(self):
+        return _rebuilt, (self.built_from, None if self.scenario is self.built_from else self.scenario)
 
     @property
     def classes(self):
@@ -147,8 +157,9 @@ class Model:
         if populations is not self.populations:
             warnings = (*warnings, "re-weighted with other masses: the source stars are still those of the old ones")
         return replace(
-            self, scenario=scenario, populations=populations, own=own, references=references, warnings=warnings
-        )
+            self, scenario=scenario, populations=populations, own=own, references=references, warnings=warnings,
+            changed_from=self.built_from,
+        )  # fmt: skip
 
     def kinematics(self, name):
         """Return the word for a class: stellar, kicked or unkicked."""
@@ -188,6 +199,11 @@ def _scaled_shares(law, factor, edges):
 
 def _times(spectrum, share):
     return MassSpectrum(spectrum.mass, spectrum.number * share, spectrum.initial_mass)
+
+
+def _rebuilt(base, changed):
+    model = resolve(base)
+    return model if changed is None else model.changed(changed)
 
 
 def resolve(scenario):

@@ -255,6 +255,13 @@ def test_pictures_show_the_widest_axis_on_top(kicked):
     low, high = ax.get_xlim()
     assert low < min(shares) and max(shares) < high
     assert len(spread_overview(kicked).axes) == 4
+    # three decades: every tick says a number of its own
+    wide = spread(lambda rows: [{"all": {"share_of_events": 4e-5 * 20.0**i}} for i in range(len(rows))], family(**TWO))
+    ax = wide.plot(ax=Figure().add_subplot(), number="share_of_events")
+    ax.figure.draw_without_rendering()
+    shown = [t.get_text() for t in ax.get_xticklabels()]
+    assert ax.get_xscale() == "log" and len(shown) > 2
+    assert [float(t) for t in shown] == pytest.approx(ax.get_xticks())
     for wrong in ({"number": "rates"}, {"lens": "neutron_stars"}):
         with pytest.raises(InputError, match="did you mean"):
             kicked.plot(ax=ax, **wrong)
