@@ -78,19 +78,22 @@ def merge_rows(src, group, out):
 def interpolate_rows(step, table, D, out):
     """Fill out (6, rows, N) at distances D from a table (6, rows, n) at step, 2 step, ...; nothing beyond its end.
 
-    Linear in every number; before the first point the first one's density and motion hold, scaled as the distance.
+    Density and velocity are linear in distance; before the first point the first one's hold.
     """
     n = table.shape[2]
     cell = np.empty(D.size, dtype=np.int64)
     part = np.empty(D.size)
-    scale = np.empty(D.size)
+    # proper motions of a given velocity go with the inverse of the distance: near the observer they bend, velocities
+    # do not; these are the table's distances over that of the point
+    here = np.empty(D.size)
+    beyond = np.empty(D.size)
     for i in range(D.size):
         x = D[i] / step - 1.0
         near = x < 0.0
         cell[i] = 0 if near else min(int(x), n - 1)
         part[i] = 0.0 if near else x - cell[i]
-        # proper motions of a given velocity go with the inverse of the distance
-        scale[i] = step / D[i] if near else 1.0
+        here[i] = (cell[i] + 1) * step / D[i]
+        beyond[i] = (cell[i] + 2) * step / D[i]
     for r in range(table.shape[1]):
         rho = table[0, r]
         for i in range(D.size):
@@ -104,7 +107,9 @@ def interpolate_rows(step, table, D, out):
                 continue
             # where one end is empty its motion means nothing
             u = 0.0 if rho[j + 1] <= 0.0 else (1.0 if rho[j] <= 0.0 else t)
-            f = scale[i]
-            for q in range(1, 6):
-                value = (1.0 - u) * table[q, r, j] + u * table[q, r, j + 1]
-                out[q, r, i] = value * f if q < 3 else value * f * f
+            a, b = (1.0 - u) * here[i], u * beyond[i]
+            for q in range(1, 3):
+                out[q, r, i] = a * table[q, r, j] + b * table[q, r, j + 1]
+            a, b = a * here[i], b * beyond[i]
+            for q in range(3, 6):
+                out[q, r, i] = a * table[q, r, j] + b * table[q, r, j + 1]

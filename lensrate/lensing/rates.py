@@ -206,7 +206,8 @@ def kicked_moments(ready):
     kicked, table = ready.model.kicked, ready.kicked_table
     n = max(_KICKED_NODES, ready.numerics.nodes - 1)
     D_L, w_L = panel_nodes(_lens_edges(ready, table.end), _LENS_NODES + (2 if _through_the_centre(ready) else 0))
-    first, D_S, src = _behind(ready, D_L, _joined(ready.edges), n)
+    edges = ready.edges if _through_the_centre(ready) else _joined(ready.edges)
+    first, D_S, src = _behind(ready, D_L, edges, n)
     tau, gamma = np.zeros((len(kicked.host), D_L.size)), np.zeros((len(kicked.host), D_L.size))
     kernels.lens_moments(
         D_L, w_L, table.at(D_L), kicked.element_of_row, first, D_S, src, FOUR_G_C2, KAPPA, MAS, _KICKED_DIRECTIONS,
