@@ -6,6 +6,7 @@ Names are loaded on first use, so that ``lensrate --help`` stays instant.
 from ._version import __version__
 
 _WHERE = {
+    "Campaign": "surveys.campaign",
     "ConvergenceError": "errors",
     "DataFileError": "errors",
     "Family": "surveys.family",
@@ -15,7 +16,9 @@ _WHERE = {
     "Scenario": "scenario.record",
     "Sightline": "lensing.sightline",
     "Spread": "surveys.spread_result",
+    "campaign": "surveys.yields",
     "census": "remnants.census",
+    "kick_yield": "surveys.kick_yield",
     "resolve": "scenario.model",
     "sightline": "lensing.sightline",
     "sightline_spread": "surveys.spread",

@@ -8,6 +8,7 @@ import click
 from .._version import __version__
 from ..errors import InputError, LensrateError
 from .base import Group
+from .campaign import campaign
 from .census import census
 from .scenario import scenario
 from .sightline import sightline
@@ -31,7 +32,7 @@ def cli():
     """
 
 
-for command in (sightline, spread, census, synthesize, scenario, verify):
+for command in (sightline, campaign, spread, census, synthesize, scenario, verify):
     cli.add_command(command)
 
 

@@ -24,14 +24,6 @@ _DEFAULT_EVENTS = 20000
 @click.option(
     "--exact", is_flag=True, help="Range over alternatives that need new integrals too (seconds a field each)."
 )
-@click.option("--facilities", metavar="NAME|FILE", help="Who measures masses: 'marram' (invented) or a TOML file.")
-@click.option(
-    "--mass-error",
-    type=click.FloatRange(0.001, 10.0),
-    default=0.2,
-    show_default=True,
-    help="A mass counts as measured below this relative error.",
-)
 @click.option(
     "--kick-yield",
     "kick_class",
@@ -62,7 +54,7 @@ _DEFAULT_EVENTS = 20000
 @click.option("--overwrite", is_flag=True, help="Replace existing files.")
 @click.option("--quiet", "-q", is_flag=True, help="No messages on stderr.")
 def campaign(
-    file, scenario_name, kicks, bh_kicks, family_name, exact, facilities, mass_error, kick_class, n_events, seed, by,
+    file, scenario_name, kicks, bh_kicks, family_name, exact, kick_class, n_events, seed, by,
     plot, proposal, jobs, save, as_json, overwrite, quiet,
 ):  # fmt: skip
     """Expected events of the survey that FILE describes, by lens class.
@@ -75,7 +67,6 @@ def campaign(
     Examples:
       lensrate campaign marram
       lensrate campaign marram --kicks hobbs2005 --plot page.png
-      lensrate campaign marram --facilities marram --mass-error 0.2
       lensrate campaign marram --kick-yield neutron_star --plot kicks.png
       lensrate campaign my_survey.toml --exact --jobs 2 --proposal proposal/
     """
@@ -87,7 +78,7 @@ def campaign(
     if plot:
         check_target(plot, PICTURES, overwrite, "--plot")
     folder = _new_folder(proposal, overwrite) if proposal else None
-    _no_idle_options(save, facilities, plot or proposal or facilities)
+    _no_idle_options(save, plot or proposal)
     from ..surveys.campaign import Campaign
 
     survey = Campaign.read(file)
@@ -99,10 +90,6 @@ def campaign(
 
     family = None if family_name == "none" else Family.read(family_name)
     result = forecast(survey, base, family=family, exact=exact, jobs=jobs, progress=None if quiet else "fields")
-    if facilities:
-        from ..surveys.masses import mass_forecast
-
-        result = mass_forecast(result, facilities, limit=mass_error, n=n_events, seed=seed, jobs=jobs)
     curve = None
     if kick_class:
         from ..surveys.kick_yield import kick_yield
@@ -132,16 +119,15 @@ def campaign(
             click.echo(wrap(f"note: {warning}"), err=True)
 
 
-def _no_idle_options(save, facilities, draws):
+def _no_idle_options(save, draws):
     """Refuse options that were typed and would do nothing."""
     context = click.get_current_context()
     idle = {
         "by": (not save, "--save"),
-        "mass_error": (not facilities, "--facilities"),
-        "n_events": (not draws, "--plot, --proposal or --facilities"),
-        "seed": (not draws, "--plot, --proposal or --facilities"),
+        "n_events": (not draws, "--plot or --proposal"),
+        "seed": (not draws, "--plot or --proposal"),
     }
-    names = {"n_events": "events", "mass_error": "mass-error"}
+    names = {"n_events": "events"}
     for option, (useless, partner) in idle.items():
         if useless and context.get_parameter_source(option).name == "COMMANDLINE":
             raise click.UsageError(f"--{names.get(option, option)} has no effect here: it goes with {partner}")

@@ -1,14 +1,19 @@
 """Pictures; the only package that imports matplotlib. One file for each kind of result."""
 
+from .campaigns import campaign, kick_yield, save_campaign, save_kick_yield
 from .galaxy import maps, save_maps
 from .sightlines import depth, joint, overview, save_picture, sightline, stacked, timescales
 from .spread import save_spread, spread_overview, tornado
 
 __all__ = [
+    "campaign",
     "depth",
     "joint",
+    "kick_yield",
     "maps",
     "overview",
+    "save_campaign",
+    "save_kick_yield",
     "save_maps",
     "save_picture",
     "save_spread",

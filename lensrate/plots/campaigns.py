@@ -50,7 +50,7 @@ def _page(forecast, n, seed):
     for ax, (name, label, limits) in zip(axes[2:], _DISTRIBUTIONS):
         _distribution(events, name, label, limits, ax)
     handles, labels = axes[2].get_legend_handles_labels()
-    axes[2].legend(handles, labels, fontsize=7, frameon=False, loc="lower center", ncols=2)
+    figure.legend(handles, labels, fontsize=8, frameon=False, loc="outside lower center", ncols=len(labels))
     s = forecast.scenario
     figure.suptitle(
         f"{forecast.campaign.name}: {forecast.by_class()[-1]:.3g} events expected\n"
@@ -125,8 +125,10 @@ def yields(forecast, ax=None):
     ax.set_ylabel("expected events")
     words = ["line: 68 % of counts"]
     words += ["bar: range over assumptions"] if forecast.ranges is not None else []
-    words += [f"diamond: scaled, {len(forecast.scaled_fields())} fields"] if scaled is not None else []
-    ax.set_title("; ".join(words), fontsize=8)
+    text = "; ".join(words)
+    if scaled is not None:
+        text += f"\ndiamond: scaled to observed, {', '.join(forecast.scaled_fields()[:6])} only"
+    ax.set_title(text, fontsize=8)
     return ax
 
 

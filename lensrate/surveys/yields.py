@@ -17,10 +17,10 @@ from ..sources.rules import LimitRule, PeakRule, parse_rule
 from ..units import DAYS_PER_YEAR
 from .campaign import Campaign
 from .dust_map import DustMap
+from .shared import integral_key
 
 __all__ = ["CampaignForecast", "FieldForecast", "campaign", "field_scenario"]
 
-_LINEAR = ("kicks", "bh_kicks", "ifmr", "imf", "lens_class")
 _OUTSIDE = 0.01  # share of a class's events beyond the efficiency curve that is worth a word
 _ONE_SIGMA = 0.158655  # tail below one standard deviation of a normal distribution
 
@@ -408,7 +408,8 @@ def _with_range(forecast, family, exact, jobs, executor):
     for case in family.cases(forecast.scenario):
         old, new = forecast.scenario, case.scenario
         changed = [k.name for k in fields(Scenario) if getattr(old, k.name) != getattr(new, k.name)]
-        if set(changed) <= set(_LINEAR):
+        # an unkicked forecast holds no fields to weigh
+        if integral_key(new) == integral_key(old) and (new.unkicked or not old.unkicked):
             changes = {k: getattr(case.scenario, k) for k in changed}
             parts = [
                 _assembled(forecast.campaign, f.field, f.sightline.reforecast(**changes) if changes else f.sightline,
