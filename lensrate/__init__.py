@@ -15,6 +15,7 @@ _WHERE = {
     "LensrateError": "errors",
     "Scenario": "scenario.record",
     "Sightline": "lensing.sightline",
+    "SkyMap": "surveys.skyrecord",
     "Spread": "surveys.spread_result",
     "campaign": "surveys.yields",
     "census": "remnants.census",
@@ -23,6 +24,7 @@ _WHERE = {
     "sightline": "lensing.sightline",
     "sightline_spread": "surveys.spread",
     "sightlines": "lensing.many",
+    "skymap": "surveys.skymap",
     "spread": "surveys.spread",
     "synthesize": "remnants.synthesis",
 }

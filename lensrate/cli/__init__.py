@@ -12,6 +12,7 @@ from .campaign import campaign
 from .census import census
 from .scenario import scenario
 from .sightline import sightline
+from .skymap import skymap
 from .spread import spread
 from .synthesize import synthesize
 from .verify import verify
@@ -32,7 +33,7 @@ def cli():
     """
 
 
-for command in (sightline, campaign, spread, census, synthesize, scenario, verify):
+for command in (sightline, skymap, campaign, spread, census, synthesize, scenario, verify):
     cli.add_command(command)
 
 

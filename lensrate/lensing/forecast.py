@@ -141,8 +141,8 @@ def assemble(model, integrals, u_0, limits, where):
         "warnings": (
             *integrals.ready.sources.warnings,
             *model.warnings,
-            *_notes(model, lenses),
-            *_line_notes(integrals.ready, float(quadrature)),
+            *class_notes(model, lenses),
+            *line_notes(integrals.ready, float(quadrature)),
         ),
     }
 
@@ -197,7 +197,7 @@ def _mismatch(model, integrals):
     return found / wanted - 1.0 if wanted > 0 else None
 
 
-def _notes(model, lenses):
+def class_notes(model, lenses):
     notes = []
     dark = [n for n in ("neutron_star", "black_hole") if lenses[n].rate > 0 and lenses[n].kinematics == "unkicked"]
     if dark:
@@ -218,7 +218,7 @@ def _notes(model, lenses):
     return notes
 
 
-def _line_notes(ready, quadrature):
+def line_notes(ready, quadrature):
     """What is particular to this direction and its sources."""
     notes, far = [], ready.mean_distance()
     if quadrature > _ROUGH:
