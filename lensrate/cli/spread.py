@@ -9,10 +9,13 @@ from .sightline import direction
 from .text import columns, number, safe, wrap
 
 _SHOWN = (
+    ("events", "all"), ("events", "neutron_star"), ("events", "black_hole"),
     ("optical_depth", "all"), ("rate", "all"), ("median_t_E", "all"), ("share_of_events", "white_dwarf"),
     ("share_of_events", "neutron_star"), ("share_of_events", "black_hole"),
 )  # fmt: skip
 _HEADS = {
+    "events": ("events", 1.0),
+    "scaled_to_observed": ("scaled", 1.0),
     "optical_depth": ("tau [1e-6]", 1e6),
     "rate": ("rate [1e-6/yr]", 1e6),
     "mean_t_E": ("mean t_E [d]", 1.0),
@@ -25,8 +28,9 @@ _WIDEST = 23  # letters of an alternative's name
 
 
 @click.command(cls=Command)
-@click.argument("lon", metavar="L")
-@click.argument("lat", metavar="B")
+@click.argument("lon", metavar="L", required=False)
+@click.argument("lat", metavar="B", required=False)
+@click.option("--campaign", "survey", metavar="FILE", help="A campaign instead of L B: its file, or 'marram'.")
 @click.option("--icrs", is_flag=True, help="Take RA Dec (degrees, or hh:mm:ss dd:mm:ss) instead of l b.")
 @click.option(
     "--family",
@@ -61,10 +65,10 @@ _WIDEST = 23  # letters of an alternative's name
 @click.option("--jobs", type=click.IntRange(1, 256), default=1, show_default=True, help="Threads.")
 @output
 def spread(
-    lon, lat, icrs, family_name, axes, combinations, exact, which, lens, t_E_range, by, plot, jobs, save, as_json,
-    overwrite, quiet, **choices
+    lon, lat, survey, icrs, family_name, axes, combinations, exact, which, lens, t_E_range, by, plot, jobs, save,
+    as_json, overwrite, quiet, **choices
 ):  # fmt: skip
-    """Spread of a forecast toward L B (degrees) over a family of assumptions.
+    """Spread of a forecast toward L B (degrees), or of a campaign, over a family of assumptions.
 
     Every assumption is changed alone, and with --combinations all together. What comes out is a range, not a standard
     error, unless the family states weights.
@@ -76,6 +80,7 @@ def spread(
       lensrate spread 1.0 -3.9 --family kicks --combinations --save kicks.ecsv
       lensrate spread 1.0 -3.9 --axis kicks --axis imf --combinations --json
       lensrate spread 1.0 -2.9 --extinction I=1.25 --family my_family.toml --exact
+      lensrate spread --campaign marram --axis kicks --axis ifmr
     """
     import astropy.units as u
 
@@ -88,20 +93,28 @@ def spread(
         check_target(plot, PICTURES, overwrite, "--plot")
     if not save and click.get_current_context().get_parameter_source("by").name == "COMMANDLINE":
         raise click.UsageError("--by has no effect here: it goes with --save")
+    if survey is not None and click.get_current_context().get_parameter_source("scenario_name").name != "COMMANDLINE":
+        from ..surveys.campaign import Campaign
+
+        choices["scenario_name"] = Campaign.read(survey).scenario
     scenario = read_scenario(**choices)
     if lens is not None:
         one_of("--lens", lens, list(dict.fromkeys([*_LENSES, *scenario.lens_class])))
-    l, b = direction(lon, lat, icrs)
     from ..surveys.family import Family
     from ..surveys.spread import sightline_spread
 
+    place = _place(lon, lat, survey, icrs, exact, t_E_range)
     family = Family.read(family_name)
     announce(quiet)
     with Progress("spread", quiet) as progress:
-        result = sightline_spread(
-            l, b, family, scenario, combinations=combinations, axes=list(axes), exact=exact,
-            t_E_range=tuple(t_E_range) * u.day if t_E_range else None, jobs=jobs, progress=progress,
-        )  # fmt: skip
+        options = {"combinations": combinations, "axes": list(axes), "jobs": jobs, "progress": progress}
+        if survey is not None:
+            from ..surveys.campaign_spread import campaign_spread
+
+            result = campaign_spread(survey, family, scenario, **options)
+        else:
+            limits = tuple(t_E_range) * u.day if t_E_range else None
+            result = sightline_spread(*place, family, scenario, exact=exact, t_E_range=limits, **options)
     pairs = shown(result, which, lens)
     if plot:
         from ..plots import save_spread
@@ -122,6 +135,23 @@ def spread(
             click.echo(wrap(f"note: {note}"), err=True)
 
 
+def _place(lon, lat, survey, icrs, exact, t_E_range):
+    """Direction of L B; None with a campaign, which takes nothing that belongs to one direction."""
+    if survey is None:
+        if lon is None or lat is None:
+            raise click.UsageError("L and B are missing; give them in degrees, or --campaign FILE")
+        return direction(lon, lat, icrs)
+    context = click.get_current_context()
+    typed = ("sources", "extinction", "u_0_limit")
+    idle = [n for n in typed if context.get_parameter_source(n).name == "COMMANDLINE"]
+    idle += [n for n, given in (("icrs", icrs), ("exact", exact), ("t_E_range", t_E_range)) if given]
+    if lon is not None:
+        raise click.UsageError("L B and --campaign are both given; keep one")
+    if idle:
+        raise click.UsageError(f"--{idle[0].replace('_', '-')} has no effect with --campaign, which states its own")
+    return None
+
+
 def shown(result, which, lens):
     """Return the (number, lens) pairs to show."""
     if which and lens:
@@ -130,7 +160,7 @@ def shown(result, which, lens):
         return [(which, x) for x in result.lenses if not (which == "share_of_events" and x == "all")]
     if lens:
         return [(n, lens) for n in result.numbers if not (n == "share_of_events" and lens == "all")]
-    return [(n, x) for n, x in _SHOWN if x in result.lenses]
+    return [(n, x) for n, x in _SHOWN if x in result.lenses and n in result.numbers]
 
 
 def notes(result):
@@ -146,12 +176,17 @@ def notes(result):
     return out
 
 
+def _where(about):
+    if "campaign" in about:
+        return f"{safe(about['campaign'])} ({about['campaign_hash']})"
+    return f"l = {about['l_deg']:.4f}, b = {about['b_deg']:.4f} deg"
+
+
 def report(result, pairs):
     """Return the table for people."""
     about, base, family = result.about, result.base, result.family
     head = [
-        f"lensrate {result.version}   l = {about['l_deg']:.4f}, b = {about['b_deg']:.4f} deg   "
-        f"scenario {safe(base.name)} ({base.hash})",
+        f"lensrate {result.version}   {_where(about)}   scenario {safe(base.name)} ({base.hash})",
         wrap(f"base: {result.header()}"),
         wrap(
             f"base: kicks {base.kicks}, black holes {base.bh_kicks}; remnant masses {base.ifmr}; "
@@ -159,7 +194,7 @@ def report(result, pairs):
         ),
         wrap(f"family {family.name} ({family.hash}): one assumption changed at a time; ranges, not standard errors"),
     ]
-    if about["exact"]:
+    if about.get("exact"):
         head.append("exact: source stars follow mass function and remnant masses")
     several = len({x for _, x in pairs}) > 1
     titles = ["assumption", *(_title(n, x, several) for n, x in pairs)]

@@ -11,8 +11,9 @@ from .saving import blank, write_figure
 
 __all__ = ["PANELS", "save_spread", "spread_overview", "tornado"]
 
-#: (number, lens) of the four panels that are drawn where nothing else is asked
+#: (number, lens) of the panels that are drawn where nothing else is asked, as far as a forecast has them
 PANELS = (
+    ("events", "all"),
     ("rate", "all"),
     ("share_of_events", "neutron_star"),
     ("share_of_events", "black_hole"),
@@ -21,6 +22,8 @@ PANELS = (
 # Okabe & Ito (2008); lower and higher also differ in lightness and hatching
 _LOWER, _HIGHER, _GREY = "#0072B2", "#E69F00", "0.75"
 _SCALES = {
+    "events": (1.0, "expected events {of}"),
+    "scaled_to_observed": (1.0, "events {of}, scaled to observed"),
     "optical_depth": (1e6, r"optical depth {of}  [$10^{{-6}}$]"),
     "rate": (1e6, r"event rate {of}  [$10^{{-6}}$ yr$^{{-1}}$ per source]"),
     "mean_t_E": (1.0, r"mean $t_\mathrm{{E}}$ {of}  [d]"),
@@ -161,8 +164,11 @@ def spread_overview(result, panels=None):
     for ax in axes[len(panels) :]:
         ax.set_visible(False)
     where = ""
-    if "l_deg" in result.about:
-        where = f"l = {result.about['l_deg']:g}°, b = {result.about['b_deg']:g}°, "
+    about = result.about
+    if "campaign" in about:
+        where = f"{about['campaign']}, "
+    elif "l_deg" in about:
+        where = f"l = {about['l_deg']:g}°, b = {about['b_deg']:g}°, "
     title = f"{where}base {result.base.name} ({result.base.hash}), family {result.family.name} ({result.family.hash})"
     notes = "one assumption changed at a time; line: base; ticks: alternatives; no standard errors"
     figure.suptitle("\n".join(t for t in (title, result.header(), notes) if t), fontsize="small")

@@ -1,6 +1,6 @@
 """Expected events of a campaign: by field, class and season, absolute and scaled to what was observed."""
 
-from dataclasses import dataclass, field, fields, replace
+from dataclasses import dataclass, field, replace
 
 import astropy.units as u
 import numpy as np
@@ -17,9 +17,8 @@ from ..sources.rules import LimitRule, PeakRule, parse_rule
 from ..units import DAYS_PER_YEAR
 from .campaign import Campaign
 from .dust_map import DustMap
-from .shared import integral_key
 
-__all__ = ["CampaignForecast", "FieldForecast", "campaign", "field_scenario"]
+__all__ = ["CampaignForecast", "FieldForecast", "assembled", "campaign", "field_scenario", "magnitude_share"]
 
 _OUTSIDE = 0.01  # share of a class's events beyond the efficiency curve that is worth a word
 _ONE_SIGMA = 0.158655  # tail below one standard deviation of a normal distribution
@@ -302,7 +301,11 @@ def campaign(survey, scenario=None, *, family=None, exact=False, jobs=1, executo
         survey, base, classes, tuple(rows), warnings=_warnings(survey, rows, classes),
         references=tuple(dict.fromkeys(r for f in rows for r in f.sightline.references)),
     )  # fmt: skip
-    return out if family is None else _with_range(out, family, exact, jobs, executor)
+    if family is None:
+        return out
+    from .campaign_spread import with_range
+
+    return with_range(out, family, exact, jobs, executor)
 
 
 def _field(survey, base, i, dust):
@@ -320,10 +323,11 @@ def _field(survey, base, i, dust):
         number, counted = f.star_density * area, "stated"
     else:
         number, counted = density * area, "source model"
-    return _assembled(survey, f, centre, number, counted, factor)
+    return assembled(survey, f, centre, number, counted, factor)
 
 
-def _assembled(survey, f, centre, number, counted, factor):
+def assembled(survey, f, centre, number, counted, factor):
+    """Return the FieldForecast of a field from its centre's Sightline, its sources and the factor on the rate."""
     curve = survey.efficiency
     if curve.second == "I_S":
         curve = curve.averaged(magnitude_share(centre._integrals.ready))
@@ -400,44 +404,6 @@ def magnitude_share(ready):
         return np.array(out)
 
     return share
-
-
-def _with_range(forecast, family, exact, jobs, executor):
-    """Add the range over a family of assumptions, varied one at a time."""
-    rows, labels, skipped = [], [], 0
-    for case in family.cases(forecast.scenario):
-        old, new = forecast.scenario, case.scenario
-        changed = [k.name for k in fields(Scenario) if getattr(old, k.name) != getattr(new, k.name)]
-        # an unkicked forecast holds no fields to weigh
-        if integral_key(new) == integral_key(old) and (new.unkicked or not old.unkicked):
-            changes = {k: getattr(case.scenario, k) for k in changed}
-            parts = [
-                _assembled(forecast.campaign, f.field, f.sightline.reforecast(**changes) if changes else f.sightline,
-                           f.sources, f.counted, f.rate_factor).expected.sum(axis=1)
-                for f in forecast.fields
-            ]  # fmt: skip
-        elif exact:
-            parts = [f.expected.sum(axis=1) for f in
-                     campaign(forecast.campaign, case.scenario, jobs=jobs, executor=executor).fields]  # fmt: skip
-        else:
-            skipped += 1
-            continue
-        each = np.sum(parts, axis=0)
-        rows.append(np.append(each, each.sum()))
-        labels.append(case.label)
-    table = np.array(rows)
-    ranges = np.column_stack([table.min(axis=0), table.max(axis=0)])
-    cases = tuple(f"{labels[i]} to {labels[j]}" for i, j in zip(table.argmin(axis=0), table.argmax(axis=0)))
-    notes = list(forecast.warnings)
-    if skipped:
-        notes.append(
-            f"the range leaves out {skipped} alternatives of family '{family.name}' that need new integrals; "
-            "ask for the exact range to have them"
-        )
-    return replace(
-        forecast, family=family.name, ranges=ranges, range_cases=cases, warnings=tuple(notes),
-        references=tuple(dict.fromkeys([*forecast.references, *family.references])),
-    )  # fmt: skip
 
 
 def _warnings(survey, rows, classes):

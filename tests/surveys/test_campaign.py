@@ -12,6 +12,7 @@ import lensrate
 from lensrate import InputError, Scenario
 from lensrate.surveys import report
 from lensrate.surveys.campaign import Campaign
+from lensrate.surveys.campaign_spread import campaign_spread
 from lensrate.surveys.family import Family
 from lensrate.surveys.kick_yield import kick_yield
 from lensrate.surveys.yields import campaign, poisson_68
@@ -181,6 +182,19 @@ def test_the_range_holds_the_forecast_and_names_its_ends(kicked):
     i = kicked.classes.index("neutron_star")
     assert high[i] / low[i] > 1.2 and "kicks" in kicked.range_cases[i]
     assert kicked.fields[0].sampling[i] > 0
+
+
+def test_a_spread_of_a_campaign_is_its_forecasts():
+    survey = Campaign.from_dict(plain(observed_events=30))
+    result = campaign_spread(survey, Family.read("default"), UNKICKED, axes=["ifmr"])
+    rows = {r.alternative: r.values for r in result.rows}
+    own = campaign(survey, UNKICKED.replace(ifmr="raithel2018"))
+    # the spread keeps the base's source stars, which hardly know the remnants' masses
+    for lens, events in zip([*own.classes, "all"], own.by_class()):
+        assert rows["raithel2018"][lens]["events"] == pytest.approx(events, rel=5e-3)
+    assert rows["raithel2018"]["all"]["scaled_to_observed"] == pytest.approx(30)
+    low, high = result.range("events", "black_hole")[1:3]
+    assert low < result.rows[0].values["black_hole"]["events"] < high
 
 
 def test_a_proposal_can_quote_it(kicked):
