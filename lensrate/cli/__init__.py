@@ -10,6 +10,7 @@ from ..errors import InputError, LensrateError
 from .base import Group
 from .campaign import campaign
 from .census import census
+from .compare import compare
 from .scenario import scenario
 from .sightline import sightline
 from .skymap import skymap
@@ -33,7 +34,7 @@ def cli():
     """
 
 
-for command in (sightline, skymap, campaign, spread, census, synthesize, scenario, verify):
+for command in (sightline, skymap, campaign, spread, census, compare, synthesize, scenario, verify):
     cli.add_command(command)
 
 

@@ -1,18 +1,23 @@
 """Pictures; the only package that imports matplotlib. One file for each kind of result."""
 
 from .campaigns import campaign, kick_yield, save_campaign, save_kick_yield
+from .compare import comparison, comparison_page, ratio, save_comparison
 from .galaxy import maps, save_maps
 from .sightlines import depth, joint, overview, save_picture, sightline, stacked, timescales
 from .spread import save_spread, spread_overview, tornado
 
 __all__ = [
     "campaign",
+    "comparison",
+    "comparison_page",
     "depth",
     "joint",
     "kick_yield",
     "maps",
     "overview",
+    "ratio",
     "save_campaign",
+    "save_comparison",
     "save_kick_yield",
     "save_maps",
     "save_picture",

@@ -1,0 +1,47 @@
+"""A campaign's forecast under assumptions that only re-weight the integrals already done."""
+
+from dataclasses import replace
+
+from .shared import integral_key
+from .yields import _assembled, _warnings, campaign
+
+__all__ = ["reweighted"]
+
+
+def reweighted(forecast, scenario, jobs=1, progress=None):
+    """Return the forecast of the same campaign under another scenario, cheaply where that can be.
+
+    Parameters
+    ----------
+    forecast : CampaignForecast
+    scenario : Scenario
+        One that differs in kick laws, masses or lens classes shares the integrals; any other is forecast anew.
+    jobs, progress
+        As in `yields.campaign`.
+
+    Returns
+    -------
+    CampaignForecast
+
+    Raises
+    ------
+    InputError, ConvergenceError
+        As `yields.campaign`.
+    """
+    old = forecast.scenario
+    # an unkicked forecast holds no fields to weigh
+    unkicked = forecast.fields[0].sightline._model.kicked is None
+    if integral_key(scenario) != integral_key(old) or (unkicked and not scenario.unkicked and scenario.fields):
+        return campaign(forecast.campaign, scenario, jobs=jobs, progress=progress)
+    keys = ("kicks", "bh_kicks", "ifmr", "imf", "lens_class")
+    changes = {k: getattr(scenario, k) for k in keys if getattr(scenario, k) != getattr(old, k)}
+    rows = [
+        _assembled(forecast.campaign, f.field, f.sightline.reforecast(**changes) if changes else f.sightline,
+                   f.sources, f.counted, f.rate_factor)
+        for f in forecast.fields
+    ]  # fmt: skip
+    return replace(
+        forecast, scenario=scenario, classes=rows[0].sightline.classes, fields=tuple(rows), family="", ranges=None,
+        range_cases=(), masses=None, warnings=_warnings(forecast.campaign, rows, rows[0].sightline.classes),
+        references=tuple(dict.fromkeys(r for f in rows for r in f.sightline.references)),
+    )  # fmt: skip

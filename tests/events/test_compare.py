@@ -1,0 +1,182 @@
+"""A sample against its forecast: fair under the truth drawn by the event sampler, unfair where it must be."""
+
+import astropy.units as u
+import numpy as np
+import pytest
+from astropy.table import Table
+from mocks import draw_sample, draw_table, two_fields
+from scipy import stats
+
+import lensrate
+from lensrate import InputError, Scenario
+from lensrate.events import goodness
+from lensrate.events.compare import compare
+from lensrate.events.fold import LN_T, STEP, Errors, assign, fold_campaign, grouped
+from lensrate.events.observed import Sample
+from lensrate.events.shapes import Parallaxes
+from lensrate.events.versus import compare_sample
+
+UNKICKED = Scenario.read("default").replace(kicks="none")
+
+
+@pytest.fixture(scope="module")
+def forecast(tmp_path_factory):
+    return two_fields(tmp_path_factory.mktemp("survey"), UNKICKED)
+
+
+@pytest.fixture(scope="module")
+def folded(forecast):
+    return fold_campaign(forecast.campaign, forecast=forecast)
+
+
+@pytest.fixture(scope="module")
+def one(forecast):
+    return draw_sample(forecast, 3, parallax=True)
+
+
+def test_statistics_are_those_of_a_reference_library():
+    u = np.random.default_rng(1).random(40)
+    assert goodness.kolmogorov_smirnov(u) == pytest.approx(stats.kstest(u, "uniform").statistic)
+    known = {"loc": 0.0, "scale": 1.0}
+    fit = stats.goodness_of_fit(stats.uniform, u, known_params=known, statistic="ad", n_mc_samples=2, rng=1)
+    assert goodness.anderson_darling(u) == pytest.approx(fit.statistic)
+    # Cash (1979) form of the Poisson likelihood ratio against the saturated model
+    n, mu = np.array([0, 3, 9]), np.array([0.5, 4.0, 6.0])
+    ratio = 2 * (stats.poisson.logpmf(n, np.maximum(n, 1e-300)) - stats.poisson.logpmf(n, mu)).sum()
+    assert goodness.deviance(n, mu) == pytest.approx(ratio)
+    tail = goodness.tail_test(100, 2.5, 4)
+    assert tail.p_at_least == pytest.approx(1 - stats.poisson.cdf(3, 2.5))
+    assert goodness.tail_test(100, 2.5, 4, 50).p_at_most == pytest.approx(stats.binom.cdf(4, 50, 0.05))
+
+
+def test_what_is_folded_adds_up_to_the_forecast(forecast, folded):
+    np.testing.assert_allclose(folded.expected(), forecast.expected.sum(axis=2), rtol=2e-3)
+    errors = Errors((np.log(0.05), 0.0), 3.0, (-0.5, 0.0, 0.5))
+    np.testing.assert_allclose(folded.observed(errors).sum(axis=2) * STEP, folded.expected(), rtol=1e-6)
+    # a delta of true timescales comes out as wide as the errors and a cell of the grid
+    row = errors.matrix[:, 300] / STEP
+    mean = np.sum(LN_T * row) * STEP
+    width = np.sqrt(np.sum((LN_T - mean) ** 2 * row) * STEP)
+    wanted = np.mean([errors.sigma(LN_T[300], q) ** 2 for q in errors.spread]) + STEP**2 / 12
+    assert width == pytest.approx(np.sqrt(wanted), rel=1e-3)
+
+
+def test_p_values_are_even_under_the_truth_and_estimates_unbiased(forecast, folded):
+    made = [compare(draw_sample(forecast, 100 + i), folded, simulations=40, seed=i) for i in range(40)]
+    for name in ("ks", "anderson_darling", "deviance", "sky"):
+        p = [c.tests[name].p for c in made]
+        assert stats.kstest(p, "uniform").pvalue > 1e-3, name
+    for key in ("optical_depth", "rate"):
+        rows = [getattr(c, key) for c in made]
+        pull = [(r.value - r.predicted) / r.error for r in rows]
+        assert abs(np.mean(pull)) < 4 / np.sqrt(40) and 0.7 < np.std(pull) < 1.4
+    tail = [c.tail for c in made]
+    total = sum(t.expected for t in tail)
+    assert abs(sum(t.observed for t in tail) - total) < 4 * np.sqrt(total)
+
+
+def test_longer_events_are_noticed_and_a_fit_takes_them_in(forecast, folded):
+    table = draw_table(forecast, 5)
+    table["t_E"] *= 1.5
+    table["t_E_err"] *= 1.5
+    sample = Sample.from_table(table)
+    plain = compare(sample, folded, simulations=200)
+    assert max(plain.tests[k].p for k in ("ks", "anderson_darling")) < 0.02
+    assert plain.tail.p_at_least < 0.05
+    fitted = compare(sample, folded, simulations=20, fit=True)
+    assert fitted.fitted[0] == pytest.approx(np.log(1.5), abs=0.2) and fitted.tests["ks"].p > 0.05
+    assert fitted.ln_likelihood["t_E"] > plain.ln_likelihood["t_E"]
+
+
+def test_parallaxes_given_t_E_do_not_see_the_selection_of_timescales(forecast, folded):
+    long = [e for i in range(6) for e in draw_sample(forecast, 40 + i, parallax=True) if e.t_E.value > 25]
+    c = compare(Sample(tuple(long), "long ones"), folded, simulations=100)
+    assert c.tests["ks"].p < 0.02 < c.tests["pi_E_ks"].p and c.parallax_shares.size == len(long)
+
+
+def test_the_size_of_a_measured_vector_errs_like_one(folded):
+    # Rice (1945): the size of a true parallax of the forecast plus noise in both components
+    given, rng = Parallaxes(folded), np.random.default_rng(2)
+    t, y, density = folded.sightlines[0].joint("pi_E")
+    row = sum(np.asarray(d) for d in density.values())[np.argmin(np.abs(np.log(np.asarray(t) / 20)))]
+    true = np.exp(np.interp(rng.random(300), np.cumsum(row) / row.sum(), np.log(np.asarray(y))))
+    noise = 0.1 * rng.standard_normal((2, 300))
+    seen = np.hypot(true + noise[0], noise[1])
+    x = float(np.log(t[np.argmin(np.abs(np.log(np.asarray(t) / 20)))].to_value(u.day)))
+    as_vector = [given.given(0, x, 1e-3, s, 0.1, True)[0] for s in seen]
+    as_number = [given.given(0, x, 1e-3, s, 0.1, False)[0] for s in seen]
+    assert stats.kstest(as_vector, "uniform").pvalue > 1e-3 > stats.kstest(as_number, "uniform").pvalue
+
+
+def test_source_magnitudes(forecast, folded):
+    edges = np.arange(13.0, 25.01, 0.5)
+    share = folded.magnitude_shares(0, edges)
+    assert share.sum() == pytest.approx(1.0) and share[edges[:-1] >= 20].sum() < 1e-9
+    table, rng = draw_table(forecast, 9), np.random.default_rng(4)
+    middle = 0.5 * (edges[1:] + edges[:-1])
+    table["I_S"] = rng.choice(middle, len(table), p=share)
+    assert compare(Sample.from_table(table), folded, simulations=100).tests["magnitude"].p > 0.01
+    table["I_S"] = 17.0
+    assert compare(Sample.from_table(table), folded, simulations=100).tests["magnitude"].p < 0.02
+
+
+def test_scenarios_side_by_side(forecast, one, tmp_path):
+    other = UNKICKED.replace(imf="kroupa2001_ballero2007", name="flat")
+    result = compare_sample(one, [UNKICKED, other], forecast=forecast, simulations=0)
+    d = result.differences
+    assert max(x["total"] for x in d) == 0.0 and d[0] != d[1]
+    a, b = result.comparisons
+    assert d[1]["t_E"] - d[0]["t_E"] == pytest.approx(b.ln_likelihood["t_E"] - a.ln_likelihood["t_E"])
+    assert len(result.to_table()) == 2 and len(result.to_dict()["scenarios"]) == 2
+    assert a.to_table("test")["p"].mask.all() if hasattr(a.to_table("test")["p"], "mask") else True
+    for by, n in (("bin", a.observed.size), ("field", 2), ("event", len(one))):
+        table = a.to_table(by)
+        assert len(table) == n and table.meta["scenario_hash"] == UNKICKED.hash
+    assert sum(a.to_table()["observed"]) == len(one)
+
+
+def test_without_a_campaign_there_are_shapes_only(one):
+    scenario = UNKICKED.replace(sources="limit:I=20")
+    c = compare_sample(one, scenario, simulations=20).comparisons[0]
+    assert c.counts == "shape" and c.optical_depth is None and "sky" not in c.tests
+    assert c.predicted.sum() == pytest.approx(len(one), rel=5e-3) and "shapes only" in c.notes[0]
+    assert len(c.fields) == 2
+    with pytest.raises(InputError, match="--campaign"):
+        compare_sample(one, scenario, counts="absolute")
+
+
+def test_events_are_where_they_are(forecast, folded, one):
+    fields = forecast.campaign.fields
+    assert set(assign(one.events, fields)) == {0, 1}
+    table = draw_table(forecast, 3)
+    table["l"][:3] = 10.0
+    c = compare(Sample.from_table(table), folded, simulations=0)
+    assert len(c.outside) == 3 and table["event"][0] in c.notes[0]
+    table["l"] = 10.0
+    with pytest.raises(InputError, match=r"none of its \d+ events lies in a field .*l = 10.00"):
+        compare(Sample.from_table(table), folded)
+    places, index = grouped(one.events)
+    assert len(places) == 2 and index.min() == 0
+
+
+def test_what_cannot_be(folded, one):
+    with pytest.raises(InputError, match="did you mean 'absolute'"):
+        compare(one, folded, counts="absolut")
+    with pytest.raises(InputError, match="tail: -3 d"):
+        compare(one, folded, tail=-3.0)
+    with pytest.raises(InputError, match="no events"):
+        compare(Sample((), "empty"), folded)
+    with pytest.raises(InputError, match="states its own"):
+        lensrate.compare_sample(one, UNKICKED, folded.survey, efficiency=folded.curves[0])
+
+
+def test_geocentric_events_with_a_parallax_vector_become_heliocentric(folded):
+    row = {"event": ["a"], "l": [1.0], "b": [-2.9], "t_E": [60.0], "t_E_err": [2.0], "t_0par": [55000.0],
+           "pi_EN": [0.2], "pi_EE": [0.1], "pi_EN_err": [0.01], "pi_EE_err": [0.01]}  # fmt: skip
+    table = Table(row)
+    table.meta["frame"] = "geocentric"
+    moved = compare(Sample.from_table(table), folded, simulations=0)
+    assert abs(np.exp(moved.x[0]) - 60.0) > 1.0
+    table.remove_columns(["pi_EN", "pi_EE", "pi_EN_err", "pi_EE_err"])
+    stuck = compare(Sample.from_table(table), folded, simulations=0)
+    assert np.exp(stuck.x[0]) == pytest.approx(60.0) and "no parallax components" in stuck.notes[0]
