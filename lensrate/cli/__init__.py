@@ -11,6 +11,7 @@ from .base import Group
 from .campaign import campaign
 from .census import census
 from .compare import compare
+from .events import events
 from .scenario import scenario
 from .sightline import sightline
 from .skymap import skymap
@@ -34,7 +35,7 @@ def cli():
     """
 
 
-for command in (sightline, skymap, campaign, spread, census, compare, synthesize, scenario, verify):
+for command in (sightline, skymap, campaign, events, spread, census, compare, synthesize, scenario, verify):
     cli.add_command(command)
 
 

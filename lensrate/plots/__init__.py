@@ -2,6 +2,7 @@
 
 from .campaigns import campaign, kick_yield, save_campaign, save_kick_yield
 from .compare import comparison, comparison_page, ratio, save_comparison
+from .events import events, save_events
 from .galaxy import maps, save_maps
 from .sightlines import depth, joint, overview, save_picture, sightline, stacked, timescales
 from .spread import save_spread, spread_overview, tornado
@@ -11,6 +12,7 @@ __all__ = [
     "comparison",
     "comparison_page",
     "depth",
+    "events",
     "joint",
     "kick_yield",
     "maps",
@@ -19,6 +21,7 @@ __all__ = [
     "save_campaign",
     "save_comparison",
     "save_kick_yield",
+    "save_events",
     "save_maps",
     "save_picture",
     "save_spread",

@@ -16,7 +16,7 @@ from ..errors import InputError
 from ..remnants.tables import check_keys, number
 from .bands import check_band
 
-__all__ = ["LuminosityFunction", "clump_magnitude", "luminosity_function"]
+__all__ = ["LuminosityFunction", "clump_magnitude", "clump_width", "luminosity_function"]
 
 _AGES = 24  # bursts that stand for a longer history
 _MASSES = 240  # points of the main sequence of one age
@@ -142,6 +142,11 @@ def clump_magnitude(band):
     """Return the red clump's absolute magnitude in V, I, J, H or Ks [mag]."""
     clump = _giants()["clump"]
     return clump["M_I"] + clump["V_I"] if band == "V" else clump[f"M_{band}"]
+
+
+def clump_width():
+    """Return the standard deviation of the red clump's magnitudes [mag]."""
+    return _giants()["clump"]["width"]
 
 
 def _burst(band, grid, age, imf, lifetimes):

@@ -102,7 +102,8 @@ def main():
         d = sampler.draw(N, 2, **options)
         fast = N / best(lambda options=options: sampler.draw(N, 2, **options))
         print(f"{name:30s} {fast / 1e6:5.2f} million a second, effective share {d.effective_share:.2f}, ", end="")
-        print(f"{fast / slow:5.1f} times numpy, {fast * d.effective_share / slow / share:5.1f} times in effective events")
+        gain = fast * d.effective_share / slow / share
+        print(f"{fast / slow:5.1f} times numpy, {gain:5.1f} times in effective events")
     mock_columns(forecast)
 
 
