@@ -45,10 +45,11 @@ _SHOWN = 40  # fields that are listed one by one
 )
 @click.option("--overlay", metavar="FILE", help="Fields drawn over the picture: a table or a campaign file.")
 @click.option("--jobs", type=click.IntRange(1, 256), default=1, show_default=True, help="Threads.")
+@click.option("--dask", metavar="ADDRESS", help="Scheduler of a Dask cluster, instead of threads.")
 @output
 def skymap(
     l_range, b_range, step, field_file, icrs, efficiency, precise, lens, top, field_area, visit_time, cadence, rank_per,
-    save_ranking, plot, picture, overlay, jobs, save, as_json, overwrite, quiet, **choices,
+    save_ranking, plot, picture, overlay, jobs, dask, save, as_json, overwrite, quiet, **choices,
 ):  # fmt: skip
     """Map optical depth, rates by lens class and sources over Galactic coordinates (degrees).
 
@@ -92,7 +93,7 @@ def skymap(
     announce(quiet)
     beside = target or drawn or ranked_target
     part = None if beside is None else Path(f"{beside}.part")
-    result = _compute(scenario, settings, part, overwrite, jobs, quiet)
+    result = _compute(scenario, settings, part, overwrite, jobs, dask, quiet)
     if result is None:
         return 130
     ranking = None
@@ -185,20 +186,24 @@ def _outlines(overlay, icrs):
     return FieldList.read(overlay, icrs, "--overlay").outlines
 
 
-def _compute(scenario, settings, part, overwrite, jobs, quiet):
+def _compute(scenario, settings, part, overwrite, jobs, dask, quiet):
     """Run the map; None if it was interrupted."""
+    from ..parallel import cluster
     from ..surveys.skymap import count, seconds
     from ..surveys.skymap import skymap as run
     from .progress import Progress, duration
 
     n = count(settings["l"], settings["b"], settings.get("step"))
     if not quiet:
-        time = seconds(scenario, n, "efficiency" in settings, settings["precise"], jobs)
+        time = seconds(scenario, n, "efficiency" in settings, settings["precise"], 1 if dask else jobs)
         text = f"lensrate: {n} {'pixels' if 'step' in settings else 'fields'}: about {duration(time)}"
-        click.echo(f"{text} on {jobs} thread{'s' * (jobs > 1)}", err=True)
+        click.echo(f"{text} of one thread" if dask else f"{text} on {jobs} thread{'s' * (jobs > 1)}", err=True)
     try:
-        with Progress("skymap", quiet) as progress:
-            return run(scenario=scenario, jobs=jobs, progress=progress, checkpoint=part, restart=overwrite, **settings)
+        with cluster(dask) as executor, Progress("skymap", quiet) as progress:
+            return run(
+                scenario=scenario, jobs=jobs, executor=executor, progress=progress, checkpoint=part,
+                restart=overwrite, **settings,
+            )  # fmt: skip
     except KeyboardInterrupt:
         kept = "nothing was kept, since no file is written"
         if part is not None:

@@ -1,5 +1,7 @@
 """Pictures of sky maps: l increasing to the left, fields drawn over them on request."""
 
+from textwrap import fill
+
 import matplotlib
 import matplotlib.pyplot as plt
 import numpy as np
@@ -59,7 +61,7 @@ def skymap(result, ax=None, quantity="rate_all", overlay=(), **style):
     title, unit = _label(quantity)
     factor, power = _power(values)
     norm = _norm(values * factor)
-    extent = _extent(result)
+    extent = _extent(result, overlay)
     if ax is None:
         _, ax = plt.subplots(figsize=_size(extent), layout="constrained")
     if result.grid is not None:
@@ -75,7 +77,9 @@ def skymap(result, ax=None, quantity="rate_all", overlay=(), **style):
         drawn = ax.scatter(l, result.b.value, **{**settings, **style})
         for name, x, y in zip(result.names, l, result.b.value) if len(l) <= 60 else ():
             ax.annotate(name, (x, y), (4, 4), textcoords="offset points", fontsize="x-small")
-    _draw_overlay(ax, overlay, extent)
+    # a field that is drawn as a mark has its name beside that
+    marked = set(result.names) if result.grid is None else set()
+    _draw_overlay(ax, [("" if name in marked else name, outline) for name, outline in overlay], extent)
     ax.set_xlim(extent[0], extent[1])
     ax.set_ylim(extent[2], extent[3])
     middle = np.radians(0.5 * (extent[2] + extent[3]))
@@ -87,7 +91,8 @@ def skymap(result, ax=None, quantity="rate_all", overlay=(), **style):
     ax.set_ylabel(r"$b$  [deg]")
     ax.set_title(title, fontsize="small")
     units = " ".join(w for w in (power, unit) if w)
-    bar = ax.figure.colorbar(drawn, ax=ax, pad=0.015, fraction=0.046, extend=norm.reach)
+    # as high as the map itself, whatever shape that has
+    bar = ax.figure.colorbar(drawn, cax=ax.inset_axes([1.025, 0.0, 0.045, 1.0]), extend=norm.reach)
     bar.set_label(f"[{units}]" if units else "", fontsize="small")
     bar.ax.tick_params(labelsize="small", which="both")
     if isinstance(norm, LogNorm):
@@ -141,14 +146,16 @@ def _norm(values):
     return norm
 
 
-def _extent(result):
+def _extent(result, overlay=()):
     """Left, right, bottom and top of the picture [deg]: the left is the larger longitude."""
     if result.grid is not None:
         l, b = result.grid.axes()
         half = 0.5 * result.grid.step
         return l[-1] + half, l[0] - half, max(b[0] - half, -90.0), min(b[-1] + half, 90.0)
-    l = _near(result.l.value, result.l.value[0])
-    b = result.b.value
+    # a list of fields is drawn as far as their outlines go
+    corners = [np.reshape(outline, (-1, 2)) for _, outline in overlay]
+    l, b = np.concatenate([np.column_stack([result.l.value, result.b.value]), *corners]).T
+    l = _near(l, result.l.value[0])
     margin = max(0.06 * max(np.ptp(l), np.ptp(b)), 0.5)
     return l.max() + margin, l.min() - margin, max(b.min() - margin, -90.0), min(b.max() + margin, 90.0)
 
@@ -206,7 +213,7 @@ def overview_maps(result, overlay=()):
     elif "rate_per_deg2_black_hole" in known:
         wanted[-1] = "rate_per_deg2_black_hole"
     wanted = [w for w in wanted if w in known]
-    extent = _extent(result)
+    extent = _extent(result, overlay)
     wide, high = _size(extent)
     columns = 3 if high > 0.7 * wide else 2
     rows = -(-len(wanted) // columns)
@@ -256,7 +263,7 @@ def save_skymap(result, path, quantity="overview", overlay=(), overwrite=False):
     if quantity == "overview":
         figure = overview_maps(result, overlay)
     else:
-        figure = blank(*_size(_extent(result)))
-        ax = skymap(result, figure.add_subplot(), quantity, overlay)
-        ax.set_title(f"{ax.get_title()}\n{_title(result)}", fontsize=6.5)
+        figure = blank(*_size(_extent(result, overlay)))
+        skymap(result, figure.add_subplot(), quantity, overlay)
+        figure.suptitle(fill(_title(result), 100), fontsize=6.5)
     return write_figure(figure, path, result.meta(), overwrite)
