@@ -23,6 +23,7 @@ _WHERE = {
     "census": "remnants.census",
     "compare_sample": "events.versus",
     "kick_yield": "surveys.kick_yield",
+    "mass_forecast": "events.masses",
     "mock_events": "events.mock",
     "resolve": "scenario.model",
     "sightline": "lensing.sightline",

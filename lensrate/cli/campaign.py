@@ -24,6 +24,23 @@ _DEFAULT_EVENTS = 20000
 @click.option(
     "--exact", is_flag=True, help="Range over alternatives that need new integrals too (seconds a field each)."
 )
+@click.option("--facilities", metavar="NAME|FILE", help="Who measures masses: 'marram' (invented) or a TOML file.")
+@click.option(
+    "--mass-error",
+    type=click.FloatRange(0.001, 10.0),
+    default=0.2,
+    show_default=True,
+    help="A mass counts as measured below this relative error.",
+)
+@click.option(
+    "--mass-events",
+    "n_mass",
+    type=click.IntRange(50, 1_000_000),
+    default=2000,
+    show_default=True,
+    help="Mock events a field behind the mass measurements.",
+)
+@click.option("--mass-plot", metavar="FILE", help="Draw measured black holes against hours.")
 @click.option(
     "--kick-yield",
     "kick_class",
@@ -36,7 +53,7 @@ _DEFAULT_EVENTS = 20000
     type=click.IntRange(100, 10_000_000),
     default=_DEFAULT_EVENTS,
     show_default=True,
-    help="Mock events a field behind distributions and mass measurements.",
+    help="Mock events a field behind the distributions.",
 )
 @click.option("--seed", type=click.IntRange(0), default=1, show_default=True, help="Of the mock events.")
 @click.option(
@@ -54,7 +71,8 @@ _DEFAULT_EVENTS = 20000
 @click.option("--overwrite", is_flag=True, help="Replace existing files.")
 @click.option("--quiet", "-q", is_flag=True, help="No messages on stderr.")
 def campaign(
-    file, scenario_name, kicks, bh_kicks, family_name, exact, kick_class, n_events, seed, by,
+    file, scenario_name, kicks, bh_kicks, family_name, exact, facilities, mass_error, n_mass, mass_plot, kick_class,
+    n_events, seed, by,
     plot, proposal, jobs, save, as_json, overwrite, quiet,
 ):  # fmt: skip
     """Expected events of the survey that FILE describes, by lens class.
@@ -67,6 +85,7 @@ def campaign(
     Examples:
       lensrate campaign marram
       lensrate campaign marram --kicks hobbs2005 --plot page.png
+      lensrate campaign marram --facilities marram --mass-error 0.2
       lensrate campaign marram --kick-yield neutron_star --plot kicks.png
       lensrate campaign my_survey.toml --exact --jobs 2 --proposal proposal/
     """
@@ -77,8 +96,10 @@ def campaign(
         check_target(save, TABLES, overwrite)
     if plot:
         check_target(plot, PICTURES, overwrite, "--plot")
+    if mass_plot:
+        check_target(mass_plot, PICTURES, overwrite, "--mass-plot")
     folder = _new_folder(proposal, overwrite) if proposal else None
-    _no_idle_options(save, plot or proposal)
+    _no_idle_options(save, facilities, plot or proposal)
     from ..surveys.campaign import Campaign
 
     survey = Campaign.read(file)
@@ -90,6 +111,10 @@ def campaign(
 
     family = None if family_name == "none" else Family.read(family_name)
     result = forecast(survey, base, family=family, exact=exact, jobs=jobs, progress=None if quiet else "fields")
+    if facilities:
+        from ..events.masses import mass_forecast
+
+        result = mass_forecast(result, facilities, mass_error, n_mass, seed, jobs)
     curve = None
     if kick_class:
         from ..surveys.kick_yield import kick_yield
@@ -102,6 +127,10 @@ def campaign(
             plots.save_kick_yield(curve, plot, overwrite)
         else:
             plots.save_campaign(result, plot, overwrite, n=n_events, seed=seed)
+    if mass_plot:
+        from .. import plots
+
+        plots.save_masses(result, mass_plot, overwrite)
     if save:
         table = curve.to_table() if curve is not None else result.to_table(by)
         write_table(table, save, overwrite, payload=curve.to_dict() if curve is not None else result.to_dict())
@@ -119,15 +148,18 @@ def campaign(
             click.echo(wrap(f"note: {warning}"), err=True)
 
 
-def _no_idle_options(save, draws):
+def _no_idle_options(save, facilities, pages):
     """Refuse options that were typed and would do nothing."""
     context = click.get_current_context()
     idle = {
         "by": (not save, "--save"),
-        "n_events": (not draws, "--plot or --proposal"),
-        "seed": (not draws, "--plot or --proposal"),
+        "mass_error": (not facilities, "--facilities"),
+        "n_mass": (not facilities, "--facilities"),
+        "mass_plot": (not facilities, "--facilities"),
+        "n_events": (not pages, "--plot or --proposal"),
+        "seed": (not (pages or facilities), "--plot, --proposal or --facilities"),
     }
-    names = {"n_events": "events"}
+    names = {"n_events": "events", "mass_error": "mass-error", "n_mass": "mass-events", "mass_plot": "mass-plot"}
     for option, (useless, partner) in idle.items():
         if useless and context.get_parameter_source(option).name == "COMMANDLINE":
             raise click.UsageError(f"--{names.get(option, option)} has no effect here: it goes with {partner}")
@@ -165,6 +197,8 @@ def _write_proposal(folder, result, n_events, seed):
             temporary.write_text(text + "\n", encoding="utf-8")
     write_table(result.to_table(), folder / "by_class.ecsv", True)
     write_table(result.to_table("field"), folder / "by_field.ecsv", True)
+    if result.masses is not None:
+        write_table(result.masses.to_table(), folder / "masses.ecsv", True)
     plots.save_campaign(result, folder / "page.pdf", True, n=n_events, seed=seed)
 
 
@@ -206,7 +240,7 @@ def report(result, curve=None):
         lines.append(wrap(f"scaled: share x events observed in {', '.join(map(safe, result.scaled_fields()))}"))
     lines += ["", _fields(result)]
     if result.masses is not None:
-        lines += ["", result.masses.report()]
+        lines += ["", _masses(result.masses)]
     if curve is not None:
         lines += ["", _kicks(curve)]
     return "\n".join(lines)
@@ -250,3 +284,26 @@ def _kicks(curve):
             wrap(f"expected events with every {label} under a law: {named}"),
         ]
     )
+
+
+def _masses(made):
+    from ..events.masses import HOURS
+    from ..remnants.classes import LABELS
+
+    lines = [f"masses measured to {made.limit:.0%} ({made.number} mock events, seed {made.seed})"]
+    titles = ["lens", "found", *(f.facility.name[:24] for f in made.facilities)]
+    rows = []
+    for lens, first in made.facilities[0].counts.items():
+        each = [f.counts[lens] for f in made.facilities]
+        cells = [f"{number(row['measured'])} +- {number(row['standard_error'], 2)}" for row in each]
+        rows.append([LABELS.get(lens, lens.replace("_", " ")), number(first["events"]), *cells])
+    for h in HOURS:
+        cells = [number(f.follow.at(h).get("black_hole", 0.0)) for f in made.facilities]
+        rows.append([f"black holes in {h:g} h", "-", *cells])
+    rows.append(["hours for all", "-", *(number(f.follow.hours[-1]) for f in made.facilities)])
+    lines.append(columns(titles, rows))
+    lines.append(wrap("events followed longest t_E first; +- is the error of the finite number of mock events"))
+    invented = [f.facility.name for f in made.facilities if f.facility.invented]
+    if invented:
+        lines.append(wrap(f"invented: {', '.join(map(safe, invented))}"))
+    return "\n".join(lines)

@@ -4,6 +4,7 @@ from .campaigns import campaign, kick_yield, save_campaign, save_kick_yield
 from .compare import comparison, comparison_page, ratio, save_comparison
 from .events import events, save_events
 from .galaxy import maps, save_maps
+from .masses import masses, save_masses
 from .sightlines import depth, joint, overview, save_picture, sightline, stacked, timescales
 from .spread import save_spread, spread_overview, tornado
 
@@ -16,6 +17,7 @@ __all__ = [
     "joint",
     "kick_yield",
     "maps",
+    "masses",
     "overview",
     "ratio",
     "save_campaign",
@@ -23,6 +25,7 @@ __all__ = [
     "save_events",
     "save_kick_yield",
     "save_maps",
+    "save_masses",
     "save_picture",
     "save_spread",
     "sightline",

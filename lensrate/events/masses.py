@@ -1,0 +1,269 @@
+"""How many lens masses a campaign would measure: mock events, its light curves, facilities that follow up."""
+
+from dataclasses import dataclass, replace
+
+import astropy.units as u
+import numpy as np
+
+from ..errors import InputError
+from ..galaxy.frames import icrs_from_galactic
+from ..scenario import resolve
+from ..surveys.facilities import Facility, LightCurve, facility_names
+from ..surveys.fisher import mass_errors, measured, measured_against_hours
+from ..surveys.yields import poisson_68
+from . import light
+from .mock import mock_events
+
+__all__ = ["HOURS", "FacilityYield", "MassForecast", "image_magnitudes", "mass_forecast"]
+
+_DEEP = 35.0  # mag, of a limit that leaves no star out
+HOURS = (10.0, 30.0, 100.0, 300.0, 1000.0)
+
+
+@dataclass(frozen=True, eq=False)
+class FacilityYield:
+    """What one facility measures of a campaign's events.
+
+    Attributes
+    ----------
+    facility : Facility or None
+        None: the campaign's light curves alone, which give no theta_E and so no mass.
+    counts : dict
+        Class, and "all", to events, measured, share, standard_error; see `surveys.fisher.measured`.
+    follow : FollowUp
+        Measured against hours, longest timescale first.
+    median_sigma_pi_E : dict
+        Weighted median of sigma(pi_E)/pi_E by class, from the light curves alone.
+    """
+
+    facility: object
+    counts: dict
+    follow: object
+    median_sigma_pi_E: dict
+
+
+@dataclass(frozen=True, eq=False)
+class MassForecast:
+    """Masses that a campaign and its facilities measure.
+
+    Attributes
+    ----------
+    limit : float
+        Largest sigma(M)/M that counts as measured.
+    facilities : tuple of FacilityYield
+    number, seed : int
+        Mock events behind it.
+    notes : tuple of str
+    """
+
+    limit: float
+    facilities: tuple
+    number: int
+    seed: int
+    notes: tuple = ()
+
+    def to_dict(self):
+        """Return plain numbers by class, each facility under its name."""
+        out = {}
+        for lens in self.facilities[0].counts:
+            out[lens] = {}
+            for f in self.facilities:
+                row = f.counts[lens]
+                out[lens][f.facility.name] = {
+                    "events": row["events"],
+                    "measured": row["measured"],
+                    "poisson_68": list(poisson_68(row["measured"])),
+                    "standard_error": row["standard_error"],
+                    "p_at_least_one": float(-np.expm1(-row["measured"])),
+                    "median_sigma_pi_E": f.median_sigma_pi_E.get(lens),
+                    "against_hours": {f"{h:g}": f.follow.at(h)[lens] for h in HOURS},
+                    "hours_for_all": float(f.follow.hours[-1]),
+                    "invented_facility": f.facility.invented,
+                }
+        return {"mass_error_limit": self.limit, "mock_events": self.number, "seed": self.seed, "by_class": out}
+
+    def to_table(self):
+        """Return a QTable, a row per facility and class."""
+        from astropy.table import QTable
+
+        rows = [
+            (f.facility.name, lens, row["events"], row["measured"], row["standard_error"],
+             f.median_sigma_pi_E.get(lens, np.nan), f.follow.hours[-1])
+            for f in self.facilities for lens, row in f.counts.items()
+        ]  # fmt: skip
+        names = ("facility", "lens", "events", "measured", "standard_error", "median_sigma_pi_E", "hours")
+        table = QTable(rows=rows, names=names)
+        table["hours"].unit = u.hour
+        described = {
+            "events": "events found by the campaign",
+            "measured": f"of these with sigma(M)/M below {self.limit:g}",
+            "standard_error": "of the number measured, from the finite number of mock events",
+            "median_sigma_pi_E": "median sigma(pi_E)/pi_E of the light curves alone",
+            "hours": "telescope time to follow all events of all classes",
+        }
+        for name, text in described.items():
+            table[name].info.description = text
+        return table
+
+    def plot(self, ax=None, lens="black_hole"):
+        """Draw masses measured against hours; returns matplotlib Axes."""
+        import importlib
+
+        return importlib.import_module("lensrate.plots").masses(self, ax=ax, lens=lens)
+
+
+def mass_forecast(forecast, facilities="marram", limit=0.2, number=2000, seed=1, jobs=1):
+    """Add to a campaign's forecast how many masses would be measured.
+
+    Parameters
+    ----------
+    forecast : CampaignForecast
+        Of a campaign that states its photometric precision.
+    facilities : str or list of Facility
+        A file, or a shipped one's name.
+    limit : float
+        Largest sigma(M)/M that counts as measured.
+    number : int
+        Mock events a field; classes get equal shares.
+    seed : int
+        Of the mock events.
+    jobs : int
+        Threads.
+
+    Returns
+    -------
+    CampaignForecast
+        With `masses`, a MassForecast.
+
+    Raises
+    ------
+    InputError
+        A campaign without photometric precision, an unusable facility, or sources without magnitudes.
+
+    Notes
+    -----
+    Fisher matrix of the light curve and the follow-up together, see `surveys.fisher`. Events are those that the
+    campaign finds; a facility follows them longest timescale first, which an observer can know.
+    """
+    if not (np.isfinite(limit) and limit > 0):
+        raise InputError(f"limit: {limit:g} given, must be above 0")
+    if isinstance(facilities, str):
+        facilities = [Facility.read(name, facilities) for name in facility_names(facilities)]
+    survey = forecast.campaign
+    events = mock_events(
+        forecast, number=number * len(forecast.fields), seed=seed, weighted=True, tilt="equal", jobs=jobs
+    )
+    c, band = events.columns, events.band
+    weight = _expected_weights(forecast, c)
+    source, lens_light = c[f"{band}_S"], c[f"{band}_L"]
+    usable = np.isfinite(source) & (weight > 0)
+    if not usable.any():
+        raise InputError("masses: nothing is known of the sources' magnitudes; use a source rule with a limit")
+    notes = []
+    if band != survey.photometry.band:
+        raise InputError(
+            f"photometry.band: {survey.photometry.band}, and the fields' sources are limited in {band}; make them agree"
+        )
+    classes = np.array(events.classes)[c["lens"]]
+    out = []
+    for facility in facilities:
+        parts = []
+        for i, f in enumerate(forecast.fields):
+            rows = np.flatnonzero(usable & (c["field"] == i))
+            light_curve = LightCurve.of(survey.photometry, survey.calendar, f.field.cadence_d)
+            place = icrs_from_galactic(f.field.l_deg * u.deg, f.field.b_deg * u.deg)
+            image_source, image_lens = image_magnitudes(f.sightline, facility.band, events, rows)
+            data = {
+                "t_0": c["t_0"][rows], "u_0": c["u_0"][rows], "t_E": c["t_E_geo"][rows],
+                "pi_EN": c["pi_EN_geo"][rows], "pi_EE": c["pi_EE_geo"][rows], "theta_E": c["theta_E"][rows],
+                "source_mag": source[rows], "blend_mag": lens_light[rows], "image_source_mag": image_source,
+                "image_blend_mag": image_lens,
+            }  # fmt: skip
+            errors = mass_errors(data, light_curve, facility, place, frame="geocentric", jobs=jobs)
+            parts.append((rows, errors))
+        out.append(_yield(facility, parts, classes, weight, limit, forecast.classes))
+    masses = MassForecast(float(limit), tuple(out), len(events), int(seed), tuple(notes))
+    return replace(forecast, masses=masses, seed=int(seed))
+
+
+def _expected_weights(forecast, c):
+    """Expected found events that each mock event stands for: those of a field and class sum to the forecast's."""
+    weight = c["weight"] * c["efficiency"]
+    n = len(forecast.classes)
+    group = c["field"] * n + c["lens"]
+    drawn = np.bincount(group, weight, minlength=n * len(forecast.fields))
+    wanted = np.concatenate([f.expected.sum(axis=1) for f in forecast.fields])
+    return weight * np.divide(wanted, drawn, out=np.zeros_like(drawn), where=drawn > 0)[group]
+
+
+def _yield(facility, parts, classes, weight, limit, order):
+    """One facility's counts over all fields."""
+    rows = np.concatenate([r for r, _ in parts])
+    first = parts[0][1]
+    names = [n for n in first.__dataclass_fields__ if n != "meta"]
+    joined = replace(first, **{n: np.concatenate([getattr(e, n) for _, e in parts]) for n in names})
+    mine, w = classes[rows], weight[rows]
+    medians = {}
+    for name in (n for n in order if n in mine):
+        here = mine == name
+        rank = np.argsort(joined.sigma_pi_E_photometry[here])
+        cum = np.cumsum(w[here][rank])
+        value = joined.sigma_pi_E_photometry[here][rank][np.searchsorted(cum, 0.5 * cum[-1])]
+        medians[name] = float(value)
+    counts = measured(joined, mine, w, limit)
+    counts = {name: counts[name] for name in [*order, "all"] if name in counts}
+    return FacilityYield(facility, counts, measured_against_hours(joined, mine, w, limit), medians)
+
+
+def image_magnitudes(forecast, band, events, rows):
+    """Return magnitudes of sources and lenses of mock events in another band.
+
+    Parameters
+    ----------
+    forecast : Sightline
+        The events' own.
+    band : str
+        Wanted band.
+    events : MockEvents
+    rows : ndarray of int
+        Events of this sightline.
+
+    Returns
+    -------
+    source, lens : ndarray, shape (rows,)
+
+    Raises
+    ------
+    InputError
+        The scenario's luminosity function is the user's own, in one band only.
+
+    Notes
+    -----
+    A source keeps its rank in the luminosity function of its component: as many stars are brighter than it in one band
+    as in the other.
+    """
+    c = events.columns
+    if band == events.band:
+        return c[f"{band}_S"][rows], c[f"{band}_L"][rows]
+    scenario = forecast.scenario
+    if scenario.luminosity:
+        raise InputError(
+            f"facility: its band is {band}, and the luminosity function '{scenario.luminosity}' knows "
+            f"{events.band} only; follow up in {events.band}"
+        )
+    model = resolve(scenario.replace(sources=f"limit:{band}={_DEEP:g}", kicks="none", bh_kicks="same"))
+    l, b = forecast.l.to_value(u.rad), forecast.b.to_value(u.rad)
+    here, there = forecast._integrals.ready.sources, model.sources.toward(l, b, model.galaxy)
+    D, component = c["D_S"][rows], c["source_component"][rows]
+    distance = 5.0 * np.log10(D) + 10.0
+    absolute = c[f"{events.band}_S"][rows] - distance - here.dust(D)
+    out = np.full(rows.size, np.nan)
+    for i, (mine, other) in enumerate(zip(here.shining, there.shining)):
+        at = np.flatnonzero(component == i)
+        if at.size:
+            out[at] = np.interp(mine.brighter(absolute[at]), other.cumulative, other.magnitude)
+    lens = light.lens_magnitude(
+        forecast._model, there, c["lens"][rows], c["component"][rows], c["M_L"][rows], c["D_L"][rows],
+        np.full(rows.size, 0.5),
+    )  # fmt: skip
+    return out + distance + there.dust(D), lens
