@@ -78,7 +78,7 @@ class DaskExecutor:
         if not items:
             return
         sent = self._client.scatter(func, broadcast=True, hash=False)
-        futures = self._client.map(_apply, items, func=sent, pure=False, retries=_RETRIES)
+        futures = self._client.map(_apply, items, work=sent, pure=False, retries=_RETRIES)
         try:
             for future in futures:
                 yield future.result()
@@ -86,8 +86,8 @@ class DaskExecutor:
             self._client.cancel(futures)
 
 
-def _apply(item, func):
-    return func(item)
+def _apply(item, work):
+    return work(item)
 
 
 @contextmanager

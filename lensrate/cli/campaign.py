@@ -3,6 +3,7 @@
 import click
 
 from .base import Command
+from .options import dask
 from .text import columns, number, safe, wrap
 
 _DEFAULT_EVENTS = 20000
@@ -66,6 +67,7 @@ _DEFAULT_EVENTS = 20000
 @click.option("--plot", metavar="FILE", help="Draw one page: .png .pdf .svg.")
 @click.option("--proposal", metavar="FOLDER", help="Write table, LaTeX, methods, BibTeX and page into a new folder.")
 @click.option("--jobs", type=click.IntRange(1, 256), default=1, show_default=True, help="Threads over fields.")
+@dask
 @click.option("--save", metavar="FILE", help="Write a table: .ecsv .csv .fits .vot .json.")
 @click.option("--json", "as_json", is_flag=True, help="Print JSON instead of a table.")
 @click.option("--overwrite", is_flag=True, help="Replace existing files.")
@@ -73,7 +75,7 @@ _DEFAULT_EVENTS = 20000
 def campaign(
     file, scenario_name, kicks, bh_kicks, family_name, exact, facilities, mass_error, n_mass, mass_plot, kick_class,
     n_events, seed, by,
-    plot, proposal, jobs, save, as_json, overwrite, quiet,
+    plot, proposal, jobs, address, save, as_json, overwrite, quiet,
 ):  # fmt: skip
     """Expected events of the survey that FILE describes, by lens class.
 
@@ -90,6 +92,7 @@ def campaign(
       lensrate campaign my_survey.toml --exact --jobs 2 --proposal proposal/
     """
     from ..io import PICTURES, TABLES, check_target, dump_json, write_table
+    from ..parallel import cluster
     from ..scenario import Scenario
 
     if save:
@@ -110,7 +113,10 @@ def campaign(
     from ..surveys.yields import campaign as forecast
 
     family = None if family_name == "none" else Family.read(family_name)
-    result = forecast(survey, base, family=family, exact=exact, jobs=jobs, progress=None if quiet else "fields")
+    with cluster(address) as executor:
+        result = forecast(
+            survey, base, family=family, exact=exact, jobs=jobs, executor=executor, progress=None if quiet else "fields"
+        )
     if facilities:
         from ..events.masses import mass_forecast
 

@@ -4,7 +4,7 @@ import click
 
 from ..errors import InputError
 
-__all__ = ["assumptions", "output", "parse_extinction"]
+__all__ = ["assumptions", "dask", "output", "parse_extinction"]
 
 
 def assumptions(command):
@@ -24,6 +24,13 @@ def assumptions(command):
     ):  # fmt: skip
         command = option(command)
     return command
+
+
+def dask(command):
+    """Add the option that sends work to a cluster instead of threads."""
+    return click.option(
+        "--dask", "address", metavar="ADDRESS", help="Scheduler of a Dask cluster, instead of threads."
+    )(command)
 
 
 def output(command):

@@ -5,6 +5,7 @@ from pathlib import Path
 import click
 
 from .base import Command, announce
+from .options import dask
 from .text import columns, safe, wrap
 
 
@@ -29,9 +30,10 @@ from .text import columns, safe, wrap
     metavar="FOLDER",
     help="Keeps finished pieces until the file is written.  [default: FILE.checkpoint]",
 )
+@dask
 @click.option("--overwrite", is_flag=True, help="Replace an existing file.")
 @click.option("--quiet", "-q", is_flag=True, help="No messages on stderr.")
-def synthesize(name, save, tracers, bundles, iterations, seed, jobs, checkpoint, overwrite, quiet):
+def synthesize(name, save, tracers, bundles, iterations, seed, jobs, checkpoint, address, overwrite, quiet):
     """Synthesise where remnants are and how they move, for every natal kick.
 
     An interrupted run is taken up again by the same command, with the same result. The result does not depend on the
@@ -46,6 +48,7 @@ def synthesize(name, save, tracers, bundles, iterations, seed, jobs, checkpoint,
 
     from ..galaxy.potential import Potential
     from ..io import check_target
+    from ..parallel import cluster
     from ..remnants.cost import estimate
     from ..remnants.synthesis import Settings, forget, stellar_components
     from ..remnants.synthesis import synthesize as run
@@ -68,8 +71,10 @@ def synthesize(name, save, tracers, bundles, iterations, seed, jobs, checkpoint,
         )
         click.echo(wrap(text), err=True)
     try:
-        with Progress("synthesize", quiet) as progress:
-            field = run(galaxy, potential, settings, jobs=jobs, checkpoint=folder, progress=progress)
+        with cluster(address) as executor, Progress("synthesize", quiet) as progress:
+            field = run(
+                galaxy, potential, settings, jobs=jobs, executor=executor, checkpoint=folder, progress=progress
+            )
     except KeyboardInterrupt:
         kept = f"finished pieces are kept in '{safe(folder)}', the same command goes on from there"
         click.echo(wrap(f"lensrate: interrupted; {kept}"), err=True)

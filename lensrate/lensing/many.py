@@ -109,7 +109,8 @@ def forecasts(l, b, scenario="default", *, extinction=None, t_E_range=None, jobs
         return sightline(l[i], b[i], scenario, extinction=extinction[i] or None, t_E_range=t_E_range)
 
     # the first alone, so that threads do not compile the same kernels at once
-    return [one(0), *run_map(one, range(1, l.size), jobs, executor, progress)]
+    alone = [one(0)] if executor is None else []
+    return [*alone, *run_map(one, range(len(alone), l.size), jobs, executor, progress)]
 
 
 def sightlines(l, b, scenario="default", *, extinction=None, t_E_range=None, jobs=1, executor=None, progress=None):

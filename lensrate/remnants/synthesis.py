@@ -115,37 +115,39 @@ def synthesize(galaxy, potential, settings=None, *, jobs=1, executor=None, progr
     pieces = _Pieces(checkpoint, _made(galaxy, potential, settings))
     work = _Work({c.element: steps(c, galaxy, potential, settings) for c in components}, progress)
     streams = np.random.SeedSequence(settings.seed).spawn(len(components))
-    plans = []
+    plans, held = [], []
     for place, (c, stream) in enumerate(zip(components, streams)):
         equilibrium = None
         if not self_held(c):
             key = f"{place}_equilibrium"
             equilibrium = _held(c, key, galaxy, potential, settings, stream, pieces, work, jobs, executor)
-        kicks = enumerate(stream.spawn(len(settings.kick_edges)))
-        plans += [(c, f"{place}_{i}", equilibrium, i, s) for i, s in kicks]
+        held.append(equilibrium)
+        plans += [(place, i, s) for i, s in enumerate(stream.spawn(len(settings.kick_edges)))]
     # threads leave early when the run is broken off; other executors pickle their work, which an event forbids
     stop = threading.Event() if executor is None else None
 
+    def make(plan):
+        place, number, stream = plan
+        return _element(components[place], held[place], number, stream, galaxy, potential, settings, stop)
+
     def run(plan):
-        component, key, equilibrium, number, stream = plan
-        found = pieces.get(key)
-        if found is not None:
-            return found, True
-        made = _element(component, equilibrium, number, stream, galaxy, potential, settings, stop)
-        return pieces.keep(key, made), False
+        found = pieces.get(_name(plan))
+        return (found, True) if found is not None else (pieces.keep(_name(plan), make(plan)), False)
 
     def tell(plan, result):
-        work.add(plan[0].element, 1 + plan[3], 1.0, result[1])
+        work.add(components[plan[0]].element, 1 + plan[1], 1.0, result[1])
 
-    done = [arrays for arrays, _ in run_map(run, plans, jobs, executor, tell, stop)]
+    if executor is None:
+        done = [arrays for arrays, _ in run_map(run, plans, jobs, None, tell, stop)]
+    else:
+        done = _elsewhere(make, plans, pieces, executor, tell)
     shape = (len(components), len(settings.kick_edges))
     stacked = {k: np.stack([d[k] for d in done]).reshape(*shape, *done[0][k].shape) for k in done[0]}
     mismatch = {}
     for i, c in enumerate(components):
-        equilibrium = plans[i * shape[1]][2]
-        held = {**equilibrium.mismatch, "effective_bundles": equilibrium.effective} if equilibrium else {}
+        balance = {**held[i].mismatch, "effective_bundles": held[i].effective} if held[i] else {}
         regions = _regions(c, galaxy, potential, settings.grid, stacked["density"][i, 0])
-        mismatch[c.element] = {"equilibrium": held, "regions": regions}
+        mismatch[c.element] = {"equilibrium": balance, "regions": regions}
     return RemnantField(
         components=tuple(c.element for c in components),
         kick_edges=np.asarray(settings.kick_edges, dtype=float),
@@ -161,6 +163,24 @@ def synthesize(galaxy, potential, settings=None, *, jobs=1, executor=None, progr
         mismatch=mismatch,
         provenance=pieces.made,
     )
+
+
+def _name(plan):
+    """Name of a plan's piece in the checkpoint."""
+    return f"{plan[0]}_{plan[1]}"
+
+
+def _elsewhere(make, plans, pieces, executor, tell):
+    """Arrays of all plans, made by an executor that may know nothing of the checkpoint's folder: it is kept here."""
+    found = [pieces.get(_name(plan)) for plan in plans]
+    for plan, arrays in zip(plans, found):
+        if arrays is not None:
+            tell(plan, (arrays, True))
+    todo = [i for i, arrays in enumerate(found) if arrays is None]
+    for i, arrays in zip(todo, executor.map(make, [plans[i] for i in todo])):
+        found[i] = pieces.keep(_name(plans[i]), arrays)
+        tell(plans[i], (arrays, False))
+    return found
 
 
 def stellar_components(galaxy):

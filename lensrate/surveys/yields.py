@@ -294,9 +294,10 @@ def campaign(survey, scenario=None, *, family=None, exact=False, jobs=1, executo
     def one(i):
         return _field(survey, base, i, dust[i])
 
-    first = one(0)
-    rows = [first, *run_map(one, range(1, len(survey.fields)), jobs, executor, progress)]
-    classes = first.sightline.classes
+    # the first alone, so that threads do not compile the same kernels at once
+    alone = [one(0)] if executor is None else []
+    rows = [*alone, *run_map(one, range(len(alone), len(survey.fields)), jobs, executor, progress)]
+    classes = rows[0].sightline.classes
     out = CampaignForecast(
         survey, base, classes, tuple(rows), warnings=_warnings(survey, rows, classes),
         references=tuple(dict.fromkeys(r for f in rows for r in f.sightline.references)),
