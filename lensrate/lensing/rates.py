@@ -9,6 +9,7 @@ from ..errors import ConvergenceError
 from ..kernels import profile as profiles
 from ..kernels import rates as kernels
 from ..units import FOUR_G_C2, KAPPA, KMS_PER_MASYR_KPC, MAS
+from . import rings
 from .quadrature import Isogrid, legendre, lens_pairs, panel_edges, panel_nodes, row_nodes
 
 __all__ = [
@@ -151,7 +152,10 @@ _LENS_PANEL = 0.4  # kpc
 _LENS_NODES = 3
 _KICKED_NODES = 4  # per panel of sources
 _KICKED_GAP = 0.3  # kpc, source panels shorter than this are joined
-_KICKED_DIRECTIONS = 12
+_KICKED_RINGS = 1.5  # half of what the stars get: kicked lenses are a hundredth of all
+_KICKED_DIRECTIONS = 16
+_BUNDLE = 2  # source nodes behind a lens of which only weight, mean and covariance are kept
+_COLD = 0.2  # kpc from the centre, within which the stars' motions turn too sharply for that
 
 
 class _Table:
@@ -174,9 +178,14 @@ class _Table:
 
 
 def _through_the_centre(ready):
-    """Whether the sightline passes the centre within 0.4 kpc before it ends."""
+    """Whether the sightline passes the centre so closely that the fields' innermost cells matter."""
+    return _passes(ready, 0.4)
+
+
+def _passes(ready, miss):
+    """Whether the sightline passes the centre within a distance [kpc] before it ends."""
     tangent = ready.line.tangent_distance()
-    return 0 < tangent < ready.edges[-1] and np.linalg.norm(ready.line.xyz(tangent)) < 0.4
+    return 0 < tangent < ready.edges[-1] and np.linalg.norm(ready.line.xyz(tangent)) < miss
 
 
 def _leaving(grid, line, far):
@@ -209,9 +218,11 @@ def kicked_moments(ready):
     edges = ready.edges if _through_the_centre(ready) else _joined(ready.edges)
     first, D_S, src = _behind(ready, D_L, edges, n)
     tau, gamma = np.zeros((len(kicked.host), D_L.size)), np.zeros((len(kicked.host), D_L.size))
+    depth, bundles = np.empty(D_L.size), np.empty(src.shape)
+    counts = kernels.gather_behind(D_L, first, D_S, src, 1 if _passes(ready, _COLD) else _BUNDLE, depth, bundles)
     kernels.lens_moments(
-        D_L, w_L, table.at(D_L), kicked.element_of_row, first, D_S, src, FOUR_G_C2, KAPPA, MAS, _KICKED_DIRECTIONS,
-        tau, gamma,
+        D_L, w_L, table.at(D_L), kicked.element_of_row, first, counts, depth, bundles, FOUR_G_C2, KAPPA, MAS,
+        _KICKED_DIRECTIONS, tau, gamma,
     )  # fmt: skip
     by_batch = np.einsum("bkn,kn->bk", kicked.batch_factors(ready.line, D_L), gamma)
     error = by_batch.std(axis=0, ddof=1) / np.sqrt(len(by_batch))
@@ -271,13 +282,7 @@ def kicked_rate_density(ready, grid):
     row, D, src = row[light], D[light], _merged(ready.model, np.ascontiguousarray(src[:, :, light]), two=True)
     kicked = ready.model.kicked
     lens = ready.kicked_table.at(1.0 / (grid.pi[row] + 1.0 / D))
-    geometry = np.empty(D.size)
-    kernels.node_weights(grid.pi, row, D, KAPPA, MAS, geometry)
-    T = np.zeros((len(kicked.host), grid.pi.size, grid.mu.size))
-    kernels.rate_density(
-        grid.pi, row, geometry, src, lens, kicked.element_of_row, grid.mu, 2.0, 12.0, 1e-4, T,
-    )  # fmt: skip
-    return T
+    return rings.rate_density(grid, row, D, src, lens, kicked.element_of_row, _KICKED_RINGS, 1e-4)
 
 
 def _joined(edges):
@@ -319,9 +324,7 @@ def _nodes(ready):
     if numerics.merge_sources:
         src = _merged(ready.model, src)
     lens = ready.model.galaxy.profile(ready.line, 1.0 / (grid.pi[row] + 1.0 / D))
-    geometry = np.empty(D.size)
-    kernels.node_weights(grid.pi, row, D, KAPPA, MAS, geometry)
-    return grid, row, D, src, lens, geometry
+    return grid, row, D, src, lens
 
 
 def rate_density(ready):
@@ -338,14 +341,9 @@ def rate_density(ready):
     T : ndarray, shape (E, P, K)
         Events per source, year, unit ln pi_rel and ln mu_rel, for 1 Msun lenses.
     """
-    grid, row, _, src, lens, geometry = _nodes(ready)
-    n = ready.numerics
-    T = np.zeros((lens.shape[1], grid.pi.size, grid.mu.size))
-    kernels.rate_density(
-        grid.pi, row, geometry, src, lens, np.arange(lens.shape[1]), grid.mu, float(n.directions), float(n.q_max),
-        float(n.weight_cut), T,
-    )  # fmt: skip
-    return grid, T
+    grid, row, D, src, lens = _nodes(ready)
+    n, element = ready.numerics, np.arange(lens.shape[1])
+    return grid, rings.rate_density(grid, row, D, src, lens, element, float(n.directions), float(n.weight_cut))
 
 
 def event_rate_density(ready, element_weight, D_edges, n_phi=24):
@@ -372,7 +370,9 @@ def event_rate_density(ready, element_weight, D_edges, n_phi=24):
     R : ndarray of float32, shape (P, C, n_phi, K)
         Events per source, year, unit ln pi_rel and ln mu_rel, integrated over each cell, for 1 Msun lenses.
     """
-    grid, row, D, src, lens, geometry = _nodes(ready)
+    grid, row, D, src, lens = _nodes(ready)
+    geometry = np.empty(D.size)
+    kernels.node_weights(grid.pi, row, D, KAPPA, MAS, geometry)
     n = ready.numerics
     weight = np.asarray(element_weight, dtype=float)
     row_weight = weight[: lens.shape[1]]
