@@ -11,6 +11,7 @@ from ..datafiles import field_checksum, field_path, read_set
 from ..galaxy.density import stellar_mass
 from ..kernels.fields import PARTS
 from .fields import RemnantField
+from .unpacked import read_unpacked
 
 __all__ = ["KickedLenses", "galaxy_numbers", "read_field", "read_with_checksum"]
 
@@ -59,7 +60,8 @@ def read_with_checksum(name):
 
 @lru_cache(maxsize=2)
 def _read(path, _stamp, name):
-    return RemnantField.read(path), field_checksum(name)
+    sha256 = field_checksum(name)
+    return read_unpacked(path, sha256), sha256
 
 
 @dataclass(frozen=True, eq=False)
