@@ -21,13 +21,13 @@ _ROUND, _SLOW = 4.9, 3.0
 def mean_speed(ml, mb, cll, clb, cbb, cos, sin):
     """Mean length of a 2-D Gaussian vector: half-circle trapezoid over the mean |projection|, spectrally exact.
 
-    cos, sin (n,): directions even in half a circle, n even; every second one will do unless the Gaussian is long or
-    far from rest.
+    cos, sin (n,): directions even in half a circle; of 16 or more (an even number) every second one will do unless
+    the Gaussian is long or far from rest.
     """
     n = cos.size
     trace = cll + cbb
     easy = trace * trace < _ROUND * (cll * cbb - clb * clb) and ml * ml + mb * mb < _SLOW * trace
-    step = 2 if easy else 1
+    step = 2 if easy and n >= 16 else 1
     total = 0.0
     for i in range(0, n, step):
         c, s = cos[i], sin[i]

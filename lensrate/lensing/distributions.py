@@ -5,6 +5,7 @@ ln t_E = (ln kappa M pi_rel) / 2 - ln mu_rel, ln theta_E = (ln kappa M pi_rel) /
 """
 
 from dataclasses import dataclass
+from functools import lru_cache
 
 import numpy as np
 
@@ -40,27 +41,32 @@ class MassGrid:
         """
         shape = (len(spectra), len(spectra[0]) if spectra else 0)
         root, mass = np.zeros(shape), np.zeros(shape)
-        every = ((c, e, s) for c, row in enumerate(spectra) for e, s in enumerate(row))
-        filled = [(c, e, s) for c, e, s in every if s is not None and s.mass.size]
-        # kick bins share one array of masses: what depends on it alone is done once
-        arrays = {id(s.mass): s.mass for _, _, s in filled}
-        if not arrays:
+        # kick bins share one array of masses: they are laid down together
+        alike = {}
+        for c, row in enumerate(spectra):
+            for e, s in enumerate(row):
+                if s is not None and s.mass.size:
+                    alike.setdefault(id(s.mass), (s.mass, [], []))[1].append((c, e))
+                    alike[id(s.mass)][2].append(s.number)
+        if not alike:
             return cls(0, np.zeros((*shape, 4)), root, mass)
-        low, high = min(m.min() for m in arrays.values()), max(m.max() for m in arrays.values())
+        low, high = min(m.min() for m, _, _ in alike.values()), max(m.max() for m, _, _ in alike.values())
         k0 = int(np.floor(np.log(low) / (2 * h))) - 1
         n = int(np.floor(np.log(high) / (2 * h))) + 3 - k0
-        laid = {key: _lagrange(m, h, k0, n) for key, m in arrays.items()}
         weight = np.zeros((*shape, n))
-        for c, e, s in filled:
-            roots, matrix = laid[id(s.mass)]
-            w = s.number * roots
-            root[c, e], mass[c, e] = w.sum(), s.number @ s.mass
-            weight[c, e] = w @ matrix
+        for masses, places, numbers in alike.values():
+            roots, matrix, first = _lagrange(np.asarray(masses, dtype=float).tobytes(), h)
+            at, numbers = tuple(np.array(places).T), np.array(numbers)
+            w = numbers * roots
+            root[at], mass[at] = w.sum(axis=1), numbers @ masses
+            weight[*at, first - k0 : first - k0 + matrix.shape[1]] = w @ matrix
         return cls(k0, weight, root, mass)
 
 
-def _lagrange(mass, h, k0, n):
-    """Square roots of masses, and the matrix that spreads each over four grid masses."""
+@lru_cache(maxsize=256)
+def _lagrange(mass, h):
+    """Square roots of masses (given as bytes), the matrix that spreads each over four grid masses, and its first k."""
+    mass = np.frombuffer(mass)
     x = np.log(mass) / (2 * h)
     i = np.floor(x).astype(int)
     t = x - i
@@ -70,10 +76,11 @@ def _lagrange(mass, h, k0, n):
         -(t + 1) * t * (t - 2) / 2,
         (t + 1) * t * (t - 1) / 6,
     )
-    matrix = np.zeros((mass.size, n))
+    first = int(i.min()) - 1
+    matrix = np.zeros((mass.size, int(i.max()) + 3 - first))
     for j, a in enumerate(parts):
-        matrix[np.arange(mass.size), i - 1 + j - k0] = a
-    return np.sqrt(mass), matrix
+        matrix[np.arange(mass.size), i - 1 + j - first] = a
+    return np.sqrt(mass), matrix, first
 
 
 def timescale_grid(grid):

@@ -127,22 +127,23 @@ def lens_pairs(D_S, edges, n):
         Source index, lens distance and quadrature weight of each pair.
     """
     x, w = legendre(n)
-    outer, D, W = [], [], []
-    for j, D_s in enumerate(D_S):
-        e = edges[edges < D_s * (1 - 1e-9)]
-        if len(e) == 1:
-            e = np.array([0.0, 0.5 * D_s])
-        elif D_s - e[-1] < 0.2 * (e[-1] - e[-2]) and len(e) > 2:
-            e = e[:-1]  # no sliver behind the last kink
-        mid = 0.5 * (e[-1] + D_s) if len(e) == 2 else e[-1]
-        e = np.append(e, mid) if mid > e[-1] else e
-        lo, width = e[1:-1], np.diff(e)[1:]
-        d = [e[1] * x**2, (lo[:, None] + width[:, None] * x).ravel(), D_s - (D_s - e[-1]) * x**2]
-        v = [2 * e[1] * x * w, (width[:, None] * w).ravel(), 2 * (D_s - e[-1]) * x * w]
-        D.append(np.concatenate(d))
-        W.append(np.concatenate(v))
-        outer.append(np.full(D[-1].size, j, dtype=np.int64))
-    return np.concatenate(outer), np.concatenate(D), np.concatenate(W)
+    # number of the last edge in front of each source, without a sliver behind the last kink
+    last = np.maximum(np.searchsorted(edges, D_S * (1 - 1e-9)) - 1, 0)
+    sliver = (last > 1) & (D_S - edges[last] < 0.2 * (edges[last] - edges[last - 1]))
+    last = last - sliver
+    near = np.where(last > 0, edges[1], 0.5 * D_S)
+    far = np.where(last > 1, edges[last], 0.5 * (near + D_S))
+    # panels between the two mapped ones
+    panels = np.maximum(last - 1, 1)
+    j = np.repeat(np.arange(D_S.size), panels)
+    i = np.arange(j.size) - np.repeat(np.cumsum(panels) - panels, panels)
+    low = np.where(i > 0, edges[1 + i], near[j])
+    width = np.where(last[j] > 1, edges[np.minimum(2 + i, edges.size - 1)], far[j]) - low
+    behind = (D_S - far)[:, None]
+    D = near[:, None] * x**2, low[:, None] + width[:, None] * x, D_S[:, None] - behind * x**2
+    W = 2 * near[:, None] * x * w, width[:, None] * w, 2 * behind * x * w
+    outer = np.repeat(np.concatenate([np.arange(D_S.size), j, np.arange(D_S.size)]), n)
+    return outer, np.concatenate(D).ravel(), np.concatenate(W).ravel()
 
 
 def row_nodes(pi, edges, kinks, n):

@@ -185,15 +185,14 @@ class Model:
 def _shares(law, mass, edges):
     """Share of each kick bin for remnants of each mass: unkicked, the bins; (bins + 1, n). The rest escaped."""
     if not isinstance(law, tuple):
-        weights = law.bin_weights(edges)
-        return np.concatenate([[weights.unkicked], weights.inside])[:, None] * np.ones(mass.size)
+        return np.array(_scaled_shares(law, None, tuple(edges)))[:, None] * np.ones(mass.size)
     return np.array([_scaled_shares(law[0], law[1] / m, tuple(edges)) for m in mass]).T
 
 
 @lru_cache(maxsize=4096)
 def _scaled_shares(law, factor, edges):
     """Shares of a law at speeds times a factor; black holes of every component have the same few masses."""
-    weights = (law if law.name == "none" else law.scaled(factor)).bin_weights(np.array(edges))
+    weights = (law if factor is None or law.name == "none" else law.scaled(factor)).bin_weights(np.array(edges))
     return (weights.unkicked, *weights.inside)
 
 
