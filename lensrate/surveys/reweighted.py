@@ -3,7 +3,7 @@
 from dataclasses import replace
 
 from .shared import integral_key
-from .yields import _assembled, _warnings, campaign
+from .yields import _warnings, assembled, campaign
 
 __all__ = ["reweighted"]
 
@@ -36,7 +36,7 @@ def reweighted(forecast, scenario, jobs=1, progress=None):
     keys = ("kicks", "bh_kicks", "ifmr", "imf", "lens_class")
     changes = {k: getattr(scenario, k) for k in keys if getattr(scenario, k) != getattr(old, k)}
     rows = [
-        _assembled(forecast.campaign, f.field, f.sightline.reforecast(**changes) if changes else f.sightline,
+        assembled(forecast.campaign, f.field, f.sightline.reforecast(**changes) if changes else f.sightline,
                    f.sources, f.counted, f.rate_factor)
         for f in forecast.fields
     ]  # fmt: skip
