@@ -2,6 +2,7 @@
 
 import numpy as np
 
+from ..kernels import catalogue as kernels
 from ..lensing.geometry import magnification
 from ..remnants.lifetimes import Lifetimes
 from ..sources.lens_light import dwarf_magnitude, white_dwarf_magnitude
@@ -41,7 +42,7 @@ def source_magnitude(sources, component, D_S, u, normal, u_0, u_0_limit):
     """
     rule = sources.rule
     out, u_0 = np.full(D_S.size, np.nan), u_0.copy()
-    distance = 5.0 * np.log10(D_S) + 10.0 + sources.dust(D_S)
+    distance = _modulus(sources.dust, D_S)
     for i, shine in enumerate(sources.shining):
         mine = np.flatnonzero(component == i)
         if shine is None or not mine.size:
@@ -56,7 +57,9 @@ def source_magnitude(sources, component, D_S, u, normal, u_0, u_0_limit):
         if isinstance(rule, PeakRule):
             u_0[mine] = _magnified(shine, faintest, u_0[mine] / u_0_limit, u_0_limit)
             faintest = faintest + gain(u_0[mine])
-        out[mine] = np.interp(u[mine] * shine.brighter(faintest), shine.cumulative, shine.magnitude)
+        found = np.empty(mine.size)
+        kernels.magnitude_below(u[mine], faintest, shine.magnitude, shine.cumulative, found)
+        out[mine] = found
     return out + distance, u_0
 
 
@@ -112,8 +115,15 @@ def lens_magnitude(model, sources, lens_class, component, M, D_L, u):
         youngest = np.minimum(np.maximum(young - life, 0.0), oldest)
         out[mine] = white_dwarf_magnitude(band, M[mine], youngest + u[mine] * (oldest - youngest))
     shines = star | dwarf
-    out[shines] += 5.0 * np.log10(D_L[shines]) + 10.0 + sources.dust(D_L[shines])
+    out[shines] += _modulus(sources.dust, D_L[shines])
     return out
+
+
+def _modulus(dust, D):
+    """Apparent minus absolute magnitude at distances D [kpc]."""
+    out = np.empty(D.size)
+    kernels.interpolate(D, dust.distance, dust.magnitude, out)
+    return out + 5.0 * np.log10(D) + 10.0
 
 
 def gain(u_0):
