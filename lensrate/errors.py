@@ -5,6 +5,9 @@ from difflib import get_close_matches
 __all__ = ["ConvergenceError", "DataFileError", "InputError", "LensrateError", "did_you_mean", "one_of"]
 
 
+_SHOWN = 24  # known words that a complaint lists in full
+
+
 class LensrateError(Exception):
     """Root of everything lensrate raises on purpose."""
 
@@ -66,4 +69,7 @@ def one_of(what, word, known):
     """
     if word in known:
         return word
-    raise InputError(f"{what}: '{word}' is not known{did_you_mean(word, known)} (known: {', '.join(sorted(known))})")
+    shown = sorted(map(str, known))
+    if len(shown) > _SHOWN:
+        shown = [*get_close_matches(str(word), shown, n=_SHOWN, cutoff=0.0), f"... ({len(shown)} in all)"]
+    raise InputError(f"{what}: '{word}' is not known{did_you_mean(word, known)} (known: {', '.join(shown)})")
