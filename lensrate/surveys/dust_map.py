@@ -11,7 +11,8 @@ from .sky import Patch, even_points, from_plane
 __all__ = ["DustMap"]
 
 _LARGEST = 400_000_000  # bytes
-_POINTS = 40  # of a field at which the map is read
+_POINTS = 2500  # of a field at which the map is read
+_PATCHES = 12  # values of A that stand for a field
 
 
 @dataclass(frozen=True, eq=False)
@@ -73,25 +74,39 @@ class DustMap:
         InputError
             Outside the map, or unknown there.
         """
+        return float(self._many(l_deg, b_deg)[0])
+
+    def _many(self, l_deg, b_deg):
+        """The nearest pixels' extinction at directions, (n,).
+
+        Raises
+        ------
+        InputError
+            Outside the map, or unknown there.
+        """
         import astropy.units as u
         from astropy.coordinates import SkyCoord
 
-        x, y = self.wcs.world_to_pixel(SkyCoord(l_deg * u.deg, b_deg * u.deg, frame="galactic"))
-        i, j = int(np.rint(y)), int(np.rint(x))
-        inside = 0 <= i < self.image.shape[0] and 0 <= j < self.image.shape[1]
-        if not inside or not np.isfinite(self.image[i, j]):
-            raise InputError(f"sky_map_of_extinction '{self.path}': says nothing at l = {l_deg:.3f}, b = {b_deg:.3f}")
-        return float(self.image[i, j])
+        l, b = np.atleast_1d(l_deg), np.atleast_1d(b_deg)
+        x, y = self.wcs.world_to_pixel(SkyCoord(l * u.deg, b * u.deg, frame="galactic"))
+        i, j = np.rint(y), np.rint(x)
+        inside = (i >= 0) & (i < self.image.shape[0]) & (j >= 0) & (j < self.image.shape[1])
+        value = self.image[np.where(inside, i, 0).astype(int), np.where(inside, j, 0).astype(int)]
+        bad = ~(inside & np.isfinite(value))
+        if bad.any():
+            k = int(np.argmax(bad))
+            raise InputError(f"sky_map_of_extinction '{self.path}': says nothing at l = {l[k]:.3f}, b = {b[k]:.3f}")
+        return value
 
-    def directions(self, f):
-        """Return l, b [deg] and equal weights of the points of a field at which the map is read."""
+    def patches(self, f):
+        """Return values of A [mag], (n,), that stand for equal parts of a field's area, rising."""
         if isinstance(f.shape, Patch):
-            return f.directions()
-        x, y, w = even_points(f.shape, _POINTS)
-        l, b = from_plane(*np.radians([f.l_deg, f.b_deg]), x, y)
-        return np.degrees(l), np.degrees(b), w
+            return np.array([self.at(f.l_deg, f.b_deg)])
+        x, y, _ = even_points(f.shape, _POINTS)
+        l, b = np.degrees(from_plane(*np.radians([f.l_deg, f.b_deg]), x, y))
+        values = np.sort(self._many(l, b))
+        return np.array([part.mean() for part in np.array_split(values, min(_PATCHES, values.size))])
 
     def mean(self, f):
         """Return the mean extinction [mag] over a field."""
-        l, b, w = self.directions(f)
-        return float(np.sum(w * [self.at(x, y) for x, y in zip(l, b)]))
+        return float(self.patches(f).mean())

@@ -359,27 +359,32 @@ def _over_field(f, scenario, centre, dust):
     ready = centre._integrals.ready
     if not ready.sources.counts_stars:
         return np.nan, 1.0
-    l, b, w = f.directions() if dust is None else dust.directions(f)
-    if l.size == 1 and dust is None:
-        return ready.per_arcmin2(), 1.0
-    model = resolve(scenario)
-    numerics = Numerics(**scenario.numerics)
+    l, b, w = f.directions()
+    model, numerics = resolve(scenario), Numerics(**scenario.numerics)
     roots = np.array([0.0 if p is None else p.spectra["star"].moment(0.5) for p in model.populations])
 
-    def rate(line):
-        return float(roots @ rates.moments(line)[1].sum(axis=1))
-
-    density, rated = np.zeros(l.size), np.zeros(l.size)
-    for i in range(l.size):
-        local = model
-        if dust is not None:
-            local = resolve(scenario.replace(extinction={parse_rule(f.sources).band: dust.at(l[i], b[i])}))
-        direction = np.radians([l[i], b[i]])
+    def at(local, l, b):
+        """Source density, and the stars' rate."""
+        direction = np.radians([l, b])
         toward = local.sources.toward(*direction, local.galaxy)
         line = rates.prepare(local, local.galaxy.sightline(*direction), toward, numerics)
-        density[i], rated[i] = line.per_arcmin2(), rate(line)
-    mean = float(w @ density)
-    return mean, float(w @ (density * rated)) / mean / rate(ready)
+        return line.per_arcmin2(), float(roots @ rates.moments(line)[1].sum(axis=1))
+
+    def mean(points, w):
+        """Mean density, and mean rate of all sources, both over those of the centre."""
+        density, rate = np.array(points).T
+        whole = w @ density
+        return whole / middle[0], w @ (density * rate) / whole / middle[1]
+
+    middle = at(model, f.l_deg, f.b_deg)
+    density, factor = (1.0, 1.0) if l.size == 1 else mean([at(model, *point) for point in zip(l, b)], w)
+    if dust is not None:
+        # patches of dust are taken to know nothing of the gradient over the field
+        band, values = parse_rule(f.sources).band, dust.patches(f)
+        points = [at(resolve(scenario.replace(extinction={band: float(a)})), f.l_deg, f.b_deg) for a in values]
+        patchy = mean(points, np.full(values.size, 1.0 / values.size))
+        density, factor = density * patchy[0], factor * patchy[1]
+    return float(middle[0] * density), float(factor)
 
 
 def magnitude_share(ready):

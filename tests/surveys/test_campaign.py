@@ -258,3 +258,54 @@ def test_the_invented_survey_is_whole_and_marked():
     survey = Campaign.read("marram")
     assert "invented" in survey.name and len(survey.fields) == 4 and survey.hash == Campaign.read("marram").hash
     assert np.isinf(survey.photometry.error(25.0)) and survey.photometry.error(19.0) == pytest.approx(0.0292, abs=2e-4)
+
+
+def dust_image(path, low, high):
+    """A map of A_I around (1, -2.9) deg, one value on either side of the middle."""
+    from astropy.io import fits
+    from astropy.wcs import WCS
+
+    wcs = WCS(naxis=2)
+    wcs.wcs.ctype, wcs.wcs.crval, wcs.wcs.crpix, wcs.wcs.cdelt = ["GLON-CAR", "GLAT-CAR"], [1.0, 0.0], [50.5, 340.5], [
+        -0.02, 0.02
+    ]  # fmt: skip
+    image = np.full((400, 100), low)
+    image[:, :50] = high
+    fits.PrimaryHDU(image, wcs.to_header()).writeto(path)
+
+
+def test_a_map_of_extinction_counts_stars_patch_by_patch(tmp_path):
+    def stars(name, **extinction):
+        table = plain(area_deg2=None, width_deg=0.6, height_deg=0.6, monitored_stars=None, **extinction)
+        return campaign(Campaign.from_dict(table, tmp_path / name), UNKICKED).fields[0]
+
+    dust_image(tmp_path / "flat.fits", 1.2, 1.2)
+    dust_image(tmp_path / "patchy.fits", 0.6, 2.0)
+    number = {a: stars("c.toml", extinction={"I": a}).sources for a in (0.6, 1.2, 2.0)}
+    flat = stars("c.toml", extinction=None, sky_map_of_extinction="flat.fits")
+    assert flat.sources == pytest.approx(number[1.2], rel=2e-3)
+    patchy = stars("c.toml", extinction=None, sky_map_of_extinction="patchy.fits")
+    assert patchy.sources == pytest.approx(0.5 * (number[0.6] + number[2.0]), rel=0.02)
+    assert patchy.sightline.sources["extinction"]["I"] == pytest.approx(1.3, abs=0.02)
+    for extra, words in (
+        ({"sky_map_of_extinction": "none.fits"}, "no such file"),
+        ({"sky_map_of_extinction": "flat.fits", "l": 5.0}, "says nothing at"),
+    ):
+        table = plain(area_deg2=None, radius_deg=0.3, extinction=None, **extra)
+        with pytest.raises(InputError, match=words):
+            campaign(Campaign.from_dict(table, tmp_path / "c.toml"), UNKICKED)
+    with pytest.raises(InputError, match="both given"):
+        Campaign.from_dict(plain(sky_map_of_extinction="flat.fits"), tmp_path / "c.toml")
+
+
+def test_a_luminosity_function_of_the_users_own_sets_the_counts(tmp_path):
+    magnitude = np.arange(-3.0, 12.1, 0.5)
+    for name, factor in (("one.ecsv", 1.0), ("two.ecsv", 2.0)):
+        table = Table({"magnitude": magnitude, "cumulative": factor * 10 ** (0.2 * (magnitude - 6.0))})
+        table.meta["band"] = "I"
+        table.write(tmp_path / name, format="ascii.ecsv")
+    made = [
+        campaign(Campaign.from_dict({**plain(monitored_stars=None), "luminosity": name}, tmp_path / "c.toml"), UNKICKED)
+        for name in ("one.ecsv", "two.ecsv")
+    ]
+    assert made[1].fields[0].sources == pytest.approx(2 * made[0].fields[0].sources, rel=1e-6)
