@@ -1,0 +1,334 @@
+"""What kind of lens an observed event had: probabilities, mass and distance, and what they rest on.
+
+P(class | data) goes with the integral of the class's event rate times the likelihood over everything not measured;
+detection efficiency at given data is the same for all classes and drops out.
+"""
+
+from collections import OrderedDict
+
+import astropy.units as u
+import numpy as np
+
+from ..errors import ConvergenceError, InputError
+from ..lensing import rates
+from ..lensing.points import Axes, EventRates
+from ..parallel import run_map
+from ..scenario import Scenario, resolve
+from ..scenario.numerics import Numerics
+from .light import Light
+from .likelihood import likelihood
+from .odds_result import EventOdds, Odds, SolutionOdds
+
+__all__ = ["OUTLIER", "class_probabilities", "event_rates", "odds"]
+
+#: share of events whose fit is wrong in everything but t_E; our choice
+OUTLIER = 0.01
+_FEWEST = 100  # effective samples below which no odds are given
+_KEEP = 2  # sightlines held in memory at a time
+_held = OrderedDict()
+
+
+def event_rates(l, b, scenario="default"):
+    """Return the event rate density of a sightline, kept for the next call.
+
+    Parameters
+    ----------
+    l, b : float
+        Galactic coordinates [deg].
+    scenario : Scenario or str
+
+    Returns
+    -------
+    EventRates
+
+    Raises
+    ------
+    InputError, ConvergenceError
+        Unknown scenario; no star passes the source rule.
+    """
+    if not isinstance(scenario, Scenario):
+        scenario = Scenario.read(scenario)
+    key = (scenario.hash, round(float(l), 9), round(float(b), 9))
+    if key in _held:
+        _held.move_to_end(key)
+        return _held[key]
+    model = resolve(scenario)
+    x, y = np.radians(float(l)), np.radians(float(b))
+    toward = model.sources.toward(x, y, model.galaxy)
+    ready = rates.prepare(model, model.galaxy.sightline(x, y), toward, Numerics(**scenario.numerics))
+    made = EventRates(ready)
+    while len(_held) >= _KEEP:
+        _held.popitem(last=False)
+    _held[key] = made
+    return made
+
+
+def odds(sample, scenario="default", *, outlier=OUTLIER, tolerance=0.05, spread=(), progress=None):
+    """Return the odds of lens classes of every event of a sample.
+
+    Parameters
+    ----------
+    sample : Sample or iterable of Observed
+    scenario : Scenario or str
+        Every assumption.
+    outlier : float
+        Probability that everything in a fit but its t_E is wrong and says nothing: each measured pi_E, theta_E and
+        mu_rel is then spread evenly in the logarithm over four decades.
+    tolerance : float
+        Events within this angle [deg] of an earlier one share its sightline.
+    spread : iterable of (str, Scenario)
+        Further scenarios, whose probabilities are shown as a range.
+    progress : str, optional
+        Label of a progress bar.
+
+    Returns
+    -------
+    Odds
+
+    Raises
+    ------
+    InputError
+        Outlier share or tolerance out of range; unknown scenario.
+    """
+    if not isinstance(scenario, Scenario):
+        scenario = Scenario.read(scenario)
+    if not 0.0 <= outlier <= 0.5:
+        raise InputError(f"outlier: {outlier:g} given, must be between 0 and 0.5")
+    if not 0.0 <= tolerance <= 5.0:
+        raise InputError(f"tolerance: {tolerance:g} deg given, must be between 0 and 5")
+    events = list(sample)
+    groups = _shared_sightlines(events, tolerance)
+    results, failed = {}, {}
+
+    def one(group):
+        place, members = group
+        out = []
+        for i in members:
+            try:
+                out.append((i, event_odds(events[i], event_rates(*place, scenario), outlier)))
+            except (InputError, ConvergenceError) as error:
+                out.append((i, f"{events[i].name}: {error}" if events[i].name not in str(error) else str(error)))
+        ranges = {i: [] for i in members}
+        for _, other in spread:
+            for i in members:
+                try:
+                    found = event_odds(events[i], event_rates(*place, other), outlier)
+                except (InputError, ConvergenceError):
+                    continue
+                ranges[i].append(found.probability)
+        return out, ranges
+
+    for out, ranges in run_map(one, groups, progress=progress):
+        for i, result in out:
+            if isinstance(result, str):
+                failed[i] = result
+            else:
+                results[i] = result.with_range(ranges[i]) if ranges[i] else result
+    model = resolve(scenario)
+    notes = [*getattr(sample, "notes", ()), *model.warnings]
+    notes += [failed[i] for i in sorted(failed)]
+    return Odds(
+        events=tuple(results[i] for i in sorted(results)),
+        scenario=scenario,
+        outlier=outlier,
+        notes=tuple(notes),
+        failed=tuple(failed[i] for i in sorted(failed)),
+        references=model.references,
+        sample=getattr(sample, "name", ""),
+        invented=getattr(sample, "invented", False),
+        spread=tuple(label for label, _ in spread),
+    )
+
+
+def _shared_sightlines(events, tolerance):
+    """Places and the events near each, in order of first appearance."""
+    places, members = [], []
+    for i, event in enumerate(events):
+        if places:
+            at = np.array(places)
+            away = np.hypot(
+                ((at[:, 0] - event.l + 180.0) % 360.0 - 180.0) * np.cos(np.radians(event.b)), at[:, 1] - event.b
+            )
+            k = int(np.argmin(away))
+            if away[k] <= tolerance:
+                members[k].append(i)
+                continue
+        places.append((event.l, event.b))
+        members.append([i])
+    return list(zip(places, members))
+
+
+def event_odds(event, line, outlier=OUTLIER):
+    """Return the odds of one event on a sightline's rates.
+
+    Parameters
+    ----------
+    event : Observed
+    line : EventRates
+        Of the event's place.
+    outlier : float
+        As in `odds`.
+
+    Returns
+    -------
+    EventOdds
+
+    Raises
+    ------
+    InputError
+        Posterior samples that cover the rates with fewer than 100 effective ones.
+    """
+    classes = [c.name for c in line.classes]
+    n = len(classes)
+    rate = line.rates()
+    found = []
+    for solution in event.solutions:
+        found.append(_solution(solution, event, line, n))
+    weight = np.exp(-0.5 * np.array([s.delta_chi2 for s in event.solutions]))
+    main, wrong = (sum(w * f[k] for w, f in zip(weight, found)) for k in ("main", "wrong"))
+    if not (np.all(np.isfinite(main)) and main.sum() + wrong.sum() > 0):
+        raise ConvergenceError(f"{event.name}: no lens of this scenario explains the data")
+    samples = [f["effective"] for f in found if f["effective"] is not None]
+    if samples and min(samples) < _FEWEST:
+        raise InputError(
+            f"{event.name}: only {min(samples):.0f} effective samples where the rates are, at least {_FEWEST} are "
+            "needed; draw more, or from a prior nearer to what the Galaxy makes"
+        )
+    histogram = sum(w * ((1 - outlier) * f["hist"] + outlier * f["hist_wrong"]) for w, f in zip(weight, found))
+    solutions = tuple(
+        SolutionOdds(s.name, s.delta_chi2, _mixed(f["main"], f["wrong"], outlier)[0], w * f["main"].sum(), f["rests"])
+        for s, w, f in zip(event.solutions, weight, found)
+    )
+    probability, share = _mixed(main, wrong, outlier)
+    floors = {f: _mixed(main, wrong, min(outlier * f, 1.0))[0] for f in (0.1, 10.0)}
+    return EventOdds(
+        name=event.name,
+        l=event.l,
+        b=event.b,
+        frame=event.frame,
+        classes=tuple(classes),
+        probability=probability,
+        prior=rate / rate.sum(),
+        outlier_weight=share,
+        floors=floors,
+        histogram=histogram,
+        solutions=solutions,
+        effective_samples=min(samples) if samples else None,
+        rests=found[0]["rests"],
+        t_E=event.t_E,
+        pi_E=_size(event),
+    )
+
+
+def _mixed(main, wrong, outlier):
+    """Probabilities with a share of wrong fits, and the weight of that branch."""
+    if not wrong.sum() > 0:
+        return main / main.sum(), 0.0
+    total = (1 - outlier) * main + outlier * wrong
+    return total / total.sum(), float(outlier * wrong.sum() / total.sum())
+
+
+def _solution(solution, event, line, n):
+    like = likelihood(solution, event)
+    hist = np.zeros((n, 4, Axes.n, 2))
+    light = Light(solution.plain["I_lens_limit"], line) if "I_lens_limit" in solution.plain else None
+    by_point = _main(like, line, light, hist)
+    main = by_point.sum(axis=1)
+    wrong, hist_wrong = np.zeros(n), np.zeros_like(hist)
+    if like.wrong > 0:
+        factor = like.wrong
+        if like.known is not None:
+            factor *= line.source_evidence(like.known)
+        wrong = factor * line.timescale_only(*like.t_only, hist_wrong)
+        hist_wrong *= factor
+    effective = None
+    if like.draws:
+        each = by_point.sum(axis=0)
+        effective = float(each.sum() ** 2 / max((each**2).sum(), 1e-300))
+    rests = like.rests_on + (("lens light",) if light is not None else ())
+    return {
+        "main": main, "wrong": wrong, "hist": hist, "hist_wrong": hist_wrong, "effective": effective, "rests": rests,
+    }  # fmt: skip
+
+
+def _main(like, line, light=None, hist=None):
+    """Rates by class and point where the fit is right."""
+    if like.rests_on == ("t_E",) and light is None and like.points.earth == (0.0, 0.0):
+        return line.timescale_only(*like.t_only, hist)[:, None]
+    return line.evaluate(like.points, like.known, light, hist)
+
+
+def _size(event):
+    """Size of the best solution's parallax, or None."""
+    best = min(event.solutions, key=lambda s: s.delta_chi2)
+    m = best.measured
+    if "pi_E" in m:
+        return m["pi_E"].value
+    if "pi_EN" in m:
+        return float(np.hypot(m["pi_EN"].value, m["pi_EE"].value))
+    if best.draws is not None:
+        c = best.draws.columns
+        size = c.get("pi_E", np.hypot(c["pi_EN"], c["pi_EE"]) if "pi_EN" in c else None)
+        return None if size is None else float(np.median(size))
+    return None
+
+
+def class_probabilities(l, b, measured, scenario="default", *, outlier=OUTLIER, frame="heliocentric", t_0par=None):
+    """Return class probabilities of many events of one sightline, given as arrays.
+
+    Parameters
+    ----------
+    l, b : Quantity
+        Galactic coordinates of the sightline.
+    measured : dict of str to (ndarray, ndarray)
+        Values and one-sigma errors in d, mas, mas/yr, kpc, by the names of `observed.MEASURED`; NaN: not measured.
+    scenario : Scenario or str
+    outlier : float
+        As in `odds`; 0 for mock events whose errors are what they say.
+    frame, t_0par : str, float
+        Of all events.
+
+    Returns
+    -------
+    classes, probability : list of str, ndarray (n, classes)
+        NaN where nothing explains an event.
+
+    Raises
+    ------
+    InputError
+        Unknown quantity, or arrays of unequal length.
+    """
+    from .observed import MEASURED, Measure, Observed, Solution
+
+    for name in measured:
+        if name not in MEASURED:
+            from ..errors import one_of
+
+            one_of("measured", name, MEASURED)
+    arrays = {k: [np.atleast_1d(np.asarray(x, dtype=float)) for x in v] for k, v in measured.items()}
+    n = {a.size for pair in arrays.values() for a in pair}
+    if len(n) != 1 or "t_E" not in arrays:
+        raise InputError("measured: t_E is needed, and values and errors of equal length")
+    place = float(u.Quantity(l).to_value(u.deg)), float(u.Quantity(b).to_value(u.deg))
+    line = event_rates(*place, scenario)
+    out = np.full((n.pop(), len(line.classes)), np.nan)
+    for i in range(len(out)):
+        found = {k: Measure(float(v[i]), float(e[i]), float(e[i])) for k, (v, e) in arrays.items() if np.isfinite(v[i])}
+        event = Observed(f"event {i + 1}", *place, frame, t_0par, (Solution("", found),))
+        try:
+            out[i] = _mixed(*_bulk(event, line), outlier)[0]
+        except ConvergenceError:
+            continue
+    return [c.name for c in line.classes], out
+
+
+def _bulk(event, line):
+    like = likelihood(event.solutions[0], event)
+    main = _main(like, line).sum(axis=1)
+    wrong = np.zeros(main.size)
+    if like.wrong > 0:
+        factor = like.wrong * (1.0 if like.known is None else line.source_evidence(like.known))
+        wrong = factor * line.timescale_only(*like.t_only)
+    if not main.sum() + wrong.sum() > 0:
+        raise ConvergenceError(f"{event.name}: no lens of this scenario explains the data")
+    return main, wrong
