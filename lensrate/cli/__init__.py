@@ -12,6 +12,7 @@ from .campaign import campaign
 from .census import census
 from .compare import compare
 from .events import events
+from .odds import odds
 from .scenario import scenario
 from .sightline import sightline
 from .skymap import skymap
@@ -35,7 +36,7 @@ def cli():
     """
 
 
-for command in (sightline, skymap, campaign, events, spread, census, compare, synthesize, scenario, verify):
+for command in (sightline, skymap, campaign, events, spread, census, compare, odds, synthesize, scenario, verify):
     cli.add_command(command)
 
 

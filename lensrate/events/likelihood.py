@@ -140,7 +140,10 @@ def _nodes(measure, few, more):
         z, w = np.polynomial.hermite.hermgauss(few if relative < 0.05 else more)
         z = np.sqrt(2.0) * z
         sigma = np.where(z > 0, measure.hi, np.where(z < 0, measure.lo, measure.err))
-        return measure.value + z * sigma, np.sqrt(2.0) * w * sigma
+        x = measure.value + z * sigma
+        # the outermost nodes weigh nothing and may lie below zero
+        kept = x > 0.05 * measure.value
+        return x[kept], (np.sqrt(2.0) * w * sigma)[kept]
     lo = max(measure.value - 5 * measure.lo, 1e-3 * (measure.value + measure.hi))
     hi = measure.value + 5 * measure.hi
     z, w = np.polynomial.legendre.leggauss(12)

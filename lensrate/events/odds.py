@@ -11,7 +11,7 @@ import numpy as np
 
 from ..errors import ConvergenceError, InputError
 from ..lensing import rates
-from ..lensing.points import Axes, EventRates
+from ..lensing.points import Axes, EventRates, Points
 from ..parallel import run_map
 from ..scenario import Scenario, resolve
 from ..scenario.numerics import Numerics
@@ -19,7 +19,7 @@ from .light import Light
 from .likelihood import likelihood
 from .odds_result import EventOdds, Odds, SolutionOdds
 
-__all__ = ["OUTLIER", "class_probabilities", "event_rates", "odds"]
+__all__ = ["OUTLIER", "class_probabilities", "densities", "event_odds", "event_rates", "odds"]
 
 #: share of events whose fit is wrong in everything but t_E; our choice
 OUTLIER = 0.01
@@ -271,6 +271,31 @@ def _size(event):
         size = c.get("pi_E", np.hypot(c["pi_EN"], c["pi_EE"]) if "pi_EN" in c else None)
         return None if size is None else float(np.median(size))
     return None
+
+
+def densities(event, scenario, t_E, pi_E, n=(61, 57)):
+    """Return the predicted densities of the classes over t_E and pi_E on an event's sightline.
+
+    Parameters
+    ----------
+    event : EventOdds or Observed
+        Says where.
+    scenario : Scenario or str
+    t_E, pi_E : (float, float)
+        Ranges [d, pure number].
+    n : (int, int)
+        Points.
+
+    Returns
+    -------
+    t_E, pi_E, classes, density : ndarray, ndarray, list of str, ndarray (classes, n, m)
+        Heliocentric; events per source, year, unit ln t_E and ln pi_E.
+    """
+    line = event_rates(event.l, event.b, scenario)
+    t, pi = np.geomspace(*t_E, n[0]), np.geomspace(*pi_E, n[1])
+    T, P = (a.ravel() for a in np.meshgrid(t, pi, indexing="ij"))
+    rate = line.evaluate(Points(T, P, np.ones(T.size)))
+    return t, pi, [c.name for c in line.classes], rate.reshape(-1, *n)
 
 
 def class_probabilities(l, b, measured, scenario="default", *, outlier=OUTLIER, frame="heliocentric", t_0par=None):

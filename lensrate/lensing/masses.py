@@ -3,7 +3,7 @@
 from dataclasses import dataclass
 
 import numpy as np
-from scipy.interpolate import PchipInterpolator
+from scipy.interpolate import CubicSpline, PchipInterpolator
 
 __all__ = ["ClassMasses", "bases_of", "fine_masses"]
 
@@ -11,6 +11,7 @@ _STEP = 0.02 * np.log(10.0)
 _DISCRETE = 4  # a spectrum of fewer nodes is one of so many masses
 _NOTHING = 1e-9  # share of a class's rate below which a mass node is dropped
 _SAME = 1e-6
+_BELL = 0.02  # both ends of a spectrum below this share of its peak: it fades out
 _RARE = 3e-5  # share of a class below which a kick bin is left out
 
 
@@ -100,7 +101,8 @@ def fine_masses(name, rows):
     Notes
     -----
     The cumulative number at a node is that of all nodes below and half its own, as for a Gauss rule; between nodes it
-    is a monotone cubic (Fritsch & Butland 1984) in ln M, so numbers are kept exactly.
+    is a monotone cubic (Fritsch & Butland 1984) in ln M, so numbers are kept exactly. For a
+    spectrum that fades out at both ends see `_Bell`.
     """
     bases = np.array([b for b, _, _ in rows], dtype=np.int64)
     smooth = [k for k, (_, mass, _) in enumerate(rows) if mass.size >= _DISCRETE]
@@ -136,11 +138,47 @@ def fine_masses(name, rows):
     return ClassMasses(name, bases, ln_M[keep], width[keep], np.ascontiguousarray(number[keep]))
 
 
+class _Bell:
+    """Cumulative number of a spectrum that fades out at both ends.
+
+    The logarithm of its density, number over spacing of the nodes, is a cubic spline in mass, so a Gaussian stays one;
+    a factor quadratic in the exponent gives it back its number, mean and variance.
+    """
+
+    def __init__(self, mass, number):
+        spacing = np.gradient(mass)
+        curve = CubicSpline(mass, np.log(number / spacing))
+        reach = spacing[0], spacing[-1]
+        m = np.linspace(max(mass[0] - reach[0], 0.3 * mass[0]), mass[-1] + reach[1], 4000)
+        inside = np.clip(m, mass[0], mass[-1])
+        # straight beyond the last nodes
+        ln = curve(inside) + curve(inside, 1) * (m - inside)
+        total = number.sum()
+        mean = number @ mass / total
+        sigma = np.sqrt(number @ (mass - mean) ** 2 / total)
+        z, wanted = (m - mean) / sigma, np.array([total, 0.0, total])
+        powers = np.array([np.ones(m.size), z, z * z])
+        for _ in range(20):
+            f = np.exp(ln) * (m[1] - m[0])
+            found = powers @ f
+            step = np.linalg.solve((powers * f) @ powers.T, wanted - found)
+            ln = ln + np.clip(step, -0.5, 0.5) @ powers
+            if np.abs(step).max() < 1e-10:
+                break
+        self.x = np.log(m)
+        self.sum = np.concatenate([[0.0], np.cumsum(0.5 * (np.exp(ln[1:]) + np.exp(ln[:-1])) * (m[1] - m[0]))])
+
+    def __call__(self, x):
+        return np.interp(x, self.x, self.sum)
+
+
 def _cumulative(mass, number):
     order = np.argsort(mass)
     x, n = np.log(mass[order]), number[order]
     some = n > 0
     x, n = x[some], n[some]
+    if n.size > 4 and max(n[0], n[-1]) < _BELL * n.max():
+        return _Bell(np.exp(x), n)
     middle = np.cumsum(n) - 0.5 * n
     # the ends of the spectrum lie beyond the first and last node, as far as their own halves reach
     first = x[0] - min(0.5 * n[0] * (x[1] - x[0]) / (0.5 * (n[0] + n[1])), x[1] - x[0])

@@ -5,6 +5,7 @@ from .compare import comparison, comparison_page, ratio, save_comparison
 from .events import events, save_events
 from .galaxy import maps, save_maps
 from .masses import masses, save_masses
+from .odds import odds, save_odds
 from .sightlines import depth, joint, overview, save_picture, sightline, stacked, timescales
 from .spread import save_spread, spread_overview, tornado
 
@@ -18,6 +19,7 @@ __all__ = [
     "kick_yield",
     "maps",
     "masses",
+    "odds",
     "overview",
     "ratio",
     "save_campaign",
@@ -26,6 +28,7 @@ __all__ = [
     "save_kick_yield",
     "save_maps",
     "save_masses",
+    "save_odds",
     "save_picture",
     "save_spread",
     "sightline",

@@ -15,7 +15,7 @@ from ..errors import LensrateError, one_of
 __all__ = ["GROUPS", "Check", "checks", "rows_of", "to_table"]
 
 #: in the order of the report; "files" has no table, it is about the tables
-GROUPS = ("lensing", "galaxy", "remnants", "sources", "surveys", "files")
+GROUPS = ("lensing", "galaxy", "remnants", "sources", "surveys", "events", "files")
 
 
 @dataclass(frozen=True)

@@ -1,0 +1,109 @@
+"""Events on the plane of t_E and pi_E over the densities that the lens classes are predicted to have."""
+
+import matplotlib.pyplot as plt
+import numpy as np
+
+from ..io import PICTURES, check_target
+from .saving import blank, write_figure
+from .sightlines import _colour, _label, _style
+
+__all__ = ["odds", "save_odds"]
+
+_MARKERS = {"star": "*", "brown_dwarf": "v", "white_dwarf": "s", "neutron_star": "D", "black_hole": "o"}
+_T = (1.0, 1000.0)
+_PI = (1e-3, 5.0)
+
+
+def odds(result, ax=None, **marker):
+    """Draw events at their t_E and pi_E over contours of each class (half and nine tenths of its events).
+
+    Filled markers have a probability above 0.95, open ones have not; events without a parallax stand on the lower edge.
+
+    Parameters
+    ----------
+    result : Odds
+        What to draw.
+    ax : matplotlib Axes, optional
+        Made if not given.
+    **marker
+        Passed to ``ax.scatter``.
+
+    Returns
+    -------
+    matplotlib Axes
+    """
+    from ..events.odds import densities
+
+    if ax is None:
+        _, ax = plt.subplots(figsize=(6.4, 5.2), layout="constrained")
+    events = list(result)
+    middle = np.median([e.l if e.l < 180 else e.l - 360 for e in events]), np.median([e.b for e in events])
+    near = min(events, key=lambda e: np.hypot((e.l if e.l < 180 else e.l - 360) - middle[0], e.b - middle[1]))
+    ts, pis = [e.t_E.value for e in events], [e.pi_E for e in events if e.pi_E]
+    t_lim = min(_T[0], 0.5 * min(ts)), max(_T[1], 2.0 * max(ts))
+    pi_lim = min([_PI[0], *(0.5 * p for p in pis)]), max([_PI[1], *(2.0 * p for p in pis)])
+    t, pi, names, z = densities(near, result.scenario, t_lim, pi_lim)
+    handles, own = [], 0
+    for name, d in zip(names, z):
+        if not d.max() > 0:
+            continue
+        rank = np.sort(d.ravel())[::-1]
+        inside = np.cumsum(rank) / rank.sum()
+        levels = sorted(rank[np.searchsorted(inside, share)] for share in (0.9, 0.5))
+        colour, style = _colour(name, own), _style(name, own)
+        ax.contour(t, pi, d.T, levels=levels, colors=[colour], linestyles=[style], linewidths=[0.8, 1.7])
+        handles.append(ax.plot([], [], color=colour, ls=style, label=_label(name))[0])
+        own += name not in _MARKERS
+    for e in events:
+        sure = e.probability.max() > 0.95
+        colour = _colour(e.most_likely)
+        y = e.pi_E if e.pi_E else pi_lim[0] * 1.15
+        shape = _MARKERS.get(e.most_likely, "P") if e.pi_E else "|"
+        if e.pi_E:
+            face = {"facecolors": colour if sure else "white", "edgecolors": colour, "linewidths": 1.4}
+        else:
+            face = {"color": colour}
+        ax.scatter([e.t_E.value], [y], marker=shape, zorder=5, **{"s": 46, **face, **marker})
+        m = e.t_E
+        ax.plot([max(m.value - m.lo, t_lim[0]), m.value + m.hi], [y, y], color=colour, lw=0.9, zorder=4)
+    ax.set_xscale("log")
+    ax.set_yscale("log")
+    ax.set_xlim(*t_lim)
+    ax.set_ylim(*pi_lim)
+    ax.set_xlabel(r"$t_\mathrm{E}$  [d]")
+    ax.set_ylabel(r"$\pi_\mathrm{E}$")
+    what = f"{result.sample or 'events'}{' (invented)' if result.invented else ''}, scenario {result.scenario.name}"
+    frames = "/".join(sorted({e.frame for e in events}))
+    ax.set_title(
+        f"{what} ({result.scenario.hash})\nclasses at l = {near.l:g}°, b = {near.b:g}° (thick 50 %, thin 90 %); "
+        f"events {frames}, filled: P > 0.95",
+        fontsize="small",
+    )
+    ax.legend(handles=handles, frameon=False, fontsize="small", loc="upper right")
+    return ax
+
+
+def save_odds(result, path, overwrite=False):
+    """Write the picture of `odds` with its provenance.
+
+    Parameters
+    ----------
+    result : Odds
+    path : str or Path
+        Target; .png .pdf .svg.
+    overwrite : bool
+        Whether an existing file may be replaced.
+
+    Returns
+    -------
+    Path
+
+    Raises
+    ------
+    InputError, DataFileError
+        Unknown ending, existing file, or a file that could not be written.
+    """
+    path = check_target(path, PICTURES, overwrite, "--plot")
+    figure = blank(6.4, 5.2)
+    odds(result, ax=figure.add_subplot())
+    return write_figure(figure, path, result.meta(), overwrite)

@@ -1,0 +1,92 @@
+"""``lensrate odds``: a typed event, a table, a file of samples, and what it refuses."""
+
+import json
+
+import numpy as np
+import pytest
+from astropy.table import QTable, Table
+from click.testing import CliRunner
+
+from lensrate.cli.odds import odds
+from lensrate.datafiles import data_folder
+from lensrate.io import PICTURES
+
+run = CliRunner().invoke
+KEYS = {"event", "frame", "probability", "prior", "odds_against_star", "outlier_weight", "most_likely", "mass_msun",
+        "distance_kpc", "by_class", "solutions", "effective_samples"}  # fmt: skip
+CLASSES = ["star", "brown_dwarf", "white_dwarf", "neutron_star", "black_hole"]
+TYPED = ["--t-E", "120", "--pi-E", "0.08", "--at", "1.2", "-2.9", "--kicks", "none"]
+
+
+def test_typed_event():
+    result = run(odds, [*TYPED, "--json"])
+    assert result.exit_code == 0, result.output
+    (row,) = json.loads(result.stdout)
+    assert KEYS <= set(row) and list(row["probability"]) == CLASSES and list(row["by_class"]) == CLASSES
+    assert sum(row["probability"].values()) == pytest.approx(1.0, abs=1e-5)
+    assert row["odds_against_star"]["star"] == 1.0 and row["frame"] == "heliocentric"
+    assert set(row["mass_msun"]) == {"p16", "p50", "p84"} == set(row["by_class"]["star"]["distance_kpc"])
+    assert "theta_E is not measured" in row["rests_on"]
+    assert "errors assumed: 5% of t_E, 10% of pi_E" in result.stderr
+    assert set(row["outlier_floors"]) == {"0.1", "10"}
+    text = run(odds, TYPED)
+    assert "ordinary stars" in text.stdout and max(map(len, text.stdout.splitlines())) <= 100
+    sure = run(odds, [*TYPED, "--theta-E", "0.5", "--theta-E-err", "0.01", "--outlier", "0"])
+    assert "< 1e-6" in sure.stdout
+
+
+def test_sample_of_the_survey(tmp_path):
+    path = str(data_folder() / "samples" / "marram_events.ecsv")
+    save, picture = tmp_path / "o.ecsv", tmp_path / "o.png"
+    args = [path, "--kicks", "none", "--tolerance", "0.2", "--save", str(save), "--plot", str(picture)]
+    result = run(odds, args)
+    assert result.exit_code == 0, result.output
+    assert "13 events (invented)" in " ".join(result.stderr.split()) and "(invented)" in result.stdout
+    assert max(map(len, result.stdout.splitlines())) <= 100
+    table = QTable.read(save)
+    assert len(table) == 13 and table.meta["invented"] and table.meta["sample"] == "marram_events.ecsv"
+    assert picture.stat().st_size > 10_000 and picture.suffix in PICTURES
+
+
+def test_samples_of_a_fit(tmp_path):
+    rng = np.random.default_rng(2)
+    t = Table({"t_E": rng.normal(120, 4, 800), "pi_E": np.abs(rng.normal(0.08, 0.01, 800))})
+    t.meta.update({"l": 1.2, "b": -2.9, "prior": "uniform", "frame": "heliocentric", "event": "M-1"})
+    t.write(tmp_path / "s.ecsv")
+    result = run(odds, [str(tmp_path / "s.ecsv"), "--kicks", "none", "--json"])
+    assert result.exit_code == 0, result.output
+    (row,) = json.loads(result.stdout)
+    assert row["event"] == "M-1" and row["effective_samples"] > 300
+
+
+@pytest.mark.parametrize(
+    "args, words",
+    [
+        ([], "either SAMPLE or one event"),
+        (["x.csv", "--t-E", "3"], "either SAMPLE or one event"),
+        (["x.csv", "--pi-E", "3"], "--pi-E belongs to an event typed"),
+        (["--t-E", "3"], "--at L B is needed"),
+        (["--t-E", "3", "--at", "1", "-2", "--pi-E-err", "1"], "--pi-E-err without --pi-E"),
+    ],
+)
+def test_usage(args, words):
+    result = run(odds, args)
+    assert result.exit_code == 2 and words in " ".join(result.stderr.split())
+
+
+@pytest.mark.parametrize(
+    "args, words",
+    [
+        (["--t-E", "-3", "--at", "1", "-2"], "t_E: -3 d given, must be above 0"),
+        (["--t-E", "3", "--at", "1", "-92"], "b: -92 deg given"),
+        (["--t-E", "3", "--pi-EN", "0.1", "--at", "1", "-2"], "pi_EE: no value, but pi_EN has one"),
+        (["--t-E", "3", "--at", "1", "-2", "--frame", "geocentric"], "no reference epoch"),
+        (["--t-E", "3", "--at", "1", "-2", "--outlier", "2"], "outlier: 2 given"),
+        (["nothing.csv"], "no file 'nothing.csv'"),
+    ],
+)
+def test_wrong_input(args, words):
+    from lensrate.errors import InputError
+
+    result = run(odds, args)
+    assert isinstance(result.exception, InputError) and words in str(result.exception)
