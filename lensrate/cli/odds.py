@@ -189,7 +189,7 @@ def report(result):
 
 def _general(text):
     """The line on what the answer rests on, without the event's own mass."""
-    return text.split(", about ")[0] + ", decides" if ", about " in text else text
+    return text.split(", about ")[0]
 
 
 def report_one(result):

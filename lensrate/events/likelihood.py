@@ -22,6 +22,7 @@ _LN_SPAN = DECADES * np.log(10.0)
 _NARROW = 0.2  # relative error above which Gauss-Hermite nodes give way to even ones
 _MOST_DRAWS = 2000
 _ANGLES = 16
+_POLAR_STEP = 0.16  # of ln pi_E
 _CONDITIONED_ANGLES = 32
 _ROOT = np.sqrt(2.0 * np.pi)
 
@@ -80,7 +81,7 @@ def likelihood(solution, event, direct=False):
     m = solution.measured
     if "t_E" not in m:
         raise InputError(f"{event.name}: no t_E")
-    t, w_t = _nodes(m["t_E"], 3, 5)
+    t, w_t = _nodes(m["t_E"], 1 if _relative(m["t_E"]) < 0.02 else 3, 9, wide=0.35)
     directed = "pi_EN" in m
     turning = direct or known is not None and known.motion is not None or earth != (0.0, 0.0)
     wrong, rests = 1.0, ["t_E"]
@@ -133,10 +134,10 @@ def _relative(measure):
     return max(measure.lo, measure.hi) / max(abs(measure.value), 1e-12)
 
 
-def _nodes(measure, few, more):
+def _nodes(measure, few, more, wide=_NARROW):
     """Nodes and weights of the integral over a likelihood whose peak is one."""
     relative, split = _relative(measure), max(measure.lo, measure.hi) / min(measure.lo, measure.hi)
-    if relative < _NARROW and split < 1.3:
+    if relative < wide and split < 1.3:
         z, w = np.polynomial.hermite.hermgauss(few if relative < 0.05 else more)
         z = np.sqrt(2.0) * z
         sigma = np.where(z > 0, measure.hi, np.where(z < 0, measure.lo, measure.err))
@@ -165,7 +166,10 @@ def _parallax_nodes(solution, event, others):
     own = max(north.err, east.err) / size
     finest = min([_relative(v) for k, v in others.items() if k != "pi_E"], default=own)
     split = max(north.lo / north.hi, north.hi / north.lo, east.lo / east.hi, east.hi / east.lo) > 1.3
-    if own < _NARROW and finest > 0.7 * own and not split:
+    if own >= _NARROW:
+        # the rate varies with the logarithm of a parallax, and near zero faster than the errors
+        return _polar_nodes(solution, event, min(finest / own, 1.0))
+    if finest > 0.7 * own and not split:
         z, w = np.polynomial.hermite.hermgauss(5)
         z, w = np.sqrt(2.0) * z, np.sqrt(2.0) * w
     else:
@@ -182,6 +186,35 @@ def _parallax_nodes(solution, event, others):
     weight = weight * s_n * s_e * np.sqrt(1 - rho**2)
     X = np.maximum(np.hypot(p_n, p_e), 1e-9)
     keep = weight > 1e-9 * weight.max()
+    return X[keep], _angle(p_n, p_e, event)[keep], weight[keep]
+
+
+def _polar_nodes(solution, event, ratio):
+    """Points even in angle and logarithm of size, for a parallax vector with large errors."""
+    north, east = solution.measured["pi_EN"], solution.measured["pi_EE"]
+    sigma = max(north.lo, north.hi, east.lo, east.hi)
+    size = np.hypot(north.value, east.value)
+    lo, hi = max(size - 4.5 * sigma, min(0.01 * sigma, 1e-3)), size + 4.5 * sigma
+    step = _POLAR_STEP * max(ratio, 0.2)
+    if lo > 0.5 * size:
+        step = min(step, np.log(hi / lo) / 12)
+    # a trapezoid rule: the integrand fades out at both ends
+    sizes = np.exp(np.arange(np.log(lo), np.log(hi) + step, step))
+    w_size = np.full(sizes.size, step)
+    if size > 4.5 * sigma:
+        x, w = np.polynomial.legendre.leggauss(12)
+        reach = np.arcsin(4.5 * sigma / size)
+        turn, w_turn = np.arctan2(east.value, north.value) + reach * x, reach * w
+    else:
+        n = int(np.clip(np.ceil(2 * np.pi / 1.1 * size / sigma), 16, 28))
+        turn, w_turn = (np.arange(n) + 0.5) * (2 * np.pi / n), np.full(n, 2 * np.pi / n)
+    X, turn = np.repeat(sizes, turn.size), np.tile(turn, sizes.size)
+    p_n, p_e = X * np.cos(turn), X * np.sin(turn)
+    z_n, z_e = ((p - m.value) / np.where(p > m.value, m.hi, m.lo) for p, m in ((p_n, north), (p_e, east)))
+    rho = solution.pi_E_corr
+    weight = np.exp(-0.5 * (z_n**2 - 2 * rho * z_n * z_e + z_e**2) / (1 - rho**2))
+    weight *= np.outer(w_size, w_turn).ravel() * X**2
+    keep = weight / X**2 > 1e-6 * (weight / X**2).max()
     return X[keep], _angle(p_n, p_e, event)[keep], weight[keep]
 
 

@@ -97,12 +97,14 @@ class EventOdds:
         rests = set(self.rests)
         if "theta_E" in rests and "pi_E" in rests:
             q = self.quantiles("mass_msun")
-            return f"theta_E and pi_E are measured: the lens's mass, about {q['p50']:.3g} Msun, decides"
+            return f"theta_E and pi_E are measured: the lens's mass decides, about {q['p50']:.3g} Msun"
         if {"mu_rel", "pi_E"} <= rests:
             return "mu_rel and t_E give theta_E, and with pi_E the lens's mass decides"
         if "theta_E" in rests or "mu_rel" in rests:
             return "pi_E is not measured: mass and distance are known only together, the Galaxy's stars decide"
         if "pi_E" in rests:
+            if self.most_likely != "star":
+                return "theta_E is not measured: probabilities rest on how the Galaxy's lenses move, not on a mass"
             return "theta_E is not measured: probabilities follow the Galaxy's ordinary stars, not the lens's own mass"
         return "only t_E is measured: probabilities follow the Galaxy's ordinary stars"
 

@@ -29,7 +29,7 @@ _DECADES = 3.4
 _DENSITY = 2.5  # directions per dispersion, on a circle of mu_rel
 _Q_MAX = 18.0  # exponents beyond are dropped in that table
 _SPEED = 100.0  # km/s, around which the table's motions are gathered
-_BATCH = 256  # points at a time
+_BATCH = 128  # points at a time
 
 
 @dataclass(frozen=True, eq=False)
@@ -299,9 +299,13 @@ class EventRates:
         """
         out = np.zeros((len(self.classes), len(points)))
         gauss = [s.gauss if known is None else s.given(known) for s in self.sets]
+        # points of like size need the same few rows
+        order = np.argsort(points.X, kind="stable")
         for start in range(0, len(points), _BATCH):
-            part = slice(start, start + _BATCH)
-            self._batch(points, part, gauss, light, histograms, out[:, part])
+            part = order[start : start + _BATCH]
+            some = np.zeros((len(self.classes), part.size))
+            self._batch(points, part, gauss, light, histograms, some)
+            out[:, part] = some
         return out
 
     def _batch(self, points, part, gauss, light, histograms, out):

@@ -11,7 +11,7 @@ __all__ = ["odds", "save_odds"]
 
 _MARKERS = {"star": "*", "brown_dwarf": "v", "white_dwarf": "s", "neutron_star": "D", "black_hole": "o"}
 _T = (1.0, 1000.0)
-_PI = (1e-3, 5.0)
+_PI = (2e-3, 3.0)
 
 
 def odds(result, ax=None, **marker):
