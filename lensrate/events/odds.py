@@ -225,7 +225,7 @@ def _mixed(main, wrong, outlier):
     if not wrong.sum() > 0:
         return main / main.sum(), 0.0
     total = (1 - outlier) * main + outlier * wrong
-    return total / total.sum(), float(outlier * wrong.sum() / total.sum())
+    return total / total.sum(), min(float(outlier * wrong.sum() / total.sum()), 1.0)
 
 
 def _solution(solution, event, line, n):

@@ -29,8 +29,8 @@ def pick_gaussians(
 
     row (N,): row of each node, rising; geometry (N,) of `rates.node_weights`; src (6, S, N), lens (6, L, N); lens_row,
     base, factor (R,): lens rows, their base and factor, sorted by base. Those whose part of the rate is below `cut` of
-    the base's on a row are left out and the others raised to keep the sum. Fills first (n_base * n_rows + 1), and the
-    node, lens row, source row and weight of each Gaussian.
+    that of the base and the source row are left out and the others raised to keep the sum. Fills first
+    (n_base * n_rows + 1), and the node, lens row, source row and weight of each Gaussian.
     Returns their number.
     """
     N, S = row.size, src.shape[1]
@@ -39,6 +39,7 @@ def pick_gaussians(
         start[row[p] + 1] += 1
     for i in range(n_rows):
         start[i + 1] += start[i]
+    total, kept = np.zeros(S), np.zeros(S)
     count = 0
     r0 = 0
     for b in range(n_base):
@@ -47,23 +48,24 @@ def pick_gaussians(
             r1 += 1
         for i in range(n_rows):
             first[b * n_rows + i] = count
-            total = 0.0
+            total[:] = 0.0
+            kept[:] = 0.0
             for p in range(start[i], start[i + 1]):
                 for r in range(r0, r1):
                     g = geometry[p] * lens[0, lens_row[r], p] * factor[r]
                     for s in range(S):
-                        total += g * src[0, s, p] * _speed(lens, src, lens_row[r], s, p)
-            if not total > 0.0:
+                        total[s] += g * src[0, s, p] * _speed(lens, src, lens_row[r], s, p)
+            every = total.sum()
+            if not every > 0.0:
                 continue
-            kept = 0.0
             for p in range(start[i], start[i + 1]):
                 for r in range(r0, r1):
                     g = geometry[p] * lens[0, lens_row[r], p] * factor[r]
                     for s in range(S):
                         w = g * src[0, s, p]
                         v = w * _speed(lens, src, lens_row[r], s, p)
-                        if v > cut * total:
-                            kept += v
+                        if v > cut * max(total[s], 0.03 * every):
+                            kept[s] += v
                             if node.size > 0:
                                 node[count] = p
                                 out_lens[count] = lens_row[r]
@@ -73,7 +75,7 @@ def pick_gaussians(
             if node.size > 0:
                 # those left out are made up for by the others
                 for g in range(first[b * n_rows + i], count):
-                    weight[g] *= total / kept
+                    weight[g] *= total[out_src[g]] / kept[out_src[g]]
         r0 = r1
     first[n_base * n_rows] = count
     return count
