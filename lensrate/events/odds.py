@@ -15,7 +15,7 @@ from ..lensing.points import Axes, EventRates, Points
 from ..parallel import run_map
 from ..scenario import Scenario, resolve
 from ..scenario.numerics import Numerics
-from .light import Light
+from .lens_limit import LensLimit
 from .likelihood import likelihood
 from .odds_result import EventOdds, Odds, SolutionOdds
 
@@ -231,7 +231,7 @@ def _mixed(main, wrong, outlier):
 def _solution(solution, event, line, n):
     like = likelihood(solution, event)
     hist = np.zeros((n, 4, Axes.n, 2))
-    light = Light(solution.plain["I_lens_limit"], line) if "I_lens_limit" in solution.plain else None
+    light = LensLimit(solution.plain["I_lens_limit"], line) if "I_lens_limit" in solution.plain else None
     by_point = _main(like, line, light, hist)
     main = by_point.sum(axis=1)
     wrong, hist_wrong = np.zeros(n), np.zeros_like(hist)

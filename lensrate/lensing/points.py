@@ -90,8 +90,9 @@ class _Set:
         if fixed:
             row, D, w = np.arange(pi.size), np.full(pi.size, fixed), np.ones(pi.size)
         elif kicked:
-            edges = rates._joined(ready.edges)
-            row, D, w = row_nodes(pi, edges, np.array([ready.kicked_table.end]), 4)
+            end, inner = np.array([ready.kicked_table.end]), rates._through_the_centre(ready)
+            edges = ready.edges if inner else rates._joined(ready.edges)
+            row, D, w = row_nodes(pi, edges, np.concatenate([end, ready.kinks]) if inner else end, 4)
         else:
             row, D, w = row_nodes(pi, ready.edges, ready.kinks, numerics.nodes)
         src = rates._source_rows(ready.model, ready.line, ready.sources, D)
@@ -287,7 +288,7 @@ class EventRates:
         points : Points
         known : SourceData, optional
             Makes directions necessary.
-        light : Light, optional
+        light : LensLimit, optional
             Limit on the lens's light.
         histograms : ndarray, shape (classes, 4, n, 2), optional
             Added to: weight and weight times value of ln M, ln D_L, ln theta_E, ln mu_rel, on `Axes`.
