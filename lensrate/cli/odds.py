@@ -68,7 +68,11 @@ def odds(
     typed = values["t_E"] is not None
     if typed == (sample is not None):
         raise click.UsageError("give either SAMPLE or one event: --t-E ... --at L B")
-    lone = [o for o, v in {**values, **errors, "lens_limit": lens_limit, "at": at}.items() if v is not None]
+    lone = [
+        o
+        for o, v in {**values, **{f"{k}_err": v for k, v in errors.items()}, "lens_limit": lens_limit, "at": at}.items()
+        if v is not None
+    ]
     if not typed and lone:
         raise click.UsageError(f"--{lone[0].replace('_', '-')} belongs to an event typed with --t-E, not to SAMPLE")
     if typed and not at:
@@ -160,7 +164,7 @@ def _span(q, digits=3):
     """A median, and the 16th and 84th percentiles."""
     if q is None:
         return "-"
-    return f"{number(q['p50'], digits)} ({number(q['p16'], digits)} to {number(q['p84'], digits)})"
+    return f"{number(q['p50'], digits)} ({number(q['p16'], digits)}-{number(q['p84'], digits)})"
 
 
 def _head(result):

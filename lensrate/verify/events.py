@@ -26,10 +26,10 @@ EVENTS = {
     # distance for a source at 8 kpc; t_E and place are from memory, errors are our choice
     "par02": {"l": 0.0, "b": -2.0, "t_E": 250.0, "t_E_err": 10.0, "pi_E": 0.062, "pi_E_err": 0.006},
     # TCP J05074264+2447555. theta_E: Dong+ 2019, ApJ 871, 70; mu_rel: Zang+ 2020 (1912.00038), both seen; t_E is their
-    # ratio, pi_E that of the published mass; place and source distance from memory
+    # ratio, pi_E that of the published mass; place from memory
     "tcp": {
         "ra": 76.928, "dec": 24.7988, "t_E": 25.7, "t_E_err": 0.7, "pi_E": 0.464, "pi_E_err": 0.059,
-        "theta_E": 1.87, "theta_E_err": 0.03, "D_S": 1.6, "D_S_err": 0.2,
+        "theta_E": 1.87, "theta_E_err": 0.03,
     },
     # Stein 2051 B. theta_E: Sahu+ 2017, Science 356, 1046, pi_E from it and the parallax of 180.8 mas, t_E from 2.3
     # arcsec/yr (memory); the limit stands for 'fainter than a star of its mass', which would have I of about 6
@@ -75,9 +75,8 @@ COMPUTE = {
     "ob110462_short": _p("ob110462", "black_hole", *_SHORT),
     "ob110462_gain": _gain,
     "par02_short": _p("par02", "black_hole", *_SHORT),
-    "tcp_star": _p("tcp", "star", *_MASS, "D_S"),
-    "tcp_mass": _median("tcp", "mass_msun", "star", *_MASS, "D_S"),
-    "tcp_distance": _median("tcp", "distance_kpc", "star", *_MASS, "D_S"),
+    "tcp_star": _p("tcp", "star", *_MASS),
+    "tcp_mass": _median("tcp", "mass_msun", "star", *_MASS),
     "stein2051b_dark": _p("stein2051b", "white_dwarf", *_MASS, "I_lens_limit"),
     "stein2051b_free": lambda: _p("stein2051b", "star", *_MASS)() / _p("stein2051b", "white_dwarf", *_MASS)(),
     "stein2051b_mass": _median("stein2051b", "mass_msun", "white_dwarf", *_MASS, "I_lens_limit"),
