@@ -22,6 +22,7 @@ _WHERE = {
     "Sample": "events.observed",
     "census": "remnants.census",
     "compare_sample": "events.versus",
+    "constrain": "inference.constrain",
     "kick_yield": "surveys.kick_yield",
     "mass_forecast": "events.masses",
     "mock_events": "events.mock",

@@ -11,6 +11,7 @@ from .base import Group
 from .campaign import campaign
 from .census import census
 from .compare import compare
+from .constrain import constrain
 from .events import events
 from .odds import odds
 from .scenario import scenario
@@ -36,7 +37,7 @@ def cli():
     """
 
 
-for command in (sightline, skymap, campaign, events, spread, census, compare, odds, synthesize, scenario, verify):
+for command in (sightline, skymap, campaign, events, spread, census, compare, constrain, odds, synthesize, scenario, verify):
     cli.add_command(command)
 
 

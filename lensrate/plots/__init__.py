@@ -2,6 +2,7 @@
 
 from .campaigns import campaign, kick_yield, save_campaign, save_kick_yield
 from .compare import comparison, comparison_page, ratio, save_comparison
+from .constrain import marginal, mass_limits, posterior, save_mass_limits, save_posterior
 from .events import events, save_events
 from .galaxy import maps, save_maps
 from .masses import masses, save_masses
@@ -18,18 +19,23 @@ __all__ = [
     "joint",
     "kick_yield",
     "maps",
+    "marginal",
+    "mass_limits",
     "masses",
     "odds",
     "overview",
+    "posterior",
     "ratio",
     "save_campaign",
     "save_comparison",
     "save_events",
     "save_kick_yield",
     "save_maps",
+    "save_mass_limits",
     "save_masses",
     "save_odds",
     "save_picture",
+    "save_posterior",
     "save_spread",
     "sightline",
     "spread_overview",

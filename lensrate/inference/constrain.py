@@ -1,0 +1,238 @@
+"""From a sample and a campaign to a posterior; limits on a lens class of the user's own against its mass."""
+
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from ..errors import InputError, one_of
+from ..scenario import Scenario
+from ..surveys.campaign import Campaign
+from ..surveys.reweighted import reweighted
+from ..surveys.yields import campaign as forecast_of
+from .data import Selection, made, observed_data
+from .likelihood import Likelihood, Nuisances, anchors, check_kicks
+from .parameters import BINS, bin_parameters, parse_parameters
+from .posterior import grid_posterior
+from .templates import Templates, need_kicks
+
+__all__ = ["METHODS", "MassLimits", "constrain", "mass_limits", "timescales_only"]
+
+METHODS = ("auto", "grid", "sample")
+
+
+def constrain(sample, parameters=("kick_scale",), survey=None, scenario=None, *, priors=(), nuisances=None,
+              selection=None, counts="auto", galaxies=(), method="auto", points=None, steps=2000, seed=1,
+              only_t_E=False, forecast=None, jobs=1, progress=None):  # fmt: skip
+    """Return the posterior of parameters from an observed sample.
+
+    Parameters
+    ----------
+    sample : Sample
+    parameters : sequence of str
+        Of `parameters.PARAMETERS`, ``kick_bins`` (free shares of the kick bins under a smoothness prior; a sampler is
+        needed), or ``class:NAME``.
+    survey : Campaign or str
+        Whose fields, stars and efficiency apply.
+    scenario : Scenario or str, optional
+        Default the campaign's own.
+    priors : sequence of str
+        ``NAME=FORM:A,B``.
+    nuisances : Nuisances, optional
+        Widths; on by default.
+    selection : Selection, optional
+        Declared probabilities of the stages of a sample.
+    counts : str
+        "auto", "shape" or "absolute".
+    galaxies : sequence of Scenario or str
+        Further Galaxy sets, equally likely beforehand, over which the posterior is averaged.
+    method : str
+        "auto": a grid up to three parameters, else the sampler; "grid"; "sample".
+    points, steps, seed : int
+        Grid points a parameter; steps and seed of the sampler.
+    only_t_E : bool
+        Leave parallaxes and angular radii out.
+    forecast : CampaignForecast, optional
+        One already made.
+    jobs : int
+        Threads over fields.
+    progress : callable or str, optional
+
+    Returns
+    -------
+    Posterior
+
+    Raises
+    ------
+    InputError
+        Unknown parameter, impossible prior, no events in the fields, nothing that anchors counts that are asked for.
+    """
+    one_of("method", method, METHODS)
+    if not len(sample):
+        raise InputError(f"sample '{sample.name}': no events")
+    if forecast is None and survey is None:
+        raise InputError("survey: a campaign is needed, whose fields, stars and efficiency apply; give --campaign FILE")
+    if forecast is None and not isinstance(survey, Campaign):
+        survey = Campaign.read(survey)
+    base = scenario if scenario is not None else (forecast.scenario if forecast else survey.scenario)
+    base = base if isinstance(base, Scenario) else Scenario.read(base)
+    asked = parse_parameters(list(parameters), priors, base.lens_class)
+    if only_t_E:
+        sample = timescales_only(sample)
+    label = progress if isinstance(progress, str) else None
+    if forecast is None:
+        forecast = forecast_of(survey, base, jobs=jobs, progress=label)
+    else:
+        forecast = reweighted(forecast, base, jobs, label)
+    every = {base.name: forecast}
+    for other in galaxies:
+        other = other if isinstance(other, Scenario) else Scenario.read(other)
+        name = other.name if other.name not in every else f"{other.name}-{other.hash}"
+        every[name] = reweighted(forecast, other, jobs, label)
+    likelihoods = {}
+    for name, f in every.items():
+        templates = Templates.of(f)
+        anchors(templates, counts)
+        check_kicks([p.name for p in asked], templates, _law(f))
+        if BINS in parameters and not likelihoods:
+            need_kicks(templates, BINS)
+            asked = (*asked, *bin_parameters(templates.edges))
+        data = observed_data(sample, templates, selection)
+        likelihoods[name] = Likelihood(templates, data, asked, nuisances, selection, counts)
+    call = progress if callable(progress) else None
+    if method == "sample" or (method == "auto" and len(asked) > 3):
+        if len(likelihoods) > 1:
+            raise InputError("galaxies: the sampler takes one Galaxy set; use three parameters or fewer")
+        from .sampler import sampled_posterior
+
+        out = sampled_posterior(next(iter(likelihoods.values())), steps, seed, call)
+    else:
+        out = grid_posterior(likelihoods, points=points, progress=call)
+    return replace(out, made={**out.made, "sample": sample.name, "sample_invented": sample.invented, "seed": seed})
+
+
+def _law(forecast):
+    from ..remnants.kicks import parse_kick
+
+    return parse_kick(forecast.scenario.kicks)
+
+
+def timescales_only(sample):
+    """Return a sample without its parallaxes, angular radii and proper motions."""
+    events = []
+    for e in sample.events:
+        t = e.t_E
+        solution = replace(e.solutions[0], measured={"t_E": t}, draws=None, delta_chi2=0.0)
+        events.append(replace(e, solutions=(solution,)))
+    return replace(sample, events=tuple(events))
+
+
+@dataclass(frozen=True, eq=False)
+class MassLimits:
+    """Upper limits on a lens class against its mass.
+
+    Attributes
+    ----------
+    lens : str
+    mass : ndarray, shape (n,)
+        Msun, every object of the class having it.
+    limit : ndarray, shape (n,)
+        Largest amount at `level`, in units of what the scenario states (for a mass fraction: the fraction).
+    expected : ndarray, shape (n,)
+        Events of the class found, at the scenario's amount.
+    amount : float
+        The scenario's own.
+    norm : str
+        What the amount is: mass_fraction, number_per_msun or number_per_star.
+    level : float
+    made : dict
+    """
+
+    lens: str
+    mass: np.ndarray
+    limit: np.ndarray
+    expected: np.ndarray
+    amount: float
+    norm: str
+    level: float
+    made: dict
+
+    def to_table(self):
+        """Return a QTable, a row per mass."""
+        import astropy.units as u
+        from astropy.table import QTable
+
+        table = QTable()
+        table["mass"] = self.mass * u.Msun
+        table["upper_limit"], table["expected_events"] = self.limit, self.expected
+        table["upper_limit"].info.description = f"{self.norm} at {self.level:.0%}"
+        table.meta.update({**self.made, "lens": self.lens, "level": self.level})
+        return table
+
+    def to_dict(self):
+        """Return plain numbers."""
+        return {"lens": self.lens, "norm": self.norm, "level": self.level, "mass_msun": list(map(float, self.mass)),
+                "upper_limit": list(map(float, self.limit)), "expected_events": list(map(float, self.expected)),
+                **self.made}  # fmt: skip
+
+    def plot(self, ax=None, **style):
+        """Draw the limits against mass; returns matplotlib Axes."""
+        import importlib
+
+        return importlib.import_module("lensrate.plots").mass_limits(self, ax=ax, **style)
+
+
+def mass_limits(sample, forecast, lens, masses, *, level=0.95, nuisances=None, counts="auto", highest=10.0):
+    """Return upper limits on a lens class of the scenario against the mass of its objects.
+
+    Parameters
+    ----------
+    sample : Sample
+        Of which timescales count alone.
+    forecast : CampaignForecast
+        Of a scenario with the class.
+    lens : str
+        Its name.
+    masses : array_like
+        Msun.
+    level : float
+    nuisances, counts
+        As in `constrain`.
+    highest : float
+        The prior of the amount is uniform from 0 to so many times the scenario's.
+
+    Returns
+    -------
+    MassLimits
+
+    Raises
+    ------
+    InputError
+        Unknown class, or masses not above zero.
+    """
+    scenario = forecast.scenario
+    one_of("lens class", lens, scenario.lens_class)
+    masses = np.asarray(masses, dtype=float)
+    if masses.ndim != 1 or masses.size == 0 or not np.all(np.isfinite(masses) & (masses > 0)):
+        raise InputError("masses: numbers above 0 Msun are needed")
+    if not 0.5 <= level < 1:
+        raise InputError(f"level: {level:g} given, must be at least 0.5 and below 1")
+    sample = timescales_only(sample)
+    table = scenario.lens_class[lens]
+    norm = next(k for k in ("mass_fraction", "number_per_msun", "number_per_star") if k in table)
+    parameter = parse_parameters([f"class:{lens}"], [f"class:{lens}=uniform:0,{highest:g}"], scenario.lens_class)
+    limits, expected, plain = [], [], None
+    for m in masses:
+        own = {**scenario.lens_class, lens: {**table, "mass_function": {"kind": "delta", "M": float(m)}}}
+        templates = Templates.of(reweighted(forecast, scenario.replace(lens_class=own)))
+        if plain is None:
+            plain = observed_data(sample, templates)
+        data = made(templates, plain.field, plain.x, plain.sigma, names=plain.names)
+        likelihood = Likelihood(templates, data, parameter, nuisances or Nuisances(), Selection(), counts)
+        limits.append(grid_posterior({"base": likelihood}).upper_limit(f"class:{lens}", level))
+        expected.append(float(templates.expected[:, templates.rows(lens)].sum()))
+    amount = table[norm]
+    amount = float(amount["value"] if isinstance(amount, dict) else amount)
+    return MassLimits(
+        lens, masses, amount * np.array(limits), np.array(expected), amount, norm, level,
+        {**{k: v for k, v in forecast.meta().items() if k not in ("warnings", "seed")}, "sample": sample.name},
+    )  # fmt: skip

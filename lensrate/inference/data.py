@@ -1,0 +1,395 @@
+"""Events as the likelihood sees them: nodes of ln t_E for every event, and a weight of every part for its masses.
+
+An event's own term holds no efficiency: that it was found is a fact about its data. What depends on things outside the
+data, a measurement made or not, enters through declared probabilities by class.
+"""
+
+from dataclasses import dataclass, field
+
+import numpy as np
+from scipy.special import i0e
+
+from ..errors import InputError, one_of
+from ..events.fold import LN_T, STEP, assign, heliocentric
+from ..lensing.distributions import MassGrid
+from ..units import DAYS_PER_YEAR, KAPPA
+from .templates import _plan
+
+__all__ = ["STAGES", "Data", "Selection", "mock", "observed_data"]
+
+#: stages of a sample after an event is found, each a subset of the one before
+STAGES = ("parallax", "followed", "mass")
+_NODES, _WEIGHTS = np.polynomial.hermite_e.hermegauss(5)
+_WEIGHTS = _WEIGHTS / np.sqrt(2 * np.pi)
+_STEPS = (0.03, 0.06, 0.12)  # of ln M
+_ROOT = np.sqrt(2 * np.pi)
+# of pi_E: hardly a lens is beyond these; step in the logarithm where a measurement is wide
+_LEAST, _MOST, _FINE = 1e-4, 30.0, 0.12
+
+
+@dataclass(frozen=True)
+class Selection:
+    """Declared probabilities of a sample's stages by class, for events that reached the stage before.
+
+    Attributes
+    ----------
+    parallax, followed, mass : dict of str to float
+        Probability by class; empty: the stage says nothing of the class and drops out.
+    listed : str
+        What an event must have to be in the sample: "found", or a stage.
+    """
+
+    parallax: dict = field(default_factory=dict)
+    followed: dict = field(default_factory=dict)
+    mass: dict = field(default_factory=dict)
+    listed: str = "found"
+
+    def __post_init__(self):
+        one_of("selection: listed", self.listed, ("found", *STAGES))
+        for stage in STAGES:
+            for lens, p in getattr(self, stage).items():
+                if isinstance(p, bool) or not isinstance(p, (int, float)) or not 0 <= p <= 1:
+                    raise InputError(f"selection: {stage} of {lens}: {p!r} given, a probability from 0 to 1 is needed")
+
+    @classmethod
+    def parse(cls, items, listed="found", classes=()):
+        """Read ``STAGE:CLASS=P`` texts; ``all`` for every class.
+
+        Raises
+        ------
+        InputError
+            Unknown stage or class (with the nearest known one), or no probability.
+        """
+        made = {stage: {} for stage in STAGES}
+        for item in items:
+            left, equals, value = str(item).partition("=")
+            stage, colon, lens = left.partition(":")
+            if not (equals and colon):
+                raise InputError(
+                    f"selection: '{item}' is not understood; write STAGE:CLASS=P, e.g. mass:black_hole=0.5"
+                )
+            one_of("selection: stage", stage, STAGES)
+            one_of("selection: class", lens, [*classes, "all"])
+            try:
+                p = float(value)
+            except ValueError:
+                raise InputError(f"selection: '{item}': '{value}' is no probability") from None
+            made[stage].update(dict.fromkeys(classes if lens == "all" else [lens], p))
+        return cls(**made, listed=listed)
+
+    def weight(self, lens, reached):
+        """Return the probability that an event of a class got just as far.
+
+        Parameters
+        ----------
+        lens : str
+        reached : str
+            "found" or the last stage that it reached.
+        """
+        last = -1 if reached == "found" else STAGES.index(reached)
+        chance = [getattr(self, stage).get(lens, 1.0) if getattr(self, stage) else 1.0 for stage in STAGES]
+        # a follow-up that gave no mass leaves no trace in a table: both fail together
+        failed = {-1: chance[:1] if self.parallax else chance[1:], 0: chance[1:], 1: chance[2:], 2: []}[last]
+        declared = {-1: self.declared, 0: self.followed or self.mass, 1: self.mass, 2: False}[last]
+        return float(np.prod(chance[: last + 1]) * (1.0 - np.prod(failed) if declared else 1.0))
+
+    def kept(self, lens):
+        """Return the probability that a found event of a class is in the sample."""
+        out = 1.0
+        if self.listed != "found":
+            for stage in STAGES[: STAGES.index(self.listed) + 1]:
+                out *= getattr(self, stage).get(lens, 1.0) if getattr(self, stage) else 1.0
+        return out
+
+    @property
+    def declared(self):
+        """Whether any probability is."""
+        return any(getattr(self, s) for s in STAGES)
+
+    def to_dict(self):
+        """Return the declarations."""
+        return {**{s: dict(getattr(self, s)) for s in STAGES}, "listed": self.listed}
+
+
+@dataclass(frozen=True, eq=False)
+class Data:
+    """Events ready for the likelihood.
+
+    Attributes
+    ----------
+    field : ndarray of int, shape (n,)
+    x, sigma : ndarray, shape (n,)
+        ln t_E and its error.
+    weight : ndarray, shape (n, R)
+        Of each part, from the event's mass and its stage; ones where nothing but t_E is known.
+    value : ndarray, shape (n, R)
+        Rate of each part at the event's own data, errors of measurement integrated over.
+    full : ndarray of bool, shape (n,)
+        Whether `value` came from the joint distribution with parallax or angular radius, not from t_E and `weight`.
+    names : tuple of str
+    notes : tuple of str
+    """
+
+    field: np.ndarray
+    x: np.ndarray
+    sigma: np.ndarray
+    weight: np.ndarray
+    value: np.ndarray
+    full: np.ndarray
+    names: tuple = ()
+    notes: tuple = ()
+
+    @property
+    def nodes(self):
+        """ln t_E of the nodes of each event, (n, q)."""
+        return self.x[:, None] + self.sigma[:, None] * _NODES
+
+    def __len__(self):
+        return self.x.size
+
+
+def node_weights():
+    """Return the weights of `Data.nodes`."""
+    return _WEIGHTS
+
+
+def made(templates, field, x, sigma, weight=None, joint=None, names=(), notes=()):
+    """Return Data from arrays; `joint` is a dict of event to its values by part."""
+    field, x, sigma = (np.asarray(v) for v in (field, x, sigma))
+    R = len(templates.parts)
+    weight = np.ones((x.size, R)) if weight is None else weight
+    place = np.clip((x[:, None] + sigma[:, None] * _NODES - LN_T[0]) / STEP, 0, LN_T.size - 1.001)
+    i = place.astype(int)
+    s = (place - i)[:, None, :]
+    rows = templates.rate[field]  # (n, R, t)
+    pick = np.arange(x.size)[:, None]
+    low, high = rows[pick, :, i].transpose(0, 2, 1), rows[pick, :, i + 1].transpose(0, 2, 1)
+    value = weight * (((1 - s) * low + s * high) @ _WEIGHTS)
+    full = np.zeros(x.size, dtype=bool)
+    for k, v in (joint or {}).items():
+        value[k], full[k] = weight[k] * v, True
+    return Data(field, x, sigma, weight, value, full, tuple(names), tuple(notes))
+
+
+def mass_weight(templates, ln_mass, error):
+    """Return the density of a measured ln M for every part, (R,)."""
+    mean = np.array([p.ln_mass for p in templates.parts])
+    width = np.sqrt(error**2 + np.array([p.spread for p in templates.parts]) ** 2)
+    return np.exp(-0.5 * ((ln_mass - mean) / width) ** 2) / (_ROOT * width)
+
+
+def observed_data(sample, templates, selection=None):
+    """Return the events of a sample that lie in the templates' fields.
+
+    Parameters
+    ----------
+    sample : Sample
+    templates : Templates
+    selection : Selection, optional
+
+    Returns
+    -------
+    Data
+
+    Raises
+    ------
+    InputError
+        No event, or none in a field; a sample of a stage that its events did not reach.
+    """
+    selection = selection or Selection()
+    if not len(sample):
+        raise InputError(f"sample '{sample.name}': no events")
+    index = assign(sample.events, templates.forecast.campaign.fields)
+    events = [e for e, i in zip(sample.events, index) if i >= 0]
+    outside = [e for e, i in zip(sample.events, index) if i < 0]
+    if not events:
+        raise InputError(
+            f"sample '{sample.name}': none of its {len(outside)} events lies in a field of campaign "
+            f"'{templates.forecast.campaign.name}'"
+        )
+    field = index[index >= 0]
+    x, sigma, parallax, notes = heliocentric(events)
+    if outside:
+        shown = ", ".join(e.name for e in outside[:8])
+        notes.append(f"{len(outside)} events outside all fields are left out: {shown}")
+    weight, joint, values = np.ones((len(events), len(templates.parts))), {}, {}
+    for i, (e, pi) in enumerate(zip(events, parallax)):
+        theta = _theta(e)
+        reached = "found" if pi is None else "mass" if theta is not None else "parallax"
+        if selection.listed != "found" and STAGES.index(selection.listed) > (
+            -1 if reached == "found" else STAGES.index(reached)
+        ):
+            raise InputError(
+                f"event '{e.name}': the sample is one of events with '{selection.listed}', which this one has not"
+            )
+        if selection.declared:
+            by = {lens: selection.weight(lens, reached) for lens in templates.classes}
+            weight[i] = [by[p.lens] for p in templates.parts]
+        if pi is not None or theta is not None:
+            if int(field[i]) not in values:
+                values[int(field[i])] = _Joint(templates, int(field[i]))
+            joint[i] = values[int(field[i])].of(x[i], sigma[i], pi, theta)
+    return made(templates, field, x, sigma, weight, joint, [e.name for e in events], [*sample.notes, *notes])
+
+
+def _theta(event):
+    """Angular Einstein radius [mas] and error of the best solution, also from a measured proper motion; or None."""
+    best = min(event.solutions, key=lambda s: s.delta_chi2)
+    if "theta_E" in best.measured:
+        m = best.measured["theta_E"]
+        return m.value, m.err
+    if "mu_rel" in best.measured:
+        m, t = best.measured["mu_rel"], event.t_E.value / DAYS_PER_YEAR
+        return m.value * t, m.err * t
+    if best.draws is not None and "theta_E" in best.draws.columns:
+        low, middle, high = best.draws.quantiles("theta_E")
+        return middle, 0.5 * (high - low)
+    return None
+
+
+class _Joint:
+    """Values of all parts of one field at events with a parallax, an angular radius, or both."""
+
+    def __init__(self, templates, field):
+        f = templates.forecast.fields[field]
+        self._integrals = f.sightline._integrals
+        self._exposure = templates.exposure[field]
+        model = f.sightline._model
+        _, build = _plan(templates.forecast.fields[0].sightline._model)
+        self._spectra = build(model, 0.0)
+        self._laid = {}
+
+    def _masses(self, step):
+        if step not in self._laid:
+            grid = MassGrid.deposit(0.5 * step, self._spectra)
+            self._laid[step] = np.exp(step * (grid.k0 + np.arange(grid.weight.shape[2]))), grid.weight
+        return self._laid[step]
+
+    def of(self, x, sigma, pi, theta):
+        """Rate of every part at the data, per ln t_E and per unit of each other datum."""
+        width = np.inf
+        if pi is not None and theta is not None:
+            width = np.hypot(min(pi[1] / max(pi[0], 1e-9), 3.0), theta[1] / theta[0])
+        step = next((s for s in reversed(_STEPS) if s <= 0.5 * width), _STEPS[0])
+        mass, weight = self._masses(step)
+        grid, T = self._integrals.grid, self._integrals.T
+        flat = T.reshape(T.shape[0], -1)
+        K = grid.mu.size
+        t = np.exp(x + sigma * _NODES) / DAYS_PER_YEAR
+        found = np.zeros((mass.size, T.shape[0]))
+        for m, M in enumerate(mass):
+            nodes, likely = _parallax_nodes(M, pi, theta)
+            if nodes is None:
+                continue
+            # cells of (ln pi_rel, ln mu_rel) at every pair of parallax and timescale
+            a = (np.log(KAPPA * M * nodes**2 / grid.pi[0]) / (2 * grid.h))[:, None] + 0 * t
+            c = np.log(KAPPA * M * nodes[:, None] / t / grid.mu[0]) / grid.h
+            w = likely[:, None] * _WEIGHTS * 2.0 * np.sqrt(M)
+            inside = (a >= 0) & (a < grid.pi.size - 1) & (c >= 0) & (c < K - 1)
+            if not inside.any():
+                continue
+            a, c, w = a[inside], c[inside], w[inside]
+            i, k = a.astype(int), c.astype(int)
+            s, r = a - i, c - k
+            for di, wi in ((0, 1 - s), (1, s)):
+                for dk, wk in ((0, 1 - r), (1, r)):
+                    found[m] += flat[:, (i + di) * K + k + dk] @ (w * wi * wk)
+        # the spectra's weights hold sqrt(M) already
+        found /= np.sqrt(mass)[:, None]
+        return np.maximum(self._exposure * np.einsum("rem,me->r", weight, found), 0.0)
+
+
+def _parallax_nodes(M, pi, theta):
+    """Nodes of pi_E for lenses of one mass, and the likelihood of parallax and radius times d ln pi_E."""
+    parts = []
+    if pi is not None:
+        parts.append((pi[0], pi[1]))
+    if theta is not None:
+        parts.append((theta[0] / (KAPPA * M), theta[1] / (KAPPA * M)))
+    inverse = sum(1 / s**2 for _, s in parts)
+    centre, width = sum(v / s**2 for v, s in parts) / inverse, inverse**-0.5
+    if any(abs(v - centre) > 8 * s for v, s in parts):
+        return None, None
+    if centre > 4.5 * width:
+        nodes = centre + width * np.linspace(-4, 4, 13)
+        step = (nodes[1] - nodes[0]) / nodes
+    else:
+        low = max(centre - 5 * width, min(1e-2 * width, _LEAST))
+        high = min(max(centre, 0.0) + 5 * width, _MOST)
+        nodes = np.geomspace(low, max(high, 1.1 * low), 8 + int(np.log(max(high / low, 1.0)) / _FINE))
+        step = np.full(nodes.size, np.log(nodes[1] / nodes[0]))
+    likely = step
+    if pi is not None:
+        value, error, vector = pi
+        if vector:
+            a, b = value / error, nodes / error
+            # both components, the direction of motion unknown
+            likely = likely * i0e(a * b) * np.exp(-0.5 * (a - b) ** 2) / (2 * np.pi * error**2)
+        else:
+            likely = likely * np.exp(-0.5 * ((value - nodes) / error) ** 2) / (_ROOT * error)
+    if theta is not None:
+        likely = likely * np.exp(-0.5 * ((theta[0] - KAPPA * M * nodes) / theta[1]) ** 2) / (_ROOT * theta[1])
+    return nodes, likely
+
+
+def mock(templates, part_weight, rng, sigma=0.05, slope=0.0, shift=0.0, stretch=1.0, mass_error=0.2, measured=None,
+         rate=None):  # fmt: skip
+    """Return the Data of a sample drawn from the templates.
+
+    Parameters
+    ----------
+    templates : Templates
+    part_weight : ndarray, shape (R,)
+        Weight of every part; stellar ones count once.
+    rng : Generator
+    sigma : float
+        Error of ln t_E of every event.
+    slope, shift, stretch : float
+        True nuisances of the stellar parts.
+    mass_error : float
+        Error of ln M of those whose mass is measured.
+    measured : dict of str to float, optional
+        Probability by class that the mass is measured; the likelihood must be told the same.
+    rate : ndarray, shape (F,), optional
+        Factor of each field's number.
+
+    Returns
+    -------
+    Data, lens
+        And the class of every event, as text.
+    """
+    from .likelihood import moved, resloped
+
+    R = len(templates.parts)
+    rows = templates.rate.copy()
+    stellar, factor = resloped(templates, slope)
+    rows[:, templates.stellar] = moved(stellar, shift, stretch)
+    dark = np.array([p.lens in ("neutron_star", "black_hole") for p in templates.parts])
+    rows[:, dark] *= factor[:, None, None]
+    found = rows * templates.efficiency[:, None, :] * np.asarray(part_weight)[:, None]
+    if rate is not None:
+        found = found * np.asarray(rate)[:, None, None]
+    fields, x, part = [], [], []
+    for f in range(found.shape[0]):
+        flat = np.cumsum(found[f].ravel())
+        n = rng.poisson(flat[-1] * STEP)
+        at = np.searchsorted(flat, rng.random(n) * flat[-1])
+        part.append(at // LN_T.size)
+        x.append(LN_T[at % LN_T.size] + STEP * (rng.random(n) - 0.5))
+        fields.append(np.full(n, f))
+    field, x, part = np.concatenate(fields), np.concatenate(x), np.concatenate(part)
+    lens = np.array([templates.parts[r].lens for r in part])
+    weight = np.ones((x.size, R))
+    if measured:
+        p = np.array([measured.get(q.lens, 0.0) for q in templates.parts])
+        has = rng.random(x.size) < p[part]
+        for i in range(x.size):
+            if has[i]:
+                q = templates.parts[part[i]]
+                ln_mass = q.ln_mass + np.hypot(mass_error, q.spread) * rng.standard_normal()
+                weight[i] = p * mass_weight(templates, ln_mass, mass_error)
+            else:
+                weight[i] = 1 - p
+    error = np.full(x.size, float(sigma))
+    return made(templates, field, x + sigma * rng.standard_normal(x.size), error, weight), lens
+

@@ -1,0 +1,180 @@
+"""Pictures of what a sample says: marginals beside their priors, pairs, and limits against mass."""
+
+import numpy as np
+
+from ..io import PICTURES, check_target
+from .saving import blank, write_figure
+from .sightlines import _axes
+
+__all__ = ["marginal", "mass_limits", "posterior", "save_mass_limits", "save_posterior"]
+
+_POSTERIOR, _PRIOR, _LINE = "#0072B2", "#E69F00", "#D55E00"
+_LEVELS = (0.68, 0.95)
+_DRAWS = 40_000
+_LABELS = {
+    "kick_scale": "factor on kick speeds", "slow_weight": "share of slow kicks",
+    "neutron_stars": "neutron stars / scenario's", "black_holes": "black holes / scenario's",
+    "remnant_mass": "remnant masses / scenario's",
+}  # fmt: skip
+
+
+def _name(parameter):
+    return _LABELS.get(parameter, parameter.replace("class:", "amount of ").replace("_", " "))
+
+
+def marginal(result, name, ax=None):
+    """Draw one parameter's posterior per unit of its prior's measure, beside the prior.
+
+    Parameters
+    ----------
+    result : Posterior
+    name : str
+    ax : matplotlib Axes, optional
+        Made if not given.
+
+    Returns
+    -------
+    matplotlib Axes
+    """
+    ax = _axes(ax, (4.6, 3.4))
+    i = result.names.index(name)
+    p = result.parameters[i]
+    values, weight = result.marginal(i)
+    x = np.log(values) if p.prior.logarithmic else values
+    if result.draws is not None:
+        edges = np.linspace(*np.quantile(x, [0.0005, 0.9995]), 41)
+        height = np.histogram(x, edges, density=True)[0]
+        prior = np.diff(p.prior.share(np.exp(edges) if p.prior.logarithmic else edges)) / np.diff(edges)
+    else:
+        inner = 0.5 * (x[1:] + x[:-1])
+        edges = np.concatenate([[2 * x[0] - inner[0]], inner, [2 * x[-1] - inner[-1]]])
+        height, prior = weight / np.diff(edges), result.prior_weight[i] / np.diff(edges)
+    shown = np.exp(edges) if p.prior.logarithmic else edges
+    ax.stairs(height, shown, color=_POSTERIOR, lw=1.6, label="posterior")
+    ax.stairs(prior, shown, color=_PRIOR, lw=1.4, ls="--", label="prior")
+    low, middle, high = result.quantile(i, [0.025, 0.5, 0.975])
+    for v, dash in ((low, ":"), (middle, "-"), (high, ":")):
+        ax.axvline(v, color="0.4", lw=0.8, ls=dash)
+    if p.prior.logarithmic:
+        ax.set_xscale("log")
+    ax.set_xlim(shown[0], shown[-1])
+    ax.set_ylim(0, None)
+    ax.set_yticks([])
+    got = result.learned[name]
+    word = f"{got.bits:.2f} bits" if got.constrained else f"not constrained ({got.bits:.2f} bits)"
+    ax.set_title(f"{middle:.3g} ({low:.3g} to {high:.3g}); {word}", fontsize=7)
+    ax.set_xlabel(_name(name))
+    return ax
+
+
+def _pair(result, i, j, ax, seed):
+    a, b = result.parameters[i].prior, result.parameters[j].prior
+    draws = result.samples(_DRAWS, seed)
+    x, y = (np.log(draws[:, k]) if p.logarithmic else draws[:, k] for k, p in ((i, a), (j, b)))
+    n = 40 if result.draws is not None else len(result.grid[i])
+    h, ex, ey = np.histogram2d(x, y, n)
+    order = np.sort(h.ravel())[::-1]
+    share = np.cumsum(order) / order.sum()
+    levels = sorted({float(order[np.searchsorted(share, q)]) for q in _LEVELS})
+    cx, cy = 0.5 * (ex[1:] + ex[:-1]), 0.5 * (ey[1:] + ey[:-1])
+    cx, cy = (np.exp(c) if p.logarithmic else c for c, p in ((cx, a), (cy, b)))
+    ax.pcolormesh(cx, cy, h.T, cmap="Blues", shading="nearest", rasterized=True)
+    ax.contour(cx, cy, h.T, levels, colors=[_LINE, "black"][-len(levels) :], linewidths=1)
+    for axis, p in ((ax.set_xscale, a), (ax.set_yscale, b)):
+        if p.logarithmic:
+            axis("log")
+
+
+def posterior(result, ax=None, seed=1):
+    """Draw the posterior: one parameter into `ax`, several as a triangle of pairs on a figure of their own.
+
+    Parameters
+    ----------
+    result : Posterior
+    ax : matplotlib Axes, optional
+        For one parameter.
+    seed : int
+        Of the draws behind the pairs.
+
+    Returns
+    -------
+    matplotlib Axes, or list of them
+    """
+    if len(result.parameters) == 1:
+        return marginal(result, result.names[0], ax)
+    return _triangle(result, seed).axes
+
+
+def _triangle(result, seed=1):
+    n = len(result.parameters)
+    size = 2.6 if n <= 4 else 1.4
+    figure = blank(max(size * n, 4.8), max(size * n, 3.8) + 0.5)
+    if n == 1:
+        marginal(result, result.names[0], figure.add_subplot())
+    else:
+        axes = figure.subplots(n, n, squeeze=False)
+        for j in range(n):
+            for i in range(n):
+                ax = axes[j, i]
+                if i > j:
+                    ax.axis("off")
+                    continue
+                if i == j:
+                    marginal(result, result.names[i], ax)
+                else:
+                    _pair(result, i, j, ax, seed)
+                    if i == 0:
+                        ax.set_ylabel(_name(result.names[j]), fontsize=8)
+                ax.set_xlabel(_name(result.names[i]) if j == n - 1 else "", fontsize=8)
+                ax.tick_params(labelsize=6)
+    handles, labels = figure.axes[0].get_legend_handles_labels()
+    figure.legend(handles, labels, loc="upper right", fontsize=8, frameon=False)
+    made = result.made
+    words = " (invented)" if made.get("sample_invented") else ""
+    title = f"{made.get('sample', '')}{words}: {result.events} events; scenario {made['scenario']} "
+    title += f"({made['scenario_hash']})"
+    free = ", ".join(result.nuisances["free"]) or "none"
+    more = "contours 68 and 95 %; " if n > 1 else ""
+    figure.suptitle(f"{title}\n{more}lines: median and 95 %; nuisances free: {free}", fontsize=8)
+    return figure
+
+
+def mass_limits(result, ax=None):
+    """Draw upper limits on a lens class against the mass of its objects.
+
+    Parameters
+    ----------
+    result : MassLimits
+    ax : matplotlib Axes, optional
+        Made if not given.
+
+    Returns
+    -------
+    matplotlib Axes
+    """
+    ax = _axes(ax)
+    ax.fill_between(result.mass, result.limit, 10 * result.limit.max(), color=_POSTERIOR, alpha=0.25, lw=0)
+    ax.plot(result.mass, result.limit, "o-", color=_POSTERIOR, ms=4, lw=1.5)
+    ax.axhline(result.amount, color="0.4", lw=0.8, ls=":")
+    ax.set_xscale("log")
+    ax.set_yscale("log")
+    ax.set_ylim(0.5 * result.limit.min(), 2 * result.limit.max())
+    ax.set_xlabel(r"lens mass  [$M_\odot$]")
+    ax.set_ylabel(f"{result.norm.replace('_', ' ')} excluded at {result.level:.0%}")
+    ax.set_title(f"{result.lens.replace('_', ' ')}; {result.made['campaign']}; scenario {result.made['scenario']} "
+                 f"({result.made['scenario_hash']})\ndotted: the scenario's own", fontsize=8)  # fmt: skip
+    return ax
+
+
+def save_posterior(result, path, overwrite=False):
+    """Write the picture with its provenance in the file's metadata; see `saving.write_figure`."""
+    check_target(path, PICTURES, overwrite, "--plot")
+    return write_figure(_triangle(result), path, result.meta(), overwrite)
+
+
+def save_mass_limits(result, path, overwrite=False):
+    """Write the picture of limits against mass."""
+    check_target(path, PICTURES, overwrite, "--plot")
+    figure = blank(6.0, 4.4)
+    mass_limits(result, figure.add_subplot())
+    return write_figure(figure, path, result.made, overwrite)
