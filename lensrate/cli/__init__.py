@@ -37,7 +37,9 @@ def cli():
     """
 
 
-for command in (sightline, skymap, campaign, events, spread, census, compare, constrain, odds, synthesize, scenario, verify):
+for command in (
+    sightline, skymap, campaign, events, spread, census, compare, constrain, odds, synthesize, scenario, verify,
+):  # fmt: skip
     cli.add_command(command)
 
 
