@@ -1,6 +1,7 @@
 """Pictures of what a sample says: marginals beside their priors, pairs, and limits against mass."""
 
 import numpy as np
+from matplotlib.ticker import LogLocator, NullFormatter, ScalarFormatter
 
 from ..io import PICTURES, check_target
 from .saving import blank, write_figure
@@ -11,6 +12,7 @@ __all__ = ["marginal", "mass_limits", "posterior", "save_mass_limits", "save_pos
 _POSTERIOR, _PRIOR, _LINE = "#0072B2", "#E69F00", "#D55E00"
 _LEVELS = (0.68, 0.95)
 _DRAWS = 40_000
+_CELLS = 30  # a side, for draws
 _LABELS = {
     "kick_scale": "factor on kick speeds", "slow_weight": "share of slow kicks",
     "neutron_stars": "neutron stars / scenario's", "black_holes": "black holes / scenario's",
@@ -20,6 +22,21 @@ _LABELS = {
 
 def _name(parameter):
     return _LABELS.get(parameter, parameter.replace("class:", "amount of ").replace("_", " "))
+
+
+def _log(axis, low, high):
+    """Plain numbers on a logarithmic axis, few enough to be read."""
+    subs = (1.0, 2.0, 5.0) if high / low < 50 else (1.0,)
+    axis.set_major_locator(LogLocator(subs=subs, numticks=12))
+    axis.set_major_formatter(_Plain())
+    axis.set_minor_formatter(NullFormatter())
+
+
+class _Plain(ScalarFormatter):
+    """0.1 rather than a power."""
+
+    def __call__(self, x, pos=None):
+        return f"{x:g}"
 
 
 def marginal(result, name, ax=None):
@@ -57,6 +74,7 @@ def marginal(result, name, ax=None):
         ax.axvline(v, color="0.4", lw=0.8, ls=dash)
     if p.prior.logarithmic:
         ax.set_xscale("log")
+        _log(ax.xaxis, shown[0], shown[-1])
     ax.set_xlim(shown[0], shown[-1])
     ax.set_ylim(0, None)
     ax.set_yticks([])
@@ -69,20 +87,25 @@ def marginal(result, name, ax=None):
 
 def _pair(result, i, j, ax, seed):
     a, b = result.parameters[i].prior, result.parameters[j].prior
-    draws = result.samples(_DRAWS, seed)
-    x, y = (np.log(draws[:, k]) if p.logarithmic else draws[:, k] for k, p in ((i, a), (j, b)))
-    n = 40 if result.draws is not None else len(result.grid[i])
-    h, ex, ey = np.histogram2d(x, y, n)
+    if result.draws is None:
+        others = tuple(k for k in range(len(result.parameters)) if k not in (i, j))
+        h = result.weight.sum(axis=others)
+        cx, cy = result.grid[i], result.grid[j]
+    else:
+        draws = result.samples(_DRAWS, seed)
+        x, y = (np.log(draws[:, k]) if p.logarithmic else draws[:, k] for k, p in ((i, a), (j, b)))
+        h, ex, ey = np.histogram2d(x, y, _CELLS)
+        cx, cy = 0.5 * (ex[1:] + ex[:-1]), 0.5 * (ey[1:] + ey[:-1])
+        cx, cy = (np.exp(c) if p.logarithmic else c for c, p in ((cx, a), (cy, b)))
     order = np.sort(h.ravel())[::-1]
     share = np.cumsum(order) / order.sum()
-    levels = sorted({float(order[np.searchsorted(share, q)]) for q in _LEVELS})
-    cx, cy = 0.5 * (ex[1:] + ex[:-1]), 0.5 * (ey[1:] + ey[:-1])
-    cx, cy = (np.exp(c) if p.logarithmic else c for c, p in ((cx, a), (cy, b)))
+    levels = sorted({float(order[min(np.searchsorted(share, q), order.size - 1)]) for q in _LEVELS})
     ax.pcolormesh(cx, cy, h.T, cmap="Blues", shading="nearest", rasterized=True)
     ax.contour(cx, cy, h.T, levels, colors=[_LINE, "black"][-len(levels) :], linewidths=1)
-    for axis, p in ((ax.set_xscale, a), (ax.set_yscale, b)):
+    for scale, axis, c, p in ((ax.set_xscale, ax.xaxis, cx, a), (ax.set_yscale, ax.yaxis, cy, b)):
         if p.logarithmic:
-            axis("log")
+            scale("log")
+            _log(axis, c[0], c[-1])
 
 
 def posterior(result, ax=None, seed=1):
@@ -127,8 +150,7 @@ def _triangle(result, seed=1):
                         ax.set_ylabel(_name(result.names[j]), fontsize=8)
                 ax.set_xlabel(_name(result.names[i]) if j == n - 1 else "", fontsize=8)
                 ax.tick_params(labelsize=6)
-    handles, labels = figure.axes[0].get_legend_handles_labels()
-    figure.legend(handles, labels, loc="upper right", fontsize=8, frameon=False)
+    figure.axes[0].legend(loc="lower left", fontsize=7, frameon=False)
     made = result.made
     words = " (invented)" if made.get("sample_invented") else ""
     title = f"{made.get('sample', '')}{words}: {result.events} events; scenario {made['scenario']} "

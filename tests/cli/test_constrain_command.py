@@ -47,7 +47,8 @@ def test_people_and_proposals_get_sentences(files):
     code, out, err = run("constrain", files / "sample.ecsv", "--campaign", files / "survey.toml", *FAST, "-p",
                          "black_holes", "--points", 9, "--fix-nuisances")  # fmt: skip
     assert code == 0, err
-    for word in ("sample.ecsv (invented)", "black_holes", "shrinkage", "log-uniform:0.05,20", "nuisances", "limit:I=20"):
+    words = ("sample.ecsv (invented)", "black_holes", "shrinkage", "log-uniform:0.05,20", "nuisances", "limit:I=20")
+    for word in words:
         assert word in out, word
     assert "held fixed" in " ".join(err.split())
     assert max(map(len, out.splitlines() + err.splitlines())) <= 100

@@ -9,12 +9,14 @@ from scipy import stats
 
 import lensrate
 from lensrate import InputError, Scenario
+from lensrate.datafiles import data_folder
 from lensrate.events import goodness
 from lensrate.events.compare import compare
 from lensrate.events.fold import LN_T, STEP, Errors, assign, fold_campaign, grouped
 from lensrate.events.observed import Sample
 from lensrate.events.shapes import Parallaxes
 from lensrate.events.versus import compare_sample
+from lensrate.surveys.campaign import Campaign
 
 UNKICKED = Scenario.read("default").replace(kicks="none")
 
@@ -180,3 +182,12 @@ def test_geocentric_events_with_a_parallax_vector_become_heliocentric(folded):
     table.remove_columns(["pi_EN", "pi_EE", "pi_EN_err", "pi_EE_err"])
     stuck = compare(Sample.from_table(table), folded, simulations=0)
     assert np.exp(stuck.x[0]) == pytest.approx(60.0) and "no parallax components" in stuck.notes[0]
+
+
+def test_the_invented_sample_lies_in_the_invented_fields():
+    sample = Sample.read(data_folder() / "samples" / "marram_2031_2033.ecsv")
+    assert sample.invented and len(sample) == 236 and not sample.notes
+    fields = Campaign.read("marram").fields
+    n = np.bincount(assign(sample.events, fields), minlength=len(fields))
+    assert n.sum() == len(sample) and n.min() > 40
+    assert sum("pi_EN" in e.solutions[0].measured for e in sample) == 42
