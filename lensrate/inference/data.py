@@ -160,11 +160,12 @@ def made(templates, field, x, sigma, weight=None, joint=None, names=(), notes=()
     weight = np.ones((x.size, R)) if weight is None else weight
     place = np.clip((x[:, None] + sigma[:, None] * _NODES - LN_T[0]) / STEP, 0, LN_T.size - 1.001)
     i = place.astype(int)
-    s = (place - i)[:, None, :]
-    rows = templates.rate[field]  # (n, R, t)
-    pick = np.arange(x.size)[:, None]
-    low, high = rows[pick, :, i].transpose(0, 2, 1), rows[pick, :, i + 1].transpose(0, 2, 1)
-    value = weight * (((1 - s) * low + s * high) @ _WEIGHTS)
+    s = place - i
+    value = np.zeros((x.size, R))
+    for q in range(_NODES.size):
+        low, high = templates.rate[field, :, i[:, q]], templates.rate[field, :, i[:, q] + 1]
+        value += _WEIGHTS[q] * (low + s[:, q, None] * (high - low))
+    value *= weight
     full = np.zeros(x.size, dtype=bool)
     for k, v in (joint or {}).items():
         value[k], full[k] = weight[k] * v, True
