@@ -63,7 +63,7 @@ class MassForecast:
     notes: tuple = ()
 
     def to_dict(self):
-        """Return plain numbers by class, each facility under its name."""
+        """Return plain numbers: class to facility to what it measures."""
         out = {}
         for lens in self.facilities[0].counts:
             out[lens] = {}
@@ -80,7 +80,16 @@ class MassForecast:
                     "hours_for_all": float(f.follow.hours[-1]),
                     "invented_facility": f.facility.invented,
                 }
-        return {"mass_error_limit": self.limit, "mock_events": self.number, "seed": self.seed, "by_class": out}
+        return out
+
+    def settings(self):
+        """Return what the numbers of `to_dict` were made with."""
+        return {
+            "mass_error_limit": self.limit,
+            "mock_events": self.number,
+            "seed": self.seed,
+            "notes": list(self.notes),
+        }
 
     def to_table(self):
         """Return a QTable, a row per facility and class."""
@@ -150,66 +159,66 @@ def mass_forecast(forecast, facilities="marram", limit=0.2, number=2000, seed=1,
     if isinstance(facilities, str):
         facilities = [Facility.read(name, facilities) for name in facility_names(facilities)]
     survey = forecast.campaign
-    events = mock_events(
-        forecast, number=number * len(forecast.fields), seed=seed, weighted=True, tilt="equal", jobs=jobs
-    )
-    c, band = events.columns, events.band
-    weight = _expected_weights(forecast, c)
-    source, lens_light = c[f"{band}_S"], c[f"{band}_L"]
-    usable = np.isfinite(source) & (weight > 0)
-    if not usable.any():
+    draws, notes = [], []
+    for f, seed_of_field in zip(forecast.fields, np.random.SeedSequence(seed).spawn(len(forecast.fields))):
+        one = replace(forecast, fields=(f,))
+        events = mock_events(one, number=number, seed=seed_of_field, weighted=True, tilt="equal", jobs=jobs)
+        if events.band != survey.photometry.band:
+            raise InputError(
+                f"photometry.band: {survey.photometry.band}, and the sources of field '{f.field.name}' are limited in "
+                f"{events.band}; make them agree"
+            )
+        weight, lost = _expected_weights(f, events.columns)
+        if lost:
+            notes.append(
+                f"masses: field {f.field.name} drew no {', '.join(forecast.classes[k] for k in lost)} to measure"
+            )
+        rows = np.flatnonzero(np.isfinite(events.columns[f"{events.band}_S"]) & (weight > 0))
+        if rows.size:
+            draws.append((f, events, rows, weight[rows]))
+    if not draws:
         raise InputError("masses: nothing is known of the sources' magnitudes; use a source rule with a limit")
-    notes = []
-    if band != survey.photometry.band:
-        raise InputError(
-            f"photometry.band: {survey.photometry.band}, and the fields' sources are limited in {band}; make them agree"
-        )
-    classes = np.array(events.classes)[c["lens"]]
-    out = []
-    for facility in facilities:
-        parts = []
-        for i, f in enumerate(forecast.fields):
-            rows = np.flatnonzero(usable & (c["field"] == i))
-            light_curve = LightCurve.of(survey.photometry, survey.calendar, f.field.cadence_d)
-            place = icrs_from_galactic(f.field.l_deg * u.deg, f.field.b_deg * u.deg)
-            image_source, image_lens = image_magnitudes(f.sightline, facility.band, events, rows)
-            data = {
-                "t_0": c["t_0"][rows], "u_0": c["u_0"][rows], "t_E": c["t_E_geo"][rows],
-                "pi_EN": c["pi_EN_geo"][rows], "pi_EE": c["pi_EE_geo"][rows], "theta_E": c["theta_E"][rows],
-                "source_mag": source[rows], "blend_mag": lens_light[rows], "image_source_mag": image_source,
-                "image_blend_mag": image_lens,
-            }  # fmt: skip
-            errors = mass_errors(data, light_curve, facility, place, frame="geocentric", jobs=jobs)
-            parts.append((rows, errors))
-        out.append(_yield(facility, parts, classes, weight, limit, forecast.classes))
-    masses = MassForecast(float(limit), tuple(out), len(events), int(seed), tuple(notes))
-    return replace(forecast, masses=masses, seed=int(seed))
+    out = [_yield(facility, [_measured(facility, survey, *d, jobs) for d in draws], draws, limit, forecast.classes)
+           for facility in facilities]  # fmt: skip
+    masses = MassForecast(float(limit), tuple(out), number * len(forecast.fields), int(seed), tuple(notes))
+    return replace(forecast, masses=masses, seed=int(seed), warnings=(*forecast.warnings, *notes))
 
 
-def _expected_weights(forecast, c):
-    """Expected found events that each mock event stands for: those of a field and class sum to the forecast's."""
+def _measured(facility, survey, f, events, rows, _, jobs):
+    """Errors of one field's events with one facility."""
+    c, band = events.columns, events.band
+    light_curve = LightCurve.of(survey.photometry, survey.calendar, f.field.cadence_d)
+    place = icrs_from_galactic(f.field.l_deg * u.deg, f.field.b_deg * u.deg)
+    source, lens = image_magnitudes(f.sightline, facility.band, events, rows)
+    columns = {"t_0": "t_0", "u_0": "u_0", "t_E": "t_E_geo", "pi_EN": "pi_EN_geo", "pi_EE": "pi_EE_geo",
+               "theta_E": "theta_E", "source_mag": f"{band}_S", "blend_mag": f"{band}_L"}  # fmt: skip
+    data = {key: c[name][rows] for key, name in columns.items()}
+    data |= {"image_source_mag": source, "image_blend_mag": lens}
+    return mass_errors(data, light_curve, facility, place, frame="geocentric", jobs=jobs)
+
+
+def _expected_weights(f, c):
+    """Expected found events that each mock event of a field stands for, and classes of which none was drawn."""
     weight = c["weight"] * c["efficiency"]
-    n = len(forecast.classes)
-    group = c["field"] * n + c["lens"]
-    drawn = np.bincount(group, weight, minlength=n * len(forecast.fields))
-    wanted = np.concatenate([f.expected.sum(axis=1) for f in forecast.fields])
-    return weight * np.divide(wanted, drawn, out=np.zeros_like(drawn), where=drawn > 0)[group]
+    wanted = f.expected.sum(axis=1)
+    drawn = np.bincount(c["lens"], weight, minlength=wanted.size)
+    factor = np.divide(wanted, drawn, out=np.zeros_like(drawn), where=drawn > 0)
+    return weight * factor[c["lens"]], np.flatnonzero((drawn == 0) & (wanted > 0)).tolist()
 
 
-def _yield(facility, parts, classes, weight, limit, order):
+def _yield(facility, errors, draws, limit, order):
     """One facility's counts over all fields."""
-    rows = np.concatenate([r for r, _ in parts])
-    first = parts[0][1]
-    names = [n for n in first.__dataclass_fields__ if n != "meta"]
-    joined = replace(first, **{n: np.concatenate([getattr(e, n) for _, e in parts]) for n in names})
-    mine, w = classes[rows], weight[rows]
+    names = [n for n in errors[0].__dataclass_fields__ if n != "meta"]
+    joined = replace(errors[0], **{n: np.concatenate([getattr(e, n) for e in errors]) for n in names})
+    mine = np.concatenate([np.array(events.classes)[events.columns["lens"][rows]] for _, events, rows, _ in draws])
+    w = np.concatenate([weight for *_, weight in draws])
     medians = {}
     for name in (n for n in order if n in mine):
         here = mine == name
         rank = np.argsort(joined.sigma_pi_E_photometry[here])
         cum = np.cumsum(w[here][rank])
-        value = joined.sigma_pi_E_photometry[here][rank][np.searchsorted(cum, 0.5 * cum[-1])]
-        medians[name] = float(value)
+        at = min(np.searchsorted(cum, 0.5 * cum[-1]), rank.size - 1)
+        medians[name] = float(joined.sigma_pi_E_photometry[here][rank][at])
     counts = measured(joined, mine, w, limit)
     counts = {name: counts[name] for name in [*order, "all"] if name in counts}
     return FacilityYield(facility, counts, measured_against_hours(joined, mine, w, limit), medians)

@@ -225,6 +225,8 @@ def _mixed(main, wrong, outlier):
     if not wrong.sum() > 0:
         return main / main.sum(), 0.0
     total = (1 - outlier) * main + outlier * wrong
+    if not total.sum() > 0:
+        raise ConvergenceError("odds: no lens of this model explains the data; allow for a wrong fit with --outlier")
     return total / total.sum(), min(float(outlier * wrong.sum() / total.sum()), 1.0)
 
 

@@ -10,7 +10,7 @@ from ..errors import InputError
 __all__ = ["Calendar", "Season", "mjd_of"]
 
 _MJD_OF_ORDINAL = 678576  # MJD 0 is 1858-11-17
-_EARLIEST, _LATEST = date(1980, 1, 1), date(2150, 1, 1)
+_EARLIEST, _LATEST = date(1980, 1, 1), date(2099, 12, 30)
 
 
 def mjd_of(day, where="date"):
@@ -30,7 +30,7 @@ def mjd_of(day, where="date"):
     Raises
     ------
     InputError
-        Not a date, or outside 1980-2150.
+        Not a date, or outside 1980-2099, as far as the Earth's place is known.
     """
     fraction = 0.0
     if isinstance(day, datetime):

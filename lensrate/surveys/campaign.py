@@ -11,7 +11,7 @@ import numpy as np
 from ..datafiles import data_folder, find, names, parse_toml
 from ..errors import InputError, one_of
 from ..remnants.tables import check_keys
-from ..sources.rules import parse_rule
+from ..sources.rules import LimitRule, PeakRule, parse_rule
 from .calendar import Calendar, Season
 from .efficiency import Efficiency, locate
 from .field import Field
@@ -138,7 +138,23 @@ class Campaign:
                 f"campaign: u_0_limit is {self.u_0_limit:g} and the efficiency is one of events with u_0 below "
                 f"{eff.u_0_limit:g}; set u_0_limit = {eff.u_0_limit:g}"
             )
+        if eff.second == "u_0" and self.u_0_limit > min(eff.u_0_limit, eff.grid[-1]) + 1e-9:
+            raise InputError(
+                f"campaign: u_0_limit is {self.u_0_limit:g} and the efficiency reaches to u_0 = "
+                f"{min(eff.u_0_limit, eff.grid[-1]):g}; lower the limit or extend the curve"
+            )
         for f in self.fields:
+            rule = parse_rule(f.sources)
+            if eff.second == "I_S" and not (isinstance(rule, LimitRule) and rule.band == "I"):
+                raise InputError(
+                    f"field '{f.name}': the efficiency depends on I_S, so its sources need a limit in I at baseline, "
+                    f"not '{f.sources}'"
+                )
+            if eff.second == "u_0" and isinstance(rule, PeakRule):
+                raise InputError(
+                    f"field '{f.name}': a limit at peak goes with the impact parameter, and so does the efficiency; "
+                    "average the curve over u_0, or set the limit at baseline"
+                )
             if eff.per == "catalogued_object" and f.monitored_stars is None and f.star_density is None:
                 raise InputError(
                     f"field '{f.name}': the efficiency is one per catalogued object, so the number of catalogued "
@@ -173,7 +189,8 @@ class Campaign:
                 if np.arccos(np.clip(cosine, -1, 1)) > np.arctan(reach[i]) + np.arctan(reach[j]):
                     continue
                 share = overlap_share(one, self.fields[j])
-                if share > _SHARED:
+                # a small field inside a wide one is a small share of the wide one only
+                if max(share, overlap_share(self.fields[j], one)) > _SHARED:
                     out.append((i, j, share))
         return out
 

@@ -5,39 +5,11 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from .campaign import Campaign
-from .shared import integral_key
+from .reweighted import reweighed
 from .spread import Outcome, spread
-from .yields import assembled, campaign
+from .yields import campaign
 
-__all__ = ["CampaignForecasts", "campaign_spread", "reweighed", "with_range"]
-
-
-def reweighed(forecast, scenario):
-    """Return a campaign's forecast under a scenario that needs no new integrals, None where it does.
-
-    Parameters
-    ----------
-    forecast : CampaignForecast
-    scenario : Scenario
-
-    Returns
-    -------
-    CampaignForecast or None
-        The source stars stay those of the old masses.
-    """
-    old = forecast.scenario
-    # an unkicked forecast holds no fields to weigh
-    if integral_key(scenario) != integral_key(old) or (old.unkicked and not scenario.unkicked):
-        return None
-    names = ("kicks", "bh_kicks", "ifmr", "imf", "lens_class")
-    changes = {k: getattr(scenario, k) for k in names if getattr(scenario, k) != getattr(old, k)}
-    if not changes:
-        return forecast
-    fields = tuple(
-        assembled(forecast.campaign, f.field, f.sightline.reforecast(**changes), f.sources, f.counted, f.rate_factor)
-        for f in forecast.fields
-    )
-    return replace(forecast, scenario=scenario, fields=fields, masses=None)
+__all__ = ["CampaignForecasts", "campaign_spread", "with_range"]
 
 
 def with_range(forecast, family, exact=False, jobs=1, executor=None):

@@ -73,7 +73,7 @@ def detected_events(forecast, n=20_000, seed=1, jobs=1):
     def one(i):
         f = forecast.fields[i]
         draws = Sampler.of(f.sightline).draw(n, children[i], tilt="equal")
-        curve = forecast.campaign.efficiency
+        curve = forecast.campaign.efficiency.up_to(forecast.campaign.u_0_limit)
         if curve.second == "I_S":
             from .yields import magnitude_share
 

@@ -20,6 +20,7 @@ PER = ("source", "catalogued_object")
 INCLUDES = ("seasons", "gaps", "blending", "parallax")
 SECOND = ("I_S", "u_0")  # what an efficiency may depend on beside t_E
 _STATEMENTS = ("per", "includes", "u_0_limit", "source_limit")
+_IMPACTS = 400  # points of an average over u_0
 _CELLS = 4  # of a quadrature over t_E, per point of the distribution
 _FAR = 1e6  # d, longer than any timescale of the forecasts
 
@@ -202,9 +203,7 @@ class Efficiency:
         """
         if self.second != "I_S":
             return self
-        values = self.weights(share) @ self.values
-        stated = {key: getattr(self, key) for key in ("binned", "per", "includes", "u_0_limit", "source_limit", "name")}
-        return Efficiency(self.t_E, values, **stated)
+        return self._reduced(self.weights(share), self.u_0_limit)
 
     def mean(self, t_E, pdf):
         """Return the mean efficiency of a distribution of timescales, and the share of it that the curve reaches.
@@ -231,6 +230,28 @@ class Efficiency:
         share = np.diff(shape.below(cells)) / total
         middle = np.sqrt(cells[1:] * cells[:-1])
         return float(share @ self.of(middle)), float(share @ self.inside(middle))
+
+    def up_to(self, u_0_limit):
+        """Return the curve against t_E alone, averaged over impact parameters from 0 to a limit.
+
+        Parameters
+        ----------
+        u_0_limit : float
+            At most the curve's own.
+
+        Returns
+        -------
+        Efficiency
+        """
+        if self.second != "u_0":
+            return self
+        u = (np.arange(_IMPACTS) + 0.5) / _IMPACTS * u_0_limit
+        weights = np.array([np.interp(u, self.grid, row).mean() for row in np.eye(self.grid.size)])
+        return self._reduced(weights, u_0_limit)
+
+    def _reduced(self, weights, u_0_limit):
+        stated = {key: getattr(self, key) for key in ("binned", "per", "includes", "source_limit", "name")}
+        return Efficiency(self.t_E, weights @ self.values, u_0_limit=u_0_limit, **stated)
 
     def inside(self, t_E):
         """Return whether the curve says anything of these timescales [d]."""

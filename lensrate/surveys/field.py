@@ -98,6 +98,8 @@ class Field:
         if out.monitored_stars is not None and out.star_density is not None:
             raise InputError(f"{where}: monitored_stars and star_density_per_arcmin2 are both given; keep one")
         rule = parse_rule(sources)
+        if mapped and not hasattr(rule, "band"):
+            raise InputError(f"{where}: sky_map_of_extinction needs sources with a magnitude limit, not '{sources}'")
         if hasattr(rule, "band") and not out.extinction and not mapped:
             edge = np.append(out.outline()[1], out.b_deg)
             lowest = 0.0 if edge.min() < 0 < edge.max() else float(np.abs(edge).min())

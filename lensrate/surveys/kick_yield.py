@@ -11,6 +11,7 @@ from ..galaxy.density import stellar_mass
 from ..lensing import distributions
 from ..remnants.classes import MassSpectrum
 from ..remnants.kicks import parse_kick
+from ..units import DAYS_PER_YEAR
 
 __all__ = ["KickYield", "kick_yield"]
 
@@ -81,7 +82,7 @@ class KickYield:
         table[
             "events_per_born"
         ].info.description = f"expected events per {self.lens.replace('_', ' ')} born with such a kick"
-        table.meta.update({**self.made, "lens": self.lens, "born": self.born, "events": self.named()})
+        table.meta.update({**self.made, "lens": self.lens, "born": self.born, "events": self.named(), "law": self.law})
         return table
 
     def to_dict(self):
@@ -92,6 +93,7 @@ class KickYield:
             "events_per_born": list(map(float, self.per_born)),
             "sampling_error": list(map(float, self.sampling)),
             "born": self.born,
+            "law": self.law,
             "events_by_law": self.named(),
             **self.made,
         }
@@ -137,7 +139,7 @@ def kick_yield(forecast, lens="neutron_star"):
     R0 = first.galaxy.R0
     number = {i: first.populations[i].spectra[lens].moment(0) for i in members}
     born = sum(number[i] * stellar_mass(first.galaxy.components[i].density, R0) for i in members)
-    per_born, variance = np.zeros(bins), np.zeros(bins)
+    per_born, error = np.zeros(bins), np.zeros(bins)
     for f in forecast.fields:
         integrals, model = f.sightline._integrals, f.sightline._model
         spectra = [[None] * len(model.component_of) for _ in range(bins)]
@@ -150,15 +152,16 @@ def kick_yield(forecast, lens="neutron_star"):
                 spectra[k][model.n_stellar + hosts.index(i) + k if i in hosts else i] = spectrum
         masses = distributions.MassGrid.deposit(integrals.grid.h, spectra)
         t, pdf, _ = distributions.timescales(integrals.grid, integrals.unit, masses, False)
-        curve = forecast.campaign.efficiency
+        curve = forecast.campaign.efficiency.up_to(forecast.campaign.u_0_limit)
         if curve.second == "I_S":
             from .yields import magnitude_share
 
             curve = curve.averaged(magnitude_share(integrals.ready))
         mean = np.array([curve.mean(t, part)[0] for part in pdf])
-        years = forecast.campaign.calendar.exposure(curve.includes).sum() / 365.25
+        years = forecast.campaign.calendar.exposure(curve.includes).sum() / DAYS_PER_YEAR
         exposure = f.sources * f.rate_factor * years * forecast.campaign.u_0_limit
         per_born += exposure * mean * np.sum(masses.root * integrals.gamma, axis=1)
-        variance += (exposure * mean) ** 2 * np.sum((masses.root * integrals.error) ** 2, axis=1)
+        # the fields share the tracers, so their errors add up as they are
+        error += exposure * mean * np.sqrt(np.sum((masses.root * integrals.error) ** 2, axis=1))
     law = forecast.scenario.kicks if lens == "neutron_star" else forecast.scenario.bh_kicks
-    return KickYield(lens, np.asarray(edges), per_born, np.sqrt(variance), float(born), law, forecast.meta())
+    return KickYield(lens, np.asarray(edges), per_born, error, float(born), law, forecast.meta())

@@ -3,9 +3,43 @@
 from dataclasses import replace
 
 from .shared import integral_key
-from .yields import _warnings, assembled, campaign
+from .yields import assembled, campaign, campaign_warnings
 
-__all__ = ["reweighted"]
+__all__ = ["reweighed", "reweighted"]
+
+
+def reweighed(forecast, scenario):
+    """Return a campaign's forecast under a scenario that needs no new integrals, None where it does.
+
+    Parameters
+    ----------
+    forecast : CampaignForecast
+    scenario : Scenario
+
+    Returns
+    -------
+    CampaignForecast or None
+        The source stars stay those of the old masses.
+    """
+    old = forecast.scenario
+    # an unkicked forecast holds no fields to weigh
+    unkicked = forecast.fields[0].sightline._model.kicked is None
+    if integral_key(scenario) != integral_key(old) or (unkicked and not scenario.unkicked and scenario.fields):
+        return None
+    keys = ("kicks", "bh_kicks", "ifmr", "imf", "lens_class")
+    changes = {k: getattr(scenario, k) for k in keys if getattr(scenario, k) != getattr(old, k)}
+    if not changes:
+        return forecast
+    rows = [
+        assembled(forecast.campaign, f.field, f.sightline.reforecast(**changes), f.sources, f.counted, f.rate_factor)
+        for f in forecast.fields
+    ]
+    classes = rows[0].sightline.classes
+    return replace(
+        forecast, scenario=scenario, classes=classes, fields=tuple(rows), family="", ranges=None, range_cases=(),
+        masses=None, warnings=campaign_warnings(forecast.campaign, rows, classes),
+        references=tuple(dict.fromkeys(r for f in rows for r in f.sightline.references)),
+    )  # fmt: skip
 
 
 def reweighted(forecast, scenario, jobs=1, progress=None):
@@ -28,20 +62,5 @@ def reweighted(forecast, scenario, jobs=1, progress=None):
     InputError, ConvergenceError
         As `yields.campaign`.
     """
-    old = forecast.scenario
-    # an unkicked forecast holds no fields to weigh
-    unkicked = forecast.fields[0].sightline._model.kicked is None
-    if integral_key(scenario) != integral_key(old) or (unkicked and not scenario.unkicked and scenario.fields):
-        return campaign(forecast.campaign, scenario, jobs=jobs, progress=progress)
-    keys = ("kicks", "bh_kicks", "ifmr", "imf", "lens_class")
-    changes = {k: getattr(scenario, k) for k in keys if getattr(scenario, k) != getattr(old, k)}
-    rows = [
-        assembled(forecast.campaign, f.field, f.sightline.reforecast(**changes) if changes else f.sightline,
-                   f.sources, f.counted, f.rate_factor)
-        for f in forecast.fields
-    ]  # fmt: skip
-    return replace(
-        forecast, scenario=scenario, classes=rows[0].sightline.classes, fields=tuple(rows), family="", ranges=None,
-        range_cases=(), masses=None, warnings=_warnings(forecast.campaign, rows, rows[0].sightline.classes),
-        references=tuple(dict.fromkeys(r for f in rows for r in f.sightline.references)),
-    )  # fmt: skip
+    made = reweighed(forecast, scenario)
+    return made if made is not None else campaign(forecast.campaign, scenario, jobs=jobs, progress=progress)

@@ -156,7 +156,7 @@ class Polygon:
 
 @dataclass(frozen=True)
 class Patch:
-    """A field of which only the area is known: its centre stands for all of it."""
+    """A field of which only the area is known: its centre stands for all of it, a circle for where it overlaps."""
 
     area: float  # deg2
 
@@ -164,13 +164,16 @@ class Patch:
         """Return the solid angle [deg2]."""
         return self.area
 
+    def _circle(self):
+        return Circle(math.degrees(math.acos(1 - self.area * _SQUARE_DEGREE / (2 * math.pi))))
+
     def inside(self, x, y):
-        """Nothing is known to be inside."""
-        return np.zeros(np.broadcast(x, y).shape, dtype=bool)
+        """Whether points of the tangent plane are inside the circle of the same area."""
+        return self._circle().inside(x, y)
 
     def outline(self):
-        """The circle of the same area, for drawing only."""
-        return Circle(math.sqrt(self.area / math.pi)).outline()
+        """The circle of the same area."""
+        return self._circle().outline()
 
     def nodes(self):
         """Return the centre."""
@@ -315,7 +318,7 @@ def overlap_share(one, other, n=4000):
     -------
     float
     """
-    x, y, w = even_points(one.shape, n) if not isinstance(one.shape, Patch) else one.shape.nodes()
+    x, y, w = even_points(one.shape, n)
     l, b = from_plane(*np.radians([one.l_deg, one.b_deg]), x, y)
     x, y, front = to_plane(*np.radians([other.l_deg, other.b_deg]), l, b)
     return float(np.sum(w * (front & other.shape.inside(x, y))))

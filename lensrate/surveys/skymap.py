@@ -148,8 +148,8 @@ def _key(scenario, model, directions, efficiency, precise):
     """Checksum of what decides every number of a map."""
     curve = None
     if efficiency is not None:
-        t = np.geomspace(1e-3, 1e5, 400)
-        curve = [float(x) for x in efficiency.of(t)]
+        curve = [x.tolist() for x in (efficiency.t_E, efficiency.values, efficiency.grid)]
+        curve += [efficiency.binned, efficiency.second, list(efficiency.includes), efficiency.u_0_limit]
     made = {
         "version": __version__,
         "kernels": KEY,

@@ -13,12 +13,20 @@ from ..lensing.sightline import sightline
 from ..parallel import run_map
 from ..scenario import Scenario, resolve
 from ..scenario.numerics import Numerics
-from ..sources.rules import LimitRule, PeakRule, parse_rule
+from ..sources.rules import LimitRule, parse_rule
 from ..units import DAYS_PER_YEAR
 from .campaign import Campaign
 from .dust_map import DustMap
 
-__all__ = ["CampaignForecast", "FieldForecast", "assembled", "campaign", "field_scenario", "magnitude_share"]
+__all__ = [
+    "CampaignForecast",
+    "FieldForecast",
+    "assembled",
+    "campaign",
+    "campaign_warnings",
+    "field_scenario",
+    "magnitude_share",
+]
 
 _OUTSIDE = 0.01  # share of a class's events beyond the efficiency curve that is worth a word
 _ONE_SIGMA = 0.158655  # tail below one standard deviation of a normal distribution
@@ -191,6 +199,7 @@ class CampaignForecast:
             "expected": expected,
             "scaled_fields": self.scaled_fields(),
             "mass_measured": {} if self.masses is None else self.masses.to_dict(),
+            "mass_settings": None if self.masses is None else self.masses.settings(),
             "scenario": self.scenario.name,
             "scenario_hash": self.scenario.hash,
             "campaign_hash": self.campaign.hash,
@@ -299,7 +308,7 @@ def campaign(survey, scenario=None, *, family=None, exact=False, jobs=1, executo
     rows = [*alone, *run_map(one, range(len(alone), len(survey.fields)), jobs, executor, progress)]
     classes = rows[0].sightline.classes
     out = CampaignForecast(
-        survey, base, classes, tuple(rows), warnings=_warnings(survey, rows, classes),
+        survey, base, classes, tuple(rows), warnings=campaign_warnings(survey, rows, classes),
         references=tuple(dict.fromkeys(r for f in rows for r in f.sightline.references)),
     )  # fmt: skip
     if family is None:
@@ -329,7 +338,7 @@ def _field(survey, base, i, dust):
 
 def assembled(survey, f, centre, number, counted, factor):
     """Return the FieldForecast of a field from its centre's Sightline, its sources and the factor on the rate."""
-    curve = survey.efficiency
+    curve = survey.efficiency.up_to(survey.u_0_limit)
     if curve.second == "I_S":
         curve = curve.averaged(magnitude_share(centre._integrals.ready))
     mean, inside = np.array([curve.mean(centre.t_E, pdf) for pdf in centre.rate_per_ln_t_E]).T
@@ -396,8 +405,8 @@ def magnitude_share(ready):
         The source rule says nothing of magnitudes.
     """
     rule = ready.sources.rule
-    if not isinstance(rule, (LimitRule, PeakRule)):
-        raise InputError(f"efficiency: one that depends on I_S needs sources with a magnitude limit, not '{rule.text}'")
+    if not isinstance(rule, LimitRule) or rule.band != "I":
+        raise InputError(f"efficiency: one that depends on I_S needs sources with a limit like I=21, not '{rule.text}'")
     D, weight = ready.D_S, ready.src[0]
     whole = ready.sources.per_msun(D)
 
@@ -412,7 +421,8 @@ def magnitude_share(ready):
     return share
 
 
-def _warnings(survey, rows, classes):
+def campaign_warnings(survey, rows, classes):
+    """Return what to mind: the fields' warnings gathered, and events that the efficiency curve does not reach."""
     kinds = {}
     for f in rows:
         for w in f.sightline.warnings:

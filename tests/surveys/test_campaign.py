@@ -140,6 +140,34 @@ def test_overlapping_fields_are_counted_once_only_when_told():
     assert Campaign.from_dict({**table, "overlaps": "separate"}).kept_share(1) == 1.0
 
 
+def test_a_small_field_inside_a_wide_one_overlaps_and_so_do_equal_patches():
+    for other in ({"radius_deg": 0.2}, {"area_deg2": 0.2}):
+        wide = plain(area_deg2=None, radius_deg=3.0, b=-6.0, monitored_stars=None)
+        small = {**plain(monitored_stars=None, b=-6.0, **{"area_deg2": None, **other})["field"][0], "name": "B"}
+        with pytest.raises(InputError, match="overlaps"):
+            Campaign.from_dict({**wide, "field": [*wide["field"], small]})
+    twice = plain()
+    with pytest.raises(InputError, match="overlaps"):
+        Campaign.from_dict({**twice, "field": [*twice["field"], {**twice["field"][0], "name": "B"}]})
+
+
+def test_an_efficiency_against_u_0_is_averaged_to_the_campaigns_limit(tmp_path):
+    x = np.linspace(0, 1, 5)
+    t, x = (g.ravel() for g in np.meshgrid([1e-5, 1e6], x))
+    curve = Table({"t_E": t, "u_0": x, "efficiency": 1 - x})
+    curve.meta = {"per": "source", "includes": []}
+    curve.write(tmp_path / "u.ecsv", format="ascii.ecsv")
+    for limit, mean in ((1.0, 0.5), (0.4, 0.8)):
+        table = {**plain(), "u_0_limit": limit, "efficiency": {"file": "u.ecsv"}}
+        made = campaign(Campaign.from_dict(table, tmp_path / "c.toml"), UNKICKED).fields[0]
+        np.testing.assert_allclose(made.efficiency[made.efficiency > 0], mean, rtol=1e-4)
+    for change, words in (({"u_0_limit": 2.0}, "reaches to"), ({"limit_on": "peak"}, "average the curve")):
+        table = {**plain(**{k: v for k, v in change.items() if k == "limit_on"}), "efficiency": {"file": "u.ecsv"}}
+        table |= {k: v for k, v in change.items() if k == "u_0_limit"}
+        with pytest.raises(InputError, match=words):
+            Campaign.from_dict(table, tmp_path / "c.toml")
+
+
 def test_scaled_numbers_are_shares_of_the_observed(simple):
     made = campaign(Campaign.from_dict(plain(observed_events=50)), UNKICKED)
     share = made.by_class() / made.by_class()[-1]

@@ -63,7 +63,9 @@ def test_overlap_of_two_circles_is_their_lens():
     d = 0.5 * np.cos(np.radians(3.0)) / 0.5 / 2
     assert share == pytest.approx((2 * np.arccos(d) - 2 * d * np.sqrt(1 - d * d)) / np.pi, abs=0.01)
     assert overlap_share(place(1.0, -3.0, Circle(0.5)), place(3.0, -3.0, Circle(0.5))) == 0.0
-    assert overlap_share(place(1.0, -3.0, Circle(0.5)), place(1.0, -3.0, Patch(1.0))) == 0.0
+    # a field of which only the area is known counts as a circle
+    share = overlap_share(place(1.0, -3.0, Circle(0.5)), place(1.0, -3.0, Patch(0.25 * Circle(0.5).area_deg2())))
+    assert share == pytest.approx(0.25, abs=0.01)
 
 
 @pytest.mark.parametrize(
