@@ -162,7 +162,9 @@ def write_table(table, path, overwrite=False, payload=None):
                 _write_votable(out, json.dumps(meta, ensure_ascii=True), temporary)
                 return path
             else:
-                out.meta.update(meta)
+                # the header loses line breaks: what has some stands in the JSON string alone
+                out.meta.update({k: v for k, v in meta.items() if "\\n" not in json.dumps(v)})
+                out.meta["MADE"] = json.dumps(meta, ensure_ascii=True)
             _write_astropy(out, temporary, ending)
     return path
 

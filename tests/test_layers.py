@@ -12,6 +12,7 @@ LAYERS = [
     {"kernels"},
     {"datafiles", "parallel"},
     {"params", "io"},
+    {"provenance"},
     {"galaxy"},
     {"remnants"},
     {"sources"},

@@ -79,8 +79,8 @@ def synthesize(name, save, tracers, bundles, iterations, seed, jobs, checkpoint,
         kept = f"finished pieces are kept in '{safe(folder)}', the same command goes on from there"
         click.echo(wrap(f"lensrate: interrupted; {kept}"), err=True)
         return 130
-    made = {**field.provenance, "scenario": scenario.name, "scenario_hash": scenario.hash}
-    replace(field, provenance={**made, "scenario_toml": scenario.to_toml()}).write(target, overwrite)
+    stated = {"scenario": scenario.name, "scenario_hash": scenario.hash, "scenario_text": scenario.to_toml()}
+    replace(field, provenance={**field.provenance, **stated}).write(target, overwrite)
     forget(folder, field)
     click.echo(report(target, field, scenario, size(target.stat().st_size)))
     return 0

@@ -192,9 +192,10 @@ class MockEvents:
         """
         described = {key.format(band=self.band): row for key, row in COLUMNS.items()}
         meta = self.meta()
-        keep = ("scenario", "scenario_hash", "seed", "number", "weighted", "weight", "frame", "t_0", "t_0par")
+        keep = ("seed", "number", "weighted", "weight", "frame", "t_0", "t_0par")
         each = dict(zip(self.classes, self.by_class.tolist()))
         return {
+            **self.forecast.scenario.made(),
             **{key: meta[key] for key in keep},
             "header": self.header(),
             "lenses": {name: {"events": int(n), "weight": w, "detected": d} for name, (n, w, d) in each.items()},

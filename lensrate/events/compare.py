@@ -209,7 +209,7 @@ class Comparison:
             "optical_depth": plain(self.optical_depth), "rate_per_star_per_yr": plain(self.rate),
             "magnitudes": self.magnitudes and {k: list(map(float, v)) for k, v in self.magnitudes.items()},
             "fitted": self.meta()["fitted"], "ln_likelihood": self.ln_likelihood, "seed": self.seed,
-            "scenario": self.folded.scenario.name, "scenario_hash": self.folded.scenario.hash,
+            **self.folded.scenario.made(),
             "notes": list(self.notes), "warnings": list(self.folded.warnings),
             "references": list(self.folded.references), "version": self.version,
         }  # fmt: skip

@@ -44,12 +44,13 @@ class Versus:
         for key in self.comparisons[0].tests:
             table[f"p_{key}"] = [c.tests[key].p for c in self.comparisons]
         table.meta.update(self.comparisons[0].meta())
+        table.meta["scenarios"] = [c.folded.scenario.made() for c in self.comparisons]
         return table
 
     def to_dict(self):
         """Return plain numbers: the first scenario's comparison, and all of them side by side."""
         rows = [
-            {"scenario": c.folded.scenario.name, "scenario_hash": c.folded.scenario.hash,
+            {**c.folded.scenario.made(),
              "kicks": c.folded.scenario.kicks, "bh_kicks": c.folded.scenario.bh_kicks,
              "expected": float(c.predicted.sum()), "tests": {k: t._asdict() for k, t in c.tests.items()},
              "tail": c.tail._asdict(), "delta_ln_likelihood": d}

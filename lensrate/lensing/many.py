@@ -192,9 +192,7 @@ def gather(results, scenario, carried=None):
         {
             **meta,
             "header": f"sources {results[0].sources['rule']} ({bands}); {limit}",
-            "scenario": scenario.name,
-            "scenario_hash": scenario.hash,
-            "scenario_text": scenario.to_toml(),
+            **scenario.made(),
             "warnings": _together(results),
         }
     )

@@ -1,10 +1,13 @@
 """Writing a picture whole, with how it was made in the file's metadata."""
 
 import json
+import warnings
 
 import matplotlib
 from matplotlib.backends.backend_agg import FigureCanvasAgg
 from matplotlib.figure import Figure
+from matplotlib.mathtext import MathTextParser
+from matplotlib.text import Text
 
 from ..io import PICTURES, check_target, whole_file
 
@@ -44,6 +47,26 @@ def write_figure(figure, path, meta, overwrite=False):
     """
     path = check_target(path, PICTURES, overwrite, "--plot")
     made = json.dumps(meta, ensure_ascii=True, default=str)
-    with whole_file(path) as temporary, matplotlib.rc_context({"svg.hashsalt": "lensrate", "pdf.fonttype": 42}):
+    _tame(figure)
+    settings = {"svg.hashsalt": "lensrate", "pdf.fonttype": 42}
+    with warnings.catch_warnings(), whole_file(path) as temporary, matplotlib.rc_context(settings):
+        # names in any alphabet: what the font lacks is drawn as a box
+        warnings.filterwarnings("ignore", message="Glyph .* missing from")
         figure.savefig(temporary, dpi=200, metadata={_KEYS[path.suffix.lower()]: made})
     return path
+
+
+def _tame(figure):
+    """Draw names from users' files as they are: control characters written out, no formula that is none."""
+    parser = MathTextParser("path")
+    for text in figure.findobj(Text):
+        said = text.get_text()
+        plain = "".join(c if c.isprintable() or c == "\n" else f"\\x{ord(c):02x}" for c in said)
+        if plain != said:
+            text.set_text(plain)
+        try:
+            for line in plain.split("\n"):
+                if line.count("$") > 1:
+                    parser.parse(line)
+        except ValueError:
+            text.set_parse_math(False)

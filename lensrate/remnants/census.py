@@ -94,8 +94,9 @@ class Census:
         """Return how it was made, as plain values."""
         scenario, kicked = self.model.scenario, self.model.kicked
         return {
-            "scenario": scenario.name,
-            "scenario_hash": scenario.hash,
+            "program": "lensrate",
+            **scenario.made(),
+            "seed": None,
             "kicks": scenario.kicks,
             "bh_kicks": scenario.bh_kicks,
             "fields": None if kicked is None else scenario.fields,

@@ -3,6 +3,7 @@
 import hashlib
 import json
 import math
+import os
 from dataclasses import asdict, dataclass, field, replace
 from dataclasses import fields as declared
 from functools import cached_property
@@ -168,6 +169,9 @@ class Scenario:
             if isinstance(rest.get(key), str) and Path(rest[key]).suffix:
                 # beside the file that names it, not beside wherever the program was started
                 rest[key] = str(Path(where).parent / rest[key])
+        for key in ("kicks", "bh_kicks"):
+            if isinstance(rest.get(key), str) and rest[key].endswith(".toml"):
+                rest[key] = str(Path(where).parent / rest[key])
         if "base" not in table:
             return cls(**rest)
         rest.setdefault("title", "")
@@ -270,6 +274,9 @@ class Scenario:
                 law = parse_kick(full[key])
                 full[key] = [law.kind, law.values, law.weights]
         full["sources"] = parse_rule(self.sources).text
+        for key in _FILES:
+            if Path(full[key]).suffix:
+                full[key] = "file"  # where a user's file lies changes nothing; what is in it follows below
         used = {self.imf or row.get("imf", "kroupa2001") for row in self._galaxy_table["component"]}
         full["sets"] = {
             "galaxy": self._galaxy_table,
@@ -289,13 +296,35 @@ class Scenario:
         return hashlib.sha256(text.encode()).hexdigest()[:12]
 
     def to_toml(self):
-        """Return the scenario as TOML that `read` takes back.
+        """Return the scenario as TOML that `read` takes back, from wherever it is then kept.
 
         Returns
         -------
         str
         """
-        return _toml(self.to_dict())
+        table = self.to_dict()
+        for key in _FILES:
+            if Path(table[key]).suffix:
+                table[key] = os.path.abspath(table[key])
+        for key in ("kicks", "bh_kicks"):
+            if table[key].endswith(".toml"):
+                table[key] = os.path.abspath(table[key])
+        return _toml(table)
+
+    def made(self):
+        """Return what every output states: name, hash and text, and the checksum of the fields it uses.
+
+        Returns
+        -------
+        dict
+        """
+        kept = field_checksum(self.fields) if self.fields and not self.unkicked else None
+        return {
+            "scenario": self.name,
+            "scenario_hash": self.hash,
+            "scenario_text": self.to_toml(),
+            "fields_sha256": kept,
+        }
 
     def __repr__(self):
         chosen = f"galaxy='{self.galaxy}', sources='{self.sources}', kicks='{self.kicks}'"
@@ -349,7 +378,7 @@ def _key(key):
     return (
         key
         if key.replace("_", "").replace("-", "").isalnum() and key.isascii()
-        else json.dumps(key, ensure_ascii=False)
+        else _text(key)
     )
 
 
@@ -362,4 +391,10 @@ def _value(value):
         return "[" + ", ".join(_value(v) for v in value) + "]"
     if isinstance(value, (int, float)):
         return repr(value)
-    return json.dumps(str(value), ensure_ascii=False)
+    return _text(value)
+
+
+def _text(value):
+    """Quoted text; what a terminal would obey, or TOML refuses, is written as an escape."""
+    quoted = json.dumps(str(value), ensure_ascii=False)
+    return "".join(c if c.isprintable() else f"\\U{ord(c):08x}" for c in quoted)

@@ -130,7 +130,7 @@ def hdu_list(result):
     cards = {
         "PROGRAM": ("lensrate", "made by"),
         "VERSION": (result.version, "of the program"),
-        "SCENARIO": (result.scenario.name[:60], "assumptions"),
+        "SCENARIO": (_ascii(result.scenario.name)[:60], "assumptions"),
         "SCENHASH": (result.scenario.hash, "checksum of the assumptions"),
     }
     hdus = [primary]
@@ -141,14 +141,19 @@ def hdu_list(result):
             primary.header[name] = card
         primary.header["MADE"] = json.dumps(json.loads(dump_json(result.meta())), ensure_ascii=True)
         for name, q in result.quantities().items():
-            hdu = fits.ImageHDU(result.grid.image(q.values), name=name.upper())
+            hdu = fits.ImageHDU(result.grid.image(q.values), name=_ascii(name).upper())
             hdu.header["BUNIT"] = (q.unit.to_string("fits") if str(q.unit) else "", "unit of the values")
             for key, card in result.grid.header().items():
                 hdu.header[key] = card
             hdu.header["SCENHASH"] = cards["SCENHASH"]
-            hdu.header["COMMENT"] = q.description
+            hdu.header["COMMENT"] = _ascii(q.description)
             hdus.append(hdu)
     return fits.HDUList(hdus)
+
+
+def _ascii(text):
+    """Text that a FITS header holds."""
+    return "".join(c if " " <= c <= "~" else "?" for c in text)
 
 
 def write_fits(result, path, overwrite=False):

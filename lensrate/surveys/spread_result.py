@@ -214,9 +214,7 @@ class Spread:
             "program": "lensrate",
             "version": self.version,
             **self.about,
-            "scenario": self.base.name,
-            "scenario_hash": self.base.hash,
-            "scenario_text": self.base.to_toml(),
+            **self.base.made(),
             "family": {**self.family.to_dict(), "hash": self.family.hash, "left_out": list(self.left_out)},
             "combinations": len(self.combined_labels) or None,
             "seed": None,
@@ -241,8 +239,7 @@ class Spread:
         ]  # fmt: skip
         return {
             **self.about,
-            "scenario": self.base.name,
-            "scenario_hash": self.base.hash,
+            **self.base.made(),
             "family": {"name": family.name, "title": family.title, "hash": family.hash,
                        "axes": {a.name: a.label for a in family.axes}, "left_out": list(self.left_out)},
             "base": {"lenses": self._json(self.rows[0].values)},

@@ -67,7 +67,7 @@ def test_report_and_provenance(made, scenario):
     assert [p.name for p in path.parent.iterdir()] == ["two.fits"]
     made = RemnantField.read(path).provenance
     assert made["scenario"] == "two" and len(made["scenario_hash"]) == 12 and made["tracers"] == 256
-    assert f'galaxy = "{scenario.parent / "galaxy.toml"}"' in made["scenario_toml"]
+    assert f'galaxy = "{scenario.parent / "galaxy.toml"}"' in made["scenario_text"]
 
 
 def test_killed_and_resumed_gives_the_same_bytes(made, scenario, tmp_path):
