@@ -85,7 +85,10 @@ def test_killed_and_resumed_gives_the_same_bytes(made, scenario, tmp_path):
     assert 5 <= len(before) < 33
     damaged = sorted(before)[0]
     damaged.write_bytes(damaged.read_bytes()[:-200])
-    kept = run("synthesize", "--scenario", scenario, "--save", path, *SMALL, "--checkpoint", pieces, "-q")
+    # the scenario that the whole run states, from another place
+    (tmp_path / "again.toml").write_text(run("scenario", "--of", made[0])[1])
+    again = ["--scenario", tmp_path / "again.toml"]
+    kept = run("synthesize", *again, "--save", path, *SMALL, "--checkpoint", pieces, "-q")
     assert kept[0] == 0 and kept[2] == "" and not pieces.exists()
     # one thread without a break, and two threads with one
     assert arrays(path) == arrays(made[0])
