@@ -19,6 +19,7 @@ __all__ = [
     "read_set",
 ]
 
+_DEEPEST = 32  # levels of nested tables
 _LIMIT = 4_000_000  # bytes; the largest text file we ship is far smaller
 
 
@@ -120,7 +121,7 @@ def field_path(name):
     if not str(name).endswith(".fits"):
         one_of("fields", str(name), field_names())
         return find(f"fields/{name}.fits")
-    if not Path(name).is_file():
+    if not os.path.isfile(name):
         raise InputError(f"fields: no file '{name}'; make one with 'lensrate synthesize'")
     return Path(name)
 
@@ -161,18 +162,40 @@ def parse_toml(path, limit=_LIMIT):
     """
     path = Path(path)
     try:
-        size = path.stat().st_size
-        if size > limit:
-            raise InputError(f"{path}: {size} bytes, at most {limit} expected of a TOML file")
-        return tomllib.loads(path.read_text(encoding="utf-8"))
+        with open(path, "rb") as file:
+            content = file.read(limit + 1)  # what a device or a pipe gives has no size to ask for
+        if len(content) > limit:
+            raise InputError(f"{path}: more than {limit} bytes, which no TOML file here has")
+        table = tomllib.loads(content.decode("utf-8").replace("\r\n", "\n"))
+        _check_plain(path, table)
+        return table
     except FileNotFoundError:
         raise InputError(f"{path}: no such file") from None
     except IsADirectoryError:
         raise InputError(f"{path}: is a folder, a file is needed") from None
     except OSError as error:
         raise InputError(f"{path}: cannot be read ({error.strerror})") from None
-    except (UnicodeDecodeError, tomllib.TOMLDecodeError, RecursionError) as error:
+    except (ValueError, RecursionError) as error:
+        if isinstance(error, InputError):
+            raise
         raise InputError(f"{path}: not a valid TOML file ({str(error)[:120]})") from None
+
+
+def _check_plain(path, table):
+    """Raise where tables are nested too deep for anything here, or a whole number is larger than TOML knows."""
+    level, depth = [table], 0
+    while level:
+        depth += 1
+        if depth > _DEEPEST:
+            raise InputError(f"{path}: tables and lists are nested more than {_DEEPEST} deep")
+        inner = []
+        for value in level:
+            for v in value.values() if isinstance(value, dict) else value:
+                if isinstance(v, (dict, list)):
+                    inner.append(v)
+                elif isinstance(v, int) and not -(2**63) <= v < 2**63:
+                    raise InputError(f"{path}: a whole number of {v.bit_length()} bits, TOML knows 64")
+        level = inner
 
 
 @cache

@@ -67,7 +67,8 @@ def one_of(what, word, known):
     InputError
         If `word` is not among `known`.
     """
-    if word in known:
+    # a file may hold a list or a table where a word belongs
+    if isinstance(word, (str, int, float)) and word in known:
         return word
     shown = sorted(map(str, known))
     if len(shown) > _SHOWN:

@@ -8,6 +8,7 @@ from pathlib import Path
 
 import numpy as np
 
+from .claims import check_claims, check_nodes
 from .errors import DataFileError, InputError, did_you_mean
 
 __all__ = ["PICTURES", "TABLES", "check_target", "dump_json", "read_rows", "whole_file", "write_table"]
@@ -48,11 +49,11 @@ def check_target(path, endings, overwrite=False, what="--save"):
             f"(known: {', '.join(endings)})"
         )
     folder = path.parent
-    if not folder.is_dir():
+    if not os.path.isdir(folder):
         raise InputError(f"{what}: folder '{folder}' does not exist; make it first")
-    if path.is_dir():
+    if os.path.isdir(path):
         raise InputError(f"{what}: '{path}' is a folder; name a file")
-    if path.exists() and not overwrite:
+    if os.path.exists(path) and not overwrite:
         raise InputError(f"{what}: '{path}' exists; choose another name or add --overwrite")
     if not os.access(folder, os.W_OK):
         raise InputError(f"{what}: folder '{folder}' is not writable; choose another one")
@@ -229,13 +230,14 @@ def read_rows(path, what="table"):
     InputError
         Missing, empty, too large or unreadable.
     """
-    from astropy.table import Table
+    from astropy.table import Column, Table
 
     path = Path(path)
-    if not path.is_file():
+    if not os.path.isfile(path):
         raise InputError(f"{what}: no file '{path}'")
     if path.stat().st_size > _LARGEST_TABLE:
         raise InputError(f"{what}: '{path}' has {path.stat().st_size} bytes, at most {_LARGEST_TABLE} are read")
+    check_claims(path, what)
     ending = path.suffix.lower()
     formats = {**_ASTROPY, ".csv": "ascii.csv"}
     import warnings
@@ -255,4 +257,15 @@ def read_rows(path, what="table"):
         ) from None
     if len(table) == 0:
         raise InputError(f"{what}: '{path}' has no rows")
+    check_nodes(dict(table.meta), f"{what}: '{path}'")
+    for name in table.colnames:
+        column = table[name]
+        if not isinstance(column, Column):
+            raise InputError(
+                f"{what}: '{path}': column {name} holds {type(column).__name__} objects; plain numbers or text are read"
+            )
+        if column.ndim != 1:
+            raise InputError(
+                f"{what}: '{path}': column {name} has several values in a cell; leave it out, or one value a row"
+            )
     return table

@@ -81,6 +81,8 @@ class Params:
         InputError
             Unknown or missing key, or a unit that does not fit.
         """
+        if not isinstance(table, dict):
+            raise InputError(f"{where}: {table!r} given, must be a table of {cls.__name__}")
         known = {f.name: f for f in fields(cls) if "unit" in f.metadata}
         values = {}
         for key, entry in table.items():

@@ -1,12 +1,14 @@
 """How a file of ours was made, read back from the file: tables, images, fields, pictures, JSON."""
 
 import json
+import os
 import re
 import struct
 import zlib
 from pathlib import Path
 from xml.parsers import expat
 
+from .claims import check_fits
 from .errors import InputError, did_you_mean
 from .io import PICTURES, TABLES
 
@@ -40,7 +42,7 @@ def read_made(path):
         No such file, or one that says nothing of the kind.
     """
     path = Path(path)
-    if not path.is_file():
+    if not os.path.isfile(path):
         raise InputError(f"'{path}': no such file")
     ending = path.suffix.lower()
     known = (*TABLES, *PICTURES)
@@ -121,6 +123,10 @@ def _fits(path):
 
     from astropy.io import fits
 
+    with open(path, "rb") as handle:
+        reason = check_fits(handle, path.stat().st_size)
+        if reason:
+            raise ValueError(reason)
     with warnings.catch_warnings():
         warnings.simplefilter("ignore")
         try:

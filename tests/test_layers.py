@@ -10,7 +10,7 @@ LAYERS = [
     {"_version", "errors"},
     {"units"},
     {"kernels"},
-    {"datafiles", "parallel"},
+    {"claims", "datafiles", "parallel"},
     {"params", "io"},
     {"provenance"},
     {"galaxy"},

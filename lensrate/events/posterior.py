@@ -14,6 +14,7 @@ COLUMNS = {"t_E": "d", "pi_E": "", "pi_EN": "", "pi_EE": "", "theta_E": "mas", "
 _EXTRA = ("weight", "ln_prior", "delta_chi2", "ln_likelihood")
 PRIORS = ("uniform", "log-uniform", "column")
 _MOST = 2_000_000
+_LARGEST = 1e100  # of any number in a file of samples
 _EPOCHS = (15020.0, 88069.0)  # MJD, 1900 to 2100
 
 
@@ -139,7 +140,7 @@ def read_draws(table, where, prior=None):
             value = np.asarray(u.Quantity(column, column.unit or unit).to_value(unit), dtype=float)
         except (TypeError, ValueError, u.UnitConversionError):
             raise InputError(f"{where}: column {name} must hold numbers{' in ' * bool(unit)}{unit}") from None
-        bad = mask | ~np.isfinite(value)
+        bad = mask | ~(np.abs(value) < _LARGEST)
         if name in ("t_E", "pi_E", "theta_E", "mu_rel"):
             bad |= value <= 0
         if name == "weight":

@@ -119,6 +119,13 @@ class Galaxy:
         for key in ("sun", "component"):
             if key not in table:
                 raise InputError(f"{where}: needs [{key}]")
+        for key, kind, words in (
+            ("name", str, "text"), ("potential", str, "text"), ("references", list, "a list of text"),
+            ("notes", list, "a list of text"), ("lens_class", dict, "a table"),
+        ):  # fmt: skip
+            value = table.get(key, kind())
+            if not isinstance(value, kind) or (kind is list and not all(isinstance(v, str) for v in value)):
+                raise InputError(f"{where}: {key}: {value!r} given, must be {words}")
         sun = Sun.from_table(table["sun"], f"{where}: sun")
         if sun.R0.value <= 0:
             raise InputError(f"{where}: sun.R0: {sun.R0} given, must be above 0")

@@ -4,11 +4,13 @@ Every forecast is linear in them: a kick law is a set of weights of the bins, a 
 """
 
 import json
+import os
 from dataclasses import dataclass, field
 
 import astropy.units as u
 import numpy as np
 
+from ..claims import check_fits
 from ..errors import DataFileError, InputError, one_of
 from ..io import check_target, whole_file
 from ..kernels import fields as kernels
@@ -311,6 +313,10 @@ class RemnantField:
             with warnings.catch_warnings():
                 warnings.simplefilter("error", AstropyWarning)  # a wrong checksum is a warning there, an error here
                 # the file is opened here, since astropy leaves it open where a checksum is wrong
+                with open(path, "rb") as handle:
+                    reason = check_fits(handle, os.fstat(handle.fileno()).st_size)
+                    if reason:
+                        raise ValueError(reason)
                 with open(path, "rb") as handle, fits.open(handle, checksum=True, memmap=False) as hdus:
                     if hdus[0].header.get("LRFIELD") != _FORMAT:
                         found = hdus[0].header.get("LRFIELD", "no such mark")
@@ -335,6 +341,7 @@ class RemnantField:
         ln_rho, four, two = (np.array(hdus[n].data, dtype=np.int16) for n in ("LN_RHO", "FOUR", "TWO"))
         ends, heights = (np.array(hdus[n].data, dtype=float) for n in ("ENDS", "HEIGHTS"))
         batches = np.array(hdus["BATCHES"].data, dtype=np.int16)
+        _check_numbers(grid, made, ends, heights)
         return cls(
             components=tuple(made["components"]),
             kick_edges=np.array(made["kick_edges_kms"]),
@@ -350,6 +357,25 @@ class RemnantField:
             mismatch=made["mismatch"],
             provenance=made["provenance"],
         )
+
+
+def _check_numbers(grid, made, *tables):
+    """Raise where a file that is whole holds what the kernels must not be given."""
+    cells = [grid.n_R, grid.n_z, grid.n_phi]
+    lengths = [grid.R_max, grid.R_scale, grid.z_max, grid.z_scale, grid.R_four]
+    edges = np.array(made["kick_edges_kms"], dtype=float)
+    heights = np.array(made["height_edges_kpc"], dtype=float)
+    if not all(isinstance(n, int) and 2 <= n <= 10_000 and n % 2 == 0 for n in cells):
+        raise ValueError("impossible numbers of cells")
+    if not all(isinstance(x, (int, float)) and 0 < x < 1e6 for x in lengths):
+        raise ValueError("an impossible grid")
+    if not (np.all(np.isfinite(edges)) and np.all(np.diff(edges) > 0) and edges[0] >= 0):
+        raise ValueError("kick speeds that do not rise")
+    # the first and the last height may be open
+    if not np.all(np.diff(heights) > 0) or not np.isfinite(made["bar_angle_rad"]):
+        raise ValueError("an impossible geometry")
+    if not all(np.all(np.isfinite(t)) for t in tables):
+        raise ValueError("shares that are no numbers")
 
 
 def _last_first(gaussians):

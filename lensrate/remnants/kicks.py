@@ -22,6 +22,7 @@ FORMS = {
     "none": (),
 }
 _MEAN_TO_SIGMA = math.sqrt(math.pi / 8)
+_NARROWEST = 1e-6  # of a width, in km/s or of a logarithm: less is a fixed speed
 _FASTEST = 1e5  # km/s; a slip of units rather than a kick
 
 
@@ -253,10 +254,10 @@ def _law(name, text, form, values, references):
     for key, value in zip(FORMS[form], values):
         low = {"SPEED": 0.0, "MU": -20.0, "WEIGHT1": 0.0}.get(key, 0.0)
         high = {"MU": math.log(_FASTEST), "WEIGHT1": 1.0}.get(key, 20.0 if form == "lognormal" else _FASTEST)
-        open_end = key.startswith("SIGMA")
-        if not (math.isfinite(value) and low <= value <= high) or (open_end and value == 0):
-            start = "above" if open_end else "at least"
-            raise InputError(f"kicks: '{text}': {key} is {value:g}, must be {start} {low:g} and at most {high:g}")
+        if key.startswith("SIGMA"):
+            low = _NARROWEST
+        if not (math.isfinite(value) and low <= value <= high):
+            raise InputError(f"kicks: '{text}': {key} is {value:g}, must be at least {low:g} and at most {high:g}")
     if form == "two-maxwell":
         return KickLaw(name, text, "maxwell", values[:2], (values[2], 1 - values[2]), references)
     weights = (1.0,) if form == "maxwell" else ()

@@ -90,9 +90,9 @@ def _mapped(copy):
             start = stop
         if whole[start:].tobytes() != _MARK:
             return None
-    except (OSError, ValueError, KeyError):
+        ends = {name: np.array(rows) for name, rows in made.pop("ends").items()}
+        return RemnantField(
+            **arrays, **{**made, "components": tuple(made["components"]), "grid": Grid(**made["grid"]), "ends": ends}
+        )
+    except (OSError, ValueError, KeyError, TypeError, AttributeError):
         return None
-    ends = {name: np.array(rows) for name, rows in made.pop("ends").items()}
-    return RemnantField(
-        **arrays, **{**made, "components": tuple(made["components"]), "grid": Grid(**made["grid"]), "ends": ends}
-    )

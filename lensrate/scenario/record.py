@@ -66,7 +66,7 @@ class Scenario:
         if not isinstance(self.component, (list, tuple)) or not all(isinstance(c, dict) for c in self.component):
             raise InputError(f"scenario: component: {self.component!r} given, must be a list of tables, [[component]]")
         object.__setattr__(self, "component", tuple(self.component))
-        if self.luminosity and not Path(self.luminosity).is_file():
+        if self.luminosity and not os.path.isfile(self.luminosity):
             raise InputError(f"scenario: luminosity: no file '{self.luminosity}'")
         self._check_numbers()
         parse_rule(self.sources)
@@ -128,7 +128,7 @@ class Scenario:
             Unknown name or key (with the nearest known one), not TOML, or an impossible value.
         """
         text = str(name)
-        if text.endswith(".toml") or "/" in text or Path(text).is_file():
+        if text.endswith(".toml") or "/" in text or os.path.isfile(text):
             return cls.from_dict(parse_toml(text), where=text, stem=Path(text).stem)
         one_of("scenario", text, names("scenarios"))
         return cls.from_dict(read_set("scenarios", text), where=text, stem=text)
@@ -355,13 +355,12 @@ def _merge(old, new):
 def _toml(table, prefix=()):
     plain, tables, lists = [], [], []
     for key, value in table.items():
-        if isinstance(value, dict) and "value" in value:
-            inner = ", ".join(f"{_key(k)} = {_value(v)}" for k, v in value.items())
-            plain.append(f"{_key(key)} = {{ {inner} }}")
+        if isinstance(value, dict) and ("value" in value or not value):
+            if value or prefix:
+                plain.append(f"{_key(key)} = {_value(value)}")
         elif isinstance(value, dict):
-            if value:
-                tables.append((key, value))
-        elif isinstance(value, list) and value and isinstance(value[0], dict):
+            tables.append((key, value))
+        elif isinstance(value, list) and value and all(isinstance(v, dict) for v in value):
             lists.append((key, value))
         else:
             plain.append(f"{_key(key)} = {_value(value)}")
@@ -391,6 +390,9 @@ def _value(value):
         return "[" + ", ".join(_value(v) for v in value) + "]"
     if isinstance(value, (int, float)):
         return repr(value)
+    if isinstance(value, dict):
+        inner = ", ".join(f"{_key(k)} = {_value(v)}" for k, v in value.items())
+        return f"{{ {inner} }}" if inner else "{}"
     return _text(value)
 
 

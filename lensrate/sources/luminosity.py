@@ -13,6 +13,7 @@ from scipy.special import ndtr
 
 from ..datafiles import read_set
 from ..errors import InputError
+from ..io import read_rows
 from ..remnants.tables import check_keys, number
 from .bands import check_band
 
@@ -245,12 +246,7 @@ def _column(table, name, path):
 
 
 def _read(path, band, clump_per_msun):
-    from astropy.table import Table  # slow to import, and few need it
-
-    try:
-        table = Table.read(path)
-    except Exception as error:  # astropy's readers raise many kinds
-        raise InputError(f"{path}: cannot be read as a table ({str(error).splitlines()[0][:100]})") from None
+    table = read_rows(path, "luminosity")
     band = table.meta.get("band") if band is None else band
     if band is None:
         raise InputError(f"{path}: says no band; give band = V, I, J, H or Ks, in the header or as an argument")

@@ -1,5 +1,6 @@
 """One open assumption of a family: its alternatives, and how a family file states them."""
 
+import os
 from dataclasses import dataclass, field
 from dataclasses import fields as declared
 from pathlib import Path
@@ -156,7 +157,7 @@ def _alternative(where, row, folder):
 
 def _beside(value, folder):
     """A file beside the family's own, where the text names one."""
-    if folder is not None and isinstance(value, str) and Path(value).suffix and (Path(folder) / value).is_file():
+    if folder is not None and isinstance(value, str) and Path(value).suffix and os.path.isfile(Path(folder) / value):
         return str(Path(folder) / value)
     return value
 

@@ -1,10 +1,12 @@
 """Extinction maps of a field: a FITS image of magnitudes with celestial coordinates."""
 
+import os
 from dataclasses import dataclass
 from pathlib import Path
 
 import numpy as np
 
+from ..claims import check_claims
 from ..errors import InputError
 from .sky import Patch, even_points, from_plane
 
@@ -46,18 +48,20 @@ class DustMap:
         from astropy.wcs import WCS
 
         where = f"sky_map_of_extinction '{path}'"
-        if not Path(path).is_file():
+        if not os.path.isfile(path):
             raise InputError(f"{where}: no such file")
         if Path(path).stat().st_size > _LARGEST:
             raise InputError(f"{where}: larger than {_LARGEST} bytes; cut out the field")
+        check_claims(Path(path), where)
         try:
-            with warnings.catch_warnings(), fits.open(path) as hdus:
+            # opened here, since astropy leaves a file open that it cannot read
+            with warnings.catch_warnings(), open(path, "rb") as file, fits.open(file, memmap=False) as hdus:
                 warnings.simplefilter("ignore")
                 hdu = next(h for h in hdus if h.is_image and h.header.get("NAXIS", 0) == 2)
                 image, wcs = np.array(hdu.data, dtype=float), WCS(hdu.header)
         except StopIteration:
             raise InputError(f"{where}: holds no two-dimensional image") from None
-        except (OSError, ValueError, TypeError) as error:
+        except Exception as error:  # astropy raises many kinds for a damaged file; all mean that it cannot be used
             raise InputError(f"{where}: cannot be read as FITS ({str(error)[:80]})") from None
         if not wcs.has_celestial:
             raise InputError(f"{where}: its header states no celestial coordinates")

@@ -113,9 +113,11 @@ class Efficiency:
         else:
             grid, row = np.zeros(1), np.zeros(low.size, dtype=int)
         points, column = np.unique(low, return_inverse=True)
-        values = np.full((grid.size, points.size), np.nan)
-        values[row, column] = value
-        if low.size != values.size or np.isnan(values).any():
+        values = np.zeros((0, 0))
+        if low.size == grid.size * points.size:
+            values = np.full((grid.size, points.size), np.nan)
+            values[row, column] = value
+        if values.size == 0 or np.isnan(values).any():
             raise InputError(
                 f"{where}: {low.size} rows for {points.size} values of t_E and {grid.size} of "
                 f"{second or 'nothing else'}; every pair must be there once"

@@ -207,7 +207,7 @@ class Facility:
         if "blend_error" in table and measures == "images":
             raise InputError(f'{where}.blend_error: has a meaning for measures = "centroid" only; leave it out')
         if not isinstance(table.get("invented", invented), bool):
-            raise InputError(f"{where}.invented: {table['invented']!r} given, true or false is needed")
+            raise InputError(f"{where}.invented: {table.get('invented', invented)!r} given, true or false is needed")
         ranges = {
             "hours_per_epoch": ("h", 0.0, 1e4), "saturation": ("mag", -30.0, 50.0), "faint_limit": ("mag", -30.0, 50.0),
             "floor": ("mas", 0.0, 1e3), "first_epoch": ("d", 0.0, 1e4), "alert_u": ("", 0.0, 100.0),

@@ -4,6 +4,7 @@ import hashlib
 import itertools
 import json
 import math
+import os
 from dataclasses import dataclass, replace
 from fnmatch import fnmatchcase
 from pathlib import Path
@@ -73,7 +74,7 @@ class Family:
             the same number.
         """
         text = str(name)
-        if text.endswith(".toml") or "/" in text or Path(text).is_file():
+        if text.endswith(".toml") or "/" in text or os.path.isfile(text):
             return cls.from_dict(parse_toml(text), text, Path(text).stem, Path(text).parent)
         return cls.from_dict(read_set("families", text), f"family '{text}'", text)
 
