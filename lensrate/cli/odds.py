@@ -40,13 +40,21 @@ def _typed(command):
     "--tolerance", type=float, default=0.05, show_default=True, help="Events so near [deg] share a sightline."
 )
 @click.option("--spread", "family", metavar="FAMILY", help="Range over a family of assumptions, e.g. kicks.")
+@click.option("--rank", metavar="CLASS", help="Plan follow-up: rank by bits on this lens class, or all.")
+@click.option("--facilities", metavar="FILE", default="marram", show_default=True, help="What could follow up (TOML).")
+@click.option("--campaign", metavar="FILE", default="marram", show_default=True, help="Whose light curves these are.")
+@click.option("--hours", type=float, metavar="H", help="Telescope time there is for --rank.")
+@click.option("--as-of", "as_of", metavar="DATE", help="Night that --rank plans from, e.g. 2031-06-15.")
+@click.option("--since", metavar="FILE", help="JSON of an earlier --rank run: tell what changed.")
+@click.option("--seed", type=int, default=1, show_default=True, help="Of simulated outcomes.")
+@click.option("--kick", is_flag=True, help="Birth component and kick of one event's lens, were it a remnant.")
 @click.option("--skip-bad", is_flag=True, help="Leave bad rows out.")
 @assumptions
 @click.option("--plot", metavar="FILE", help="Draw the events over the classes' densities: .png .pdf .svg.")
 @output
 def odds(
-    sample, at, icrs, lens_limit, frame, t_0par, outlier, tolerance, family, skip_bad, plot, save, as_json, overwrite,
-    quiet, **choices
+    sample, at, icrs, lens_limit, frame, t_0par, outlier, tolerance, family, rank, facilities, campaign, hours, as_of,
+    since, seed, kick, skip_bad, plot, save, as_json, overwrite, quiet, **choices
 ):  # fmt: skip
     """Lens-class odds of each event of SAMPLE, or of one event typed with --t-E ... --at L B.
 
@@ -60,6 +68,8 @@ def odds(
       lensrate odds --t-E 270 --t-E-err 3 --pi-E 0.09 --theta-E 5.2 --theta-E-err 0.3 --at 359.86 -1.62
       lensrate odds events.csv --frame geocentric --t-0par 55763 --save odds.ecsv --plot odds.png
       lensrate odds events.ecsv --spread kicks --json
+      lensrate odds running.ecsv --rank black_hole --hours 40 --as-of 2031-06-15 --facilities marram --campaign marram
+      lensrate odds --t-E 270 --pi-E 0.09 --theta-E 5.2 --at 359.86 -1.62 --kick --plot kick.png
     """
     from ..io import PICTURES, TABLES, check_target
 
@@ -81,6 +91,7 @@ def odds(
         check_target(save, TABLES, overwrite)
     if plot:
         check_target(plot, PICTURES, overwrite, "--plot")
+    _check_plan(rank, hours, as_of, since, kick)
     scenario = read_scenario(**choices)
     from ..events.observed import Sample
     from ..events.odds import odds as compute
@@ -96,27 +107,86 @@ def odds(
     result = compute(
         read, scenario, outlier=outlier, tolerance=tolerance, spread=others, progress=None if quiet else "events"
     )
-    if result.events and plot:
+    extra = None
+    if result.events and (rank or kick):
+        if rank:
+            options = (rank, facilities, campaign, hours, as_of, since, seed, outlier, tolerance, quiet)
+            extra = _plan(read, scenario, *options)
+        else:
+            extra = _kick(read, scenario, outlier)
+        if plot:
+            from .. import plots
+
+            (plots.save_follow_up if rank else plots.save_kick)(extra, plot, overwrite)
+    elif result.events and plot:
         from ..plots import save_odds
 
         save_odds(result, plot, overwrite)
     if result.events and save:
         from ..io import write_table
 
-        write_table(result.to_table(), save, overwrite, payload={"events": result.to_dict()})
+        write_table((extra or result).to_table(), save, overwrite, payload={"events": _rows(result, extra)})
     if as_json:
         from ..io import dump_json
 
-        click.echo(dump_json(result.to_dict()))
+        click.echo(dump_json(_rows(result, extra)))
+    elif extra is not None:
+        from .followup import report_kick, report_plan
+
+        click.echo(report_plan(extra) if rank else report_kick(extra))
     elif result.events:
         click.echo(report_one(result) if len(result) == 1 else report(result))
     if not quiet:
-        for warning in result.warnings():
+        more = (*extra.notes, *extra.failed) if rank and extra is not None else ()
+        for warning in dict.fromkeys([*result.warnings(), *more]):
             click.echo(wrap(f"note: {warning}"), err=True)
     if not result.events:
         from ..errors import ConvergenceError
 
         raise ConvergenceError(f"no event could be judged: {result.failed[0] if result.failed else 'none given'}")
+
+
+def _check_plan(rank, hours, as_of, since, kick):
+    """Refuse half of a plan before the work."""
+    if rank and (hours is None or not as_of):
+        raise click.UsageError("--rank needs --hours (the time there is) and --as-of DATE (the night to plan from)")
+    for name, value in (("--hours", hours), ("--as-of", as_of), ("--since", since)):
+        if value is not None and not rank:
+            raise click.UsageError(f"{name} belongs to --rank CLASS")
+    if rank and kick:
+        raise click.UsageError("--rank and --kick are two questions; ask one at a time")
+
+
+def _plan(read, scenario, rank, facilities, campaign, hours, as_of, since, seed, outlier, tolerance, quiet):
+    from ..events.followup import follow_up
+    from .followup import read_since
+
+    before = read_since(since) if since else None
+    return follow_up(
+        read, scenario, as_of=as_of, hours=hours, target=None if rank == "all" else rank, facilities=facilities,
+        campaign=campaign, outlier=outlier, seed=seed, tolerance=tolerance, since=before,
+        progress=None if quiet else "follow-up",
+    )  # fmt: skip
+
+
+def _kick(read, scenario, outlier):
+    from ..errors import InputError
+    from ..events.kick import kick_posterior
+
+    if len(read.events) != 1:
+        raise InputError(f"--kick: one event at a time, the sample has {len(read.events)}")
+    return kick_posterior(read.events[0], scenario, outlier=outlier)
+
+
+def _rows(result, extra):
+    """What --json prints: the odds of each event, with its follow-up or kick where asked for."""
+    rows = result.to_dict()
+    if extra is None:
+        return rows
+    if hasattr(extra, "edges"):
+        return [{**rows[0], "kick": extra.to_dict()}]
+    plans = extra.by_name()
+    return [{**row, "follow_up": plans[row["event"]].to_dict()} if row["event"] in plans else row for row in rows]
 
 
 def _event(values, errors, lens_limit, place, frame, t_0par):

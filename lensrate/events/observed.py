@@ -40,7 +40,7 @@ PLAIN = {
     "I_lens_limit": ("mag", (-5.0, 40.0), "the lens is fainter than this in I"),
     "source_fraction": ("", (0.0, 2.0), "source's share of the light"),
     "u_0": ("", (-10.0, 10.0), "impact parameter"),
-    "t_0": ("", (-1e6, 1e7), "time of closest approach"),
+    "t_0": ("d", (-1e6, 1e7), "time of closest approach, MJD or JD"),
     "weight": ("", (0.0, 1e9), "weight of the event in a sample"),
 }
 _WORDS = ("event", "solution", "frame", "samples")

@@ -13,6 +13,7 @@ import numpy as np
 
 from ..kernels import odds as kernels
 from ..kernels import rates as rate_kernels
+from ..kernels.followup import by_mass
 from ..units import KAPPA, MAS
 from . import rates
 from .masses import bases_of, fine_masses
@@ -147,6 +148,8 @@ class EventRates:
     ----------
     ready : Line
         From `rates.prepare`.
+    layout : (list, dict), optional
+        Bases and spectra in the form of `masses.bases_of`, whose it is by default.
 
     Attributes
     ----------
@@ -157,14 +160,14 @@ class EventRates:
         Mean source distance of each cell [kpc].
     """
 
-    def __init__(self, ready):
+    def __init__(self, ready, layout=None):
         model = ready.model
         self.ready = ready
         step = _STEP / (2 if ready.sources.fixed_distance else 1)
         self.step = step
         lo, hi = (np.floor(np.log(x) / step) for x in _ROWS)
         self.ln_pi = np.arange(lo, hi + 1) * step
-        bases, spectra = bases_of(model)
+        bases, spectra = bases_of(model) if layout is None else layout
         self.n_bases = len(bases)
         self.classes = [fine_masses(name, rows) for name, rows in spectra.items()]
         self.cell_edges, self.D_S = self._cells()
@@ -309,7 +312,43 @@ class EventRates:
             out[:, part] = some
         return out
 
-    def _batch(self, points, part, gauss, light, histograms, out):
+    def by_mass(self, points, known=None, light=None):
+        """As `evaluate`, with lens masses kept apart.
+
+        Parameters
+        ----------
+        points, known, light
+            As `evaluate`.
+
+        Returns
+        -------
+        list of (ndarray, ndarray), shapes (Q, J)
+            For each class: weight times rate in each of its mass bins, and the mean ln M there.
+        """
+        gauss = [s.gauss if known is None else s.given(known) for s in self.sets]
+        out = [(np.zeros((len(points), c.ln_M.size)), np.zeros((len(points), c.ln_M.size))) for c in self.classes]
+        order = np.argsort(points.X, kind="stable")
+        for start in range(0, len(points), _BATCH):
+            part = order[start : start + _BATCH]
+            h, ln_t, ln_X = self._densities(points, part, gauss)
+            summed = np.ascontiguousarray(h.sum(axis=2).transpose(2, 0, 1))
+            terms = points.terms[:, part] if points.terms.size else np.zeros((3, part.size, 3))
+            for masses, (rate, mean) in zip(self.classes, out):
+                if not masses.ln_M.size:
+                    continue
+                some, ln_M = np.zeros((2, part.size, masses.ln_M.size))
+                magnitude, spread = (np.zeros(0), 1.0) if light is None else light.of(masses)
+                by_mass(
+                    h, summed, self.ln_pi[0], self.step, np.log(KAPPA), points.on_theta, ln_X, ln_t,
+                    points.weight[part], masses.bases, masses.number, masses.ln_M, masses.width, _pieces(terms),
+                    np.ascontiguousarray(terms), magnitude, spread,
+                    np.zeros((1, 1)) if light is None else light.threshold, some, ln_M,
+                )  # fmt: skip
+                rate[part], mean[part] = some, np.where(some > 0, ln_M / np.where(some > 0, some, 1.0), masses.ln_M)
+        return out
+
+    def _densities(self, points, part, gauss):
+        """Density of the relative motion that each point needs of every base and row, (B, P, C, Q); ln t, ln X."""
         ln_t, ln_X = np.log(points.t_E[part] / 365.25), np.log(points.X[part])
         P, Q, C = self.ln_pi.size, ln_t.size, self.D_S.size
         pi = np.exp(self.ln_pi)[:, None]
@@ -332,6 +371,11 @@ class EventRates:
                     lo, hi = span[base]
                     kernels.at_motions(group.first, P, b, lo, hi, group.cell, g, x, y, h[base])
                     h[base, lo:hi] *= jacobian[lo:hi]
+        return h, ln_t, ln_X
+
+    def _batch(self, points, part, gauss, light, histograms, out):
+        h, ln_t, ln_X = self._densities(points, part, gauss)
+        Q = ln_t.size
         summed = np.ascontiguousarray(h.sum(axis=2).transpose(2, 0, 1))
         terms = points.terms[:, part] if points.terms.size else np.zeros((3, Q, 3))
         n_sub = _pieces(terms)

@@ -4,6 +4,7 @@ from .campaigns import campaign, kick_yield, save_campaign, save_kick_yield
 from .compare import comparison, comparison_page, ratio, save_comparison
 from .constrain import marginal, mass_limits, posterior, save_mass_limits, save_posterior
 from .events import events, save_events
+from .followup import follow_up, kick, save_follow_up, save_kick
 from .galaxy import maps, save_maps
 from .masses import masses, save_masses
 from .odds import odds, save_odds
@@ -16,7 +17,9 @@ __all__ = [
     "comparison_page",
     "depth",
     "events",
+    "follow_up",
     "joint",
+    "kick",
     "kick_yield",
     "maps",
     "marginal",
@@ -29,6 +32,8 @@ __all__ = [
     "save_campaign",
     "save_comparison",
     "save_events",
+    "save_follow_up",
+    "save_kick",
     "save_kick_yield",
     "save_maps",
     "save_mass_limits",

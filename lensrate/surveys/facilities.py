@@ -279,7 +279,8 @@ def facility_names(file="marram"):
 def _read(file):
     where = f"facilities '{file}'"
     table = read_set("facilities", file)
-    check_keys(where, table, ("reference", "invented", "facility"), ("facility",))
+    # measurements without a schedule of their own are read by who plans follow-up
+    check_keys(where, table, ("reference", "invented", "facility", "measurement"), ("facility",))
     rows = table["facility"]
     if not isinstance(rows, list) or not rows:
         raise InputError(f"{where}: at least one [[facility]] is needed")

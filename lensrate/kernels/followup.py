@@ -1,0 +1,111 @@
+"""Rates by lens mass at points, and class rates given planned measurements whose outcome is known."""
+
+import math
+
+import numpy as np
+
+from ._jit import kernel
+from .odds import _split_gauss
+
+_ROOT = math.sqrt(2.0 * math.pi)
+_FAR = 30.0  # exponents beyond count as nothing
+
+
+@kernel
+def by_mass(
+    h, summed, ln_pi0, step, ln_kappa, on_theta, ln_X, ln_t, W, bases, number, ln_M, width, n_sub, terms, magnitude,
+    spread, threshold, rate, first,
+):  # fmt: skip
+    """Fill rate (Q, J), and rate times ln M: the integrand of `odds.sum_masses`, whose arguments these are."""
+    P, C = h.shape[1], h.shape[2]
+    light = magnitude.size > 0
+    sharp = 1.0 / (math.sqrt(2.0) * spread)
+    v = np.empty(4)
+    for q in range(ln_X.size):
+        if W[q] == 0.0:
+            continue
+        for j in range(ln_M.size):
+            parts = n_sub if width[j] > 0.0 else 1
+            for k in range(parts):
+                lm = ln_M[j] + ((k + 0.5) / parts - 0.5) * width[j]
+                sign = -1.0 if on_theta else 1.0
+                ln_pi = 2.0 * ln_X[q] + sign * (ln_kappa + lm)
+                ln_theta = ln_X[q] if on_theta else ln_pi - ln_X[q]
+                ln_par = ln_pi - ln_X[q] if on_theta else ln_X[q]
+                x = (ln_pi - ln_pi0) / step
+                i = int(math.floor(x))
+                if i < 1 or i > P - 3:
+                    continue
+                like = W[q] * 2.0 * math.exp(0.5 * lm) / parts
+                if terms[0, q, 1] > 0.0:
+                    like *= _split_gauss(math.exp(ln_theta), terms[0, q, 0], terms[0, q, 1], terms[0, q, 2])
+                if terms[1, q, 1] > 0.0:
+                    like *= _split_gauss(math.exp(ln_par), terms[1, q, 0], terms[1, q, 1], terms[1, q, 2])
+                if terms[2, q, 1] > 0.0:
+                    mu = math.exp(ln_theta - ln_t[q])
+                    like *= _split_gauss(mu, terms[2, q, 0], terms[2, q, 1], terms[2, q, 2])
+                if like <= 0.0:
+                    continue
+                t = x - i
+                for m in range(4):
+                    s = 0.0
+                    if light:
+                        for c in range(C):
+                            a = 0.0
+                            for b in range(bases.size):
+                                a += number[j, b] * h[bases[b], i - 1 + m, c, q]
+                            s += a * 0.5 * math.erfc((threshold[i - 1 + m, c] - magnitude[j]) * sharp)
+                    else:
+                        for b in range(bases.size):
+                            s += number[j, b] * summed[q, bases[b], i - 1 + m]
+                    v[m] = s
+                if v[0] > 1e-280 and v[1] > 1e-280 and v[2] > 1e-280 and v[3] > 1e-280:
+                    y = (
+                        -t * (t - 1.0) * (t - 2.0) / 6.0 * math.log(v[0])
+                        + (t + 1.0) * (t - 1.0) * (t - 2.0) / 2.0 * math.log(v[1])
+                        - (t + 1.0) * t * (t - 2.0) / 2.0 * math.log(v[2])
+                        + (t + 1.0) * t * (t - 1.0) / 6.0 * math.log(v[3])
+                    )
+                    r = like * min(math.exp(y), 2.0 * max(v[1], v[2]))
+                else:
+                    r = like * ((1.0 - t) * v[1] + t * v[2])
+                if r > 0.0:
+                    rate[q, j] += r
+                    first[q, j] += r * lm
+
+
+@kernel
+def _density(y, x, sharp):
+    """Density of the outcome y, NaN for none, where the truth is x and the error 1/sharp; 0: nothing is measured."""
+    if not sharp > 0.0:
+        return 1.0 if math.isnan(y) else 0.0
+    if math.isnan(y):
+        return 0.0
+    z = (y - x) * sharp
+    return math.exp(-0.5 * z * z) * sharp / _ROOT if z * z < 2.0 * _FAR else 0.0
+
+
+@kernel
+def judged(weight, x, sharp, y, out):
+    """Add up, for each outcome, the latents that could have given it.
+
+    weight (N, J): rates of one class at N points and J masses; x (3, N, J): ln t_E, pi_E and theta_E there; sharp
+    (3, N, J): inverse errors of the planned measurement of each, 0 where there is none; y (K, 3): outcomes, NaN for
+    not measured. Fills out (K,): the class's rate times the density of the outcome.
+    """
+    N, J = weight.shape
+    for k in range(y.shape[0]):
+        total = 0.0
+        for n in range(N):
+            # t_E is the same for all masses of a point, and so is whether it is measured
+            at_t = _density(y[k, 0], x[0, n, 0], sharp[0, n, 0])
+            if at_t == 0.0:
+                continue
+            part = 0.0
+            for j in range(J):
+                if weight[n, j] > 0.0:
+                    d = _density(y[k, 1], x[1, n, j], sharp[1, n, j])
+                    if d > 0.0:
+                        part += weight[n, j] * d * _density(y[k, 2], x[2, n, j], sharp[2, n, j])
+            total += at_t * part
+        out[k] = total
