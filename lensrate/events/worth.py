@@ -13,7 +13,7 @@ __all__ = ["SURE", "Outcomes", "Worth", "of_source_motion", "of_widths", "unseen
 SURE = 0.95
 _LN_SPAN = 4.0 * np.log(10.0)
 _TINY = 1e-300
-_MEMBERS = 48  # points that stand for an event where its source's motion is planned
+_MEMBERS = 40  # points that stand for an event where its source's motion is planned
 
 
 @dataclass(frozen=True)
@@ -97,18 +97,16 @@ def of_widths(latent, sharp, rng, number=128, dark=None):
     nothing could be measured is an outcome too.
     """
     n = len(latent.classes)
-    x = []
-    for c in range(n):
-        J = latent.weight[c].shape[1]
-        ln_t = np.repeat(np.log(latent.t_E)[:, None], J, axis=1)
-        x.append(np.stack([ln_t, np.repeat(latent.pi_E[:, None], J, axis=1), latent.theta_E[c]]))
+    ln_t = np.log(latent.t_E)
     rows, outcomes = [], {}  # (true class, weight, outcomes, chance of a dark lens) of each stratum
     for c in range(n):
         cells = _pick(latent.weight[c].ravel(), number, rng)
         z = rng.standard_normal((number, 3))
         if cells is None:
             continue
-        value, s = x[c].reshape(3, -1)[:, cells].T, sharp[c].reshape(3, -1)[:, cells].T
+        point = cells // latent.weight[c].shape[1]
+        value = np.column_stack([ln_t[point], latent.pi_E[point], latent.theta_E[c].ravel()[cells]])
+        s = sharp[c].reshape(3, -1)[:, cells].T
         outcomes[c] = np.where(s > 0, value + z / np.where(s > 0, s, 1.0), np.nan)
         unseen = np.ones(number) if dark is None else dark[c].ravel()[cells]
         rows.append((c, latent.weight[c].sum(), outcomes[c], unseen))
@@ -130,7 +128,8 @@ def of_widths(latent, sharp, rng, number=128, dark=None):
         for c in range(n):
             if latent.weight[c].sum() > 0:
                 out = np.empty(len(y))
-                kernels.judged(latent.weight[c] * (1.0 if share is None else share[c]), x[c], sharp[c], y, out)
+                w = latent.weight[c] * (1.0 if share is None else share[c])
+                kernels.judged(w, ln_t, latent.pi_E, latent.theta_E[c], sharp[c], y, out)
                 right[c] += out
         total = right.sum(axis=0)
         posterior[v] = np.where(total > 0, right / np.maximum(total, _TINY), latent.probability[:, None]).T
@@ -253,7 +252,7 @@ def unseen(latent, line, limit):
     ]
 
 
-def of_source_motion(latent, line, error, target, rng, number=24):
+def of_source_motion(latent, line, error, target, rng, number=20):
     """Return the Worth of measuring the source's proper motion to `error` [mas/yr] along each axis.
 
     Outcomes are drawn from all sources of the sightline and weighed: the class rates at what the event may be, given

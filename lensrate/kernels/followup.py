@@ -8,7 +8,7 @@ from ._jit import kernel
 from .odds import _split_gauss
 
 _ROOT = math.sqrt(2.0 * math.pi)
-_FAR = 30.0  # exponents beyond count as nothing
+_FAR = 60.0  # squared distances beyond count as nothing
 
 
 @kernel
@@ -75,37 +75,55 @@ def by_mass(
 
 
 @kernel
-def _density(y, x, sharp):
-    """Density of the outcome y, NaN for none, where the truth is x and the error 1/sharp; 0: nothing is measured."""
-    if not sharp > 0.0:
-        return 1.0 if math.isnan(y) else 0.0
-    if math.isnan(y):
-        return 0.0
-    z = (y - x) * sharp
-    return math.exp(-0.5 * z * z) * sharp / _ROOT if z * z < 2.0 * _FAR else 0.0
-
-
-@kernel
-def judged(weight, x, sharp, y, out):
+def judged(weight, ln_t, pi, theta, sharp, y, out):
     """Add up, for each outcome, the latents that could have given it.
 
-    weight (N, J): rates of one class at N points and J masses; x (3, N, J): ln t_E, pi_E and theta_E there; sharp
-    (3, N, J): inverse errors of the planned measurement of each, 0 where there is none; y (K, 3): outcomes, NaN for
-    not measured. Fills out (K,): the class's rate times the density of the outcome.
+    weight (N, J): rates of one class at N points and J masses; ln_t, pi (N,) and theta (N, J) there; sharp (3, N, J):
+    inverse errors of the planned measurement of each, 0 where there is none, of ln t_E the same for all masses;
+    y (K, 3): outcomes, NaN for not measured. Fills out (K,): the class's rate times the density of the outcome.
     """
     N, J = weight.shape
+    least, some = np.empty(N), np.zeros(N, dtype=np.bool_)
+    for n in range(N):
+        least[n] = math.inf
+        for j in range(J):
+            if weight[n, j] > 0.0:
+                some[n] = True
+                least[n] = min(least[n], sharp[1, n, j])
     for k in range(y.shape[0]):
+        t, p, r = y[k, 0], y[k, 1], y[k, 2]
+        no_t, no_p, no_r = math.isnan(t), math.isnan(p), math.isnan(r)
         total = 0.0
         for n in range(N):
-            # t_E is the same for all masses of a point, and so is whether it is measured
-            at_t = _density(y[k, 0], x[0, n, 0], sharp[0, n, 0])
-            if at_t == 0.0:
+            if not some[n] or (sharp[0, n, 0] > 0.0) == no_t:
                 continue
+            z_t, s_t = 0.0, 1.0
+            if not no_t:
+                s_t = sharp[0, n, 0] / _ROOT
+                z_t = (t - ln_t[n]) * sharp[0, n, 0]
+                z_t *= z_t
+                if z_t > _FAR:
+                    continue
+            off = 0.0
+            if not no_p:
+                off = p - pi[n]
+                if least[n] * abs(off) > 1e-300 and (least[n] * off) ** 2 > _FAR:
+                    continue
             part = 0.0
             for j in range(J):
-                if weight[n, j] > 0.0:
-                    d = _density(y[k, 1], x[1, n, j], sharp[1, n, j])
-                    if d > 0.0:
-                        part += weight[n, j] * d * _density(y[k, 2], x[2, n, j], sharp[2, n, j])
-            total += at_t * part
+                w = weight[n, j]
+                if not w > 0.0 or (sharp[1, n, j] > 0.0) == no_p or (sharp[2, n, j] > 0.0) == no_r:
+                    continue
+                z = z_t
+                if not no_p:
+                    a = off * sharp[1, n, j]
+                    z += a * a
+                    w *= sharp[1, n, j] / _ROOT
+                if not no_r:
+                    a = (r - theta[n, j]) * sharp[2, n, j]
+                    z += a * a
+                    w *= sharp[2, n, j] / _ROOT
+                if z < _FAR:
+                    part += w * math.exp(-0.5 * z)
+            total += s_t * part
         out[k] = total

@@ -1,6 +1,7 @@
 """Follow-up under a time budget, and the kick of one lens."""
 
 import numpy as np
+from matplotlib.ticker import FixedLocator, FuncFormatter, NullLocator
 
 from ..io import PICTURES, check_target
 from .saving import blank, write_figure
@@ -43,14 +44,18 @@ def follow_up(plan, ax=None):
         ax.plot(o.hours, o.per_hour, marker, ms=7, mfc=colour if taken else "white", mec=colour, zorder=3)
         if taken:
             ax.annotate(
-                f"{chosen[e.name].order}: {e.name}", (o.hours, o.per_hour), xytext=(7, 0), textcoords="offset points",
-                fontsize=8, va="center",
+                f"{chosen[e.name].order}: {e.name}", (o.hours, o.per_hour),
+                xytext=(7, 5 if chosen[e.name].order % 2 else -5), textcoords="offset points", fontsize=8, va="center",
             )  # fmt: skip
     for measures in dict.fromkeys(o.measures for _, o in shown):
         colour, marker, text = _OPTIONS[measures]
         ax.plot([], [], marker, mfc="white", mec=colour, ms=7, label=text)
     ax.set_xscale("log")
     ax.set_yscale("log")
+    # plain hours instead of powers of ten
+    ax.xaxis.set_major_locator(FixedLocator([0.5, 1, 2, 3, 5, 10, 20, 50, 100]))
+    ax.xaxis.set_major_formatter(FuncFormatter(lambda x, _: f"{x:g}"))
+    ax.xaxis.set_minor_locator(NullLocator())
     ax.set_xlabel("telescope time of one event  [h]")
     about = f"{_label(plan.target)} or not" if plan.target else "lens class"
     ax.set_ylabel(f"bits on {about} per hour")

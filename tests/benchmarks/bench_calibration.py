@@ -107,7 +107,8 @@ def main(number):
             start = time.perf_counter()
             true, weight, p, classes = mocks(level, number, 1, truth)
             took = time.perf_counter() - start
-            print(f"\ntruth: {truth}; measured: {', '.join(LEVELS[level])}; {true.size} events, {true.size / took:.1f}/s")
+            what = f"measured: {', '.join(LEVELS[level])}"
+            print(f"\ntruth: {truth}; {what}; {true.size} events, {true.size / took:.1f}/s")
             print("  stated       pairs   mean   true share")
             for low, high, n, stated, share, error in reliability(true, weight, p):
                 print(f"  {low:.2f}-{high:.2f}  {n:7d}  {stated:.3f}  {share:.3f} +- {error:.3f}")
@@ -115,7 +116,7 @@ def main(number):
             print(f"  log score {found:.3f} bits, expected {expected:.3f} +- {error:.3f}")
             for name in ("neutron_star", "black_hole"):
                 stated, share, error = top(true, weight, p, classes.index(name), number // 10)
-                print(f"  {number // 10} ranked highest as {name}: stated {stated:.3f}, true {share:.3f} +- {error:.3f}")
+                print(f"  top {number // 10} as {name}: stated {stated:.3f}, true {share:.3f} +- {error:.3f}")
 
 
 if __name__ == "__main__":
