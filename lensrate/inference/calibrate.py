@@ -86,10 +86,8 @@ def calibrate(templates, parameters, n, seed=1, *, nuisances=None, truth=None, p
             field = rng.gamma(w**-2, w**2, F) if w > 0 else field
         data, _ = mock(
             true, probe.part_weights(theta), rng, slope=float(np.clip(nu[3], -0.9, 0.9)), shift=nu[1],
-            stretch=float(np.exp(nu[2])), rate=field * np.exp(nu[0]), **options,
+            stretch=float(np.exp(nu[2])), rate=field * np.exp(nu[0]), seen=templates, **options,
         )  # fmt: skip
-        if truth is not None:
-            data = _seen_by(templates, data)
         found = grid_posterior({"mock": Likelihood(templates, data, parameters, nuisances)}, points=points)
         rows.append(theta)
         shares.append([_share_below(found, i, t) for i, t in enumerate(theta)])
@@ -107,10 +105,3 @@ def _share_below(posterior, i, value):
 def _no_events(templates):
     return made(templates, np.zeros(0, dtype=int), np.zeros(0), np.zeros(0))
 
-
-def _seen_by(templates, data):
-    """The same observed timescales as another scenario's templates value them."""
-    if len(data) and np.ptp(data.weight, axis=1).max() > 0:
-        weight = data.weight if data.weight.shape[1] == len(templates.parts) else None
-        return made(templates, data.field, data.x, data.sigma, weight)
-    return made(templates, data.field, data.x, data.sigma)

@@ -334,7 +334,7 @@ def _parallax_nodes(M, pi, theta):
 
 
 def mock(templates, part_weight, rng, sigma=0.05, slope=0.0, shift=0.0, stretch=1.0, mass_error=0.2, measured=None,
-         rate=None):  # fmt: skip
+         rate=None, seen=None):  # fmt: skip
     """Return the Data of a sample drawn from the templates.
 
     Parameters
@@ -353,6 +353,8 @@ def mock(templates, part_weight, rng, sigma=0.05, slope=0.0, shift=0.0, stretch=
         Probability by class that the mass is measured; the likelihood must be told the same.
     rate : ndarray, shape (F,), optional
         Factor of each field's number.
+    seen : Templates, optional
+        Those of the inference, where another scenario is true.
 
     Returns
     -------
@@ -361,7 +363,6 @@ def mock(templates, part_weight, rng, sigma=0.05, slope=0.0, shift=0.0, stretch=
     """
     from .likelihood import moved, resloped
 
-    R = len(templates.parts)
     rows = templates.rate.copy()
     stellar, factor = resloped(templates, slope)
     rows[:, templates.stellar] = moved(stellar, shift, stretch)
@@ -380,17 +381,18 @@ def mock(templates, part_weight, rng, sigma=0.05, slope=0.0, shift=0.0, stretch=
         fields.append(np.full(n, f))
     field, x, part = np.concatenate(fields), np.concatenate(x), np.concatenate(part)
     lens = np.array([templates.parts[r].lens for r in part])
-    weight = np.ones((x.size, R))
+    target = templates if seen is None else seen
+    weight = np.ones((x.size, len(target.parts)))
     if measured:
-        p = np.array([measured.get(q.lens, 0.0) for q in templates.parts])
-        has = rng.random(x.size) < p[part]
+        p = np.array([measured.get(q.lens, 0.0) for q in target.parts])
+        has = rng.random(x.size) < np.array([measured.get(q.lens, 0.0) for q in templates.parts])[part]
         for i in range(x.size):
             if has[i]:
                 q = templates.parts[part[i]]
                 ln_mass = q.ln_mass + np.hypot(mass_error, q.spread) * rng.standard_normal()
-                weight[i] = p * mass_weight(templates, ln_mass, mass_error)
+                weight[i] = p * mass_weight(target, ln_mass, mass_error)
             else:
                 weight[i] = 1 - p
     error = np.full(x.size, float(sigma))
-    return made(templates, field, x + sigma * rng.standard_normal(x.size), error, weight), lens
+    return made(target, field, x + sigma * rng.standard_normal(x.size), error, weight), lens
 
