@@ -23,7 +23,8 @@ class Worth:
     Attributes
     ----------
     bits, bits_error : float
-        Mutual information between the lens's class and the outcome, its Monte Carlo error.
+        Mutual information between the lens's class and the outcome, and its Monte Carlo error: of the outcomes, and of
+        the points (one over the root of their effective number).
     target_bits, target_error : float
         The same between outcome and whether the lens is of the target class.
     sure, sure_error : float
@@ -210,6 +211,8 @@ def worth(latent, outcomes, target, base=None):
     # by the probabilities themselves: less noisy than counting the few that were wrong
     wrong = float(w @ (outcomes.chance * (surely > SURE) * (1.0 - surely)).sum(axis=0))
     means = [_mean(x, w, outcomes.stratum) for x in (bits, own, top, alarm)]
+    # the points that stand for the event are a sample too
+    means = [(x, float(np.hypot(error, x / np.sqrt(latent.effective)))) for x, error in means]
     return Worth(*(x for pair in means for x in pair), wrong / hit if hit > 0 else np.nan)
 
 

@@ -16,6 +16,7 @@ from lensrate.events.followup_result import EventPlan, Option
 from lensrate.events.latent import latent
 from lensrate.events.observed import Measure, Observed, Solution
 from lensrate.events.odds import event_odds, event_rates
+from lensrate.kernels import followup as kernels
 from lensrate.lensing import rates
 from lensrate.lensing.quadrature import Numerics
 from lensrate.lensing.sampler import Sampler
@@ -83,53 +84,79 @@ def test_points_agree_with_the_deterministic_sums():
         assert what.quantiles(name=what.classes[c]) == pytest.approx(wanted, rel=0.08)
 
 
-def _by_sampling(rows, measured, sigma, classes):
-    """Bits on the class, on black hole or not, chance that it is then sure, share of false ones: events on a grid."""
+MEASURED, SIGMA = {"t_E": (150.0, 30.0), "pi_E": (0.06, 0.012)}, 0.3
+GRID = np.linspace(-1.5, 14.0, 1200)
+
+
+def _sampled(rows, classes):
+    """Joint probability of class and measured theta_E on GRID, of importance-sampled events alone."""
     d = drawn()
     w = d.weight[rows].copy()
-    for name, (value, error) in measured.items():
+    for name, (value, error) in MEASURED.items():
         w *= np.exp(-0.5 * ((getattr(d, name)[rows] - value) / error) ** 2)
-    y = np.linspace(-1.5, 14.0, 1200)
-    joint = np.zeros((len(classes), y.size))
+    joint = np.zeros((len(classes), GRID.size))
     for c in range(len(classes)):
         mine = d.lens_class[rows] == c
         hist, edges = np.histogram(d.theta_E[rows][mine], np.linspace(0, 14, 2801), weights=w[mine])
         middle = 0.5 * (edges[1:] + edges[:-1])
-        joint[c] = np.exp(-0.5 * ((y[:, None] - middle) / sigma) ** 2) @ hist
-    joint /= joint.sum()
-    seen, hole = joint.sum(axis=0), joint[classes.index("black_hole")]
-    own = np.array([hole, seen - hole])
-    alarm = hole > worth.SURE * seen
-    return np.array([
-        entropy(joint.sum(axis=1)) - seen @ entropy(joint / seen),
-        entropy(own.sum(axis=1)) - seen @ entropy(own / seen), seen @ alarm, (seen - hole) @ alarm / (seen @ alarm),
-    ])  # fmt: skip
+        joint[c] = np.exp(-0.5 * ((GRID[:, None] - middle) / SIGMA) ** 2) @ hist
+    return joint / joint.sum()
+
+
+def _batches(measure, classes):
+    """A number from all sampled events, and its error from four parts of them."""
+    parts = [measure(_sampled(slice(k, None, 4), classes)) for k in range(4)]
+    return measure(_sampled(slice(None), classes)), np.std(parts, axis=0, ddof=1) / 2
 
 
 @cache
-def _both():
-    """Worth of a measurement of theta_E, and the same from importance-sampled events with its error."""
-    measured, sigma = {"t_E": (150.0, 25.0), "pi_E": (0.05, 0.02)}, 0.3
-    what = spread(**measured)
-    found = worth.worth(what, worth.of_widths(what, plan(what, sigma), np.random.default_rng(1), 400), "black_hole")
-    parts = [_by_sampling(slice(k, None, 4), measured, sigma, what.classes) for k in range(4)]
-    return found, _by_sampling(slice(None), measured, sigma, what.classes), np.std(parts, axis=0, ddof=1) / 2
+def _found():
+    what = spread(**MEASURED)
+    seen = worth.of_widths(what, plan(what, SIGMA), np.random.default_rng(1), 1600)
+    return what, worth.worth(what, seen, "black_hole")
 
 
 def test_bits_of_theta_E_against_sampled_events():
     """The same information from importance-sampled events: outcomes on a grid, no points and no engine."""
-    found, wanted, error = _both()
-    got = np.array([found.bits, found.target_bits, found.target_sure])
-    own = np.array([found.bits_error, found.target_error, found.target_sure_error])
-    assert wanted[2] > 0.005
-    assert np.all(np.abs(got - wanted[:3]) < 3.5 * np.hypot(own, error[:3]) + 0.03 * wanted[:3]), (got, wanted, error)
-    assert found.false_alarm < 1 - worth.SURE
+    what, found = _found()
+    c = what.classes.index("black_hole")
+
+    def bits(joint):
+        seen = joint.sum(axis=0)
+        own = np.array([joint[c], seen - joint[c]])
+        return np.array([entropy(x.sum(axis=1)) - seen @ entropy(x / seen) for x in (joint, own)])
+
+    wanted, error = _batches(bits, what.classes)
+    got, own = np.array([found.bits, found.target_bits]), np.array([found.bits_error, found.target_error])
+    assert np.all(np.abs(got - wanted) < 3.5 * np.hypot(own, error)), (got, wanted, error)
 
 
-@pytest.mark.xfail(strict=True, reason="0.042-0.044 against 0.026 of sampled events; cause not found")
-def test_false_alarms_against_sampled_events():
-    found, wanted, _ = _both()
-    assert found.false_alarm == pytest.approx(wanted[3], abs=0.005)
+def test_certainty_and_false_alarms_against_sampled_events():
+    """Where the posterior calls a black hole sure, sampled events say how often that is so and how often it is wrong.
+
+    Where sampled events themselves call it sure would be no test: they do where, by chance, they have few stars.
+    """
+    what, found = _found()
+    c = what.classes.index("black_hole")
+    outcome = np.column_stack([np.full((GRID.size, 2), np.nan), GRID])
+    rates_at = np.zeros((len(what.classes), GRID.size))
+    for k, sharp in enumerate(plan(what, SIGMA)):
+        if what.weight[k].sum() > 0:
+            out = np.empty(GRID.size)
+            kernels.judged(what.weight[k], np.log(what.t_E), what.pi_E, what.theta_E[k], sharp, outcome, out)
+            rates_at[k] = out
+    total = rates_at.sum(axis=0)
+    alarm = (rates_at[c] > worth.SURE * total) & (total > 0)
+
+    def chances(joint):
+        seen = joint.sum(axis=0)
+        return np.array([seen @ alarm, (seen - joint[c]) @ alarm / (seen @ alarm)])
+
+    wanted, error = _batches(chances, what.classes)
+    # 0.003: scatter of false alarms between seeds of the points
+    got, own = np.array([found.target_sure, found.false_alarm]), np.array([found.target_sure_error, 0.003])
+    assert wanted[0] > 0.002 and found.false_alarm < 1 - worth.SURE
+    assert np.all(np.abs(got - wanted) < 3.5 * np.hypot(own, error)), (got, wanted, error)
 
 
 @pytest.mark.parametrize("outlier", [0.0, 0.05])
