@@ -16,7 +16,8 @@ _SHOWN = 40  # fields that are listed one by one
 @click.option("--b", "b_range", type=float, nargs=2, metavar="START END", help="First and last latitude.")
 @click.option("--step", type=float, metavar="DEG", help="From pixel to pixel, in l and b.")
 @click.option(
-    "--fields", "field_file", metavar="FILE", help="Instead of a grid: table with name, l, b, or a campaign file."
+    "--fields", "field_file", metavar="FILE",
+    help="Instead of a grid: table with name, l, b, or a campaign, whose sources, dust, stars and u_0 limit then apply."
 )
 @click.option("--icrs", is_flag=True, help="Take columns ra, dec of the fields.")
 @assumptions
@@ -69,7 +70,10 @@ def skymap(
     from ..io import PICTURES, TABLES, check_target, dump_json, write_table
 
     _refuse_idle(field_file, lens, plot)
-    scenario = read_scenario(**choices)
+    settings = _where(l_range, b_range, step, field_file, icrs)
+    fields = settings.pop("fields")
+    survey = None if fields is None else fields.survey
+    scenario = read_scenario(**choices) if survey is None else _scenario_of(survey, choices)
     from ..scenario import resolve
     from ..surveys.skyrecord import known_names
 
@@ -82,8 +86,6 @@ def skymap(
     target = check_target(save, TABLES, overwrite) if save else None
     ranked_target = check_target(save_ranking, TABLES, overwrite, "--save-ranking") if save_ranking else None
     drawn = check_target(plot, PICTURES, overwrite, "--plot") if plot else None
-    settings = _where(l_range, b_range, step, field_file, icrs)
-    fields = settings.pop("fields")
     settings["precise"] = precise
     outlines = _outlines(overlay, icrs)
     if efficiency:
@@ -93,7 +95,7 @@ def skymap(
     announce(quiet)
     beside = target or drawn or ranked_target
     part = None if beside is None else Path(f"{beside}.part")
-    result = _compute(scenario, settings, part, overwrite, jobs, dask, quiet)
+    result = _compute(scenario, survey, settings, part, overwrite, jobs, dask, quiet)
     if result is None:
         return 130
     ranking = None
@@ -120,12 +122,23 @@ def skymap(
         if ranking is not None:
             click.echo("\n" + report_ranking(ranking))
     if not quiet:
-        for rule in fields.sources if fields is not None else ():
-            if rule != scenario.sources:
-                click.echo(wrap(f"note: the campaign's sources are {rule}, the map's {scenario.sources}"), err=True)
         for warning in result.warnings:
             click.echo(wrap(f"note: {warning}"), err=True)
     return 0
+
+
+def _scenario_of(survey, choices):
+    """The campaign's own scenario unless one is named, with what its fields share; what it states is not typed."""
+    from ..surveys.skymap import campaign_scenario
+
+    context = click.get_current_context()
+    for option, key in (("sources", "limit"), ("extinction", "extinction"), ("u_0_limit", "u_0_limit")):
+        if context.get_parameter_source(option).name == "COMMANDLINE":
+            name = option.replace("_", "-")
+            raise click.UsageError(f"--{name}: a campaign states its own; change '{key}' in its file")
+    typed = context.get_parameter_source("scenario_name").name == "COMMANDLINE"
+    name = choices["scenario_name"] if typed else survey.scenario
+    return campaign_scenario(survey, read_scenario(name, choices["kicks"], choices["bh_kicks"]))
 
 
 def _rankable(scenario, field_area, visit_time, cadence):
@@ -186,10 +199,10 @@ def _outlines(overlay, icrs):
     return FieldList.read(overlay, icrs, "--overlay").outlines
 
 
-def _compute(scenario, settings, part, overwrite, jobs, dask, quiet):
+def _compute(scenario, survey, settings, part, overwrite, jobs, dask, quiet):
     """Run the map; None if it was interrupted."""
     from ..parallel import cluster
-    from ..surveys.skymap import count, seconds
+    from ..surveys.skymap import campaign_skymap, count, seconds
     from ..surveys.skymap import skymap as run
     from .progress import Progress, duration
 
@@ -200,10 +213,14 @@ def _compute(scenario, settings, part, overwrite, jobs, dask, quiet):
         click.echo(f"{text} of one thread" if dask else f"{text} on {jobs} thread{'s' * (jobs > 1)}", err=True)
     try:
         with cluster(dask) as executor, Progress("skymap", quiet) as progress:
-            return run(
-                scenario=scenario, jobs=jobs, executor=executor, progress=progress, checkpoint=part,
-                restart=overwrite, **settings,
-            )  # fmt: skip
+            running = {
+                "scenario": scenario, "jobs": jobs, "executor": executor, "progress": progress, "checkpoint": part,
+                "restart": overwrite,
+            }  # fmt: skip
+            if survey is not None:
+                kept = {k: v for k, v in settings.items() if k in ("efficiency", "precise")}
+                return campaign_skymap(survey, **running, **kept)
+            return run(**running, **settings)
     except KeyboardInterrupt:
         kept = "nothing was kept, since no file is written"
         if part is not None:
@@ -220,8 +237,9 @@ def _ranked(result, lens, top, field_area, visit_time, cadence, per, fields):
     area = None if field_area is None else field_area * u.deg**2
     visit = None if visit_time is None else visit_time * u.s
     if fields is not None:
-        # what is typed goes before what the list says
-        area, visit = (fields.area if area is None else area), (fields.visit if visit is None else visit)
+        # what is typed goes before what the list says; of a campaign the map itself knows the area that counts
+        listed = None if fields.survey is not None else fields.area
+        area, visit = (listed if area is None else area), (fields.visit if visit is None else visit)
     return rank(result, lens, top=top, area=area, visit=visit, cadence=cadence * u.day, per=per)
 
 

@@ -19,7 +19,8 @@ from ..parallel import run_map
 from ..sources.rules import LimitRule, PeakRule
 from ..surveys.efficiency import Efficiency
 from ..surveys.sky import Circle, Patch, to_plane
-from ..surveys.yields import campaign, magnitude_share
+from ..surveys.stars import magnitude_share
+from ..surveys.yields import campaign
 from ..units import DAYS_PER_YEAR
 
 __all__ = ["LN_T", "STEP", "Errors", "Folded", "assign", "fold_campaign", "fold_groups", "grouped", "heliocentric"]

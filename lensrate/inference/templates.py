@@ -12,7 +12,7 @@ from ..errors import InputError
 from ..events.fold import STEP, on_cells, on_grid
 from ..lensing import distributions
 from ..remnants.classes import MassSpectrum
-from ..surveys.yields import magnitude_share
+from ..surveys.stars import magnitude_share
 from ..units import DAYS_PER_YEAR
 
 __all__ = ["DARK", "SLOPES", "STELLAR", "Part", "Templates"]

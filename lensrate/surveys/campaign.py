@@ -57,7 +57,7 @@ class Campaign:
     luminosity: str = ""
     overlaps: str = "refuse"
     text: str = ""
-    files: tuple = ()
+    files: tuple = ()  # every file that its text names, in the order of the keys
 
     @classmethod
     def read(cls, path):
@@ -114,18 +114,23 @@ class Campaign:
         if twice:
             raise InputError(f"campaign.field: the name '{twice[0]}' is given to two fields")
         photometry = Photometry.from_dict(table["photometry"], where) if "photometry" in table else Photometry()
-        efficiency, files = _efficiency(table.get("efficiency"), where, float(u_0))
-        luminosity = table.get("luminosity", "")
-        if luminosity:
-            luminosity = str(locate(luminosity, where))
-            files = (*files, luminosity)
-        scenario = table.get("scenario", "default")
-        if isinstance(scenario, str) and scenario.endswith(".toml"):
+        efficiency, curve = _efficiency(table.get("efficiency"), where, float(u_0))
+        luminosity, scenario = table.get("luminosity", ""), table.get("scenario", "default")
+        for key, value in (("luminosity", luminosity), ("scenario", scenario)):
+            if not isinstance(value, str):
+                raise InputError(f"campaign.{key}: {value!r} given, must be text")
+        luminosity = str(locate(luminosity, where)) if luminosity else ""
+        if scenario.endswith(".toml"):
             scenario = str(locate(scenario, where))
+        files = [curve, photometry.file, luminosity, scenario if scenario.endswith(".toml") else ""]
+        files = [name for name in (*files, *(f.extinction_map for f in fields)) if name]
+        for name in files:
+            if not Path(name).is_file():
+                raise InputError(f"campaign: no such file '{name}'; files are looked for beside the campaign's own")
         out = cls(
             str(table.get("name") or Path(where).stem), fields, Calendar(seasons), photometry, efficiency, float(u_0),
             scenario, luminosity, one_of("campaign.overlaps", table.get("overlaps", "refuse"), _OVERLAPS),
-            text or json.dumps(table, default=str), (*files, *(f.extinction_map for f in fields if f.extinction_map)),
+            text or json.dumps(table, default=str), tuple(files),
         )  # fmt: skip
         out._check_together()
         return out
@@ -208,7 +213,8 @@ class Campaign:
         """First 12 digits of the sha256 of the file and of every file that it names."""
         h = hashlib.sha256(self.text.encode())
         for name in self.files:
-            h.update(Path(name).read_bytes())
+            # one after the other, each whole: moving a line from one file to the next is another campaign
+            h.update(hashlib.sha256(Path(name).read_bytes()).digest())
         return h.hexdigest()[:12]
 
     def header(self):
@@ -236,8 +242,8 @@ class _Union:
 
 def _efficiency(table, where, u_0):
     if table is None:
-        return Efficiency.complete(u_0), ()
+        return Efficiency.complete(u_0), ""
     check_keys("efficiency", table, ("file", "per", "includes", "u_0_limit", "source_limit"), ("file",))
     path = locate(str(table["file"]), where)
     stated = {k: v for k, v in table.items() if k != "file"}
-    return Efficiency.read(path, **stated), (str(path),)
+    return Efficiency.read(path, **stated), str(path)

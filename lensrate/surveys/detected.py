@@ -75,7 +75,7 @@ def detected_events(forecast, n=20_000, seed=1, jobs=1):
         draws = Sampler.of(f.sightline).draw(n, children[i], tilt="equal")
         curve = forecast.campaign.efficiency.up_to(forecast.campaign.u_0_limit)
         if curve.second == "I_S":
-            from .yields import magnitude_share
+            from .stars import magnitude_share
 
             curve = curve.averaged(magnitude_share(f.sightline._integrals.ready))
         weight = draws.weight * curve.of(draws.t_E)

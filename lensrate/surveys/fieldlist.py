@@ -6,6 +6,7 @@ from pathlib import Path
 import astropy.units as u
 import numpy as np
 
+from ..datafiles import names as shipped
 from ..errors import InputError
 from ..io import read_rows
 from ..lensing.many import directions_of
@@ -33,8 +34,8 @@ class FieldList:
         Time of a visit.
     outlines : list of (str, ndarray (m, 2))
         Name and corners (l, b) [deg]; one point for a field without a size.
-    sources : tuple of str
-        Source rules that a campaign states; empty for a table.
+    survey : Campaign or None
+        Where the fields are those of a campaign, which states more of them; see `skymap.campaign_skymap`.
     """
 
     l: u.Quantity
@@ -44,11 +45,11 @@ class FieldList:
     area: u.Quantity | None
     visit: u.Quantity | None
     outlines: list
-    sources: tuple = ()
+    survey: object = None
 
     @classmethod
     def read(cls, path, icrs=False, what="--fields"):
-        """Read a table, or a campaign file ending in ``.toml``.
+        """Read a table, or a campaign: a file ending in ``.toml``, or a shipped name.
 
         Parameters
         ----------
@@ -69,7 +70,7 @@ class FieldList:
         InputError
             The file cannot be read, or a row cannot be used.
         """
-        if Path(path).suffix.lower() == ".toml":
+        if Path(path).suffix.lower() == ".toml" or str(path) in shipped("campaigns"):
             return cls._campaign(path)
         table = read_rows(path, what)
         l, b, extinction, carried = directions_of(table, icrs)
@@ -96,11 +97,12 @@ class FieldList:
     def _campaign(cls, path):
         from .campaign import Campaign
 
-        fields = Campaign.read(path).fields
+        survey = Campaign.read(path)
+        fields = survey.fields
         l, b = (np.array([getattr(f, k) for f in fields]) * u.deg for k in ("l_deg", "b_deg"))
         extinction = [dict(f.extinction) for f in fields]
         made = cls._make(l, b, [f.name for f in fields], extinction, [f.shape for f in fields], None)
-        return replace(made, sources=tuple(dict.fromkeys(f.sources for f in fields)))
+        return replace(made, survey=survey)
 
     @classmethod
     def _make(cls, l, b, names, extinction, shapes, visit):

@@ -154,7 +154,7 @@ def kick_yield(forecast, lens="neutron_star"):
         t, pdf, _ = distributions.timescales(integrals.grid, integrals.unit, masses, False)
         curve = forecast.campaign.efficiency.up_to(forecast.campaign.u_0_limit)
         if curve.second == "I_S":
-            from .yields import magnitude_share
+            from .stars import magnitude_share
 
             curve = curve.averaged(magnitude_share(integrals.ready))
         mean = np.array([curve.mean(t, part)[0] for part in pdf])

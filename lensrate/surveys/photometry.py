@@ -13,6 +13,8 @@ from .efficiency import locate
 
 __all__ = ["Photometry", "positive"]
 
+_NO_ERROR = 1.0  # mag; an error larger than this is taken for one in mmag
+
 
 @dataclass(frozen=True, eq=False)
 class Photometry:
@@ -28,6 +30,8 @@ class Photometry:
         Error of one epoch against magnitude [mag]; empty where the campaign does not say.
     floor : float
         Systematic error added in quadrature [mag].
+    file : str
+        Where the errors were read from; empty where the campaign does not say.
     """
 
     band: str = "I"
@@ -35,6 +39,7 @@ class Photometry:
     magnitude: np.ndarray = field(default_factory=lambda: np.zeros(0))
     sigma: np.ndarray = field(default_factory=lambda: np.zeros(0))
     floor: float = 0.0
+    file: str = ""
 
     @classmethod
     def from_dict(cls, table, beside):
@@ -58,15 +63,28 @@ class Photometry:
             raise InputError(
                 f"{where}.precision: {table['precision']!r} given, must name a file with columns mag, sigma"
             )
-        rows = read_rows(locate(table["precision"], beside), f"{where}.precision")
-        for name in ("mag", "sigma"):
+        path = locate(table["precision"], beside)
+        rows = read_rows(path, f"{where}.precision")
+        sigma_name = "sigma_mmag" if "sigma_mmag" in rows.colnames else "sigma"
+        for name in ("mag", sigma_name):
             if name not in rows.colnames:
-                raise InputError(f"{where}.precision: no column '{name}' (columns: {', '.join(rows.colnames)})")
+                raise InputError(
+                    f"{where}.precision: no column '{name}' (columns: {', '.join(rows.colnames)}; needed: mag and "
+                    "sigma, or sigma_mmag)"
+                )
+        if {"sigma", "sigma_mmag"} <= set(rows.colnames):
+            raise InputError(f"{where}.precision: columns sigma and sigma_mmag are both there; keep one")
+        unit = u.mmag if sigma_name == "sigma_mmag" else u.mag
         try:
-            magnitude, sigma = (np.asarray(u.Quantity(rows[c], rows[c].unit or u.mag).to_value(u.mag), dtype=float)
-                                for c in ("mag", "sigma"))  # fmt: skip
+            magnitude, sigma = (np.asarray(u.Quantity(rows[c], rows[c].unit or v).to_value(u.mag), dtype=float)
+                                for c, v in (("mag", u.mag), (sigma_name, unit)))  # fmt: skip
         except (TypeError, ValueError, u.UnitConversionError):
-            raise InputError(f"{where}.precision: columns mag and sigma must hold magnitudes") from None
+            raise InputError(f"{where}.precision: columns mag and {sigma_name} must hold magnitudes") from None
+        if rows[sigma_name].unit is None and unit == u.mag and np.any(sigma > _NO_ERROR):
+            raise InputError(
+                f"{where}.precision: column sigma reaches {np.nanmax(sigma):g} without a unit, and in mag that is no "
+                "measurement; name the column sigma_mmag if these are millimagnitudes, or state unit: mag in its header"
+            )
         bad = ~(np.isfinite(magnitude) & np.isfinite(sigma) & (sigma > 0))
         bad[1:] |= np.diff(magnitude) <= 0
         if bad.any():
@@ -75,7 +93,7 @@ class Photometry:
                 f"{where}.precision: row {i + 1}: mag {magnitude[i]:g}, sigma {sigma[i]:g}; "
                 "magnitudes must rise and errors be above 0"
             )
-        return cls(table["band"], cadence, magnitude, sigma, float(floor))
+        return cls(table["band"], cadence, magnitude, sigma, float(floor), str(path))
 
     def error(self, magnitude):
         """Return the error of one epoch [mag]; infinite beyond the faint end, as at the bright end before it."""

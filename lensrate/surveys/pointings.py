@@ -34,7 +34,8 @@ def rank(
     top : int
         Pointings wanted; fewer where the map holds no more.
     area : Quantity, optional
-        Of the camera [deg2], one or, for a list, one for each field; 1 deg2 if not given.
+        Of the camera [deg2], one or, for a list, one for each field; if not given that of a campaign's fields, else
+        1 deg2.
     visit : Quantity, optional
         Time of one visit with its overheads, one or, for a list, one for each field. Without it the order is that of
         events per field and year.
@@ -69,7 +70,9 @@ def rank(
     if isinstance(top, bool) or not isinstance(top, (int, np.integer)) or top < 1:
         raise InputError(f"top: {top!r} given, a whole number from 1 up is needed")
     n, grid = skymap.size, skymap.grid
-    A = _positive("area", 1.0 * u.deg**2 if area is None else area, u.deg**2, n, grid)
+    if area is None:
+        area = (1.0 if skymap.area_deg2 is None else skymap.area_deg2) * u.deg**2
+    A = _positive("area", area, u.deg**2, n, grid)
     w = _weights(weight, skymap)
     detected = skymap.detected is not None
     density = skymap.per_deg2(lens, detected) * w

@@ -1,5 +1,7 @@
 """Maps of optical depth, rates and sources over a grid of Galactic coordinates or a list of fields."""
 
+from dataclasses import replace
+
 import astropy.units as u
 import numpy as np
 
@@ -10,11 +12,14 @@ from ..parallel import run_map
 from ..scenario import Scenario, resolve
 from ..units import check_range, strip
 from . import mapfiles
+from .campaign import Campaign
+from .dust_map import DustMap
 from .pixels import PixelWork
 from .skygrid import MOST_PIXELS, SkyGrid
 from .skyrecord import SkyMap
+from .stars import field_scenario, field_stars
 
-__all__ = ["SkyMap", "count", "seconds", "skymap"]
+__all__ = ["SkyMap", "campaign_scenario", "campaign_skymap", "count", "seconds", "skymap"]
 
 #: seconds of one core a pixel without fields, with fields, with a sightline's integrals, and more for an efficiency
 _COST = {"stellar": 0.07, "kicked": 0.17, "precise": 1.2, "efficiency": 4.0}
@@ -89,6 +94,73 @@ def skymap(
     finally:
         part.close()
     return _gather(grid, l, b, tuple(map(str, names)), scenario, model, pixels, efficiency, notes)
+
+
+def campaign_skymap(survey, scenario=None, **options):
+    """Map the fields of a campaign as the campaign sees them.
+
+    Parameters
+    ----------
+    survey : Campaign or str
+        A file or shipped name is read. Its source rule, u_0 limit, luminosity function, extinction (maps too) and
+        stated stars enter; the efficiency does not, unless it is given.
+    scenario : Scenario or str, optional
+        Other assumptions; default those that the campaign names.
+    **options
+        Of `skymap`: efficiency, precise, jobs, executor, progress, checkpoint, restart.
+
+    Returns
+    -------
+    SkyMap
+        Rates per star are those of the field's centre; per area, its own sources and the mean rate over it count.
+
+    Raises
+    ------
+    InputError
+        Fields with different source rules, which make no one map; else as `skymap`.
+    """
+    if not isinstance(survey, Campaign):
+        survey = Campaign.read(survey)
+    base = survey.scenario if scenario is None else scenario
+    base = base if isinstance(base, Scenario) else Scenario.read(base)
+    fields = survey.fields
+    shared = campaign_scenario(survey, base)
+    dust = [DustMap.read(f.extinction_map) if f.extinction_map else None for f in fields]
+    own = [field_scenario(base, survey, f, d) for f, d in zip(fields, dust)]
+    stars = [field_stars(survey, i, *pair) for i, pair in enumerate(zip(own, dust))]
+    made = skymap(
+        np.array([f.l_deg for f in fields]) * u.deg, np.array([f.b_deg for f in fields]) * u.deg, shared,
+        names=[f.name for f in fields], extinction=[s.extinction for s in own], **options,
+    )  # fmt: skip
+    notes = made.warnings
+    if made.detected is None and survey.efficiency.name != "complete":
+        notes = ("rates are those of all events, without the campaign's efficiency", *notes)
+    return replace(
+        made,
+        source_density=np.array([s.density for s in stars]),
+        rate_factor=np.array([s.rate_factor for s in stars]),
+        area_deg2=np.array([s.area_deg2 for s in stars]),
+        campaign={"campaign": survey.name, "campaign_hash": survey.hash, "campaign_text": survey.text},
+        warnings=notes,
+    )
+
+
+def campaign_scenario(survey, base):
+    """Return a scenario with what all fields of a campaign share: source rule, u_0 limit, luminosity function.
+
+    Raises
+    ------
+    InputError
+        The fields' source rules differ.
+    """
+    rules = list(dict.fromkeys(f.sources for f in survey.fields))
+    if len(rules) > 1:
+        raise InputError(
+            f"campaign '{survey.name}': its fields have sources {', '.join(rules)}, and a map has one rule; put the "
+            "fields of each rule into a file of their own"
+        )
+    changes = {"sources": rules[0], "u_0_limit": survey.u_0_limit}
+    return base.replace(**changes, **({"luminosity": survey.luminosity} if survey.luminosity else {}))
 
 
 def count(l, b, step=None):

@@ -27,6 +27,7 @@ def known_names(classes, scenario):
     return [
         *by_class,
         "source_density",
+        "rate_factor",
         "mean_source_distance",
         f"A_{getattr(parse_rule(scenario.sources), 'band', 'I')}",
     ]
@@ -72,6 +73,10 @@ class SkyMap:
     extinction_band : str
     efficiency : str
         Its statements in a line, empty without one.
+    rate_factor, area_deg2 : ndarray, shape (n,), or None
+        Of a campaign's fields: mean rate over the field against its centre's, and the area that counts.
+    campaign : dict or None
+        Name, hash and text of the campaign.
     warnings, references : tuple of str
     """
 
@@ -92,6 +97,9 @@ class SkyMap:
     efficiency: str = ""
     kinematics: dict | None = None
     fields: dict | None = None
+    rate_factor: np.ndarray | None = None
+    area_deg2: np.ndarray | None = None
+    campaign: dict | None = None
     warnings: tuple = ()
     references: tuple = ()
     frame: str = "heliocentric"
@@ -141,6 +149,8 @@ class SkyMap:
             raise InputError("efficiency: none was given; add --efficiency FILE")
         rate = (self.detected if detected else self.rate)[self._number(name)]
         density = self.source_density * _ARCMIN2_PER_DEG2
+        if self.rate_factor is not None:
+            rate = rate * self.rate_factor
         # no stars, no events, although a rate per star has no meaning there
         return np.where(density == 0, 0.0, rate * density)
 
@@ -181,6 +191,8 @@ class SkyMap:
         if counts:
             text = f"source stars, {self.scenario.sources}"
             add("source_density", self.source_density, 1 / u.arcmin**2, text)
+        if self.rate_factor is not None:
+            add("rate_factor", self.rate_factor, "", "source-weighted mean rate over the field against its centre's")
         add("mean_source_distance", self.mean_source_distance, "kpc", "mean distance of the sources")
         if self.extinction_band:
             text = f"extinction used in {self.extinction_band}, at the distance of the Galactic centre"
@@ -204,6 +216,8 @@ class SkyMap:
         """Return the line that stands above every table."""
         dust = f"A_{self.extinction_band} by pixel" if self.extinction_band else "no dust used"
         end = f"; {self.efficiency}" if self.efficiency else "; no efficiency"
+        if self.campaign is not None:
+            end += f"; stars and areas of campaign {self.campaign['campaign']}"
         return f"sources {self.scenario.sources} ({dust}); u_0 < {self.scenario.u_0_limit:g}; {self.frame}{end}"
 
     def meta(self):
@@ -218,6 +232,7 @@ class SkyMap:
             "version": self.version,
             "header": self.header(),
             "grid": None if self.grid is None else vars(self.grid),
+            **(self.campaign or {}),
             **self.scenario.made(),
             "seed": None,
             "fields": self.fields,

@@ -1,22 +1,19 @@
 """Expected events of a campaign: by field, class and season, absolute and scaled to what was observed."""
 
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, field
 
 import astropy.units as u
 import numpy as np
 from scipy.stats import poisson
 
 from .._version import __version__
-from ..errors import InputError
-from ..lensing import rates
 from ..lensing.sightline import sightline
 from ..parallel import run_map
-from ..scenario import Scenario, resolve
-from ..scenario.numerics import Numerics
-from ..sources.rules import LimitRule, parse_rule
+from ..scenario import Scenario
 from ..units import DAYS_PER_YEAR
 from .campaign import Campaign
 from .dust_map import DustMap
+from .stars import field_scenario, field_stars, magnitude_share
 
 __all__ = [
     "CampaignForecast",
@@ -24,8 +21,6 @@ __all__ = [
     "assembled",
     "campaign",
     "campaign_warnings",
-    "field_scenario",
-    "magnitude_share",
 ]
 
 _OUTSIDE = 0.01  # share of a class's events beyond the efficiency curve that is worth a word
@@ -250,16 +245,6 @@ def poisson_68(mean):
     return int(poisson.ppf(_ONE_SIGMA, mean)), int(poisson.ppf(1 - _ONE_SIGMA, mean))
 
 
-def field_scenario(base, survey, f):
-    """Return the scenario of one field: its source rule, extinction and the campaign's u_0 limit laid over a base."""
-    changes = {"sources": f.sources, "u_0_limit": survey.u_0_limit}
-    if f.extinction:
-        changes["extinction"] = f.extinction
-    if survey.luminosity:
-        changes["luminosity"] = survey.luminosity
-    return base.replace(**changes)
-
-
 def campaign(survey, scenario=None, *, family=None, exact=False, jobs=1, executor=None, progress=None):
     """Forecast the events of a campaign.
 
@@ -317,20 +302,10 @@ def campaign(survey, scenario=None, *, family=None, exact=False, jobs=1, executo
 
 def _field(survey, base, i, dust):
     f = survey.fields[i]
-    mine = field_scenario(base, survey, f)
-    if dust is not None:
-        rule = parse_rule(f.sources)
-        mine = mine.replace(extinction={rule.band: dust.mean(f)})
+    mine = field_scenario(base, survey, f, dust)
     centre = sightline(f.l_deg * u.deg, f.b_deg * u.deg, mine)
-    density, factor = _over_field(f, mine, centre, dust)
-    area = f.area_deg2 * 3600.0 * survey.kept_share(i)
-    if f.monitored_stars is not None:
-        number, counted = f.monitored_stars * survey.kept_share(i), "stated"
-    elif f.star_density is not None:
-        number, counted = f.star_density * area, "stated"
-    else:
-        number, counted = density * area, "source model"
-    return assembled(survey, f, centre, number, counted, factor)
+    stars = field_stars(survey, i, mine, dust)
+    return assembled(survey, f, centre, stars.number, stars.counted, stars.rate_factor)
 
 
 def assembled(survey, f, centre, number, counted, factor):
@@ -355,67 +330,6 @@ def assembled(survey, f, centre, number, counted, factor):
         expected,
         number * error * mean * years.sum(),
     )
-
-
-def _over_field(f, scenario, centre, dust):
-    """Mean source density [1/arcmin2] over a field, and source-weighted mean rate against the centre's.
-
-    Only the stars' own rate is followed over the field: remnants' kicked fields vary more slowly.
-    """
-    ready = centre._integrals.ready
-    if not ready.sources.counts_stars:
-        return np.nan, 1.0
-    l, b, w = f.directions()
-    model, numerics = resolve(scenario), Numerics(**scenario.numerics)
-    roots = np.array([0.0 if p is None else p.spectra["star"].moment(0.5) for p in model.populations])
-
-    def at(local, l, b):
-        """Source density, and the stars' rate."""
-        direction = np.radians([l, b])
-        toward = local.sources.toward(*direction, local.galaxy)
-        line = rates.prepare(local, local.galaxy.sightline(*direction), toward, numerics)
-        return line.per_arcmin2(), float(roots @ rates.moments(line)[1].sum(axis=1))
-
-    def mean(points, w):
-        """Mean density, and mean rate of all sources, both over those of the centre."""
-        density, rate = np.array(points).T
-        whole = w @ density
-        return whole / middle[0], w @ (density * rate) / whole / middle[1]
-
-    middle = at(model, f.l_deg, f.b_deg)
-    density, factor = (1.0, 1.0) if l.size == 1 else mean([at(model, *point) for point in zip(l, b)], w)
-    if dust is not None:
-        # patches of dust are taken to know nothing of the gradient over the field
-        band, values = parse_rule(f.sources).band, dust.patches(f)
-        points = [at(resolve(scenario.replace(extinction={band: float(a)})), f.l_deg, f.b_deg) for a in values]
-        patchy = mean(points, np.full(values.size, 1.0 / values.size))
-        density, factor = density * patchy[0], factor * patchy[1]
-    return float(middle[0] * density), float(factor)
-
-
-def magnitude_share(ready):
-    """Return a function: share of a sightline's sources brighter than apparent magnitudes.
-
-    Raises
-    ------
-    InputError
-        The source rule says nothing of magnitudes.
-    """
-    rule = ready.sources.rule
-    if not isinstance(rule, LimitRule) or rule.band != "I":
-        raise InputError(f"efficiency: one that depends on I_S needs sources with a limit like I=21, not '{rule.text}'")
-    D, weight = ready.D_S, ready.src[0]
-    whole = ready.sources.per_msun(D)
-
-    def share(magnitude):
-        out = []
-        for m in np.atleast_1d(magnitude):
-            brighter = replace(ready.sources, rule=replace(rule, magnitude=float(min(m, rule.magnitude))))
-            part = brighter.per_msun(D)
-            out.append(np.sum(weight * np.divide(part, whole, out=np.zeros_like(part), where=whole > 0)))
-        return np.array(out)
-
-    return share
 
 
 def campaign_warnings(survey, rows, classes):

@@ -82,9 +82,13 @@ def test_fields(tmp_path):
     # the invented campaign's fields, drawn over a map of themselves
     marram = lensrate.datafiles.data_folder() / "campaigns" / "marram.toml"
     target = ["--save", tmp_path / "f.fits", "--plot", tmp_path / "f.svg", "--picture", "rate_black_hole"]
-    code, out, err = run("skymap", "--fields", marram, *QUICK, *target, "--overlay", marram)
-    assert code == 0 and "the campaign's sources are limit:I=21" in err, err
-    assert "M01" in list(QTable.read(tmp_path / "f.fits")["name"])
+    code, out, err = run("skymap", "--fields", "marram", *QUICK[:4], *target, "--overlay", marram)
+    assert code == 0 and "without the campaign's efficiency" in err, err
+    table = QTable.read(tmp_path / "f.fits")
+    stars = table["source_density"][0].value * np.pi * 0.6**2 * 3600
+    assert table["name"][0] == "M01" and stars == pytest.approx(7.6e6, rel=1e-4)
+    code, _, err = run("skymap", "--fields", "marram", *QUICK)
+    assert code == 2 and "a campaign states its own" in err
 
 
 @pytest.mark.parametrize(

@@ -327,13 +327,94 @@ def test_a_map_of_extinction_counts_stars_patch_by_patch(tmp_path):
 
 
 def test_a_luminosity_function_of_the_users_own_sets_the_counts(tmp_path):
-    magnitude = np.arange(-3.0, 12.1, 0.5)
     for name, factor in (("one.ecsv", 1.0), ("two.ecsv", 2.0)):
-        table = Table({"magnitude": magnitude, "cumulative": factor * 10 ** (0.2 * (magnitude - 6.0))})
-        table.meta["band"] = "I"
-        table.write(tmp_path / name, format="ascii.ecsv")
+        luminosity(tmp_path / name, factor)
     made = [
         campaign(Campaign.from_dict({**plain(monitored_stars=None), "luminosity": name}, tmp_path / "c.toml"), UNKICKED)
         for name in ("one.ecsv", "two.ecsv")
     ]
     assert made[1].fields[0].sources == pytest.approx(2 * made[0].fields[0].sources, rel=1e-6)
+
+
+def write_curve(path, value):
+    curve = Table({"t_E": [1e-5, 1e6], "efficiency": [value, value]})
+    curve.meta = {"per": "source", "includes": []}
+    curve.write(path, format="ascii.ecsv", overwrite=True)
+
+
+def luminosity(path, factor=1.0):
+    magnitude = np.arange(-3.0, 12.1, 0.5)
+    table = Table({"magnitude": magnitude, "cumulative": factor * 10 ** (0.2 * (magnitude - 6.0))})
+    table.meta["band"] = "I"
+    table.write(path, format="ascii.ecsv", overwrite=True)
+
+
+def test_the_hash_holds_every_file_that_is_read(tmp_path):
+    write_curve(tmp_path / "curve.ecsv", 0.5)
+    luminosity(tmp_path / "stars.ecsv")
+    (tmp_path / "precision.csv").write_text("mag,sigma\n14,0.003\n20,0.1\n")
+    (tmp_path / "mine.toml").write_text('base = "default"\nkicks = "none"\n')
+    dust_image(tmp_path / "dust.fits", 1.2, 1.2)
+    table = plain(extinction=None, sky_map_of_extinction="dust.fits")
+    table |= {"efficiency": {"file": "curve.ecsv"}, "luminosity": "stars.ecsv", "scenario": "mine.toml"}
+    table["photometry"] = {"band": "I", "cadence_d": 1.0, "precision": "precision.csv"}
+
+    def read():
+        return Campaign.from_dict(table, tmp_path / "c.toml")
+
+    seen = [read().hash]
+    assert read().hash == seen[0] and len(read().files) == 5
+    for name in ("curve.ecsv", "stars.ecsv", "precision.csv", "mine.toml", "dust.fits"):
+        path = tmp_path / name
+        path.write_bytes(path.read_bytes().replace(b"0.5", b"0.6") + b"\n")
+        seen.append(read().hash)
+    assert len(set(seen)) == 6
+    path.unlink()
+    with pytest.raises(InputError, match="no such file"):
+        read()
+
+
+def test_a_map_of_a_campaigns_fields_is_the_campaign(tmp_path):
+    from lensrate.surveys.pointings import rank
+    from lensrate.surveys.skymap import campaign_skymap
+
+    luminosity(tmp_path / "stars.ecsv", 1e-3)
+    dust_image(tmp_path / "dust.fits", 0.6, 2.0)
+    table = plain(area_deg2=None, width_deg=0.6, height_deg=0.6, monitored_stars=None, extinction=None,
+                  sky_map_of_extinction="dust.fits")  # fmt: skip
+    first = table["field"][0]
+    plainer = {k: v for k, v in first.items() if k != "sky_map_of_extinction"}
+    table["field"] += [
+        {**first, "name": "B", "l": 1.3},
+        {**plainer, "name": "C", "b": -6.0, "extinction": {"I": 0.5}, "monitored_stars": 3e5},
+        {**plainer, "name": "D", "b": -8.0, "width_deg": 3.0, "star_density_per_arcmin2": 20.0},
+    ]
+    table |= {"u_0_limit": 0.5, "luminosity": "stars.ecsv", "overlaps": "count_once"}
+    survey = Campaign.from_dict(table, tmp_path / "c.toml")
+    own = campaign(survey, UNKICKED)
+    seen = campaign_skymap(survey, UNKICKED, precise=True)
+    for i, f in enumerate(own.fields):
+        for c, name in enumerate(own.classes):
+            lens = f.sightline.lenses[name]
+            assert seen.rate[c, i] == pytest.approx(lens.rate, rel=1e-12)
+            assert seen.optical_depth[c, i] == pytest.approx(lens.optical_depth, rel=1e-12)
+        assert seen.source_density[i] * seen.area_deg2[i] * 3600 == pytest.approx(f.sources, rel=1e-12)
+    assert seen.rate_factor[3] != 1.0 and seen.area_deg2[1] < seen.area_deg2[0]
+    ranked = {row["name"]: row["events_per_field_yr"].value for row in rank(seen, "star")}
+    for f in own.fields:
+        assert ranked[f.field.name] == pytest.approx(f.expected[0].sum() / (365 / 365.25), rel=1e-9)
+    table["field"][2]["limit"] = "I=19"
+    with pytest.raises(InputError, match="one rule"):
+        campaign_skymap(Campaign.from_dict(table, tmp_path / "c.toml"), UNKICKED)
+
+
+def test_precision_in_millimagnitudes_is_noticed_or_declared(tmp_path):
+    def error(text):
+        (tmp_path / "p.csv").write_text(text)
+        table = {**plain(), "photometry": {"band": "I", "cadence_d": 1.0, "precision": "p.csv"}}
+        return Campaign.from_dict(table, tmp_path / "c.toml").photometry.error(20.0)
+
+    assert error("mag,sigma\n14,0.003\n20,0.1\n") == pytest.approx(0.1)
+    assert error("mag,sigma_mmag\n14,3\n20,100\n") == pytest.approx(0.1)
+    with pytest.raises(InputError, match="sigma_mmag"):
+        error("mag,sigma\n14,3\n20,100\n")
