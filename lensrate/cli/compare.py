@@ -22,6 +22,7 @@ _NAMES = {
               help="Kick law of neutron stars instead of the scenario's; may be repeated: side by side.")
 @click.option("--bh-kicks", metavar="LAW", help="Kick law of black holes: same, momentum, or a law.")
 @click.option("--sources", metavar="RULE", help="Source rule where there is no campaign.")
+@click.option("--u-0-limit", type=float, metavar="U", help="Largest impact parameter where there is no campaign.")
 @click.option("--efficiency", "efficiency_file", metavar="FILE",
               help="t_E, efficiency, where there is no campaign; without one every event counts as found.")
 @click.option("--counts", default="auto", show_default=True, metavar="auto|absolute|shape",
@@ -43,8 +44,8 @@ _NAMES = {
 @click.option("--overwrite", is_flag=True, help="Replace existing files.")
 @click.option("--quiet", "-q", is_flag=True, help="No messages on stderr.")
 def compare(
-    sample, campaign_file, scenario_names, kicks, bh_kicks, sources, efficiency_file, counts, fit, tail, simulations,
-    seed, frame, t_0par, skip_bad, by, plot, jobs, save, as_json, overwrite, quiet,
+    sample, campaign_file, scenario_names, kicks, bh_kicks, sources, u_0_limit, efficiency_file, counts, fit, tail,
+    simulations, seed, frame, t_0par, skip_bad, by, plot, jobs, save, as_json, overwrite, quiet,
 ):  # fmt: skip
     """Compare observed events (SAMPLE) with what a scenario says the survey finds.
 
@@ -66,8 +67,10 @@ def compare(
         check_target(plot, PICTURES, overwrite, "--plot")
     if by != "bin" and not save:
         raise click.UsageError("--by has no effect here: it goes with --save")
-    if campaign_file and (sources or efficiency_file):
-        raise click.UsageError("--sources and --efficiency have no effect with --campaign, which states its own")
+    if campaign_file and (sources or efficiency_file or u_0_limit is not None):
+        raise click.UsageError(
+            "--sources, --u-0-limit and --efficiency have no effect with --campaign, which states its own"
+        )
     from ..errors import one_of
     from ..events.compare import COUNTS
 
@@ -80,7 +83,8 @@ def compare(
     from ..surveys.efficiency import Efficiency
 
     survey = Campaign.read(campaign_file) if campaign_file else None
-    scenarios = _scenarios(scenario_names or (survey.scenario if survey else "default",), kicks, bh_kicks, sources)
+    scenarios = _scenarios(scenario_names or (survey.scenario if survey else "default",), kicks, bh_kicks, sources,
+                           u_0_limit)
     curve = Efficiency.read(efficiency_file) if efficiency_file else None
     result = compare_sample(
         events, scenarios, survey, efficiency=curve, jobs=jobs, progress=None if quiet else "fields", counts=counts,
@@ -100,13 +104,14 @@ def compare(
             click.echo(wrap(f"note: {note}"), err=True)
 
 
-def _scenarios(names, kicks, bh_kicks, sources):
+def _scenarios(names, kicks, bh_kicks, sources, u_0_limit):
     """Every scenario named, under every kick law."""
     from ..scenario import Scenario
 
     out = []
     for name in (names,) if isinstance(names, str) else names:
-        changes = {k: v for k, v in (("bh_kicks", bh_kicks), ("sources", sources)) if v}
+        changes = {"bh_kicks": bh_kicks, "sources": sources, "u_0_limit": u_0_limit}
+        changes = {k: v for k, v in changes.items() if v is not None}
         base = Scenario.read(name)
         base = base.replace(**changes) if changes else base
         out += [base.replace(kicks=law) for law in kicks] if kicks else [base]
@@ -115,6 +120,7 @@ def _scenarios(names, kicks, bh_kicks, sources):
 
 def report(result):
     """Return the tables for people."""
+    from ..events.comparison import OUTLIER
     from ..remnants.classes import LABELS
 
     first = result.comparisons[0]
@@ -147,6 +153,8 @@ def report(result):
         lines += ["", _fields(first)]
     if len(result.comparisons) > 1:
         lines += ["", _side_by_side(result)]
+        words = f"ln L: a share of {OUTLIER:g} of events may be none of the forecast's, even in ln t_E and ln pi_E"
+        lines.append(wrap(words))
     return "\n".join(lines)
 
 

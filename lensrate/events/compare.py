@@ -1,229 +1,26 @@
 """An observed sample against what a scenario says the survey finds: the forecast is folded, the data are left alone."""
 
-from dataclasses import dataclass, replace
-from typing import NamedTuple
+from dataclasses import replace
 
 import numpy as np
-from scipy.special import gammaln
+from scipy.special import gammaln, xlogy
 from scipy.stats import poisson
 
-from .._version import __version__
 from ..errors import InputError, one_of
 from ..units import DAYS_PER_YEAR
+from .comparison import OUTLIER, Comparison, Estimate, FieldCount
 from .fold import LN_T, STEP, Errors, assign, heliocentric
 from .goodness import Simulated, anderson_darling, deviance, kolmogorov_smirnov, p_value, tail_test
 from .shapes import Parallaxes, Shapes
 
-__all__ = ["COUNTS", "Comparison", "Estimate", "compare"]
+__all__ = ["COUNTS", "Comparison", "Estimate", "compare", "differences", "with_notes"]
 
 COUNTS = ("auto", "absolute", "shape")
 _BIN = 0.2 * np.log(10.0)
 _MAGNITUDES = np.arange(13.0, 25.01, 0.5)
 _FEW = 5  # events with a parallax or magnitude from which these are tested
+_LN_PI = np.log(1e6)  # span of ln pi_E of such events
 _ENDS = 5e-4  # of the predicted distribution, left out at either end of the bins
-
-
-class Estimate(NamedTuple):
-    """An event-weighted estimate of the data, and the forecast of the same inside the efficiency curve."""
-
-    value: float
-    error: float
-    largest_share: float
-    predicted: float
-    events: int
-
-
-class FieldCount(NamedTuple):
-    """Events of one field: observed, expected, and exact Poisson chances of so few and so many (NaN unanchored)."""
-
-    name: str
-    observed: int
-    expected: float
-    anchored: bool
-    p_at_most: float
-    p_at_least: float
-
-
-@dataclass(frozen=True, eq=False)
-class Comparison:
-    """A sample beside one scenario's forecast.
-
-    Attributes
-    ----------
-    sample : Sample
-    folded : Folded
-    events : tuple of Observed
-        Those inside the fields.
-    field : ndarray of int, shape (n,)
-    x, sigma : ndarray, shape (n,)
-        ln t_E (heliocentric where that can be had) and its error.
-    counts : str
-        "absolute" (every field's expected number counts), "shape" (all scaled to the observed numbers), or "mixed".
-    edges : ndarray, shape (m + 1,)
-        Bins of t_E [d].
-    observed : ndarray, shape (m,)
-    predicted : ndarray, shape (C, m)
-        Expected in the bins by class, errors of measurement and efficiency folded in.
-    tests : dict of str to Simulated
-        ks, anderson_darling, deviance of t_E; pi_E_ks, pi_E_anderson_darling given t_E; sky; magnitude.
-    tail : Tail
-    tail_by_class : ndarray, shape (C,)
-    optical_depth, rate : Estimate or None
-        Event-weighted; None without stated stars.
-    fields : tuple of FieldCount
-    magnitudes : dict or None
-        edges, observed, predicted.
-    parallax_shares : ndarray
-        Share of pi_E given t_E of each event that has one.
-    fitted : (float, float) or None
-        Shift of ln t_E and stretch, where they were fitted.
-    ln_likelihood : dict of str to float
-        t_E, pi_E, counts, total.
-    outside : tuple of str
-        Events in no field.
-    notes : tuple of str
-    seed : int
-    """
-
-    sample: object
-    folded: object
-    events: tuple
-    field: np.ndarray
-    x: np.ndarray
-    sigma: np.ndarray
-    errors: Errors
-    counts: str
-    edges: np.ndarray
-    observed: np.ndarray
-    predicted: np.ndarray
-    tests: dict
-    tail: object
-    tail_by_class: np.ndarray
-    optical_depth: Estimate | None
-    rate: Estimate | None
-    fields: tuple
-    magnitudes: dict | None
-    parallax_shares: np.ndarray
-    fitted: tuple | None
-    ln_likelihood: dict
-    outside: tuple
-    notes: tuple
-    seed: int
-    version: str = __version__
-
-    @property
-    def classes(self):
-        """Lens classes in the order of `predicted`."""
-        return self.folded.classes
-
-    def header(self):
-        """Return the line above every table."""
-        f = self.folded
-        if f.survey is not None:
-            where = f.meta["header"]
-        else:
-            where = f"{f.sightlines[0].header()}; {len(f.names)} sightlines; {f.curves[0].describe()}"
-        return f"{where}; counts: {self.counts}"
-
-    def meta(self):
-        """Return how this was made."""
-        kept = {k: v for k, v in self.folded.meta.items() if k not in ("header", "warnings", "seed")}
-        return {
-            **kept,
-            "header": self.header(),
-            "sample": self.sample.name,
-            "sample_invented": self.sample.invented,
-            "events": len(self.events),
-            "counts": self.counts,
-            "fitted": None if self.fitted is None else dict(zip(("shift_ln_t_E", "stretch"), self.fitted)),
-            "seed": self.seed,
-            "notes": list(self.notes),
-            "warnings": list(self.folded.warnings),
-        }
-
-    def to_table(self, by="bin"):
-        """Return a QTable.
-
-        Parameters
-        ----------
-        by : str
-            "bin": a row per bin of t_E, observed and expected by class; "field": a row per field; "test": a row per
-            test; "event": a row per event, with the share of its field's events that are shorter.
-
-        Raises
-        ------
-        InputError
-            Unknown `by`.
-        """
-        import astropy.units as u
-        from astropy.table import QTable
-
-        one_of("by", by, ("bin", "field", "test", "event"))
-        table = QTable()
-        if by == "bin":
-            table["t_E_low"], table["t_E_high"] = self.edges[:-1] * u.day, self.edges[1:] * u.day
-            table["observed"], table["expected"] = self.observed, self.predicted.sum(axis=0)
-            for name, row in zip(self.classes, self.predicted):
-                table[f"expected_{name}"] = row
-        elif by == "field":
-            for key in FieldCount._fields:
-                table[key] = [getattr(f, key) for f in self.fields]
-        elif by == "test":
-            table["test"] = list(self.tests)
-            table["value"] = [t.value for t in self.tests.values()]
-            table["p"] = [t.p for t in self.tests.values()]
-            table["simulations"] = [t.n for t in self.tests.values()]
-        else:
-            table["event"] = [e.name for e in self.events]
-            table["field"] = [self.folded.names[i] for i in self.field]
-            table["t_E"], table["sigma_ln_t_E"] = np.exp(self.x) * u.day, self.sigma
-        for name in table.colnames:
-            if getattr(table[name], "dtype", None) is not None and table[name].dtype.kind == "f":
-                table[name].info.format = ".5g"
-        table.meta.update(self.meta())
-        return table
-
-    def to_pandas(self, by="bin"):
-        """Return `to_table` as a pandas DataFrame, units dropped."""
-        return self.to_table(by).to_pandas()
-
-    def to_dict(self):
-        """Return plain numbers under the keys of ``lensrate compare --json``."""
-
-        def plain(x):
-            return None if x is None else x._asdict()
-
-        bins = [
-            {"t_E_low_d": float(a), "t_E_high_d": float(b), "observed": int(n), "expected": float(p.sum()),
-             "by_class": dict(zip(self.classes, map(float, p)))}
-            for a, b, n, p in zip(self.edges[:-1], self.edges[1:], self.observed, self.predicted.T)
-        ]  # fmt: skip
-        return {
-            "sample": self.sample.name, "invented": self.sample.invented, "frame": "heliocentric",
-            "header": self.header(), "events": len(self.events), "counts": self.counts,
-            "expected": {**dict(zip(self.classes, map(float, self.predicted.sum(axis=1)))),
-                         "all": float(self.predicted.sum())},
-            "bins": bins, "fields": [f._asdict() for f in self.fields], "outside": list(self.outside),
-            "tests": {k: t._asdict() for k, t in self.tests.items()},
-            "tail": {**self.tail._asdict(), "by_class": dict(zip(self.classes, map(float, self.tail_by_class)))},
-            "optical_depth": plain(self.optical_depth), "rate_per_star_per_yr": plain(self.rate),
-            "magnitudes": self.magnitudes and {k: list(map(float, v)) for k, v in self.magnitudes.items()},
-            "fitted": self.meta()["fitted"], "ln_likelihood": self.ln_likelihood, "seed": self.seed,
-            **self.folded.scenario.made(),
-            "notes": list(self.notes), "warnings": list(self.folded.warnings),
-            "references": list(self.folded.references), "version": self.version,
-        }  # fmt: skip
-
-    def plot(self, ax=None, **style):
-        """Draw histogram and prediction; returns the Axes (and that of the ratio, where `ax` is not given)."""
-        import importlib
-
-        return importlib.import_module("lensrate.plots").comparison(self, ax=ax, **style)
-
-    def _repr_html_(self):
-        from html import escape
-
-        return f"<p>{escape(self.sample.name)}<br>{escape(self.header())}</p>" + self.to_table()._repr_html_()
 
 
 def compare(sample, folded, field=None, *, counts="auto", fit=False, tail=100.0, simulations=500, seed=1):
@@ -259,8 +56,10 @@ def compare(sample, folded, field=None, *, counts="auto", fit=False, tail=100.0,
     Notes
     -----
     Each event's t_E becomes the share of its own field's predicted events that are shorter, evenly spread under the
-    truth whatever the fields' numbers. Event-weighted optical depth pi / (2 N T u_0) sum t_E / efficiency and its
-    variance, the sum of squares: the only places where data are divided by efficiency.
+    truth whatever the fields' numbers. In ln L a share `OUTLIER` of events is none of the forecast's: even in ln t_E
+    and ln pi_E, so that a strange event costs what it must and not everything. Event-weighted optical depth
+    pi / (2 N T u_0) sum t_E / efficiency and its variance, the sum of squares: the only places where data are divided
+    by efficiency.
     """
     one_of("counts", counts, COUNTS)
     if not 0 < tail < 1e5:
@@ -280,13 +79,11 @@ def compare(sample, folded, field=None, *, counts="auto", fit=False, tail=100.0,
     bins = shapes.in_bins(g, edges)
     observed = np.histogram(x, edges)[0]
     predicted = _by_class(folded, errors, edges, bins, mean)
-    impossible = [events[i].name for i in np.flatnonzero(~(shapes.density(g, x, field) > 0))]
-    if impossible:
-        notes.append(
-            f"{len(impossible)} events have a t_E of which the forecast finds none: {', '.join(impossible[:5])}"
-        )
+    density = shapes.density(g, x, field)
+    notes += _impossible(events, ~(density > 0), "a t_E of which the forecast finds none")
     tests = _timescale_tests(shapes, g, x, field, n, anchored, edges, fit, simulations, rng)
-    shares, ln_pi = _parallax_shares(Parallaxes(folded), field, x, sigma, parallax)
+    shares, ln_pi, strange = _parallax_shares(Parallaxes(folded), field, x, sigma, parallax)
+    notes += _impossible(events, strange, "a pi_E that the forecast does not know at their t_E")
     if shares.size >= _FEW:
         tests.update(_uniform_tests("pi_E_", shares, simulations, rng))
     if folded.survey is not None and anchored.any():
@@ -300,16 +97,22 @@ def compare(sample, folded, field=None, *, counts="auto", fit=False, tail=100.0,
     expected = float(whole.sum())
     if total is not None and anchored.any():
         # a shape's share of the events there are
-        expected *= total / mean.sum()
+        scale = total / mean.sum()
+        expected, whole = expected * scale, whole * scale
     record = tail_test(tail, expected, int(np.sum(np.exp(x) > tail)), total)
     tau, rate, said = _estimates(folded, events, field, x)
-    density = shapes.density(g, x, field)
     ln = {
-        "t_E": float(np.sum(np.log(density[density > 0]))),
-        "pi_E": float(np.sum(ln_pi[np.isfinite(ln_pi)])),
-        "counts": float(np.sum((n * np.log(mean) - mean - gammaln(n + 1))[anchored])) if anchored.any() else 0.0,
+        "t_E": float(np.sum(np.log((1 - OUTLIER) * density + OUTLIER / (LN_T[-1] - LN_T[0])))),
+        "pi_E": float(np.sum(ln_pi)),
+        "counts": float(np.sum(_ln_poisson(n[anchored], mean[anchored]))),
     }
     ln["total"] = sum(ln.values())
+    lost = np.array(folded.names)[anchored & (n > 0) & ~(mean > 0)]
+    if lost.size:
+        notes.append(
+            f"{int(n[anchored & ~(mean > 0)].sum())} events lie where the forecast expects none ({', '.join(lost)}): "
+            "ln L of the counts is minus infinity"
+        )
     kind = "absolute" if anchored.all() else "mixed" if anchored.any() else "shape"
     if kind == "mixed":
         names = ", ".join(np.array(folded.names)[~anchored])
@@ -348,6 +151,23 @@ def _said(outside):
     names = ", ".join(f"{e.name} ({e.l:.2f}, {e.b:.2f})" for e in outside[:8])
     more = f" and {len(outside) - 8} more" if len(outside) > 8 else ""
     return [f"{len(outside)} events outside all fields are left out: {names}{more}"]
+
+
+def _impossible(events, which, what):
+    """What is said of events that the forecast calls impossible."""
+    rows = np.flatnonzero(which)
+    if not rows.size:
+        return []
+    names = ", ".join(events[i].name for i in rows[:5]) + (" and others" if rows.size > 5 else "")
+    return [
+        f"{rows.size} events have {what}: {names}; in ln L a share of {OUTLIER:g} of events may be anything, evenly in "
+        "the logarithm"
+    ]
+
+
+def _ln_poisson(n, mean):
+    """Logarithm of the chance of counts; minus infinity where events are and none can be."""
+    return xlogy(n, mean) - mean - gammaln(n + 1)
 
 
 def _anchored(folded, counts):
@@ -411,14 +231,18 @@ def _uniform_tests(prefix, shares, simulations, rng):
 
 
 def _parallax_shares(parallaxes, field, x, sigma, parallax):
-    """Shares and ln densities of the parallaxes that there are."""
-    rows = [
-        parallaxes.given(int(f), float(a), float(s), *p)
-        for f, a, s, p in zip(field, x, sigma, parallax)
-        if p is not None
-    ]
-    shares, ln = np.array(rows).reshape(-1, 2).T
-    return shares[np.isfinite(shares)], ln
+    """Shares and ln densities of the parallaxes that there are, and which events have an impossible one."""
+    shares, ln, strange = [], [], np.zeros(len(parallax), dtype=bool)
+    for i, p in enumerate(parallax):
+        if p is None:
+            continue
+        share, density = parallaxes.given(int(field[i]), float(x[i]), float(sigma[i]), *p)
+        anything = OUTLIER / (_LN_PI * max(p[0], p[1]))
+        strange[i] = not density > 0
+        ln.append(np.log((1 - OUTLIER) * density + anything))
+        if np.isfinite(share):
+            shares.append(share)
+    return np.array(shares), np.array(ln), strange
 
 
 def _sky_test(mean, n, simulations, rng):
@@ -460,15 +284,21 @@ def _estimates(folded, events, field, x):
     if folded.survey is None:
         return None, None, []
     curve, u_0 = folded.survey.efficiency, folded.survey.u_0_limit
-    t = np.exp(x)
+    t, said = np.exp(x), []
+    efficiency = np.array([folded.curves[f].of(v) for f, v in zip(field, t)])
     if curve.second:
         plain = [e.solutions[0].plain.get(curve.second, np.nan) for e in events]
         second = np.abs(np.array(plain))
-        efficiency = np.where(np.isfinite(second), curve.of(t, np.nan_to_num(second)), curve.of(t))
-    else:
-        efficiency = curve.of(t)
+        known = np.isfinite(second)
+        # the mean over the field's sources where an event's own is not known
+        efficiency = np.where(known, curve.of(t, np.where(known, second, curve.grid[0])), efficiency)
+        if not known.all():
+            missing = int(np.sum(~known))
+            said.append(
+                f"{missing} events without {curve.second}: the event-weighted estimates take the efficiency averaged "
+                "over their field"
+            )
     use = efficiency > 0
-    said = []
     if not use.all():
         names = ", ".join(events[i].name for i in np.flatnonzero(~use)[:5])
         said.append(f"{int(np.sum(~use))} events have efficiency 0 and enter no event-weighted estimate: {names}")
@@ -494,7 +324,12 @@ def _estimates(folded, events, field, x):
 def differences(comparisons):
     """Return ln L of each of several comparisons of one sample less the best's, by part; the best has 0 in total."""
     best = max(comparisons, key=lambda c: c.ln_likelihood["total"]).ln_likelihood
-    return [{k: c.ln_likelihood[k] - best[k] for k in best} for c in comparisons]
+
+    def less(a, b):
+        # two that are both impossible do not differ
+        return 0.0 if a == b else a - b
+
+    return [{k: less(c.ln_likelihood[k], best[k]) for k in best} for c in comparisons]
 
 
 def with_notes(comparison, *more):

@@ -19,7 +19,7 @@ from ..parallel import run_map
 from ..sources.rules import LimitRule, PeakRule
 from ..surveys.efficiency import Efficiency
 from ..surveys.sky import Circle, Patch, to_plane
-from ..surveys.stars import magnitude_share
+from ..surveys.stars import field_curve
 from ..surveys.yields import campaign
 from ..units import DAYS_PER_YEAR
 
@@ -123,6 +123,8 @@ class Folded:
     sightlines : tuple of Sightline
     curves : tuple of Efficiency
     survey : Campaign or None
+    stated : Efficiency
+        As it was given, before it was averaged for each field.
     meta : dict
     warnings, references : tuple of str
     """
@@ -137,6 +139,7 @@ class Folded:
     sightlines: tuple
     curves: tuple
     survey: object
+    stated: object
     meta: dict
     warnings: tuple = ()
     references: tuple = ()
@@ -172,7 +175,7 @@ class Folded:
         if key not in self._magnitudes:
             below = _rate_brighter(ready, edges)
             share = np.diff(below)
-            curve = self.survey.efficiency if self.survey is not None else self.curves[field]
+            curve = self.stated
             if curve.second == "I_S":
                 total, t = self.rate[field].sum(axis=0), np.exp(LN_T)
                 middle = 0.5 * (np.asarray(edges)[1:] + np.asarray(edges)[:-1])
@@ -232,16 +235,13 @@ def fold_campaign(survey, scenario=None, jobs=1, progress=None, forecast=None):
     years = survey.calendar.exposure(survey.efficiency.includes).sum() / DAYS_PER_YEAR
     rows, curves = [], []
     for f in made.fields:
-        curve = survey.efficiency
-        if curve.second == "I_S":
-            curve = curve.averaged(magnitude_share(f.sightline._integrals.ready))
-        curves.append(curve)
+        curves.append(field_curve(survey.efficiency, survey.u_0_limit, f.sightline._integrals.ready))
         rows.append(_scaled(f.sightline, f.sources * f.rate_factor * years))
     return Folded(
         made.scenario, tuple(f.field.name for f in made.fields), list(made.classes), np.array(rows),
         np.array([on_cells(c) for c in curves]), np.array([f.counted == "stated" for f in made.fields]),
         np.array([f.sources * years for f in made.fields]), tuple(f.sightline for f in made.fields), tuple(curves),
-        survey, made.meta(), made.warnings, made.references,
+        survey, survey.efficiency, made.meta(), made.warnings, made.references,
     )  # fmt: skip
 
 
@@ -276,15 +276,13 @@ def fold_groups(places, scenario, efficiency=None, jobs=1, progress=None):
 
     lines = [one(places[0]), *run_map(one, places[1:], jobs, None, progress)]
     rows = np.array([_scaled(line, 1.0) for line in lines])
-    curves = [
-        curve.averaged(magnitude_share(line._integrals.ready)) if curve.second == "I_S" else curve for line in lines
-    ]
+    curves = [field_curve(curve, scenario.u_0_limit, line._integrals.ready) for line in lines]
     meta = {k: v for k, v in lines[0].meta().items() if k not in ("l_deg", "b_deg", "field_mismatch")}
     warnings = tuple(dict.fromkeys(w for line in lines for w in line.warnings))
     return Folded(
         scenario, tuple(f"{l:.2f}{b:+.2f}" for l, b in places), list(lines[0].classes), rows,
         np.array([on_cells(c) for c in curves]), np.zeros(len(places), dtype=bool), np.full(len(places), np.nan),
-        tuple(lines), tuple(curves), None, meta, warnings, lines[0].references,
+        tuple(lines), tuple(curves), None, curve, meta, warnings, lines[0].references,
     )  # fmt: skip
 
 

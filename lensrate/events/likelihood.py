@@ -13,6 +13,7 @@ from ..errors import InputError
 from ..galaxy.frames import icrs_from_galactic
 from ..lensing.earth import earth_velocity, from_north_east
 from ..lensing.points import Points, SourceData
+from ..units import DAYS_PER_YEAR
 
 __all__ = ["DECADES", "Likelihood", "likelihood"]
 
@@ -40,8 +41,9 @@ class Likelihood:
         measured numbers times the volume of their errors. 0 where only t_E is measured.
     t_only : (ndarray, ndarray)
         Timescales [d] and weights, each per ln t_E, of the same solution with t_E alone.
-    draws : bool
-        Whether the points are posterior samples, whose scatter limits the answer.
+    draws : int
+        Number of posterior samples that the points are, in order, each in as many directions; 0 where they are none.
+        The samples' scatter limits the answer.
     rests_on : tuple of str
         The quantities that enter.
     """
@@ -50,7 +52,7 @@ class Likelihood:
     known: SourceData | None
     wrong: float
     t_only: tuple
-    draws: bool
+    draws: int
     rests_on: tuple
 
 
@@ -121,7 +123,7 @@ def likelihood(solution, event, direct=False):
         if points.angle is None:
             points = _turned(points, _ANGLES, earth)
     alone = len(rests) == 1
-    return Likelihood(points, known, 0.0 if alone else wrong, (t, w_t / t), False, tuple(rests))
+    return Likelihood(points, known, 0.0 if alone else wrong, (t, w_t / t), 0, tuple(rests))
 
 
 def _open_nodes():
@@ -233,7 +235,7 @@ def _outer(t, w_t, X, w_X, angle, earth, on_theta):
 def _crossed(t, w_t, mu, w_mu, earth):
     """Timescales and motions, as Einstein radii."""
     T, M = np.repeat(t, mu.size), np.tile(mu, t.size)
-    return Points(T, M * T / 365.25, np.outer(w_t, w_mu).ravel(), True, None, earth)
+    return Points(T, M * T / DAYS_PER_YEAR, np.outer(w_t, w_mu).ravel(), True, None, earth)
 
 
 def _turned(points, n, earth):
@@ -326,7 +328,7 @@ def _of_draws(solution, event, known, earth):
         if used is None:
             raise InputError(f"{event.name}: samples of t_E alone; give t_E and t_E_err in a table instead")
         on_theta = True
-        X = column["theta_E"] if used == "theta_E" else column["mu_rel"] * t / 365.25
+        X = column["theta_E"] if used == "theta_E" else column["mu_rel"] * t / DAYS_PER_YEAR
         W = W / (t * column[used])
         wrong /= np.median(column[used]) * _LN_SPAN
         rests.append(used)
@@ -352,7 +354,7 @@ def _of_draws(solution, event, known, earth):
     if angle is None and (known is not None or earth != (0.0, 0.0)):
         points = _turned(points, 8, earth)
     t_nodes, w_nodes = _nodes(_measure_of(mean[list(column).index("t_E")], s_t), 3, 5)
-    return Likelihood(points, known, wrong, (t_nodes, w_nodes / t_nodes), True, tuple(rests))
+    return Likelihood(points, known, wrong, (t_nodes, w_nodes / t_nodes), t.size, tuple(rests))
 
 
 def _measure_of(value, sigma):

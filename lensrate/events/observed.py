@@ -38,10 +38,9 @@ PLAIN = {
     "pi_E_corr": ("", (-0.9999, 0.9999), "correlation of pi_EN and pi_EE"),
     "I_S": ("mag", (0.0, 35.0), "source magnitude"),
     "I_lens_limit": ("mag", (-5.0, 40.0), "the lens is fainter than this in I"),
-    "source_fraction": ("", (0.0, 2.0), "source's share of the light"),
-    "u_0": ("", (-10.0, 10.0), "impact parameter"),
-    "t_0": ("d", (-1e6, 1e7), "time of closest approach, MJD or JD"),
-    "weight": ("", (0.0, 1e9), "weight of the event in a sample"),
+    "source_fraction": ("", (0.0, 2.0), "source's share of the light, for light curves of follow-up"),
+    "u_0": ("", (-10.0, 10.0), "impact parameter, for efficiencies and light curves"),
+    "t_0": ("d", (-1e6, 1e7), "time of closest approach, MJD or JD, for light curves"),
 }
 _WORDS = ("event", "solution", "frame", "samples")
 _PLACES = {"l": (-720.0, 720.0), "b": (-90.0, 90.0), "ra": (-720.0, 720.0), "dec": (-90.0, 90.0)}
@@ -108,7 +107,6 @@ class Observed:
     t_0par : float or None
         Reference epoch [MJD].
     solutions : tuple of Solution
-    weight : float
     rows : tuple of int
         Rows of the table it came from, counted from 1.
     """
@@ -119,7 +117,6 @@ class Observed:
     frame: str
     t_0par: float | None
     solutions: tuple
-    weight: float = 1.0
     rows: tuple = ()
 
     @property
@@ -310,7 +307,9 @@ def _frame_of_header(head, frame, t_0par, where):
     elif frame is None:
         notes.append(f"{where} does not say its frame: taken as heliocentric (published parallax fits are geocentric)")
     chosen = said or frame or "heliocentric"
-    epoch = head.get("t_0par", t_0par)
+    from .rows import said_epoch
+
+    epoch = said_epoch(head, t_0par, where)
     if chosen == "geocentric":
         if epoch is None:
             raise InputError(f"{where}: geocentric, but no reference epoch; give t_0par [MJD] in its header")

@@ -245,7 +245,8 @@ def _solution(solution, event, line, n):
         hist_wrong *= factor
     effective = None
     if like.draws:
-        each = by_point.sum(axis=0)
+        # the directions of one sample are one
+        each = by_point.sum(axis=0).reshape(like.draws, -1).sum(axis=1)
         effective = float(each.sum() ** 2 / max((each**2).sum(), 1e-300))
     rests = like.rests_on + (("lens light",) if light is not None else ())
     return {

@@ -9,7 +9,7 @@ from ..io import read_rows
 from .observed import _PLACES, _POSITIVE, FRAMES, MEASURED, PLAIN, Measure, Observed, Problems, Solution, check_columns
 from .posterior import header_of, read_draws, reference_epoch
 
-__all__ = ["read_events"]
+__all__ = ["read_events", "said_epoch"]
 
 _APART = 0.01  # deg, solutions of one event agree in place
 
@@ -49,7 +49,8 @@ def read_events(table, frame, t_0par, skip_bad, where, beside):
     for rows in groups.values():
         first = rows[0]
         for i in rows[1:]:
-            if abs(lat[i] - lat[first]) > _APART or abs(lon[i] - lon[first]) > _APART:
+            around = (lon[i] - lon[first] + 180.0) % 360.0 - 180.0
+            if np.hypot(around * np.cos(np.radians(lat[first])), lat[i] - lat[first]) > _APART:
                 problems.add(i + 1, place[0], f"not the place of row {first + 1}, of the same event")
             if (frames[i], epochs[i]) != (frames[first], epochs[first]):
                 problems.add(i + 1, "frame", f"not the frame of row {first + 1}, of the same event")
@@ -65,6 +66,9 @@ def read_events(table, frame, t_0par, skip_bad, where, beside):
         raise InputError(problems.text() if problems.found else f"{where}: no events")
     if bad:
         notes.append(f"left out: {problems.text().removeprefix(where + ': ')}")
+    if "weight" in strangers:
+        strangers.remove("weight")
+        notes.append("column weight is not used: every event counts once; draw unweighted events, or select by weight")
     if strangers:
         notes.append(f"columns not used: {', '.join(strangers)}")
     if both.any():
@@ -93,13 +97,8 @@ def _event(name, rows, place, lon, lat, frames, epochs, measured, plain, solutio
         }
         numbers = {key: float(v[i]) for key, v in plain.items() if np.isfinite(v[i])}
         chi2, corr = numbers.pop("delta_chi2", 0.0), numbers.pop("pi_E_corr", 0.0)
-        numbers.pop("weight", None)
         out.append(Solution(solutions[i], found, chi2, corr, draws.get(i), numbers))
-    weight = plain["weight"][first]
-    return Observed(
-        name, l, b, frames[first], epochs[first], tuple(out),
-        float(weight) if np.isfinite(weight) else 1.0, tuple(i + 1 for i in rows),
-    )  # fmt: skip
+    return Observed(name, l, b, frames[first], epochs[first], tuple(out), tuple(i + 1 for i in rows))
 
 
 def _groups(names, n):
@@ -208,8 +207,15 @@ def _frames(table, head, frame, t_0par, where, problems, notes):
         notes.append(
             f"{who} does not say a frame: taken as heliocentric (published parallax fits are geocentric; see --frame)"
         )
-    general = head.get("t_0par", t_0par)
+    general = said_epoch(head, t_0par, where)
     own = _numbers(table, "t_0par", "", (0.0, 3e6), problems)
+    if t_0par is not None:
+        geocentric = np.array([f == "geocentric" for f in frames], dtype=bool)
+        kept = int(np.sum(geocentric & np.isfinite(own)))
+        if not geocentric.any():
+            notes.append("the t_0par given is not used: no event is geocentric")
+        elif kept:
+            notes.append(f"{kept} rows state a t_0par of their own, which holds; the one given is for the others")
     epochs = []
     for i, name in enumerate(frames):
         epoch = None
@@ -224,3 +230,13 @@ def _frames(table, head, frame, t_0par, where, problems, notes):
                     problems.add(i + 1, "t_0par", str(error).split("t_0par: ", 1)[-1])
         epochs.append(epoch)
     return frames, epochs
+
+
+def said_epoch(head, t_0par, where):
+    """The epoch of the header or of the caller; two that differ are refused."""
+    said = head.get("t_0par")
+    if said is None or t_0par is None:
+        return t_0par if said is None else said
+    if abs(reference_epoch(said, where) - reference_epoch(t_0par, "--t-0par")) > 1e-6:
+        raise InputError(f"{where}: its header says t_0par = {said}, --t-0par says {t_0par:g}; correct one")
+    return said

@@ -130,7 +130,7 @@ class Parallaxes:
         return self._kept[field]
 
     def given(self, field, x, sigma, value, error, vector):
-        """Return the share of parallaxes below a measured one, and the logarithm of its density, given t_E.
+        """Return the share of parallaxes below a measured one, and its density, given t_E.
 
         Parameters
         ----------
@@ -144,7 +144,8 @@ class Parallaxes:
 
         Returns
         -------
-        share, ln_density : float
+        share, density : float
+            The share is NaN where the forecast knows no event of this t_E.
         """
         t, y, joint, fine = self._joint(field)
         nodes = x + sigma * _NODES
@@ -156,7 +157,7 @@ class Parallaxes:
         s = (place - i)[:, None]
         p = np.interp(fine, y, found @ ((1 - s) * joint[i] + s * joint[i + 1]))
         if not p.sum() > 0:
-            return np.nan, -np.inf
+            return np.nan, 0.0
         p /= p.sum()
         size = np.exp(fine)
         below = ndtr((value - size) / error)
@@ -166,4 +167,4 @@ class Parallaxes:
             a, b = value / error, size[low] / error
             below[low] = ncx2.cdf(a * a, 2, np.maximum(b * b, 1e-12))
             near[low] = a * np.exp(-0.5 * (a - b) ** 2) * i0e(a * b) / error
-        return float(np.clip(p @ below, 0.0, 1.0)), float(np.log(max(p @ near, _TINY)))
+        return float(np.clip(p @ below, 0.0, 1.0)), float(p @ near)

@@ -89,7 +89,8 @@ def compare_sample(
     Raises
     ------
     InputError
-        As `compare`; both a campaign and an efficiency; absolute counts without a campaign.
+        As `compare`; both a campaign and an efficiency; an efficiency of other sources or another u_0 limit than the
+        scenario's; absolute counts without a campaign.
     """
     if forecast is not None:
         survey = forecast.campaign
@@ -116,11 +117,16 @@ def compare_sample(
     else:
         if options.get("counts") == "absolute":
             raise InputError("counts: nothing anchors the number of events without a campaign; give --campaign FILE")
+        if efficiency is not None:
+            for s in scenarios:
+                where = f"scenario '{s.name}'"
+                efficiency.check_limit(where, s.u_0_limit)
+                efficiency.check_sources(where, s.sources)
         places, field = grouped(sample.events)
         every = [fold_groups(places, s, efficiency, jobs, progress) for s in scenarios]
         notes = (
             f"no campaign: {len(places)} sightlines at the events' own places, shapes only, "
-            + ("the efficiency of the file" if efficiency is not None else "every event counted as found"),
+            + ("every event counted as found" if efficiency is None else efficiency.describe()),
         )
     made = [compare(sample, f, field, **options) for f in every]
     return Versus(tuple(replace(c, notes=(*notes, *c.notes)) for c in made))

@@ -12,7 +12,7 @@ from ..errors import InputError
 from ..events.fold import STEP, on_cells, on_grid
 from ..lensing import distributions
 from ..remnants.classes import MassSpectrum
-from ..surveys.stars import magnitude_share
+from ..surveys.stars import field_curve
 from ..units import DAYS_PER_YEAR
 
 __all__ = ["DARK", "SLOPES", "STELLAR", "Part", "Templates"]
@@ -113,10 +113,7 @@ class Templates:
             white = [i for i in range(n) if parts[i].lens == "white_dwarf"]
             total = [m[white].sum() for m in made]
             factors.append([t / total[1] if total[1] > 0 else 1.0 for t in total])
-            curve = survey.efficiency
-            if curve.second == "I_S":
-                curve = curve.averaged(magnitude_share(integrals.ready))
-            curves.append(on_cells(curve))
+            curves.append(on_cells(field_curve(survey.efficiency, survey.u_0_limit, integrals.ready)))
         kicked = first.kicked
         number = sum(p.spectra["neutron_star"].moment(0) for p in first.populations if p is not None)
         mass = sum(p.spectra["neutron_star"].moment(1) for p in first.populations if p is not None)

@@ -14,7 +14,7 @@ import numpy as np
 from ..kernels import odds as kernels
 from ..kernels import rates as rate_kernels
 from ..kernels.followup import by_mass
-from ..units import KAPPA, MAS
+from ..units import DAYS_PER_YEAR, KAPPA, MAS
 from . import rates
 from .masses import bases_of, fine_masses
 from .quadrature import row_nodes
@@ -349,7 +349,7 @@ class EventRates:
 
     def _densities(self, points, part, gauss):
         """Density of the relative motion that each point needs of every base and row, (B, P, C, Q); ln t, ln X."""
-        ln_t, ln_X = np.log(points.t_E[part] / 365.25), np.log(points.X[part])
+        ln_t, ln_X = np.log(points.t_E[part] / DAYS_PER_YEAR), np.log(points.X[part])
         P, Q, C = self.ln_pi.size, ln_t.size, self.D_S.size
         pi = np.exp(self.ln_pi)[:, None]
         ln_theta = ln_X + np.zeros((P, 1)) if points.on_theta else self.ln_pi[:, None] - ln_X

@@ -11,7 +11,7 @@ import numpy as np
 from ..datafiles import data_folder, find, names, parse_toml
 from ..errors import InputError, one_of
 from ..remnants.tables import check_keys
-from ..sources.rules import LimitRule, PeakRule, parse_rule
+from ..sources.rules import parse_rule
 from .calendar import Calendar, Season
 from .efficiency import Efficiency, locate
 from .field import Field
@@ -138,37 +138,13 @@ class Campaign:
     def _check_together(self):
         """What fields, efficiency and stars must agree on."""
         eff = self.efficiency
-        if eff.name != "complete" and eff.second != "u_0" and abs(eff.u_0_limit - self.u_0_limit) > 1e-9:
-            raise InputError(
-                f"campaign: u_0_limit is {self.u_0_limit:g} and the efficiency is one of events with u_0 below "
-                f"{eff.u_0_limit:g}; set u_0_limit = {eff.u_0_limit:g}"
-            )
-        if eff.second == "u_0" and self.u_0_limit > min(eff.u_0_limit, eff.grid[-1]) + 1e-9:
-            raise InputError(
-                f"campaign: u_0_limit is {self.u_0_limit:g} and the efficiency reaches to u_0 = "
-                f"{min(eff.u_0_limit, eff.grid[-1]):g}; lower the limit or extend the curve"
-            )
+        eff.check_limit("campaign", self.u_0_limit)
         for f in self.fields:
-            rule = parse_rule(f.sources)
-            if eff.second == "I_S" and not (isinstance(rule, LimitRule) and rule.band == "I"):
-                raise InputError(
-                    f"field '{f.name}': the efficiency depends on I_S, so its sources need a limit in I at baseline, "
-                    f"not '{f.sources}'"
-                )
-            if eff.second == "u_0" and isinstance(rule, PeakRule):
-                raise InputError(
-                    f"field '{f.name}': a limit at peak goes with the impact parameter, and so does the efficiency; "
-                    "average the curve over u_0, or set the limit at baseline"
-                )
+            eff.check_sources(f"field '{f.name}'", f.sources)
             if eff.per == "catalogued_object" and f.monitored_stars is None and f.star_density is None:
                 raise InputError(
                     f"field '{f.name}': the efficiency is one per catalogued object, so the number of catalogued "
                     "objects must be stated: monitored_stars or star_density_per_arcmin2"
-                )
-            if eff.source_limit and f.sources != eff.source_limit:
-                raise InputError(
-                    f"field '{f.name}': its sources are {f.sources} and the efficiency is one of {eff.source_limit}; "
-                    "make them agree"
                 )
             if not hasattr(parse_rule(f.sources), "band") and "distance" in f.sources and f.monitored_stars is None:
                 raise InputError(f"field '{f.name}': sources at one distance have no number; state monitored_stars")

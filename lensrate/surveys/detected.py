@@ -6,6 +6,7 @@ import numpy as np
 
 from ..lensing.sampler import Sampler, seeds
 from ..parallel import run_map
+from .stars import field_curve
 
 __all__ = ["Detected", "detected_events"]
 
@@ -73,11 +74,8 @@ def detected_events(forecast, n=20_000, seed=1, jobs=1):
     def one(i):
         f = forecast.fields[i]
         draws = Sampler.of(f.sightline).draw(n, children[i], tilt="equal")
-        curve = forecast.campaign.efficiency.up_to(forecast.campaign.u_0_limit)
-        if curve.second == "I_S":
-            from .stars import magnitude_share
-
-            curve = curve.averaged(magnitude_share(f.sightline._integrals.ready))
+        survey = forecast.campaign
+        curve = field_curve(survey.efficiency, survey.u_0_limit, f.sightline._integrals.ready)
         weight = draws.weight * curve.of(draws.t_E)
         expected = f.expected.sum(axis=1)
         drawn = np.bincount(draws.lens_class, weight, minlength=expected.size)

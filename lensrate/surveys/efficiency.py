@@ -12,7 +12,7 @@ import numpy as np
 from ..errors import InputError, did_you_mean, one_of
 from ..io import read_rows
 from ..lensing.distributions import Quantiles
-from ..sources.rules import LimitRule, parse_rule
+from ..sources.rules import LimitRule, PeakRule, parse_rule
 
 __all__ = ["INCLUDES", "PER", "SECOND", "Efficiency", "locate"]
 
@@ -254,6 +254,37 @@ class Efficiency:
     def _reduced(self, weights, u_0_limit):
         stated = {key: getattr(self, key) for key in ("binned", "per", "includes", "source_limit", "name")}
         return Efficiency(self.t_E, weights @ self.values, u_0_limit=u_0_limit, **stated)
+
+    def check_limit(self, where, u_0_limit):
+        """Raise InputError unless this is an efficiency of events within an impact parameter."""
+        own = min(self.u_0_limit, self.grid[-1]) if self.second == "u_0" else self.u_0_limit
+        if self.second == "u_0" and u_0_limit > own + 1e-9:
+            raise InputError(
+                f"{where}: u_0_limit is {u_0_limit:g} and the efficiency reaches to u_0 = {own:g}; lower the limit or "
+                "extend the curve"
+            )
+        if self.name != "complete" and self.second != "u_0" and abs(own - u_0_limit) > 1e-9:
+            raise InputError(
+                f"{where}: u_0_limit is {u_0_limit:g} and the efficiency is one of events with u_0 below {own:g}; set "
+                f"u_0_limit = {own:g}"
+            )
+
+    def check_sources(self, where, sources):
+        """Raise InputError unless this is an efficiency of events on the sources of a rule, given as text."""
+        rule = parse_rule(sources)
+        if self.second == "I_S" and not (isinstance(rule, LimitRule) and rule.band == "I"):
+            raise InputError(
+                f"{where}: the efficiency depends on I_S, so its sources need a limit in I at baseline, not '{sources}'"
+            )
+        if self.second == "u_0" and isinstance(rule, PeakRule):
+            raise InputError(
+                f"{where}: a limit at peak goes with the impact parameter, and so does the efficiency; average the "
+                "curve over u_0, or set the limit at baseline"
+            )
+        if self.source_limit and rule.text != self.source_limit:
+            raise InputError(
+                f"{where}: its sources are {sources} and the efficiency is one of {self.source_limit}; make them agree"
+            )
 
     def inside(self, t_E):
         """Return whether the curve says anything of these timescales [d]."""

@@ -14,7 +14,7 @@ from ..errors import InputError, one_of
 from ..kernels import fisher as kernels
 from ..lensing import earth
 from ..parallel import run_map
-from ..units import check_range, strip
+from ..units import DAYS_PER_YEAR, check_range, strip
 
 __all__ = ["FollowUp", "MassErrors", "mass_errors", "measured", "measured_against_hours"]
 
@@ -373,7 +373,7 @@ def _next_open(facility, ra, dec):
     if not facility.least_sun_angle:
         return None
     # one year serves for all: the Sun is back within half a day
-    start, year = 51544.5, 365.25
+    start = 51544.5
     wait = np.arange(2 * 365.0)
     up = earth.sun_angle(start + wait[:365], ra * u.rad, dec * u.rad).to_value(u.deg) >= facility.least_sun_angle
     if not up.any():
@@ -382,6 +382,6 @@ def _next_open(facility, ra, dec):
     wait = np.where(up, 0.0, following - wait[:365])
 
     def next_open(t):
-        return t + wait[np.minimum(((t - start) % year).astype(int), 364)]
+        return t + wait[np.minimum(((t - start) % DAYS_PER_YEAR).astype(int), 364)]
 
     return next_open

@@ -12,6 +12,7 @@ from ..lensing import distributions
 from ..remnants.classes import MassSpectrum
 from ..remnants.kicks import parse_kick
 from ..units import DAYS_PER_YEAR
+from .stars import field_curve
 
 __all__ = ["KickYield", "kick_yield"]
 
@@ -152,11 +153,7 @@ def kick_yield(forecast, lens="neutron_star"):
                 spectra[k][model.n_stellar + hosts.index(i) + k if i in hosts else i] = spectrum
         masses = distributions.MassGrid.deposit(integrals.grid.h, spectra)
         t, pdf, _ = distributions.timescales(integrals.grid, integrals.unit, masses, False)
-        curve = forecast.campaign.efficiency.up_to(forecast.campaign.u_0_limit)
-        if curve.second == "I_S":
-            from .stars import magnitude_share
-
-            curve = curve.averaged(magnitude_share(integrals.ready))
+        curve = field_curve(forecast.campaign.efficiency, forecast.campaign.u_0_limit, integrals.ready)
         mean = np.array([curve.mean(t, part)[0] for part in pdf])
         years = forecast.campaign.calendar.exposure(curve.includes).sum() / DAYS_PER_YEAR
         exposure = f.sources * f.rate_factor * years * forecast.campaign.u_0_limit

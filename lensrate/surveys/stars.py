@@ -11,7 +11,7 @@ from ..scenario import resolve
 from ..scenario.numerics import Numerics
 from ..sources.rules import DistanceRule, LimitRule, parse_rule
 
-__all__ = ["FieldStars", "field_scenario", "field_stars", "magnitude_share"]
+__all__ = ["FieldStars", "field_curve", "field_scenario", "field_stars", "magnitude_share"]
 
 _ARCMIN2_PER_DEG2 = 3600.0
 
@@ -125,6 +125,24 @@ def _over_field(f, scenario, dust):
         patchy = mean(points, np.full(values.size, 1.0 / values.size))
         density, factor = density * patchy[0], factor * patchy[1]
     return float(middle[0] * density), float(factor)
+
+
+def field_curve(efficiency, u_0_limit, ready):
+    """Return an efficiency against t_E alone: averaged over u_0 up to a limit, or over the magnitudes of the sources.
+
+    Parameters
+    ----------
+    efficiency : Efficiency
+    u_0_limit : float
+    ready : Line
+        Whose sources count.
+
+    Returns
+    -------
+    Efficiency
+    """
+    curve = efficiency.up_to(u_0_limit)
+    return curve.averaged(magnitude_share(ready)) if curve.second == "I_S" else curve
 
 
 def magnitude_share(ready):

@@ -13,7 +13,7 @@ from ..scenario import Scenario
 from ..units import DAYS_PER_YEAR
 from .campaign import Campaign
 from .dust_map import DustMap
-from .stars import field_scenario, field_stars, magnitude_share
+from .stars import field_curve, field_scenario, field_stars
 
 __all__ = [
     "CampaignForecast",
@@ -310,9 +310,7 @@ def _field(survey, base, i, dust):
 
 def assembled(survey, f, centre, number, counted, factor):
     """Return the FieldForecast of a field from its centre's Sightline, its sources and the factor on the rate."""
-    curve = survey.efficiency.up_to(survey.u_0_limit)
-    if curve.second == "I_S":
-        curve = curve.averaged(magnitude_share(centre._integrals.ready))
+    curve = field_curve(survey.efficiency, survey.u_0_limit, centre._integrals.ready)
     mean, inside = np.array([curve.mean(centre.t_E, pdf) for pdf in centre.rate_per_ln_t_E]).T
     lenses = [centre.lenses[name] for name in centre.classes]
     rate = np.array([lens.rate for lens in lenses]) * factor

@@ -11,12 +11,14 @@ import lensrate
 from lensrate import InputError, Scenario
 from lensrate.datafiles import data_folder
 from lensrate.events import goodness
-from lensrate.events.compare import compare
+from lensrate.events.compare import compare, differences
 from lensrate.events.fold import LN_T, STEP, Errors, assign, fold_campaign, grouped
 from lensrate.events.observed import Sample
 from lensrate.events.shapes import Parallaxes
 from lensrate.events.versus import compare_sample
 from lensrate.surveys.campaign import Campaign
+from lensrate.surveys.efficiency import Efficiency
+from lensrate.surveys.yields import campaign
 
 UNKICKED = Scenario.read("default").replace(kicks="none")
 
@@ -191,3 +193,85 @@ def test_the_invented_sample_lies_in_the_invented_fields():
     n = np.bincount(assign(sample.events, fields), minlength=len(fields))
     assert n.sum() == len(sample) and n.min() > 40
     assert sum("pi_EN" in e.solutions[0].measured for e in sample) == 42
+
+
+def test_what_the_forecast_calls_impossible_counts_in_ln_L(forecast, folded):
+    table = draw_table(forecast, 3, parallax=True)
+    usual = compare(Sample.from_table(table), folded, simulations=0)
+    # a field where nothing is expected, an event longer than the efficiency curve, a parallax of no lens
+    table["t_E"][0], table["t_E_err"][0] = 5000.0, 1.0
+    table["pi_EN"][1], table["pi_EN_err"][1], table["pi_EE_err"][1] = 500.0, 1e-3, 1e-3
+    strange = compare(Sample.from_table(table), folded, simulations=0)
+    assert any("1 events have a t_E of which the forecast finds none" in n for n in strange.notes)
+    assert any("1 events have a pi_E" in n for n in strange.notes)
+    # an outlier's term: the share over the span of ln t_E
+    (place,) = [i for i, e in enumerate(strange.events) if e.t_E.value == 5000.0]
+    g = folded.observed(strange.errors).sum(axis=1)
+    own = np.interp(usual.x[place], LN_T, g[usual.field[place]]) / (g[usual.field[place]].sum() * STEP)
+    lost = strange.ln_likelihood["t_E"] - usual.ln_likelihood["t_E"]
+    assert lost == pytest.approx(np.log(1e-3 / np.log(1e8)) - np.log(own), abs=0.05)
+    assert usual.ln_likelihood["pi_E"] - strange.ln_likelihood["pi_E"] > 5
+    from dataclasses import replace
+
+    none = replace(folded, rate=folded.rate * np.array([1.0, 0.0])[:, None, None])
+    dark = compare(draw_sample(forecast, 3), none, simulations=0)
+    assert dark.ln_likelihood["counts"] == -np.inf == dark.ln_likelihood["total"]
+    assert any("ln L of the counts is minus infinity" in n for n in dark.notes)
+    d = differences([dark, usual, dark])
+    assert d[0]["total"] == -np.inf and d[1]["total"] == 0.0 and not any(np.isnan(v) for row in d for v in row.values())
+
+
+def test_a_long_tail_by_class_is_the_long_tail(forecast, folded):
+    from dataclasses import replace
+
+    half = replace(folded, anchored=np.array([True, False]))
+    for f in (folded, half):
+        c = compare(draw_sample(forecast, 7), f, simulations=0, tail=60.0)
+        assert c.tail_by_class.sum() == pytest.approx(c.tail.expected, rel=1e-9)
+    assert c.counts == "mixed"
+
+
+def write(path, columns, **meta):
+    table = Table(columns)
+    table.meta = {"per": "source", "includes": [], **meta}
+    table.write(path, format="ascii.ecsv", overwrite=True)
+
+
+def test_estimates_take_the_efficiency_of_the_fields_own_sources(tmp_path, forecast):
+    # most sources are faint: a curve against I_S that finds bright ones only is nearly zero on average
+    t, m = (a.ravel() for a in np.meshgrid([1e-3, 1e5], [14.0, 19.9]))
+    write(tmp_path / "mag.ecsv", {"t_E": t, "I_S": m, "efficiency": np.where(m < 15, 1.0, 0.1)})
+    old = forecast.campaign
+    table = {"season": [{"start": "2031-01-01", "end": "2031-12-31"}], "efficiency": {"file": "mag.ecsv"},
+             "field": [{"name": "A", "l": 1.0, "b": -2.9, "radius_deg": 0.5, "limit": "I=20", "extinction": {"I": 1.2},
+                        "monitored_stars": 3e7}]}  # fmt: skip
+    f = fold_campaign(Campaign.from_dict(table, tmp_path / "c.toml"), UNKICKED)
+    assert old.fields[0].name == "A" and f.efficiency.max() < 0.2
+    c = compare(draw_sample(forecast, 3), f, simulations=0)
+    inside = [e for e in c.events]
+    assert c.rate.value == pytest.approx(len(inside) / f.efficiency.max() / f.star_years.sum(), rel=1e-6)
+    assert any("without I_S" in n for n in c.notes)
+
+
+def test_an_efficiency_against_u_0_goes_to_the_campaigns_limit(tmp_path):
+    t, x = (a.ravel() for a in np.meshgrid([1e-3, 1e5], [0.0, 1.0]))
+    write(tmp_path / "u.ecsv", {"t_E": t, "u_0": x, "efficiency": 1 - x})
+    table = {"season": [{"start": "2031-01-01", "end": "2031-12-31"}], "efficiency": {"file": "u.ecsv"},
+             "u_0_limit": 0.4, "field": [{"l": 1.0, "b": -2.9, "area_deg2": 1.0, "limit": "I=20",
+                                          "extinction": {"I": 1.2}, "monitored_stars": 3e7}]}  # fmt: skip
+    made = campaign(Campaign.from_dict(table, tmp_path / "c.toml"), UNKICKED)
+    f = fold_campaign(made.campaign, forecast=made)
+    np.testing.assert_allclose(f.expected(), made.expected.sum(axis=2), rtol=2e-3)
+
+
+def test_an_efficiency_without_a_campaign_is_checked_like_one_with(tmp_path, one):
+    scenario = UNKICKED.replace(sources="limit:I=20")
+    for stated, words in (({"source_limit": "I=19"}, "one of limit:I=19"), ({"u_0_limit": 0.5}, "u_0_limit = 0.5")):
+        write(tmp_path / "e.ecsv", {"t_E": [1.0, 300.0], "efficiency": [0.1, 0.2]}, **stated)
+        with pytest.raises(InputError, match=words):
+            compare_sample(one, scenario, efficiency=Efficiency.read(tmp_path / "e.ecsv"), simulations=0)
+    t, m = (a.ravel() for a in np.meshgrid([1.0, 300.0], [14.0, 19.0]))
+    write(tmp_path / "e.ecsv", {"t_E": t, "I_S": m, "efficiency": 0.0 * t + 0.5})
+    with pytest.raises(InputError, match="depends on I_S"):
+        curve = Efficiency.read(tmp_path / "e.ecsv")
+        compare_sample(one, UNKICKED.replace(sources="clump"), efficiency=curve, simulations=0)

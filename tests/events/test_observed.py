@@ -72,6 +72,30 @@ def test_solutions_are_joined():
         Sample.from_table(t)
 
 
+def test_solutions_agree_in_place_across_zero_and_near_the_pole():
+    row = {"event": ["a", "a"], "t_E": [20.0, 21.0], "t_E_err": [1.0, 1.0]}
+    assert len(Sample.from_table(Table({**row, "l": [359.999, 0.001], "b": [1.0, 1.0]}))) == 1
+    assert len(Sample.from_table(Table({**row, "l": [10.0, 11.0], "b": [89.99, 89.99]}))) == 1
+    with pytest.raises(InputError, match="not the place of row 1"):
+        Sample.from_table(Table({**row, "l": [10.0, 11.0], "b": [5.0, 5.0]}))
+
+
+def test_what_is_typed_is_used_or_refused():
+    from lensrate.events.rows import said_epoch
+
+    one = table(frame=["geocentric"] * 2, t_0par=[60000.0, np.nan])
+    sample = Sample.from_table(one, t_0par=60100.0)
+    assert [e.t_0par for e in sample] == [60000.0, 60100.0]
+    assert any("1 rows state a t_0par of their own" in n for n in sample.notes)
+    one = table(frame=["geocentric"] * 2)
+    one.meta["t_0par"] = 60000.0
+    assert said_epoch(one.meta, 2460000.5, "") == 60000.0
+    with pytest.raises(InputError, match="its header says t_0par = 60000"):
+        Sample.from_table(one, t_0par=60100.0)
+    assert any("no event is geocentric" in n for n in Sample.from_table(table(), "heliocentric", 60100.0).notes)
+    assert any("weight is not used" in n for n in Sample.from_table(table(weight=[1.0, 2.0])).notes)
+
+
 def test_frames(tmp_path):
     assert any("does not say a frame" in n for n in Sample.from_table(table()).notes)
     assert not Sample.from_table(table(), "heliocentric").notes

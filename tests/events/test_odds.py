@@ -299,6 +299,12 @@ def test_few_effective_samples_are_refused():
         _of(_as_draws(_draws(60)))
 
 
+def test_directions_of_a_sample_are_no_further_samples():
+    # a geocentric size without a direction is evaluated in several directions
+    columns = {"t_E": _draws(300)["t_E"], "pi_E": np.random.default_rng(5).normal(0.12, 0.01, 300)}
+    assert 100 < _of(_as_draws(columns), "geocentric", 60000.0).effective_samples <= 300
+
+
 def test_both_frames_give_the_same_answer():
     """The samples of one fit in both frames, its prior carried along: dt d2pi goes with the third power of t_E."""
     target = {"t_0par": 55763.0, "ra": 267.9 * u.deg, "dec": -29.9 * u.deg}
