@@ -5,6 +5,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from ..errors import ConvergenceError, InputError, one_of
+from ..kernels import draws
 from ..kernels import sampling as kernels
 from ..parallel import run_map
 from ..units import DAYS_PER_YEAR, KAPPA, MAS
@@ -187,28 +188,29 @@ class Sampler:
         weight = self._pairs["weight"] * pair_tilt
         share, other = np.empty(weight.size), np.empty(weight.size, dtype=np.int64)
         envelope = kernels.alias_table(weight, share, other) * self._unit
+        alias = np.stack([share, other], axis=1)
+        normals = draws.NORMALS if full else draws.NORMALS - 2
         root = seeds(rng)
 
         def run(job):
             """Blocks that write one after another into one pair of arrays."""
             blocks, floats, words, motion, start = job
             most = max(size for _, size in blocks)
-            u, z, e = np.empty((most, kernels.UNIFORMS)), np.empty((most, 2)), np.empty(most)
+            u, z, e = np.empty(draws.UNIFORMS * most), np.empty(normals * most), np.empty(most)
             kept = start
             for seed, size in blocks:
                 rng = np.random.Generator(np.random.SFC64(seed))
-                rng.random(out=u[:size])
-                rng.standard_normal(out=z[:size])
+                uniform, normal = u[: draws.UNIFORMS * size], z[: normals * size]
+                rng.random(out=uniform)
+                rng.standard_normal(out=normal[: 2 * size])
                 rng.standard_exponential(out=e[:size])
-                first = kept
-                kept = kernels.draw(
-                    u[:size], z[:size], e[:size], share, other, self._pairs["words"], pair_tilt, *self._masses,
-                    *self._tables, KAPPA, DAYS_PER_YEAR, envelope, not weighted, first, floats, words,
+                # last, so that the rest is the same with and without it
+                rng.standard_normal(out=normal[2 * size :])
+                kept = draws.draw(
+                    uniform.reshape(-1, size), normal.reshape(-1, size), e[:size], alias, self._pairs["words"],
+                    pair_tilt, *self._masses, *self._tables, KAPPA, DAYS_PER_YEAR, envelope, not weighted, kept, floats,
+                    words, motion,
                 )  # fmt: skip
-                if motion is not None:
-                    rng.standard_normal(out=z[: kept - first])
-                    D, lens, _, D_src, src, *_ = self._tables
-                    kernels.source_motion(z[: kept - first], first, D, lens, D_src, src, floats, words, motion)
             return kept - start
 
         if weighted:
@@ -230,7 +232,7 @@ class Sampler:
         scale = self.rate / floats[9].sum()
         numbers = dict(zip(("M", "D_L", "D_S", "mu_rel_l", "mu_rel_b", "t_E", "theta_E", "pi_rel", "pi_E"), floats))
         extra = {}
-        if motion is not None:
+        if motion.size:
             mu_S = motion[:, :n]
             extra = {
                 "mu_S_l": mu_S[0],
@@ -272,9 +274,9 @@ class Sampler:
 
 def _arrays(n, full):
     return (
-        np.empty((kernels.FLOATS, n)),
-        np.empty((kernels.WORDS, n), dtype=np.int32),
-        np.empty((2, n)) if full else None,
+        np.empty((draws.FLOATS, n)),
+        np.empty((draws.WORDS, n), dtype=np.int32),
+        np.empty((2, n if full else 0)),
     )
 
 
@@ -290,10 +292,7 @@ def _until(run, root, n, share, full, jobs):
             if kept < n:
                 parts.append((task[1:4], made, len(task[0]) * BLOCK))
                 kept += made
-    joined = [
-        None if parts[0][0][i] is None else np.concatenate([arrays[i][:, :made] for arrays, made, _ in parts], axis=1)
-        for i in range(3)
-    ]
+    joined = [np.concatenate([arrays[i][:, :made] for arrays, made, _ in parts], axis=1) for i in range(3)]
     return joined, sum(p[2] for p in parts)
 
 

@@ -95,16 +95,16 @@ def tables(ready, used):
     _integrate(lens, np.diff(D))
     band, root = _bands(D, D_src, cell)
     n = lit.size * root.size
-    height, alias = np.empty((2, used.size, n), dtype=np.float32)
-    other, total = np.empty((used.size, n), dtype=np.int16), np.empty(used.size)
+    height, alias = np.empty((used.size, n), dtype=np.float32), np.empty((used.size, n, 2), dtype=np.float32)
+    total = np.empty(used.size)
     pieces = np.empty((n, 5), dtype=np.int16)
     kernels.envelope(
-        lens, speed, square, src, speed_S, square_S, cell, band, root, height, total, alias, other, pieces
+        lens, speed, square, src, speed_S, square_S, cell, band, root, height, total, alias, pieces
     )  # fmt: skip
     guide, guide_S = np.empty((used.size, _GUIDE), dtype=np.int16), np.empty((lit.size, _GUIDE), dtype=np.int16)
     kernels.guides(lens, guide)
     kernels.guides(src, guide_S)
-    made = (D, lens, guide, D_src, src, guide_S, height, alias, other, pieces)
+    made = (D, lens, guide, D_src, src, guide_S, height, alias, pieces)
     own = ready.src.shape[1] == len(ready.model.galaxy.components)
     return made, total, np.asarray(lit if own else [-1] * lit.size, dtype=np.int32)
 
@@ -167,13 +167,13 @@ def masses(spectra):
             if key not in known:
                 known[key] = len(first) - 1
                 parts.append(_mass_nodes(s))
-                first.append(first[-1] + parts[-1][0].size)
+                first.append(first[-1] + len(parts[-1]))
             which[c, e] = known[key]
-    return (np.array(first), *(np.concatenate(p) for p in zip(*parts))), which
+    return (np.array(first), np.concatenate(parts)), which
 
 
 def _mass_nodes(spectrum):
-    """Alias table by number sqrt(M), mass, and how far a node reaches to either side (twice over)."""
+    """Share and other of an alias table by number sqrt(M), mass, how far a node reaches to either side (twice over)."""
     some = spectrum.number > 0
     order = np.argsort(spectrum.mass[some])
     mass, number = spectrum.mass[some][order], spectrum.number[some][order]
@@ -189,4 +189,4 @@ def _mass_nodes(spectrum):
         near = np.minimum(left, right)
         near[0], near[-1] = gap[0], gap[-1]
         left, right = np.minimum(left, _GAP * near), np.minimum(right, _GAP * near)
-    return share, other, mass, left, right
+    return np.stack([share, other, mass, left, right], axis=1)
