@@ -247,7 +247,5 @@ def _earth(forecast, days):
 
 def _light(c, band, source, u_0, blend, lens):
     """Fill the magnitudes."""
-    rest = lens if blend is None else light.add(lens, blend)
     c[f"{band}_S"][:], c[f"{band}_L"][:] = source, lens
-    c[f"{band}_base"][:] = light.add(source, rest)
-    c[f"{band}_peak"][:] = light.add(source - light.gain(u_0), rest)
+    kernels.together(source, lens, np.inf if blend is None else blend, u_0, c[f"{band}_base"], c[f"{band}_peak"])

@@ -1,4 +1,4 @@
-"""Columns of mock events that follow from others: the sky frame, the geocentric frame, magnitudes below a limit."""
+"""Columns of mock events that follow from others: the sky frame, the geocentric frame, magnitudes."""
 
 import math
 
@@ -83,3 +83,21 @@ def interpolate(x, at, values, out):
             i += 1
         part = min(max((x[n] - at[i]) / (at[i + 1] - at[i]), 0.0), 1.0)
         out[n] = values[i] + part * (values[i + 1] - values[i])
+
+
+@kernel
+def together(source, lens, blend, u_0, base, peak):
+    """Fill the magnitudes (n,) of source, lens and blend (a number) together, at baseline and at a point source's peak.
+
+    Infinite magnitudes give no light; what is unknown (nan) stays so.
+    """
+    to_flux = -0.4 * math.log(10.0)
+    to_magnitude = -2.5 / math.log(10.0)
+    other = math.exp(to_flux * blend)
+    for n in range(source.size):
+        star = math.exp(to_flux * source[n])
+        rest = other + (math.exp(to_flux * lens[n]) if lens[n] < math.inf else 0.0)
+        u2 = u_0[n] * u_0[n]
+        gain = (u2 + 2.0) / math.sqrt(u2 * (u2 + 4.0))
+        base[n] = to_magnitude * math.log(star + rest)
+        peak[n] = to_magnitude * math.log(gain * star + rest)
