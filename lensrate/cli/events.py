@@ -24,7 +24,10 @@ from .text import columns, number, safe, wrap
 @click.option("--equal-classes", is_flag=True, help="As many events of every lens class; weights undo it.")
 @click.option("--detected", "only_detected", is_flag=True, help="Keep only what the campaign finds.")
 @click.option("--blend", type=float, metavar="MAG", help="Further light in the source's place.")
-@click.option("--dates", nargs=2, metavar="START END", help="Events of a sightline peak between these, 2031-02-10.")
+@click.option(
+    "--dates", nargs=2, metavar="START END",
+    help="Events of a sightline peak evenly between these days, like 2031-02-10; in 2030 without it.",
+)
 @click.option("--seed", type=click.IntRange(0), help="Same seed, same events; made up and told if not given.")
 @click.option("--jobs", type=click.IntRange(1, 256), default=1, show_default=True, help="Threads.")
 @click.option("--plot", metavar="FILE", help="Draw t_E and pi_E by class: .png .pdf .svg.")
@@ -66,7 +69,7 @@ def events(
     if campaign_file:
         result = mock_events(_campaign(campaign_file, choices, jobs, quiet), **drawing)
         if only_detected:
-            result = result.select(result["detected"])
+            result = result.found()
     else:
         scenario = read_scenario(**choices)
         announce(quiet)
@@ -129,28 +132,34 @@ def report(result):
     from ..remnants.classes import LABELS
 
     made = result.meta()
+    of = f"   {safe(made['campaign'])} ({made['campaign_hash']})" if "campaign" in made else ""
     head = [
-        wrap(f"lensrate {result.version}   scenario {safe(made['scenario'])} ({made['scenario_hash']})"),
+        wrap(f"lensrate {result.version}{of}   scenario {safe(made['scenario'])} ({made['scenario_hash']})"),
         wrap(result.header()),
     ]
+    w, expected = result.columns["weight"], result.expected()
+    # of a sightline the integrated rate; of a campaign what happened in these draws, where they are all of them
+    unit, scale, tail = "rate [1e-6/yr]", 1e6, []
     campaign = "detected" in result.columns
-    unit = "events" if campaign else "rate [1e-6/yr]"
-    scale = 1.0 if campaign else 1e6
-    titles = ["lens", "drawn", unit, *(["found"] if campaign else []), "median t_E [d]", "median pi_E", "median M"]
+    counted = [*([] if result.selected else ["happened"]), "found"] if campaign else [unit]
+    titles = ["lens", "drawn", *counted, "median t_E [d]", "median pi_E", "median M"]
+
+    def row(label, numbers, rate, mine):
+        drawn, weight, found = numbers
+        shown = [*([] if result.selected else [weight]), found] if campaign else [rate * scale]
+        middle = [_median(result.columns[c][mine], w[mine]) for c in ("t_E", "pi_E", "M_L")]
+        return [label, f"{int(drawn)}", *map(number, [*shown, *middle])]
+
     rows = []
     for i, name in enumerate(result.classes):
-        mine = result.columns["lens"] == i
-        drawn, weight, found = result.by_class[i]
-        middle = [_median(result.columns[c][mine], result.columns["weight"][mine]) for c in ("t_E", "pi_E", "M_L")]
-        row = [LABELS.get(name, name.replace("_", " ")), f"{int(drawn)}", number(weight * scale)]
-        rows.append([*row, *([number(found)] if campaign else []), *map(number, middle)])
-    drawn, weight, found = result.by_class.sum(axis=0)
-    w = result.columns["weight"]
-    middle = [_median(result.columns[c], w) for c in ("t_E", "pi_E", "M_L")]
-    row = ["all", f"{int(drawn)}", number(weight * scale)]
-    rows.append([*row, *([number(found)] if campaign else []), *map(number, middle)])
+        label = LABELS.get(name, name.replace("_", " "))
+        rows.append(row(label, result.by_class[i], expected[name], result.columns["lens"] == i))
+    rows.append(row("all", result.by_class.sum(axis=0), sum(expected.values()), np.ones(w.size, dtype=bool)))
     effective = w.sum() ** 2 / np.sum(w**2) if w.sum() > 0 else 0.0
-    tail = [] if effective > 0.999 * w.size else [f"worth {effective:.0f} equal events"]
+    if effective < 0.999 * w.size:
+        tail.append(f"worth {effective:.0f} equal events")
+    if not campaign:
+        tail.append("rate: integrated, per source star; the other columns are those of the draws")
     return "\n".join([*head, columns(titles, rows), *tail])
 
 

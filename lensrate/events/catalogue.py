@@ -8,6 +8,7 @@ import numpy as np
 
 from .._version import __version__
 from ..errors import InputError
+from ..units import DAYS_PER_YEAR
 
 __all__ = ["COLUMNS", "MockEvents"]
 
@@ -56,7 +57,8 @@ class MockEvents:
     Attributes
     ----------
     columns : dict of str to ndarray, (n,) each
-        As `COLUMNS`, in its units; lens, component, source_component and field as indices into the lists below.
+        As `COLUMNS`, in its units; lens, component, source_component and field as indices into the lists below; and
+        birth, the uniform number behind the age of a white dwarf, which no table shows.
     classes, components, field_names : list of str
     band : str
         Of the magnitudes.
@@ -68,6 +70,10 @@ class MockEvents:
         What the events were drawn from.
     unit : str
         Of the weight: "1/yr", events per source and year, or "", expected events of the campaign.
+    blend : float or None
+        Further light in the source's place [mag].
+    selected : str
+        Which of the drawn events these are; empty: all.
     """
 
     columns: dict
@@ -80,6 +86,7 @@ class MockEvents:
     forecast: object
     unit: str
     blend: float | None = None
+    selected: str = ""
     frame: str = "heliocentric; t_0, u_0 and columns on _geo: geocentric with t_0par = t_0"
     version: str = __version__
 
@@ -115,24 +122,53 @@ class MockEvents:
         each = (np.ones(len(self)), weight, weight * found)
         return np.column_stack([np.bincount(lens, w, minlength=n) for w in each])
 
-    def select(self, chosen):
+    def select(self, chosen, words="a selection"):
         """Return a catalogue of some events only; numbers and weights stay as they are.
 
         Parameters
         ----------
         chosen : ndarray of bool or int
             As an index of the columns.
+        words : str
+            Which they are, for header and metadata.
 
         Returns
         -------
         MockEvents
         """
-        return replace(self, columns={key: column[chosen] for key, column in self.columns.items()})
+        said = ", ".join(filter(None, [self.selected, words]))
+        return replace(self, columns={key: column[chosen] for key, column in self.columns.items()}, selected=said)
+
+    def found(self):
+        """Return the events that the campaign finds.
+
+        Raises
+        ------
+        InputError
+            A sightline's catalogue, of which nothing says what is found.
+        """
+        if "detected" not in self.columns:
+            raise InputError("events: no campaign says which events are found")
+        return self.select(self["detected"], "only those that the campaign finds")
+
+    def expected(self):
+        """Return the integrated number by class behind the draws: rate per source and year, or a campaign's events.
+
+        A campaign's are those that happen, found or not.
+        """
+        if self.unit:
+            return {name: self.forecast.lenses[name].rate for name in self.classes}
+        survey, total = self.forecast.campaign, np.zeros(len(self.classes))
+        years = survey.calendar.exposure(survey.efficiency.includes).sum() / DAYS_PER_YEAR
+        for f in self.forecast.fields:
+            rate = np.array([f.sightline.lenses[name].rate for name in self.classes])
+            total += f.sources * f.rate_factor * years * rate
+        return dict(zip(self.classes, map(float, total)))
 
     def header(self):
         """Return what stands above every table."""
         kind = "weighted" if self.weighted else "unweighted"
-        made = f"{len(self)} {kind} events, seed {self.seed}"
+        made = f"{len(self)} {kind} events{', ' * bool(self.selected)}{self.selected}, seed {self.seed}"
         return f"{made}; {self.forecast.header()}; t_0, u_0, *_geo geocentric at t_0"
 
     def meta(self):
@@ -144,6 +180,7 @@ class MockEvents:
             "seed": self.seed,
             "number": len(self),
             "weighted": self.weighted,
+            "selected": self.selected or "all",
             "weight": words[self.unit],
             "band": self.band,
             "blend_mag": self.blend,
@@ -192,13 +229,17 @@ class MockEvents:
         """
         described = {key.format(band=self.band): row for key, row in COLUMNS.items()}
         meta = self.meta()
-        keep = ("seed", "number", "weighted", "weight", "frame", "t_0", "t_0par")
-        each = dict(zip(self.classes, self.by_class.tolist()))
+        keep = ("seed", "number", "weighted", "selected", "weight", "frame", "t_0", "t_0par")
+        each, expected = dict(zip(self.classes, self.by_class.tolist())), self.expected()
         return {
+            **{key: meta[key] for key in ("campaign", "campaign_hash", "campaign_text") if key in meta},
             **self.forecast.scenario.made(),
             **{key: meta[key] for key in keep},
             "header": self.header(),
-            "lenses": {name: {"events": int(n), "weight": w, "detected": d} for name, (n, w, d) in each.items()},
+            "lenses": {
+                name: {"events": int(n), "weight": w, "detected": d, "expected": expected[name]}
+                for name, (n, w, d) in each.items()
+            },
             "units": {name: self.unit if name == "weight" else described[name][0] for name in self.names},
             "columns": {name: self[name].tolist() for name in self.names},
             "warnings": meta["warnings"],

@@ -9,7 +9,7 @@ from ..sources.lens_light import dwarf_magnitude, white_dwarf_magnitude
 from ..sources.luminosity import clump_magnitude, clump_width
 from ..sources.rules import ClumpRule, DistanceRule, PeakRule
 
-__all__ = ["add", "gain", "lens_magnitude", "source_magnitude"]
+__all__ = ["add", "cooling_age", "gain", "lens_magnitude", "source_magnitude"]
 
 _CELLS = 48  # of the square root of u_0, where it depends on the source
 _ROWS = 16384
@@ -105,18 +105,33 @@ def lens_magnitude(model, sources, lens_class, component, M, D_L, u):
     out = np.full(D_L.size, np.inf)
     star, dwarf = (lens_class == model.classes.index(n) for n in ("star", "white_dwarf"))
     out[star] = dwarf_magnitude(band, M[star])
-    lifetimes = Lifetimes.read(model.scenario.lifetimes)
     for i in np.unique(component[dwarf]):
         mine = np.flatnonzero(dwarf & (component == i))
-        spectrum, (young, old) = model.populations[i].spectra["white_dwarf"], model.galaxy.components[i].age
-        order = np.argsort(spectrum.mass)
-        life = lifetimes.lifetime(np.interp(M[mine], spectrum.mass[order], spectrum.initial_mass[order]))
-        oldest = np.maximum(old - life, 0.0)
-        youngest = np.minimum(np.maximum(young - life, 0.0), oldest)
-        out[mine] = white_dwarf_magnitude(band, M[mine], youngest + u[mine] * (oldest - youngest))
+        out[mine] = white_dwarf_magnitude(band, M[mine], cooling_age(model, i, M[mine], u[mine]))
     shines = star | dwarf
     out[shines] += _modulus(sources.dust, D_L[shines])
     return out
+
+
+def cooling_age(model, component, M, u):
+    """Return how long white dwarfs have been cooling [Gyr]: their component's age less the life of their star.
+
+    Parameters
+    ----------
+    model : Model
+    component : int
+    M : ndarray
+        [Msun]
+    u : ndarray
+        Between 0 and 1, of the shape of `M`: when the star was born, evenly over the ages that are old enough.
+    """
+    spectrum, (young, old) = model.populations[component].spectra["white_dwarf"], model.galaxy.components[component].age
+    order = np.argsort(spectrum.mass)
+    star = np.interp(M, spectrum.mass[order], spectrum.initial_mass[order])
+    life = Lifetimes.read(model.scenario.lifetimes).lifetime(star)
+    oldest = np.maximum(old - life, 0.0)
+    youngest = np.minimum(np.maximum(young - life, 0.0), oldest)
+    return youngest + u * (oldest - youngest)
 
 
 def _modulus(dust, D):

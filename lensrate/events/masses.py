@@ -273,6 +273,6 @@ def image_magnitudes(forecast, band, events, rows):
             out[at] = np.interp(mine.brighter(absolute[at]), other.cumulative, other.magnitude)
     lens = light.lens_magnitude(
         forecast._model, there, c["lens"][rows], c["component"][rows], c["M_L"][rows], c["D_L"][rows],
-        np.full(rows.size, 0.5),
+        c["birth"][rows],
     )  # fmt: skip
     return out + distance + there.dust(D), lens

@@ -1,5 +1,7 @@
 """Mock catalogues: events of a sightline or a campaign, drawn from the rate, with all that belongs to them."""
 
+import os
+
 import astropy.units as u
 import numpy as np
 
@@ -107,7 +109,7 @@ def mock_events(
 def _forecast(l, b, scenario, jobs):
     if isinstance(l, (Sightline, CampaignForecast)):
         return l
-    if isinstance(l, Campaign) or not (hasattr(l, "unit") or hasattr(l, "galactic")):
+    if isinstance(l, (Campaign, str, os.PathLike)):
         return campaign(l, None if scenario == "default" else scenario, jobs=jobs)
     return sightline(l, b, scenario)
 
@@ -200,6 +202,7 @@ def _catalogue(forecast, n, root, weighted, tilt, jobs, blend, when, efficiency=
     }
     made = [*_SKY, "t_0", "u_0"]
     made += [f"{band}_{what}" for what in ("S", "L", "base", "peak")]
+    made += ["birth"]
     made += ["efficiency"] if efficiency is not None else []
     columns.update({name: np.empty(n) for name in made})
     if efficiency is not None:
@@ -226,7 +229,7 @@ def _catalogue(forecast, n, root, weighted, tilt, jobs, blend, when, efficiency=
         _light(c, band, faint, u_0, blend, light.lens_magnitude(
             model, sources, c["lens"], c["component"], c["M_L"], c["D_L"], born
         ))  # fmt: skip
-        c["u_0"][:] = side * u_0
+        c["u_0"][:], c["birth"][:] = side * u_0, born
         if efficiency is not None:
             second = {"": None, "I_S": faint, "u_0": u_0}[efficiency.second]
             c["efficiency"][:] = efficiency.of(c["t_E"], second)

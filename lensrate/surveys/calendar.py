@@ -185,25 +185,6 @@ class Calendar:
         k = np.clip(np.searchsorted(ends, x, side="right") - 1, 0, len(spans) - 1)
         return spans[k, 0] + (x - ends[k])
 
-    def season_of(self, mjd):
-        """Return the index of the season of each time; a time between two goes to the earlier, before all to 0."""
-        starts = np.array([s.start for s in self.seasons])
-        return np.clip(np.searchsorted(starts, np.asarray(mjd), side="right") - 1, 0, len(self.seasons) - 1)
-
-    def epochs(self, cadence):
-        """Return the times of observation [MJD], every `cadence` days in open time.
-
-        Parameters
-        ----------
-        cadence : float
-            [d]
-
-        Returns
-        -------
-        ndarray
-        """
-        return np.concatenate([np.arange(a + 0.5 * cadence, b, cadence) for a, b in self.open()])
-
     def describe(self):
         """Return one line for headers."""
         n = len(self.seasons)

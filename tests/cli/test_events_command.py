@@ -27,6 +27,14 @@ def test_json_and_table():
     assert again == out
     code, text, _ = run("1.0", "-3.9", "-n", "200", "--seed", "3", "--quiet")
     assert code == 0 and "neutron star" in text and "seed 3" in text and max(map(len, text.splitlines())) <= 100
+    # the rate is the integral's, not that of 200 draws
+    import astropy.units as u
+
+    import lensrate
+
+    rate = lensrate.sightline(1.0 * u.deg, -3.9 * u.deg).lenses["white_dwarf"].rate
+    assert made["lenses"]["white_dwarf"]["expected"] == pytest.approx(rate, rel=1e-12)
+    assert f"{1e6 * rate:.3g}" in next(line for line in text.splitlines() if line.startswith("white dwarf"))
 
 
 SURVEY = """
@@ -57,6 +65,11 @@ def test_campaign(tmp_path):
     table = QTable.read(target)
     assert table["detected"].all() and {"field", "efficiency", "t_E_geo"} <= set(table.colnames)
     assert table.meta["campaign_hash"] and table.meta["seed"] == 1
+    words = table.meta["selected"]
+    assert words == "only those that the campaign finds" and words in table.meta["header"]
+    assert "happened" not in out and "small (invented)" in out
+    made = json.loads(run("--campaign", str(file), "--seed", "1", "--json", "--quiet")[1])
+    assert made["campaign_hash"] == table.meta["campaign_hash"] and made["selected"] == "all"
 
 
 @pytest.mark.parametrize(

@@ -84,6 +84,19 @@ def test_a_source_keeps_its_rank_in_another_band(forecast):
     # clump giants of the bulge, Nataf+ 2013 in I and Hawkins+ 2017 in Ks, with a third of A_I or less as dust
     assert np.median(K[clump] - modulus) == pytest.approx(clump_magnitude("Ks") + 0.3, abs=0.3)
     assert np.all(np.isinf(lens[np.isin(events["lens"], ["neutron_star", "black_hole"])]))
+    # a white dwarf is as old in one band as in the other: its age read off I gives its Ks
+    from lensrate.sources.extinction import band_ratio
+    from lensrate.sources.lens_light import white_dwarf_magnitude
+
+    wd = np.flatnonzero(events["lens"] == "white_dwarf")
+    assert wd.size > 100
+    ages = np.geomspace(1e-3, 10.5, 4000)
+    for i in wd[:100]:
+        D, M, A = events["D_L"][i], events["M_L"][i], float(there.dust(events["D_L"][i : i + 1])[0])
+        away = 5 * np.log10(D) + 10
+        age = np.interp(events["I_L"][i] - away - A, white_dwarf_magnitude("I", M, ages), ages)
+        wanted = white_dwarf_magnitude("Ks", M, age) + away + A * band_ratio("Ks")
+        assert lens[i] == pytest.approx(wanted, abs=0.02)
 
 
 def test_what_cannot_be_measured_is_named(forecast):

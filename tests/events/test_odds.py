@@ -365,6 +365,27 @@ def test_lens_light():
     )
 
 
+def test_white_dwarfs_shine_as_those_of_a_mock_catalogue():
+    from lensrate.events.lens_limit import LensLimit
+    from lensrate.events.mock import mock_events
+
+    forecast = sightline(PLACE[0] * u.deg, PLACE[1] * u.deg, UNKICKED)
+    drawn = mock_events(forecast, number=40_000, seed=1)
+    mine = drawn["lens"] == "white_dwarf"
+    D, M = drawn["D_L"][mine], drawn["M_L"][mine]
+    absolute = drawn["I_L"][mine] - 5 * np.log10(D) - 10 - forecast._integrals.ready.sources.dust(D)
+    masses = next(c for c in line(False).classes if c.name == "white_dwarf")
+    mean, spread = LensLimit(20.0, line(False)).of(masses)
+    order, ends = np.argsort(masses.ln_M), np.quantile(M, [0.0, 0.3, 0.7, 1.0])
+    for low, high in zip(ends, ends[1:]):
+        here = (M >= low) & (M <= high)
+        said = np.mean(np.interp(np.log(M[here]), masses.ln_M[order], mean[order]))
+        # which component a lens near or far is of is left out of the limit: a tenth of a magnitude
+        assert said == pytest.approx(absolute[here].mean(), abs=4 * absolute[here].std() / np.sqrt(here.sum()) + 0.1)
+    around = absolute - np.interp(np.log(M), masses.ln_M[order], mean[order])
+    assert spread == pytest.approx(around.std(), rel=0.1)
+
+
 @settings(deadline=None, max_examples=20)
 @given(
     st.floats(0.5, 500.0), st.floats(0.005, 2.0), st.floats(0.02, 0.6), st.floats(0.1, 5.0), st.sampled_from([0, 1, 2])
