@@ -54,3 +54,13 @@ def test_commands_and_files_are_there():
     guide = (ROOT / "DEVELOPERS.md").read_text(encoding="utf-8")
     for package in sorted(p.stem for p in (ROOT / "lensrate").glob("[a-z]*")):
         assert f"`{package}`" in guide, f"{package} is missing from the guide's layers"
+
+
+def test_every_key_of_a_campaign_is_explained():
+    from lensrate.surveys import campaign, efficiency, field
+
+    table = README.split("Keys of the file")[1].split("![Expected")[0]
+    keys = [*campaign._KEYS, *field._KEYS, "start", "end", "gaps", "band", "precision", "floor_mag", "file"]
+    keys += [*efficiency._STATEMENTS, *efficiency.PER, *efficiency.INCLUDES]
+    tables = ("season", "photometry", "efficiency", "field")
+    assert not [k for k in keys if f"`{k}`" not in table and k not in tables]

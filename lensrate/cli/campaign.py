@@ -219,7 +219,7 @@ def report(result, curve=None):
         wrap(f"lensrate {result.version}   {survey.name} ({survey.hash})   scenario {result.scenario.name} "
              f"({result.scenario.hash})"),
         wrap(result.header()),
-        wrap(f"kicks: neutron stars {result.scenario.kicks}, black holes {result.scenario.bh_kicks}"),
+        wrap(result.scenario.kick_words()),
         "",
         wrap(headline(result)),
         "",
@@ -227,7 +227,7 @@ def report(result, curve=None):
     events, scaled = result.by_class(), result.scaled_by_class()
     sampling = [sum(f.sampling[i] for f in result.fields) for i in range(len(result.classes))]
     titles = ["lens", "events", "68% counts"]
-    titles += ["range"] * (result.ranges is not None) + ["fields +-", "P(>=1)"]
+    titles += ["range"] * (result.ranges is not None) + ["+- (kick fields)", "P(>=1)"]
     titles += ["scaled"] * (scaled is not None)
     rows = []
     for i, name in enumerate([*result.classes, "all"]):
@@ -242,6 +242,11 @@ def report(result, curve=None):
             row.append(number(scaled[i]))
         rows.append(row)
     lines = [*head, columns(titles, rows)]
+    if result.ranges is not None:
+        over = ", ".join(result.range_over) or "no assumption that differs from the scenario's"
+        lines.append(wrap(f"range: least and most over {over}, one at a time (family {result.family})"))
+    if any(s > 0 for s in sampling):
+        lines.append(wrap("+- (kick fields): from the finite number of orbits behind the kicked remnants' density"))
     if scaled is not None:
         lines.append(wrap(f"scaled: share x events observed in {', '.join(map(safe, result.scaled_fields()))}"))
     lines += ["", _fields(result)]
@@ -258,23 +263,36 @@ def _expm1(x):
     return math.expm1(x)
 
 
+_SHORT = {"star": "stars", "brown_dwarf": "BD", "white_dwarf": "WD", "neutron_star": "NS", "black_hole": "BH"}
+_SEASONS = 12  # listed one by one
+
+
 def _fields(result):
-    short = {"star": "stars", "brown_dwarf": "BD", "white_dwarf": "WD", "neutron_star": "NS", "black_hole": "BH"}
-    seasons = result.campaign.calendar.seasons
-    titles = ["field", "l", "b", "deg2", "sources/1e6", *(short.get(c, c)[:8] for c in result.classes), "all"]
-    titles += [s.name[:8] for s in seasons] if 1 < len(seasons) <= 3 else []
+    bands = list(dict.fromkeys(b for f in result.fields for b in f.sightline.sources["extinction"]))
+    classes = [_SHORT.get(c, c)[:8] for c in result.classes]
+    titles = ["field", "l", "b", "deg2", *(f"A_{b}" for b in bands), "sources/1e6", *classes, "all"]
     titles += ["seen"] if result.scaled_fields() else []
     rows = []
     for f in result.fields:
-        each = f.expected.sum(axis=1)
+        each, dust = f.expected.sum(axis=1), f.sightline.sources["extinction"]
         row = [safe(f.field.name)[:14], f"{f.field.l_deg:.2f}", f"{f.field.b_deg:.2f}", f"{f.field.area_deg2:.2f}"]
+        row += [f"{dust[b]:.2f}{'*' * (f.dust_from == 'dust disc')}" if b in dust else "-" for b in bands]
         row += [number(f.sources / 1e6), *map(number, each), number(each.sum())]
-        if 1 < len(seasons) <= 3:
-            row += [number(x) for x in f.expected.sum(axis=0)]
         if result.scaled_fields():
             row.append("-" if f.field.observed_events is None else f"{f.field.observed_events:g}")
         rows.append(row)
-    return columns(titles, rows)
+    lines = [columns(titles, rows)]
+    if any(f.dust_from == "dust disc" for f in result.fields):
+        lines.append("* not stated: that of the smooth dust disc")
+    seasons = result.campaign.calendar.seasons
+    if 1 < len(seasons) <= _SEASONS:
+        by = result.expected.sum(axis=0)
+        rows = [
+            [safe(s.name)[:14], f"{s.length - s.gap_days:.0f}", *map(number, by[:, j]), number(by[:, j].sum())]
+            for j, s in enumerate(seasons)
+        ]
+        lines += ["", columns(["season", "days open", *classes, "all"], rows)]
+    return "\n".join(lines)
 
 
 def _kicks(curve):
@@ -286,7 +304,7 @@ def _kicks(curve):
     return "\n".join(
         [
             wrap(f"yield of {label}s against kick speed ({number(curve.born)} born in the Galaxy)"),
-            columns(["kick [km/s]", "events per 1e9 born", "fields +-"], rows),
+            columns(["kick [km/s]", "events per 1e9 born", "+- (kick fields)"], rows),
             wrap(f"expected events with every {label} under a law: {named}"),
         ]
     )

@@ -152,13 +152,12 @@ def report(result, by):
         where += f", {number(s['source_density_per_arcmin2'], 4)} per arcmin2"
     head.append(f"sources: {where}")
     if result.field_mismatch is not None:
-        laws = f"neutron stars {safe(result.scenario.kicks)}, black holes {safe(result.scenario.bh_kicks)}"
         errors = [result.lenses[n].rate_standard_error for n in ("neutron_star", "black_hole")]
         rates = [result.lenses[n].rate for n in ("neutron_star", "black_hole")]
         parts = [f"{e / r:.1%}" for e, r in zip(errors, rates) if e is not None and r > 0]
         head.append(
             wrap(
-                f"kicks: {laws}; sampling error of their rates {', '.join(parts) or 'none'}; "
+                f"{result.scenario.kick_words()}; sampling error of their rates {', '.join(parts) or 'none'}; "
                 f"grid 0.5%; systematic: fields hold the stars here to {result.field_mismatch:+.1%}"
             )
         )

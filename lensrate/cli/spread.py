@@ -189,7 +189,7 @@ def report(result, pairs):
         f"lensrate {result.version}   {_where(about)}   scenario {safe(base.name)} ({base.hash})",
         wrap(f"base: {result.header()}"),
         wrap(
-            f"base: kicks {base.kicks}, black holes {base.bh_kicks}; remnant masses {base.ifmr}; "
+            f"base: {base.kick_words()}; remnant masses {base.ifmr}; "
             f"mass function {base.imf or 'of each component'}; Galaxy {base.galaxy}"
         ),
         wrap(f"family {family.name} ({family.hash}): one assumption changed at a time; ranges, not standard errors"),

@@ -1,6 +1,6 @@
 """Plain tables for people: aligned, at most 100 columns, no control characters."""
 
-__all__ = ["columns", "safe"]
+__all__ = ["WIDTH", "columns", "number", "safe", "wrap"]
 
 
 def safe(text):
@@ -8,8 +8,13 @@ def safe(text):
     return "".join(c if c.isprintable() else f"\\x{ord(c):02x}" for c in str(text))
 
 
+WIDTH = 100
+
+
 def columns(titles, rows, left=1):
     """Lay out rows of text under titles; the first `left` columns are left-aligned, the others right-aligned.
+
+    What is wider than `WIDTH` goes on below, with the left columns again.
 
     Parameters
     ----------
@@ -26,11 +31,22 @@ def columns(titles, rows, left=1):
     """
     table = [titles, *[[safe(c) for c in row] for row in rows]]
     width = [max(len(row[i]) for row in table) for i in range(len(titles))]
-    lines = []
-    for row in table:
-        cells = [c.ljust(w) if i < left else c.rjust(w) for i, (c, w) in enumerate(zip(row, width))]
-        lines.append("  ".join(cells).rstrip())
-    return "\n".join(lines)
+    first, blocks = sum(w + 2 for w in width[:left]), [[]]
+    used = first
+    for i in range(left, len(titles)):
+        if used + width[i] > WIDTH and blocks[-1]:
+            blocks.append([])
+            used = first
+        blocks[-1].append(i)
+        used += width[i] + 2
+    parts = []
+    for block in blocks:
+        lines = []
+        for row in table:
+            cells = [row[i].ljust(width[i]) for i in range(left)] + [row[i].rjust(width[i]) for i in block]
+            lines.append("  ".join(cells).rstrip())
+        parts.append("\n".join(lines))
+    return "\n\n".join(parts)
 
 
 def number(x, digits=3):
@@ -42,7 +58,7 @@ def number(x, digits=3):
     return f"{x:.{digits}g}" if not 1e-3 <= abs(x) < 1e5 else f"{x:#.{digits}g}".rstrip(".")
 
 
-def wrap(text, width=100, indent="  "):
+def wrap(text, width=WIDTH, indent="  "):
     """Break a line at spaces so that it fits `width` columns."""
     import textwrap
 

@@ -234,6 +234,13 @@ class Scenario:
         """Whether no law of this scenario kicks anything."""
         return self.kicks == "none" and self.bh_kicks in ("same", "momentum", "none")
 
+    def kick_words(self):
+        """Return the kick laws in words, for people."""
+        if self.unkicked:
+            return "no natal kicks"
+        holes = {"momentum": "the same momentum", "same": "the same law"}
+        return f"kicks: neutron stars {self.kicks}, black holes {holes.get(self.bh_kicks, self.bh_kicks)}"
+
     def build_galaxy(self):
         """Return the Galaxy of this scenario, its changes included.
 

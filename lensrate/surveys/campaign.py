@@ -140,12 +140,12 @@ class Campaign:
         eff = self.efficiency
         eff.check_limit("campaign", self.u_0_limit)
         for f in self.fields:
-            eff.check_sources(f"field '{f.name}'", f.sources)
             if eff.per == "catalogued_object" and f.monitored_stars is None and f.star_density is None:
                 raise InputError(
                     f"field '{f.name}': the efficiency is one per catalogued object, so the number of catalogued "
                     "objects must be stated: monitored_stars or star_density_per_arcmin2"
                 )
+            eff.check_sources(f"field '{f.name}'", f.sources)
             if not hasattr(parse_rule(f.sources), "band") and "distance" in f.sources and f.monitored_stars is None:
                 raise InputError(f"field '{f.name}': sources at one distance have no number; state monitored_stars")
         if self.overlaps == "refuse":

@@ -28,7 +28,8 @@ def with_range(forecast, family, exact=False, jobs=1, executor=None):
     -------
     CampaignForecast
     """
-    rows, labels, skipped = [], [], 0
+    rows, labels, skipped, over = [], [], 0, {}
+    words = {axis.name: axis.label or axis.name for axis in family.axes}
     for case in family.cases(forecast.scenario):
         made = reweighed(forecast, case.scenario)
         if made is None and exact:
@@ -38,6 +39,8 @@ def with_range(forecast, family, exact=False, jobs=1, executor=None):
             continue
         rows.append(made.by_class())
         labels.append(case.label)
+        if not np.allclose(rows[-1], forecast.by_class(), rtol=1e-12, atol=0.0):
+            over.update((words[axis], None) for axis, _ in case.choices)
     table = np.array(rows)
     ranges = np.column_stack([table.min(axis=0), table.max(axis=0)])
     cases = tuple(f"{labels[i]} to {labels[j]}" for i, j in zip(table.argmin(axis=0), table.argmax(axis=0)))
@@ -48,7 +51,8 @@ def with_range(forecast, family, exact=False, jobs=1, executor=None):
             "ask for the exact range to have them"
         )
     return replace(
-        forecast, family=family.name, ranges=ranges, range_cases=cases, warnings=tuple(notes),
+        forecast, family=family.name, family_hash=family.hash, range_over=tuple(over), ranges=ranges,
+        range_cases=cases, warnings=tuple(notes),
         references=tuple(dict.fromkeys([*forecast.references, *family.references])),
     )  # fmt: skip
 

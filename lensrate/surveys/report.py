@@ -84,8 +84,13 @@ def headline(forecast):
 
     dark = [n for n in ("white_dwarf", "neutron_star", "black_hole") if n in events]
     parts = ", ".join(f"{said(n)} by {n.replace('_', ' ')}s" for n in dark)
-    among = "; in brackets the range over assumptions" if ranges is not None else ""
+    among = f"; in brackets the range over {_listed(forecast.range_over)}" if forecast.range_over else ""
     return f"{forecast.campaign.name}: {said('all')} events, {parts}{among}"
+
+
+def _listed(words):
+    """Words in a row, the last after an "and"."""
+    return " and ".join(filter(None, [", ".join(words[:-1]), *words[-1:]]))
 
 
 def _short(x):
@@ -135,15 +140,15 @@ def methods(forecast):
         if "kicked" in kicked
         else "neutron stars and black holes follow the stars of their birth component, without natal kicks"
     )
-    n = len(c.calendar.seasons)
+    n, days = len(c.calendar.seasons), c.calendar.exposure(c.efficiency.includes).sum()
     found = "every event is taken as found" if c.efficiency.name == "complete" else (
         f"the detection efficiency is one per {c.efficiency.per.replace('_', ' ')} against t_E and includes "
         f"{', '.join(c.efficiency.includes) or 'nothing else'}"
     )  # fmt: skip
     spread = (
-        f" The range is the least and most over the family of assumptions '{forecast.family}', each changed alone; it "
-        "is no standard deviation."
-        if forecast.ranges is not None
+        f" The range is the least and most over {_listed(forecast.range_over)} (family '{forecast.family}'), each "
+        "changed alone; it is no standard deviation."
+        if forecast.range_over
         else ""
     )
     scaled = (
@@ -152,16 +157,29 @@ def methods(forecast):
         if forecast.scaled_fields()
         else ""
     )
+    dust = {}
+    for f in forecast.fields:
+        dust.setdefault(f.dust_from, []).append(f.field.name)
+    said = {
+        "stated": "is stated for", "map": "is that of a map for",
+        "dust disc": "is that of a smooth disc of dust, which knows no clouds, for",
+    }  # fmt: skip
+    parts = [f"{words} {_fields(dust[key], forecast)}" for key, words in said.items() if key in dust]
+    extinction = f" Extinction {_listed(parts)}." if parts else ""
     return (
         f"Expected events of {c.name} were computed with lensrate {forecast.version} (scenario {s.name}, "
         f"{s.hash}; Galaxy set {s.galaxy}). For the centre of each of the {len(c.fields)} fields the event rate per "
         f"source and its distribution over t_E were integrated over lens and source distances and velocities, with "
         f"sources {', '.join(dict.fromkeys(f.sources for f in c.fields))} and u_0 < {c.u_0_limit:g}; {dark}. The "
-        f"stars' own rate carries the change over a field's area. Numbers of sources are {stars}; {found}; the "
-        f"exposure is {c.calendar.exposure(c.efficiency.includes).sum():.0f} d in {n} season{'s' if n > 1 else ''}. "
+        f"stars' own rate carries the change over a field's area.{extinction} Numbers of sources are {stars}; {found}; "
+        f"the exposure is {days:.0f} d in {n} season{'s' if n > 1 else ''}. "
         f"Intervals are the central 68 % of Poisson counts.{spread}{scaled} Binary lenses and sources, finite source "
         "size and blending beyond the stated efficiency are left out."
     )
+
+
+def _fields(names, forecast):
+    return "all fields" if len(names) == len(forecast.fields) else _listed(names[:8]) + " and others" * (len(names) > 8)
 
 
 def bibtex(references):

@@ -36,8 +36,9 @@ def reweighed(forecast, scenario):
     ]
     classes = rows[0].sightline.classes
     return replace(
-        forecast, scenario=scenario, classes=classes, fields=tuple(rows), family="", ranges=None, range_cases=(),
-        masses=None, warnings=campaign_warnings(forecast.campaign, rows, classes),
+        forecast, scenario=scenario, classes=classes, fields=tuple(rows), family="", family_hash="",
+        range_over=(), ranges=None, range_cases=(), masses=None,
+        warnings=campaign_warnings(forecast.campaign, rows, classes),
         references=tuple(dict.fromkeys(r for f in rows for r in f.sightline.references)),
     )  # fmt: skip
 

@@ -62,6 +62,15 @@ class FieldForecast:
     expected: np.ndarray
     sampling: np.ndarray
 
+    @property
+    def dust_from(self):
+        """Where the extinction comes from: "stated", "map", "dust disc"; "" where the source rule knows none."""
+        if self.field.extinction_map:
+            return "map"
+        if not self.sightline.sources["extinction"]:
+            return ""
+        return "stated" if self.sightline.scenario.extinction else "dust disc"
+
     def scaled(self):
         """Return events by class scaled to the observed number, share times observed; None where none is stated."""
         total = self.expected.sum()
@@ -80,8 +89,10 @@ class CampaignForecast:
     scenario : Scenario
     classes : list of str
     fields : tuple of FieldForecast
-    family : str
-        Name of the family of assumptions behind `ranges`, "" for none.
+    family, family_hash : str
+        Name and checksum of the family of assumptions behind `ranges`, "" for none.
+    range_over : tuple of str
+        Which assumptions `ranges` goes over, in words; those that need new integrals are left out unless asked for.
     ranges : ndarray, shape (classes + 1, 2)
         Least and most expected events over the family, the last row for all classes.
     range_cases : list of str
@@ -94,6 +105,8 @@ class CampaignForecast:
     classes: list
     fields: tuple
     family: str = ""
+    family_hash: str = ""
+    range_over: tuple = ()
     ranges: np.ndarray | None = None
     range_cases: tuple = ()
     warnings: tuple = ()
@@ -148,6 +161,8 @@ class CampaignForecast:
             "seed": self.seed,
             "fields": self.fields[0].sightline._fields(),
             "family": self.family or None,
+            "family_hash": self.family_hash or None,
+            "range_over": list(self.range_over),
             "warnings": list(self.warnings),
             "references": list(self.references),
         }
@@ -175,7 +190,8 @@ class CampaignForecast:
                 {
                     "name": f.field.name, "l_deg": f.field.l_deg, "b_deg": f.field.b_deg,
                     "area_deg2": float(f.field.area_deg2), "sources": f.field.sources,
-                    "extinction": f.sightline.sources["extinction"], "n_sources": f.sources, "counted": f.counted,
+                    "extinction": f.sightline.sources["extinction"], "extinction_from": f.dust_from,
+                    "n_sources": f.sources, "counted": f.counted,
                     "rate_factor": f.rate_factor,
                     "expected": dict(zip(self.classes, map(float, f.expected.sum(axis=1)))),
                     "by_season": {s: dict(zip(self.classes, map(float, e))) for s, e in by_season.items()},
@@ -190,6 +206,8 @@ class CampaignForecast:
             "header": self.header(),
             "fields": rows,
             "expected": expected,
+            "family": self.family or None,
+            "range_over": list(self.range_over),
             "scaled_fields": self.scaled_fields(),
             "mass_measured": {} if self.masses is None else self.masses.to_dict(),
             "mass_settings": None if self.masses is None else self.masses.settings(),
@@ -349,6 +367,15 @@ def campaign_warnings(survey, rows, classes):
                 f"{worst.outside[i]:.0%} of the {name.replace('_', ' ')} events of field {worst.field.name} have a t_E "
                 f"outside the efficiency curve ({low:g}-{high:g} d): not counted, since nothing is known of them"
             )
+    smooth = [f for f in rows if f.dust_from == "dust disc"]
+    if smooth:
+        used = [(f.field.name, a) for f in smooth[:6] for a in f.sightline.sources["extinction"].values()]
+        each = ", ".join(f"{name} {a:.2f}" for name, a in used)
+        out.append(
+            f"no extinction is stated for {len(smooth)} of {len(rows)} field{'s' * (len(rows) > 1)}: the "
+            f"smooth dust disc's is used ({each}{' and so on' if len(smooth) > 6 else ''} mag), which knows no clouds; "
+            "a measured one moves the number of sources"
+        )
     if any(f.field.extinction_map for f in rows):
         out.append("the extinction map enters source counts and the stars' rate; lens classes share its mean elsewhere")
     return tuple(out)

@@ -212,6 +212,21 @@ def test_the_range_holds_the_forecast_and_names_its_ends(kicked):
     assert kicked.fields[0].sampling[i] > 0
 
 
+def test_what_a_range_goes_over_and_where_dust_comes_from_is_said(kicked):
+    over = ("kicks of neutron stars", "kicks of black holes")
+    assert kicked.range_over == over and f"the range over {' and '.join(over)}" in report.headline(kicked)
+    table = plain()
+    smooth = {k: v for k, v in table["field"][0].items() if k != "extinction"}
+    table["field"].append({**smooth, "name": "B", "l": 4.0})
+    made = campaign(Campaign.from_dict(table), UNKICKED, family=Family.read("default").only(["kicks", "ifmr"]))
+    assert made.range_over == ("remnant masses",) and made.to_dict()["range_over"] == ["remnant masses"]
+    smooth = made.fields[1].sightline.sources["extinction"]["I"]
+    assert [f.dust_from for f in made.fields] == ["stated", "dust disc"]
+    assert any("1 of 2 fields" in w and f"B {smooth:.2f} mag" in w for w in made.warnings)
+    assert "is that of a smooth disc of dust, which knows no clouds, for B" in report.methods(made)
+    assert UNKICKED.kick_words() == "no natal kicks" and "black holes the same momentum" in Scenario().kick_words()
+
+
 def test_a_spread_of_a_campaign_is_its_forecasts():
     survey = Campaign.from_dict(plain(observed_events=30))
     result = campaign_spread(survey, Family.read("default"), UNKICKED, axes=["ifmr"])
