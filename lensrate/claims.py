@@ -1,10 +1,11 @@
-"""What a file claims about its own size and form, checked against the file before a reader believes it."""
+"""What a file claims of its size, and a run of the memory it needs, checked against what is there beforehand."""
 
 import re
+from pathlib import Path
 
 from .errors import InputError
 
-__all__ = ["check_claims", "check_fits", "check_nodes"]
+__all__ = ["available_memory", "check_claims", "check_fits", "check_memory", "check_nodes"]
 
 _PACKED = {b"\x1f\x8b": "gzip", b"BZh": "bzip2", b"\xfd7zXZ": "xz", b"PK\x03\x04": "zip", b"\x1f\x9d": "compress"}
 _BLOCK = 2880  # bytes of a FITS block
@@ -148,3 +149,43 @@ def check_nodes(value, what):
             raise InputError(f"{what}: its header holds too much, or is nested too deep")
         inner = node.values() if isinstance(node, dict) else node if isinstance(node, (list, tuple)) else ()
         stack += [(v, depth + 1) for v in inner]
+
+
+def available_memory():
+    """Return the bytes that a new run may take, of the machine or of the group it runs in; None where unknown."""
+    found = []
+    try:
+        rows = dict(line.split(":", 1) for line in Path("/proc/meminfo").read_text().splitlines())
+        found.append(int(rows["MemAvailable"].split()[0]) * 1024)
+    except (OSError, KeyError, ValueError, IndexError):
+        pass
+    try:
+        group = Path("/sys/fs/cgroup")
+        limit = int((group / "memory.max").read_text())
+        found.append(limit - int((group / "memory.current").read_text()))
+    except (OSError, ValueError):
+        pass  # no limit, or none that is told here
+    return min(found) if found else None
+
+
+def check_memory(what, need, way_out):
+    """Raise where a run would need more memory than there is.
+
+    Parameters
+    ----------
+    what : str
+        Named in the complaint.
+    need : float
+        Bytes.
+    way_out : str
+        What to do instead.
+
+    Raises
+    ------
+    InputError
+    """
+    there = available_memory()
+    if there is not None and need > there:
+        raise InputError(
+            f"{what}: about {need / 1e9:.2g} GB of memory are needed, {max(there, 0) / 1e9:.2g} GB are free; {way_out}"
+        )

@@ -4,6 +4,7 @@ import json
 import os
 import tempfile
 from contextlib import contextmanager
+from io import BytesIO, StringIO
 from pathlib import Path
 
 import numpy as np
@@ -11,7 +12,7 @@ import numpy as np
 from .claims import check_claims, check_nodes
 from .errors import DataFileError, InputError, did_you_mean
 
-__all__ = ["PICTURES", "TABLES", "check_target", "dump_json", "read_rows", "whole_file", "write_table"]
+__all__ = ["PICTURES", "TABLES", "check_target", "dump_json", "read_rows", "whole_bytes", "whole_file", "write_table"]
 
 TABLES = (".ecsv", ".csv", ".fits", ".vot", ".json")
 PICTURES = (".png", ".pdf", ".svg")
@@ -102,6 +103,27 @@ def whole_file(path):
             temporary.unlink(missing_ok=True)
 
 
+@contextmanager
+def whole_bytes(path):
+    """Give a buffer, and write what it holds to `path` as `whole_file` does.
+
+    For writers of other libraries, which leave files open or raise errors of their own where the disk is full.
+
+    Yields
+    ------
+    io.BytesIO
+
+    Raises
+    ------
+    DataFileError
+        As `whole_file`.
+    """
+    buffer = BytesIO()
+    yield buffer
+    with whole_file(path) as temporary:
+        temporary.write_bytes(buffer.getbuffer())
+
+
 def dump_json(value, indent=2):
     """Return JSON text; numpy numbers become plain ones and anything not finite becomes null."""
     return json.dumps(_plain(value), indent=indent, allow_nan=False)
@@ -166,7 +188,10 @@ def write_table(table, path, overwrite=False, payload=None):
                 # the header loses line breaks: what has some stands in the JSON string alone
                 out.meta.update({k: v for k, v in meta.items() if "\\n" not in json.dumps(v)})
                 out.meta["MADE"] = json.dumps(meta, ensure_ascii=True)
-            _write_astropy(out, temporary, ending)
+            buffer = BytesIO() if ending == ".fits" else StringIO()
+            _write_astropy(out, buffer, ending)
+            content = buffer.getvalue()
+            temporary.write_bytes(content if ending == ".fits" else content.encode())
     return path
 
 

@@ -46,6 +46,7 @@ def synthesize(name, save, tracers, bundles, iterations, seed, jobs, checkpoint,
     """
     from dataclasses import replace
 
+    from ..claims import check_memory
     from ..galaxy.potential import Potential
     from ..io import check_target
     from ..parallel import cluster
@@ -62,9 +63,11 @@ def synthesize(name, save, tracers, bundles, iterations, seed, jobs, checkpoint,
     settings = Settings(tracers=tracers, bundles=bundles, iterations=iterations, seed=seed)
     folder = Path(checkpoint) if checkpoint else target.with_name(target.name + ".checkpoint")
     announce(quiet)
+    components = stellar_components(galaxy)
+    need = estimate(components, galaxy, potential, settings, jobs)
+    if address is None:
+        check_memory("synthesize", need.memory, "take fewer --jobs or --tracers")
     if not quiet:
-        components = stellar_components(galaxy)
-        need = estimate(components, galaxy, potential, settings, jobs)
         text = (
             f"lensrate: {len(components)} components x {len(settings.kick_edges)} kick bins x {tracers} orbits: about "
             f"{duration(need.seconds)} and {size(need.memory)} of memory on {jobs} thread{'s' * (jobs > 1)}"

@@ -5,6 +5,7 @@ import os
 import astropy.units as u
 import numpy as np
 
+from ..claims import check_memory
 from ..errors import InputError
 from ..galaxy.frames import icrs_from_galactic, sky_angle
 from ..kernels import catalogue as kernels
@@ -24,6 +25,7 @@ _CHUNK = 65536  # events that share one stream of random numbers; part of what a
 _YEAR = (62502.0, 62867.0)  # MJD, the year 2030
 _NUMBER = 1000
 _MOST = 50_000_000
+_BYTES = 1000  # of memory for an event: its columns, and their copies in a table that is written
 _DRAWN = ("D_L", "D_S", "mu_rel_l", "mu_rel_b", "t_E", "theta_E", "pi_E", "mu_L_l", "mu_L_b", "mu_S_l", "mu_S_b")
 _SKY = ("mu_rel_N", "mu_rel_E", "pi_EN", "pi_EE", "t_E_geo", "pi_EN_geo", "pi_EE_geo")
 
@@ -127,6 +129,7 @@ def _seed(seed):
 def _number(number):
     if isinstance(number, bool) or not isinstance(number, (int, np.integer)) or not 1 <= number <= _MOST:
         raise InputError(f"number: {number!r} given, must be a whole number from 1 to {_MOST}")
+    check_memory(f"number: {number}", _BYTES * int(number), "draw fewer, or several catalogues with seeds of their own")
     return int(number)
 
 

@@ -14,6 +14,7 @@ __all__ = ["Integrals", "Lens", "assemble", "disc_share", "integrate", "optical_
 _ROUGH = 3e-3  # difference of the quadratures that is worth a word
 _FOREIGN = 20.0  # kpc, sources beyond are hardly the Galaxy's own
 _EMPTY = 1e-2  # sources per square arcminute
+_BEYOND = 0.01  # share of the sources with a limit past the end of the luminosity function, worth a word
 _FAST = 1e-3  # share of remnants kicked beyond the last bin that is worth a word
 
 
@@ -105,8 +106,10 @@ def assemble(model, integrals, u_0, limits, where):
     tau, gamma = masses.mass * integrals.tau, u_0 * masses.root * integrals.gamma  # (C, E)
     error = u_0 * np.sqrt(np.sum((masses.root * integrals.error) ** 2, axis=1))
     pdf, pdf_e = u_0 * pdf, u_0 * pdf_e
-    if not (all(np.all(np.isfinite(x)) for x in (tau, gamma, pdf)) and np.all(gamma >= 0)):
-        raise ConvergenceError(f"sightline {where}: a rate is negative or not finite; check the scenario's numbers")
+    if not (all(np.all(np.isfinite(x)) for x in (tau, gamma, pdf)) and np.all(gamma >= 0) and np.all(tau >= 0)):
+        raise ConvergenceError(
+            f"sightline {where}: a rate or an optical depth is negative or not finite; check the scenario's numbers"
+        )
     total = gamma.sum()
     quadrature = abs(np.sum(pdf) * integrals.grid.h / total - 1.0) if total > 0 else 0.0
     rows = _rows(t, pdf, tau.sum(axis=1), gamma.sum(axis=1), limits, u_0)
@@ -228,6 +231,12 @@ def line_notes(ready, quadrature):
         )
     if ready.sources.fixed_distance and far > _FOREIGN:
         notes.append(f"sources at {far:g} kpc move as the Galaxy's own stars there, not as another galaxy's")
+    faintest, share = ready.sources.beyond_faintest(ready.D_S, ready.src[0].sum(axis=0))
+    if share > _BEYOND:
+        notes.append(
+            f"'{ready.sources.rule.text}' is fainter than the last star of the luminosity function (absolute magnitude "
+            f"{faintest:.1f}) where {share:.0%} of the sources are: stars beyond it are not counted"
+        )
     density = ready.per_arcmin2() if ready.sources.counts_stars else 1.0
     if density < _EMPTY:
         notes.append(f"only {density:.1e} sources per square arcminute pass '{ready.sources.rule.text}' here")

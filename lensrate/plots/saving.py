@@ -9,7 +9,7 @@ from matplotlib.figure import Figure
 from matplotlib.mathtext import MathTextParser
 from matplotlib.text import Text
 
-from ..io import PICTURES, check_target, whole_file
+from ..io import PICTURES, check_target, whole_bytes
 
 __all__ = ["blank", "write_figure"]
 
@@ -49,10 +49,11 @@ def write_figure(figure, path, meta, overwrite=False):
     made = json.dumps(meta, ensure_ascii=True, default=str)
     _tame(figure)
     settings = {"svg.hashsalt": "lensrate", "pdf.fonttype": 42}
-    with warnings.catch_warnings(), whole_file(path) as temporary, matplotlib.rc_context(settings):
+    with warnings.catch_warnings(), whole_bytes(path) as buffer, matplotlib.rc_context(settings):
         # names in any alphabet: what the font lacks is drawn as a box
         warnings.filterwarnings("ignore", message="Glyph .* missing from")
-        figure.savefig(temporary, dpi=200, metadata={_KEYS[path.suffix.lower()]: made})
+        ending = path.suffix.lower()
+        figure.savefig(buffer, format=ending[1:], dpi=200, metadata={_KEYS[ending]: made})
     return path
 
 

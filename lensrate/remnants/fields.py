@@ -12,7 +12,7 @@ import numpy as np
 
 from ..claims import check_fits
 from ..errors import DataFileError, InputError, one_of
-from ..io import check_target, whole_file
+from ..io import check_target, whole_bytes
 from ..kernels import fields as kernels
 from ..units import KMS_PER_MASYR_KPC, strip
 
@@ -283,8 +283,8 @@ class RemnantField:
             hdus.append(fits.CompImageHDU(flat, name=name, compression_type="RICE_1", tile_shape=tile))
         hdus.append(fits.ImageHDU(np.stack([self.ends[k] for k in _ENDS]), name="ENDS"))
         hdus.append(fits.ImageHDU(self.heights, name="HEIGHTS"))
-        with whole_file(path) as temporary:
-            fits.HDUList(hdus).writeto(temporary, overwrite=True, checksum=True)
+        with whole_bytes(path) as buffer:
+            fits.HDUList(hdus).writeto(buffer, checksum=True)
         return path
 
     @classmethod

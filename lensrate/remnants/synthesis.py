@@ -8,9 +8,8 @@ import hashlib
 import json
 import shutil
 import threading
-import zipfile
-import zlib
 from dataclasses import dataclass
+from io import BytesIO
 from pathlib import Path
 
 import astropy.units as u
@@ -19,7 +18,7 @@ import numpy as np
 from .._version import __version__
 from ..errors import DataFileError, InputError
 from ..galaxy.density import Uniform
-from ..io import whole_file
+from ..io import whole_bytes
 from ..kernels import fields as kernels
 from ..parallel import run_map
 from .births import KICK_EDGES, analytic, draw, kicked, self_held, window
@@ -32,6 +31,7 @@ from .orbits import states_energies, step
 
 __all__ = ["HEIGHTS", "REGIONS", "Settings", "forget", "stellar_components", "synthesize"]
 
+_CHECK = hashlib.sha256().digest_size  # bytes before a finished piece
 _RING = 1.5  # kpc on either side of the Sun's radius, where heights are counted
 HEIGHTS = np.concatenate([[0.0], np.geomspace(0.01, 50.0, 61), [np.inf]])
 
@@ -380,15 +380,23 @@ class _Pieces:
         if path is None or not path.is_file():
             return None
         try:
-            # opened here, since numpy leaves a damaged file open
-            with open(path, "rb") as handle, np.load(handle) as kept:
-                return {k: kept[k] for k in kept.files}
-        except (OSError, ValueError, EOFError, KeyError, RuntimeError, zipfile.BadZipFile, zlib.error):
+            content = path.read_bytes()
+        except OSError:
             return None
+        body = content[_CHECK:]
+        if hashlib.sha256(body).digest() != content[:_CHECK]:
+            return None
+        with np.load(BytesIO(body)) as kept:
+            return {k: kept[k] for k in kept.files}
 
     def keep(self, key, arrays):
         """Write a piece, whole or not at all; return its arrays."""
         if self.folder is not None:
-            with whole_file(self.folder / f"{key}.npz") as temporary:
-                np.savez_compressed(temporary, **arrays)
+            # another run to the same target may have ended and tidied up
+            self.folder.mkdir(parents=True, exist_ok=True)
+            body = BytesIO()
+            np.savez_compressed(body, **arrays)
+            with whole_bytes(self.folder / f"{key}.npz") as buffer:
+                buffer.write(hashlib.sha256(body.getbuffer()).digest())
+                buffer.write(body.getbuffer())
         return arrays

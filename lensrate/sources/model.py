@@ -84,6 +84,27 @@ class LineSources:
                 out[i] = 1.0
         return out
 
+    def beyond_faintest(self, D, weight):
+        """Return the last absolute magnitude counted, and the share of sources where the limit is fainter still.
+
+        Parameters
+        ----------
+        D, weight : ndarray, shape (n,)
+            Distances [kpc] and how many sources are there.
+
+        Returns
+        -------
+        faintest, share : float
+            NaN and 0 where the rule has no limit.
+        """
+        lit = [s.faintest for s in self.shining if s is not None]
+        total = weight.sum()
+        if not isinstance(self.rule, (LimitRule, PeakRule)) or not lit or not total > 0:
+            return float("nan"), 0.0
+        with np.errstate(divide="ignore"):
+            absolute = self.rule.magnitude - 5.0 * np.log10(D) - _MODULUS_1_KPC - self.dust(D)
+        return max(lit), float(weight[absolute > max(lit)].sum() / total)
+
     def _clump_window(self):
         """Distances [kpc] between which a clump giant is within half a magnitude of one at the centre."""
         return self.R0 * 10 ** (-_CLUMP_WINDOW / 5), self.R0 * 10 ** (_CLUMP_WINDOW / 5)

@@ -1,18 +1,20 @@
 """Files of a map: the one that grows while it is computed, and the FITS images it ends as."""
 
+import errno
 import hashlib
 import json
 import os
+import zlib
 from contextlib import suppress
 from pathlib import Path
 
 from ..errors import DataFileError, InputError
-from ..io import check_target, dump_json, whole_file
+from ..io import check_target, dump_json, whole_bytes
 from .pixels import Pixel
 
 __all__ = ["PartFile", "digest", "hdu_list", "write_fits"]
 
-_MARK = "lensrate sky map in the making, 1"
+_MARK = "lensrate sky map in the making, 2"
 
 
 def digest(made):
@@ -21,7 +23,7 @@ def digest(made):
 
 
 class PartFile:
-    """Finished pixels, a line of JSON each, added as they are done; without a path nothing is kept.
+    """Finished pixels, a line of JSON and its checksum each, added as they are done; without a path nothing is kept.
 
     Parameters
     ----------
@@ -73,7 +75,10 @@ class PartFile:
             )
         while (stop := text.find(b"\n", end) + 1) > 0:
             try:
-                number, values = json.loads(text[end:stop])
+                body, _, check = text[end : stop - 1].rpartition(b"\t")
+                if int(check, 16) != zlib.crc32(body):
+                    break
+                number, values = json.loads(body)
                 self.found[int(number)] = Pixel.from_list(values)
             except (ValueError, TypeError):
                 break
@@ -83,9 +88,11 @@ class PartFile:
     def add(self, number, pixel):
         """Keep a pixel; numbers are written so that they are read back bit for bit."""
         if self._handle is not None:
-            line = (json.dumps([number, pixel.to_list()]) + "\n").encode()
+            body = json.dumps([number, pixel.to_list()]).encode()
+            line = body + f"\t{zlib.crc32(body):08x}\n".encode()
             try:
-                os.write(self._handle, line)
+                if os.write(self._handle, line) < len(line):
+                    raise OSError(errno.ENOSPC, os.strerror(errno.ENOSPC))
             except OSError as error:
                 raise DataFileError(
                     f"checkpoint: '{self.path}' cannot be written ({error.strerror}); finished pixels are kept in it"
@@ -177,6 +184,6 @@ def write_fits(result, path, overwrite=False):
     """
     path = check_target(path, (".fits",), overwrite)
     hdus = hdu_list(result)
-    with whole_file(path) as temporary:
-        hdus.writeto(temporary, overwrite=True)
+    with whole_bytes(path) as buffer:
+        hdus.writeto(buffer)
     return path
