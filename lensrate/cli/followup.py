@@ -73,7 +73,8 @@ def report_plan(plan):
         changed = f" [{e.changed}]" if e.changed else ""
         lines.append(wrap(f"{e.name}: {e.reason}{changed}"))
     aim = plan.target.replace("_", " ") if plan.target else "likeliest class"
-    lines += ["", f"taken within {plan.budget:g} h, most bits per hour first (greedy, each event once):"]
+    how = "most bits per hour first (greedy, each event once, then costlier options)"
+    lines += ["", f"taken within {plan.budget:g} h, {how}:"]
     titles = ["no.", "event", "measurement", "what", "hours", "bits", f"P({aim} > 0.95)", "false", "some > 0.95"]
     rows = []
     for e in plan.chosen:

@@ -185,8 +185,8 @@ def _rows(result, extra):
         return rows
     if hasattr(extra, "edges"):
         return [{**rows[0], "kick": extra.to_dict()}]
-    plans = extra.by_name()
-    return [{**row, "follow_up": plans[row["event"]].to_dict()} if row["event"] in plans else row for row in rows]
+    plans = extra.to_dict()
+    return [{**row, "follow_up": plans[row["event"]]} if row["event"] in plans else row for row in rows]
 
 
 def _event(values, errors, lens_limit, place, frame, t_0par):

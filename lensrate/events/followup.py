@@ -69,9 +69,9 @@ def follow_up(
     Notes
     -----
     The expected posterior probability equals the present one and is no score: options are ranked by mutual information
-    between class and outcome, per hour. The list is greedy: the event and option of most bits per hour first, then the
-    next that fits what is left, each event once. An event caught running at a date is one of many that could have been,
-    with a chance that goes with the time it runs: rates are weighted by t_E.
+    between class and outcome, per hour. The list is greedy, see `greedy`. An
+    event caught running at a date is one of many that could have been, with a chance that goes with the time it runs:
+    rates are weighted by t_E.
     """
     from ..parallel import run_map
 
@@ -117,8 +117,7 @@ def follow_up(
     rows = sorted(made.values(), key=lambda e: -(e.best.per_hour if e.best else 0.0))
     chosen = greedy(rows, hours)
     order = {e.name: k + 1 for k, e in enumerate(chosen)}
-    best = {e.name: e for e in chosen}
-    rows = [replace(best.get(e.name, e), order=order.get(e.name)) for e in rows]
+    rows = [replace(e, order=order.get(e.name)) for e in rows]
     gone = sorted(set(before) - {e.name for e in events})
     if gone:
         notes.append(f"in the last run but not in this one: {', '.join(gone)}")
@@ -144,7 +143,8 @@ def follow_up(
 def greedy(rows, hours):
     """Choose events under a budget: most bits per hour first, then whatever still fits; each event once.
 
-    Options that gain less than 0.005 bits are left out.
+    What time is left goes into costlier options of chosen events, most further bits per further hour first. Options
+    that gain less than 0.005 bits are left out.
 
     Parameters
     ----------
@@ -155,17 +155,33 @@ def greedy(rows, hours):
     Returns
     -------
     list of EventPlan
-        In order, the option to take first among their options.
+        Most bits per hour first, the option to take first among their options.
     """
-    every = [(o.per_hour, e, o) for e in rows for o in e.options if o.hours > 0 and o.per_hour * o.hours > _LEAST]
+    every = [(o.per_hour, e, o) for e in rows for o in e.options if o.hours > 0 and _bits(o) > _LEAST]
     every.sort(key=lambda x: -x[0])
-    left, taken, out = hours, set(), []
+    left, taken = hours, {}
     for _, e, o in every:
         if e.name not in taken and o.hours <= left * (1 + 1e-12):
-            taken.add(e.name)
+            taken[e.name] = e, o
             left -= o.hours
-            out.append(replace(e, options=(o, *(x for x in e.options if x is not o))))
-    return out
+    while True:
+        better = [
+            ((_bits(o) - _bits(now)) / (o.hours - now.hours), e, o)
+            for e, now in taken.values()
+            for o in e.options
+            if now.hours < o.hours <= (now.hours + left) * (1 + 1e-12) and _bits(o) > _bits(now) + _LEAST
+        ]
+        if not better:
+            break
+        _, e, o = max(better, key=lambda x: x[0])
+        left -= o.hours - taken[e.name][1].hours
+        taken[e.name] = e, o
+    chosen = sorted(taken.values(), key=lambda x: -x[1].per_hour)
+    return [replace(e, options=(o, *(x for x in e.options if x is not o))) for e, o in chosen]
+
+
+def _bits(option):
+    return option.per_hour * option.hours
 
 
 def _event(event, line, survey, tools, day, target, outlier, root, number, before):

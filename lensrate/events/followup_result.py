@@ -159,9 +159,10 @@ class FollowUpPlan:
     references: tuple = ()
     version: str = field(default=__version__)
 
-    def by_name(self):
-        """Return the EventPlans by name of event."""
-        return {e.name: e for e in self.events}
+    def to_dict(self):
+        """Return plain numbers by name of event; `taken` names the option in the list under the budget."""
+        taken = {e.name: e.best.name for e in self.chosen}
+        return {e.name: {**e.to_dict(), "taken": taken.get(e.name)} for e in self.events}
 
     @property
     def hours(self):

@@ -301,7 +301,9 @@ def densities(event, scenario, t_E, pi_E, n=(61, 57)):
     return t, pi, [c.name for c in line.classes], rate.reshape(-1, *n)
 
 
-def class_probabilities(l, b, measured, scenario="default", *, outlier=OUTLIER, frame="heliocentric", t_0par=None):
+def class_probabilities(
+    l, b, measured, scenario="default", *, outlier=OUTLIER, frame="heliocentric", t_0par=None, jobs=1
+):  # fmt: skip
     """Return class probabilities of many events of one sightline, given as arrays.
 
     Parameters
@@ -315,6 +317,8 @@ def class_probabilities(l, b, measured, scenario="default", *, outlier=OUTLIER, 
         As in `odds`; 0 for mock events whose errors are what they say.
     frame, t_0par : str, float
         Of all events.
+    jobs : int
+        Threads.
 
     Returns
     -------
@@ -340,13 +344,16 @@ def class_probabilities(l, b, measured, scenario="default", *, outlier=OUTLIER, 
     place = float(u.Quantity(l).to_value(u.deg)), float(u.Quantity(b).to_value(u.deg))
     line = event_rates(*place, scenario)
     out = np.full((n.pop(), len(line.classes)), np.nan)
-    for i in range(len(out)):
+
+    def one(i):
         found = {k: Measure(float(v[i]), float(e[i]), float(e[i])) for k, (v, e) in arrays.items() if np.isfinite(v[i])}
         event = Observed(f"event {i + 1}", *place, frame, t_0par, (Solution("", found),))
         try:
             out[i] = _mixed(*_bulk(event, line), outlier)[0]
         except ConvergenceError:
-            continue
+            pass
+
+    run_map(one, range(len(out)), jobs)
     return [c.name for c in line.classes], out
 
 

@@ -229,6 +229,9 @@ def test_greedy_keeps_to_the_budget():
     assert [(e.name, e.best.name) for e in chosen] == [("a", "x"), ("c", "x")]
     assert [(e.name, e.best.name) for e in greedy(rows, 3.5)] == [("b", "x")]
     assert [e.name for e in greedy(rows, 100.0)] == ["a", "b", "c"]
+    rows = [_row("a", ("quick", 1.0, 0.3), ("long", 5.0, 0.6)), _row("b", ("x", 2.0, 0.2))]
+    assert [(e.name, e.best.name) for e in greedy(rows, 6.9)] == [("a", "quick"), ("b", "x")]
+    assert [(e.name, e.best.name) for e in greedy(rows, 7.0)] == [("a", "long"), ("b", "x")]
 
 
 def test_a_night_and_what_changed_since():
