@@ -69,9 +69,8 @@ def follow_up(
     Notes
     -----
     The expected posterior probability equals the present one and is no score: options are ranked by mutual information
-    between class and outcome, per hour. The list is greedy, see `greedy`. An
-    event caught running at a date is one of many that could have been, with a chance that goes with the time it runs:
-    rates are weighted by t_E.
+    between class and outcome, per hour. The list is greedy, see `greedy`. An event caught running at a date is one of
+    many that could have been, with a chance that goes with the time it runs: rates are weighted by t_E.
     """
     from ..parallel import run_map
 
