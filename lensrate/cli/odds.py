@@ -179,8 +179,11 @@ def _kick(read, scenario, outlier):
 
 
 def _rows(result, extra):
-    """What --json prints: the odds of each event, with its follow-up or kick where asked for."""
+    """What --json prints: the odds of each event, with its follow-up or kick where asked for; how it was made first."""
     rows = result.to_dict()
+    if rows:
+        # once is enough for a list of one run
+        rows[0]["made"] = result.meta()
     if extra is None:
         return rows
     if hasattr(extra, "edges"):

@@ -90,6 +90,7 @@ SAMPLE = "event,l,b,t_E,t_E_err\nA,1.0,-3.0,20,2\nB,1.1,-3.1,35,3\nC,0.9,-2.9,12
 SLOW = [pytest.mark.slow]
 TWO = ["skymap", "--l", "0", "1", "--b", "-4", "-3", "--step", "1"]
 COMPARE = ["compare", "sample.csv", "--simulations", "9"]
+CONSTRAIN = ["constrain", "sample.csv", "--campaign", "c.toml", "-p", "neutron_stars", "--points", "9"]
 CAMPAIGN = """name = "C \u202e (invented)"
 [[season]]
 start = "2031-02-10"
@@ -120,6 +121,11 @@ monitored_stars = 1.4e6
         pytest.param(["spread", "1", "-3.9", "--axis", "imf"], "--plot", "x.png", marks=SLOW),
         pytest.param(COMPARE, "--save", "x.ecsv"),
         pytest.param(COMPARE, "--plot", "x.pdf", marks=SLOW),
+        pytest.param(["odds", "sample.csv"], "--save", "x.ecsv"),
+        pytest.param(["odds", "sample.csv"], "--plot", "x.png", marks=SLOW),
+        pytest.param(CONSTRAIN, "--save", "x.ecsv"),
+        pytest.param(CONSTRAIN, "--plot", "x.pdf", marks=SLOW),
+        pytest.param(CONSTRAIN, "--samples", "x.fits", marks=SLOW),
         pytest.param(["campaign", "c.toml", "--family", "none"], "--save", "x.fits"),
         pytest.param(["campaign", "c.toml", "--family", "none", "--events", "100"], "--plot", "x.svg", marks=SLOW),
     ],
