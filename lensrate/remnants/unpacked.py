@@ -5,6 +5,7 @@ A copy is named after the sha256 of its field file, written whole, and never nee
 
 import json
 import os
+import zlib
 from pathlib import Path
 
 import numpy as np
@@ -13,9 +14,9 @@ from ..errors import DataFileError
 from ..io import whole_file
 from .fields import Grid, RemnantField
 
-__all__ = ["read_unpacked"]
+__all__ = ["damaged_copies", "read_unpacked"]
 
-_MARK = b"lensrate unpacked field 1\n"
+_MARK = b"lensrate unpacked field 2\n"
 _LARGE = ("ln_rho", "four", "two", "batches", "kick_edges", "heights", "height_edges")
 _KEEP = 3  # copies, of 130 MB each
 _ALIGN = 64
@@ -58,12 +59,41 @@ def read_unpacked(path, sha256):
     return field
 
 
+def damaged_copies():
+    """Return the copies whose content is not what was written, and remove them: the next run makes them again.
+
+    Looking costs more than mapping, so a forecast does not; ``lensrate verify`` does.
+
+    Returns
+    -------
+    list of str
+        Their paths.
+    """
+    out = []
+    for copy in sorted(_folder().glob("*.bin")):
+        field = _mapped(copy)
+        with open(copy, "rb") as f:
+            if f.readline() != _MARK:
+                continue  # of another version
+            try:
+                sums = json.loads(f.readline())["sums"]
+            except (ValueError, KeyError, TypeError):
+                sums = None
+        whole = field is not None and sums is not None
+        if not (whole and all(zlib.crc32(getattr(field, k).data.cast("B")) == v for k, v in sums.items())):
+            out.append(str(copy))
+            copy.unlink(missing_ok=True)
+    return out
+
+
 def _write(field, copy):
     arrays = {name: np.ascontiguousarray(getattr(field, name)) for name in _LARGE}
     ends = {name: a.tolist() for name, a in field.ends.items()}
     small = {k: getattr(field, k) for k in ("components", "bar_angle", "mismatch", "provenance")}
     layout = {name: [a.dtype.str, a.shape] for name, a in arrays.items()}
-    head = json.dumps({**small, "grid": vars(field.grid), "ends": ends, "layout": layout}).encode() + b"\n"
+    sums = {name: zlib.crc32(a.data.cast("B")) for name, a in arrays.items()}
+    said = {**small, "sums": sums, "grid": vars(field.grid), "ends": ends, "layout": layout}
+    head = json.dumps(said).encode() + b"\n"
     with whole_file(copy) as temporary, open(temporary, "wb") as f:
         f.write(_MARK + head)
         for a in arrays.values():
@@ -79,7 +109,7 @@ def _mapped(copy):
             if f.readline() != _MARK:
                 return None
             made = json.loads(f.readline())
-            start, layout = f.tell(), made.pop("layout")
+            start, layout, _ = f.tell(), made.pop("layout"), made.pop("sums")
         # private pages: what is written to stays in this process, and kernels see plain arrays
         whole = np.memmap(copy, dtype=np.uint8, mode="c")
         arrays = {}

@@ -11,6 +11,7 @@ from importlib import import_module
 from .._version import __version__
 from ..datafiles import checksums, data_folder, find, parse_toml
 from ..errors import LensrateError, one_of
+from ..remnants.unpacked import damaged_copies
 
 __all__ = ["GROUPS", "Check", "checks", "rows_of", "to_table"]
 
@@ -222,16 +223,17 @@ def _judge(row, computed):
 
 
 def _files():
-    """Shipped files whose content is not the one that was shipped."""
+    """Shipped files, and unpacked copies of them, whose content is not the one that was shipped."""
     damaged = []
     for name, digest in checksums().items():
         path = data_folder() / name
         if not path.is_file() or hashlib.sha256(path.read_bytes()).hexdigest() != digest:
             damaged.append(name)
+    damaged += damaged_copies()
     return Check(
         id="files_damaged",
         group="files",
-        quantity="shipped data files missing or changed",
+        quantity="data files missing or changed",
         published=0.0,
         error=None,
         tolerance=0.0,

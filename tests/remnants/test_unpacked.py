@@ -8,7 +8,7 @@ import pytest
 
 from lensrate.errors import DataFileError
 from lensrate.remnants.fields import Grid, RemnantField
-from lensrate.remnants.unpacked import read_unpacked
+from lensrate.remnants.unpacked import damaged_copies, read_unpacked
 
 GRID = Grid(n_R=8, n_z=4, n_phi=4)
 
@@ -93,3 +93,25 @@ def test_few_copies_are_kept(stored):
     for i in range(6):
         read_unpacked(path, f"{i:064d}")
     assert [p.stem[-1] for p in sorted(folder.iterdir())] == ["3", "4", "5"]
+
+
+def test_damaged_copies_are_found_and_made_again(stored):
+    path, sha256, folder = stored
+    plain = read_unpacked(path, sha256)
+    copy = folder / f"{sha256}.bin"
+    assert damaged_copies() == []
+    whole = copy.read_bytes()
+    start = whole.index(b"\n", whole.index(b"\n") + 1) + 1
+    rng = np.random.default_rng(4)
+    missed = 0
+    for place in rng.integers(start, len(whole), 60):
+        flipped = bytearray(whole)
+        flipped[place] ^= 1 << int(rng.integers(8))
+        copy.write_bytes(flipped)
+        found = damaged_copies()
+        # bits between two arrays belong to neither
+        missed += not found
+        assert found == [str(copy)] or copy.read_bytes() == bytes(flipped)
+    assert missed < 6
+    copy.unlink(missing_ok=True)
+    assert_same(read_unpacked(path, sha256), plain)
