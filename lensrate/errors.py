@@ -45,6 +45,19 @@ def did_you_mean(word, known):
     return f", did you mean '{original}'?"
 
 
+def kind_of(what, value, kinds, words):
+    """Return `value` if it is an instance of `kinds`, else raise: `words` say what is wanted and how it is had.
+
+    Raises
+    ------
+    InputError
+        With the kind that was given.
+    """
+    if isinstance(value, kinds):
+        return value
+    raise InputError(f"{what}: {type(value).__name__} given, {words} is needed")
+
+
 def one_of(what, word, known):
     """Return `word` if it is one of `known`, else raise with the nearest known word.
 

@@ -67,6 +67,11 @@ def strip(name, value, unit, *, low=None, high=None, shape=None):
         No unit, the wrong kind of unit, not finite, out of range, or of another shape.
     """
     unit = u.Unit(unit)
+    if isinstance(value, (list, tuple)) and value and all(isinstance(v, u.Quantity) for v in value):
+        try:
+            value = u.Quantity(value)
+        except u.UnitConversionError:
+            raise InputError(f"{name}: its elements have units that do not go together") from None
     if not isinstance(value, u.Quantity):
         raise InputError(f"{name}: {value!r} has no unit; give an astropy Quantity, for example {name} = 1 * u.{unit}")
     try:

@@ -5,12 +5,12 @@ from dataclasses import dataclass, replace
 import astropy.units as u
 import numpy as np
 
-from ..errors import InputError
+from ..errors import InputError, kind_of
 from ..galaxy.frames import icrs_from_galactic
 from ..scenario import resolve
 from ..surveys.facilities import Facility, LightCurve, facility_names
 from ..surveys.fisher import mass_errors, measured, measured_against_hours
-from ..surveys.yields import poisson_68
+from ..surveys.yields import CampaignForecast, poisson_68
 from . import light
 from .mock import mock_events
 
@@ -154,6 +154,7 @@ def mass_forecast(forecast, facilities="marram", limit=0.2, number=2000, seed=1,
     Fisher matrix of the light curve and the follow-up together, see `surveys.fisher`. Events are those that the
     campaign finds; a facility follows them longest timescale first, which an observer can know.
     """
+    kind_of("forecast", forecast, CampaignForecast, "a CampaignForecast, from `campaign`,")
     if not (np.isfinite(limit) and limit > 0):
         raise InputError(f"limit: {limit:g} given, must be above 0")
     if isinstance(facilities, str):

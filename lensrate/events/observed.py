@@ -4,13 +4,14 @@ Numbers are floats in internal units (d, mas, mas/yr, kpc, deg, MJD). Errors are
 is turned from one frame into another here, since errors would not survive it: who computes turns the model instead.
 """
 
+import os
 from dataclasses import dataclass, field
 from pathlib import Path
 
 import astropy.units as u
 import numpy as np
 
-from ..errors import InputError, did_you_mean, one_of
+from ..errors import InputError, did_you_mean, kind_of, one_of
 from ..galaxy.frames import galactic_from_icrs
 from ..io import read_rows
 from .posterior import Draws, header_of, is_posterior, read_draws, reference_epoch
@@ -214,6 +215,7 @@ class Sample:
         """
         if frame is not None:
             one_of("frame", frame, FRAMES)
+        kind_of("sample", path, (str, os.PathLike), "a file")
         table = read_rows(path, "sample")
         where = f"sample '{path}'"
         if is_posterior(table):

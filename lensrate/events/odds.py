@@ -15,6 +15,7 @@ from ..lensing.points import Axes, EventRates, Points
 from ..parallel import run_map
 from ..scenario import Scenario, resolve
 from ..scenario.numerics import Numerics
+from ..units import strip
 from .lens_limit import LensLimit
 from .likelihood import likelihood
 from .odds_result import EventOdds, Odds, SolutionOdds
@@ -341,7 +342,7 @@ def class_probabilities(
     n = {a.size for pair in arrays.values() for a in pair}
     if len(n) != 1 or "t_E" not in arrays:
         raise InputError("measured: t_E is needed, and values and errors of equal length")
-    place = float(u.Quantity(l).to_value(u.deg)), float(u.Quantity(b).to_value(u.deg))
+    place = strip("l", l, u.deg, shape=()), strip("b", b, u.deg, low=-90.0, high=90.0, shape=())
     line = event_rates(*place, scenario)
     out = np.full((n.pop(), len(line.classes)), np.nan)
 

@@ -2,13 +2,14 @@
 
 from dataclasses import dataclass, replace
 
-from ..errors import InputError
+from ..errors import InputError, kind_of
 from ..scenario import Scenario
 from ..surveys.campaign import Campaign
 from ..surveys.reweighted import reweighted
 from ..surveys.yields import campaign as forecast_of
 from .compare import compare, differences
 from .fold import assign, fold_campaign, fold_groups, grouped
+from .observed import Sample
 
 __all__ = ["Versus", "compare_sample"]
 
@@ -92,6 +93,7 @@ def compare_sample(
         As `compare`; both a campaign and an efficiency; an efficiency of other sources or another u_0 limit than the
         scenario's; absolute counts without a campaign.
     """
+    kind_of("sample", sample, Sample, "a Sample, from `Sample.read`,")
     if forecast is not None:
         survey = forecast.campaign
     elif survey is not None and not isinstance(survey, Campaign):

@@ -4,7 +4,8 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from ..errors import InputError, one_of
+from ..errors import InputError, kind_of, one_of
+from ..events.observed import Sample
 from ..scenario import Scenario
 from ..surveys.campaign import Campaign
 from ..surveys.reweighted import reweighted
@@ -67,6 +68,7 @@ def constrain(sample, parameters=("kick_scale",), survey=None, scenario=None, *,
         Unknown parameter, impossible prior, no events in the fields, nothing that anchors counts that are asked for.
     """
     one_of("method", method, METHODS)
+    kind_of("sample", sample, Sample, "a Sample, from `Sample.read`,")
     if not len(sample):
         raise InputError(f"sample '{sample.name}': no events")
     if forecast is None and survey is None:

@@ -8,7 +8,7 @@ from ..galaxy.frames import galactic_from_icrs
 from ..parallel import run_map
 from ..scenario import Scenario, resolve
 from ..sources.bands import BANDS
-from ..units import check_range
+from ..units import check_range, strip
 from .sightline import sightline
 
 __all__ = ["directions_of", "forecasts", "gather", "sightlines"]
@@ -95,7 +95,7 @@ def forecasts(l, b, scenario="default", *, extinction=None, t_E_range=None, jobs
     """
     if not isinstance(scenario, Scenario):
         scenario = Scenario.read(scenario)
-    l, b = np.atleast_1d(u.Quantity(l)), np.atleast_1d(u.Quantity(b))
+    l, b = (np.atleast_1d(strip(name, value, u.deg)) * u.deg for name, value in (("l", l), ("b", b)))
     check_range("b", b.to_value(u.deg), "deg", -90.0, 90.0)
     extinction = extinction if extinction is not None else [{}] * l.size
     if not (l.size == b.size == len(extinction)):

@@ -4,7 +4,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from ..errors import ConvergenceError, InputError, one_of
+from ..errors import ConvergenceError, InputError, kind_of, one_of
 from ..kernels import draws
 from ..kernels import sampling as kernels
 from ..parallel import run_map
@@ -264,7 +264,7 @@ class Sampler:
         if isinstance(tilt, str):
             one_of("tilt", tilt, ("equal",))
             return np.divide(self.rate, self.class_rate, out=out, where=self.class_rate > 0)
-        for name, factor in dict(tilt).items():
+        for name, factor in kind_of("tilt", tilt, dict, "a table of factors by class, or 'equal',").items():
             one_of("tilt", name, classes)
             if isinstance(factor, bool) or not np.isscalar(factor) or not 0 < factor < np.inf:
                 raise InputError(f"tilt: {factor!r} given for {name}, must be a number above 0")

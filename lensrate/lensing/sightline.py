@@ -8,7 +8,7 @@ import astropy.units as u
 import numpy as np
 
 from .._version import __version__
-from ..errors import InputError, one_of
+from ..errors import InputError, kind_of, one_of
 from ..remnants.fields import GRID_ERROR, Grid
 from ..scenario import Scenario, resolve
 from ..units import check_range, strip
@@ -381,7 +381,11 @@ def sightline(l, b=None, scenario="default", *, sources=None, extinction=None, k
     if not isinstance(scenario, Scenario):
         scenario = Scenario.read(scenario)
     if extinction is not None:
-        extinction = {k: a.to_value(u.mag) if isinstance(a, u.Quantity) else a for k, a in extinction.items()}
+        kind_of("extinction", extinction, dict, "a table of bands, for example {'I': 1.25},")
+        extinction = {
+            k: strip(f"extinction.{k}", a, u.mag, shape=()) if isinstance(a, u.Quantity) else a
+            for k, a in extinction.items()
+        }
     changes = {"sources": sources, "extinction": extinction, "kicks": kicks}
     changes = {k: v for k, v in changes.items() if v is not None}
     if changes:

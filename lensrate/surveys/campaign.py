@@ -2,6 +2,7 @@
 
 import hashlib
 import json
+import os
 from dataclasses import dataclass
 from functools import cached_property
 from pathlib import Path
@@ -9,7 +10,7 @@ from pathlib import Path
 import numpy as np
 
 from ..datafiles import data_folder, find, names, parse_toml
-from ..errors import InputError, one_of
+from ..errors import InputError, kind_of, one_of
 from ..remnants.tables import check_keys
 from ..sources.rules import parse_rule
 from .calendar import Calendar, Season
@@ -77,6 +78,7 @@ class Campaign:
         InputError
             Not TOML, an unknown key (with the nearest known one), or a statement that is missing or impossible.
         """
+        kind_of("campaign", path, (str, os.PathLike), "a file or a shipped name")
         if str(path) in names("campaigns"):
             for sibling in data_folder().joinpath("campaigns").iterdir():
                 find(f"campaigns/{sibling.name}")

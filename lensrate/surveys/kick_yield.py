@@ -6,13 +6,14 @@ import astropy.units as u
 import numpy as np
 
 from .._version import __version__
-from ..errors import InputError, one_of
+from ..errors import InputError, kind_of, one_of
 from ..galaxy.density import stellar_mass
 from ..lensing import distributions
 from ..remnants.classes import MassSpectrum
 from ..remnants.kicks import parse_kick
 from ..units import DAYS_PER_YEAR
 from .stars import field_curve
+from .yields import CampaignForecast
 
 __all__ = ["KickYield", "kick_yield"]
 
@@ -131,6 +132,7 @@ def kick_yield(forecast, lens="neutron_star"):
     all remnants in it, over the number born; summed with a law's shares it is that law's forecast.
     """
     one_of("lens", lens, ("neutron_star", "black_hole"))
+    kind_of("forecast", forecast, CampaignForecast, "a CampaignForecast, from `campaign`,")
     first = forecast.fields[0].sightline._model
     if first.kicked is None:
         raise InputError("kick_yield: the forecast is unkicked; choose a kick law and fields in the scenario")

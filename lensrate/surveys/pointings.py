@@ -132,7 +132,7 @@ def _add(table, name, values, description):
 
 def _positive(name, given, unit, n, grid):
     """One number or, for a list of fields, n of them, above zero."""
-    value = np.asarray(strip(name, u.Quantity(given), unit))
+    value = np.asarray(strip(name, given, unit))
     if value.ndim and (grid is not None or value.shape != (n,)):
         few = "one number is needed on a grid" if grid is not None else f"one or {n} are needed"
         raise InputError(f"{name}: {value.size} numbers given, {few}")

@@ -177,7 +177,7 @@ def seconds(scenario, n, efficiency=False, precise=False, jobs=1):
 
 
 def _pixels(l, b, step):
-    l, b = (np.atleast_1d(strip(n, q, u.deg)) for n, q in (("l", u.Quantity(l)), ("b", u.Quantity(b))))
+    l, b = (np.atleast_1d(strip(n, q, u.deg)) for n, q in (("l", l), ("b", b)))
     if step is None:
         check_range("b", b, "deg", -90.0, 90.0)
         if l.shape != b.shape or l.ndim != 1 or l.size == 0:

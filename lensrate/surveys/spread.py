@@ -143,6 +143,8 @@ def spread(forecast, family="default", base="default", *, combinations=False, ax
         Unknown family, axis or key; an alternative that makes no scenario; too many combinations; a forecast that
         gives no or different numbers.
     """
+    if not callable(forecast):
+        raise InputError(f"forecast: {forecast!r} given, something to call with a list of scenarios is needed")
     base = base if isinstance(base, Scenario) else Scenario.read(base)
     whole = family if isinstance(family, Family) else Family.read(family)
     whole = whole if not axes else whole.only(axes)
