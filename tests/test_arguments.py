@@ -52,3 +52,18 @@ def test_arguments_that_are_none(function, args, options, words):
 def test_a_list_of_quantities_is_one():
     with pytest.raises(InputError, match="b: 95 deg given"):
         lensrate.skymap([1 * u.deg, 60 * u.arcmin], [-3 * u.deg, 95 * u.deg])
+
+
+@pytest.mark.parametrize(
+    "size, words",
+    [
+        ({"height_deg": 1.0}, "height_deg is one of a rectangle and needs width_deg"),
+        ({"radius_deg": 1.0, "angle_deg": 3.0}, "angle_deg is one of a rectangle"),
+        ({"width_deg": 1.0}, "width_deg needs height_deg"),
+    ],
+)
+def test_half_a_rectangle(size, words):
+    from lensrate.surveys.sky import parse_shape
+
+    with pytest.raises(InputError, match=words):
+        parse_shape("field 'A'", size, 0.0, -3.0)

@@ -68,7 +68,7 @@ _DEFAULT_EVENTS = 20000
 @click.option("--proposal", metavar="FOLDER", help="Write table, LaTeX, methods, BibTeX and page into a new folder.")
 @click.option("--jobs", type=click.IntRange(1, 256), default=1, show_default=True, help="Threads over fields.")
 @dask
-@click.option("--save", metavar="FILE", help="Write a table: .ecsv .csv .fits .vot .json.")
+@click.option("--save", metavar="FILE", help="Write a table: .ecsv .csv (# begins comments) .fits .vot .json.")
 @click.option("--json", "as_json", is_flag=True, help="Print JSON instead of a table.")
 @click.option("--overwrite", is_flag=True, help="Replace existing files.")
 @click.option("--quiet", "-q", is_flag=True, help="No messages on stderr.")
@@ -102,7 +102,7 @@ def campaign(
     if mass_plot:
         check_target(mass_plot, PICTURES, overwrite, "--mass-plot")
     folder = _new_folder(proposal, overwrite) if proposal else None
-    _no_idle_options(save, facilities, plot or proposal)
+    _no_idle_options(save, facilities, plot or proposal, proposal, kick_class, family_name)
     from ..surveys.campaign import Campaign
 
     survey = Campaign.read(file)
@@ -154,21 +154,29 @@ def campaign(
             click.echo(wrap(f"note: {warning}"), err=True)
 
 
-def _no_idle_options(save, facilities, pages):
+def _no_idle_options(save, facilities, pages, proposal, kick_class, family_name):
     """Refuse options that were typed and would do nothing."""
-    context = click.get_current_context()
+    yields = "which --kick-yield takes for its own table or picture"
     idle = {
-        "by": (not save, "--save"),
-        "mass_error": (not facilities, "--facilities"),
-        "n_mass": (not facilities, "--facilities"),
-        "mass_plot": (not facilities, "--facilities"),
-        "n_events": (not pages, "--plot or --proposal"),
-        "seed": (not (pages or facilities), "--plot, --proposal or --facilities"),
+        "by": (bool(kick_class) or not save, f"it goes with --save{kick_class and f', {yields}' or ''}"),
+        "exact": (family_name == "none", "it goes with a --family"),
+        "mass_error": (not facilities, "it goes with --facilities"),
+        "n_mass": (not facilities, "it goes with --facilities"),
+        "mass_plot": (not facilities, "it goes with --facilities"),
+        "n_events": (not pages, "it goes with --plot or --proposal"),
+        "seed": (not (pages or facilities), "it goes with --plot, --proposal or --facilities"),
     }
+    if kick_class and not proposal:
+        idle["n_events"] = (True, f"it goes with --plot, {yields}")
+        idle["seed"] = (not facilities, f"it goes with --plot, {yields}")
     names = {"n_events": "events", "mass_error": "mass-error", "n_mass": "mass-events", "mass_plot": "mass-plot"}
-    for option, (useless, partner) in idle.items():
-        if useless and context.get_parameter_source(option).name == "COMMANDLINE":
-            raise click.UsageError(f"--{names.get(option, option)} has no effect here: it goes with {partner}")
+    for option, (useless, why) in idle.items():
+        if useless and _typed(option):
+            raise click.UsageError(f"--{names.get(option, option)} has no effect here: {why}")
+
+
+def _typed(option):
+    return click.get_current_context().get_parameter_source(option).name == "COMMANDLINE"
 
 
 def _new_folder(name, overwrite):
@@ -191,12 +199,13 @@ def _write_proposal(folder, result, n_events, seed):
     from .. import plots
     from ..io import whole_file, write_table
     from ..surveys import report as words
+    from ..surveys.bibliography import bibtex
 
     folder.mkdir(exist_ok=True)
     texts = {
         "table.tex": words.latex(result),
         "methods.txt": words.headline(result) + "\n\n" + words.methods(result),
-        "references.bib": words.bibtex(result.references),
+        "references.bib": bibtex(result.references, result.meta()),
     }
     for name, text in texts.items():
         with whole_file(folder / name) as temporary:
@@ -319,7 +328,10 @@ def _masses(made):
     rows = []
     for lens, first in made.facilities[0].counts.items():
         each = [f.counts[lens] for f in made.facilities]
-        cells = [f"{number(row['measured'])} +- {number(row['standard_error'], 2)}" for row in each]
+        cells = [
+            f"{number(row['measured'])} +- {number(row['standard_error'], 2)}" if row["measured"] > 0 else "none drawn"
+            for row in each
+        ]
         rows.append([LABELS.get(lens, lens.replace("_", " ")), number(first["events"]), *cells])
     for h in HOURS:
         cells = [number(f.follow.at(h).get("black_hole", 0.0)) for f in made.facilities]

@@ -39,7 +39,7 @@ _NAMES = {
               show_default=True, help="Rows of the table that --save writes.")
 @click.option("--plot", metavar="FILE", help="Draw one page: .png .pdf .svg.")
 @click.option("--jobs", type=click.IntRange(1, 256), default=1, show_default=True, help="Threads over fields.")
-@click.option("--save", metavar="FILE", help="Write a table: .ecsv .csv .fits .vot .json.")
+@click.option("--save", metavar="FILE", help="Write a table: .ecsv .csv (# begins comments) .fits .vot .json.")
 @click.option("--json", "as_json", is_flag=True, help="Print JSON instead of a table.")
 @click.option("--overwrite", is_flag=True, help="Replace existing files.")
 @click.option("--quiet", "-q", is_flag=True, help="No messages on stderr.")

@@ -43,7 +43,7 @@ def events(
 
     \b
     Examples:
-      lensrate events 1.0 -3.9 --seed 7
+      lensrate events 1.0 -3.9 --seed 31
       lensrate events 1.0 -2.9 --number 100000 --save mock.fits --plot mock.png
       lensrate events 1.0 -3.9 --equal-classes --number 5000 --save rare.ecsv
       lensrate events --campaign marram --seed 1 --save season.ecsv --detected

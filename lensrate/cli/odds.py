@@ -35,7 +35,10 @@ def _typed(command):
 @click.option("--lens-limit", "lens_limit", type=float, metavar="MAG", help="The lens is fainter than this in I.")
 @click.option("--frame", type=click.Choice(["heliocentric", "geocentric"]), help="Of t_E, pi_E, mu_rel if unsaid.")
 @click.option("--t-0par", "t_0par", type=float, metavar="MJD", help="Reference epoch of geocentric events.")
-@click.option("--outlier", type=float, default=0.01, show_default=True, help="Share of fits wrong in all but t_E.")
+@click.option(
+    "--outlier", type=float, default=0.01, show_default=True,
+    help="Share of fits wrong in all but t_E: the floor under what a fit rules out.",
+)
 @click.option(
     "--tolerance", type=float, default=0.05, show_default=True, help="Events so near [deg] share a sightline."
 )
@@ -58,8 +61,16 @@ def odds(
 ):  # fmt: skip
     """Lens-class odds of each event of SAMPLE, or of one event typed with --t-E ... --at L B.
 
-    SAMPLE is a table (columns t_E, t_E_err, l, b and whatever else is measured) or a file of posterior samples. A
-    typed number without an error gets 5 % (t_E) or 10 %.
+    SAMPLE is a table or a file of posterior samples. A typed number without an error gets 5 % (t_E) or 10 %.
+
+    \b
+    Columns of a table (units of the file, else d, mas, mas/yr, kpc, deg, mag, MJD; empty: not measured):
+      event, or name or id; l, b or ra, dec; t_E
+      pi_E, or pi_EN and pi_EE (with pi_E_corr); theta_E; mu_rel; mu_S_N, mu_S_E; D_S
+      each of these with _err, or _lo and _hi
+      frame, t_0par (of geocentric numbers); solution, delta_chi2 (rows of one event)
+      I_lens_limit; samples (a file beside the table)
+      for --rank also I_S, source_fraction, u_0, t_0
 
     \b
     Examples:
@@ -93,6 +104,7 @@ def odds(
         check_target(plot, PICTURES, overwrite, "--plot")
     _check_plan(rank, hours, as_of, since, kick)
     scenario = read_scenario(**choices)
+    _no_idle_options(typed, rank, kick, scenario, as_json)
     from ..events.observed import Sample
     from ..events.odds import odds as compute
 
@@ -144,6 +156,28 @@ def odds(
         from ..errors import ConvergenceError
 
         raise ConvergenceError(f"no event could be judged: {result.failed[0] if result.failed else 'none given'}")
+
+
+def _no_idle_options(typed, rank, kick, scenario, as_json):
+    """Refuse options that were typed and would do nothing."""
+    context = click.get_current_context()
+    alone = "it goes with a SAMPLE"
+    idle = {
+        "icrs": (not typed, "it goes with --at; a SAMPLE says its own place, as l, b or ra, dec"),
+        "skip_bad": (typed, alone),
+        "tolerance": (typed, alone),
+        "u_0_limit": (
+            not scenario.sources.startswith("peak"),
+            "all classes share it, so odds do not depend on it but with a limit at peak",
+        ),
+        "family": (bool(rank or kick) and not as_json, "ranges are shown without --rank and --kick, or in --json"),
+    }
+    for name in ("facilities", "campaign", "seed"):
+        idle[name] = (not rank, "it goes with --rank")
+    words = {"family": "spread"}
+    for option, (useless, why) in idle.items():
+        if useless and context.get_parameter_source(option).name == "COMMANDLINE":
+            raise click.UsageError(f"--{words.get(option, option).replace('_', '-')} has no effect here: {why}")
 
 
 def _check_plan(rank, hours, as_of, since, kick):
@@ -245,6 +279,7 @@ def _head(result):
     return [
         f"lensrate {result.version}{source}   scenario {safe(result.scenario.name)} ({result.scenario.hash})",
         wrap(result.header()),
+        wrap(result.scenario.kick_words()),
     ]
 
 
@@ -293,7 +328,7 @@ def report_one(result):
         row += [_p(e.floors[f][k]) for f in (0.1, 10.0)]
         row += [_span(e.quantiles("mass_msun", c), 2), _span(e.quantiles("distance_kpc", c), 2)]
         if ranged:
-            row.insert(2, f"{_p(e.range[0][k])}-{_p(e.range[1][k])}")
+            row.insert(2, f"{_p(e.range[0][k])} to {_p(e.range[1][k])}")
         rows.append(row)
     lines = [
         f"all classes: M = {_span(e.quantiles('mass_msun'))} Msun, D_L = {_span(e.quantiles('distance_kpc'))} kpc, "
@@ -301,6 +336,11 @@ def report_one(result):
         f"({e.frame})",
         e.says(),
     ]
+    if e.outlier_weight > 0 or result.outlier > 0:
+        lines.append(
+            f"floor: in a share {result.outlier:g} of fits all but t_E is taken as wrong, so that no slip rules a "
+            "class out; P with a tenth and with ten times that share stands beside it"
+        )
     if e.outlier_weight > 0:
         lines.append(f"the fit is wrong with probability {e.outlier_weight:.4f}")
     if e.effective_samples is not None:

@@ -37,12 +37,13 @@ def output(command):
     """Add the options that say where results go."""
     for option in reversed(
         [
-            click.option("--save", metavar="FILE", help="Write a table: .ecsv .csv .fits .vot .json."),
+            click.option("--save", metavar="FILE",
+                         help="Write a table: .ecsv .csv (# begins comments) .fits .vot .json."),
             click.option("--json", "as_json", is_flag=True, help="Print JSON instead of a table."),
             click.option("--overwrite", is_flag=True, help="Replace existing files."),
             click.option("--quiet", "-q", is_flag=True, help="No messages on stderr."),
         ]
-    ):
+    ):  # fmt: skip
         command = option(command)
     return command
 

@@ -312,5 +312,10 @@ def report_ranking(ranking):
     who, per = made["lens"].replace("_", " "), {"field": "of a field", "star": "per source star"}[made["per"]]
     time = "" if made["visit_h"] is None else f", a visit every {made['cadence_d']:g} d"
     hour = " and telescope hour" if timed and made["per"] == "field" else ""
+    few = len(ranking) < made["asked"]
+    why = "the map holds no more fields that lie inside it, apart from each other, with such events"
+    if named:
+        why = "the list holds no more with such events"
     first = f"pointings by events of {who} {per}{hour}{time}"
-    return "\n".join([first, columns(titles, rows, left=2 if named else 1), "", wrap(made["formula"])])
+    note = [wrap(f"{len(ranking)} of {made['asked']} asked for: {why}")] * few
+    return "\n".join([first, columns(titles, rows, left=2 if named else 1), *note, "", wrap(made["formula"])])

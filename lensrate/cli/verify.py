@@ -11,7 +11,7 @@ from .text import columns, number, wrap
 @click.command(cls=Command)
 @click.option("--group", metavar="NAME", help="One group only: lensing, galaxy, ..., surveys, events, files.")
 @click.option("--json", "as_json", is_flag=True, help="Print JSON.")
-@click.option("--save", metavar="FILE", help="Write a table: .ecsv .csv .fits .vot .json.")
+@click.option("--save", metavar="FILE", help="Write a table: .ecsv .csv (# begins comments) .fits .vot .json.")
 @click.option("--overwrite", is_flag=True, help="Replace an existing file.")
 @click.option("--quiet", "-q", is_flag=True, help="No messages on stderr.")
 def verify(group, as_json, save, overwrite, quiet):

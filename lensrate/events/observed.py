@@ -43,6 +43,7 @@ PLAIN = {
     "u_0": ("", (-10.0, 10.0), "impact parameter, for efficiencies and light curves"),
     "t_0": ("d", (-1e6, 1e7), "time of closest approach, MJD or JD, for light curves"),
 }
+LABELS = ("event", "name", "id", "ID", "Name")  # columns that may name an event, the first of them
 _WORDS = ("event", "solution", "frame", "samples")
 _PLACES = {"l": (-720.0, 720.0), "b": (-90.0, 90.0), "ra": (-720.0, 720.0), "dec": (-90.0, 90.0)}
 _SHOWN = 5
@@ -192,10 +193,10 @@ class Sample:
         Parameters
         ----------
         path : str or Path
-            ECSV, CSV, FITS or VOTable. Columns in the file's units, else days, mas, mas/yr, kpc, degrees, MJD: event;
-            l, b or ra, dec; any of `MEASURED` with _err, or _lo and _hi (the lower and upper error); solution,
-            delta_chi2; frame, t_0par; samples (a file beside the table); and the numbers of `PLAIN`. Empty cells
-            mean not measured. Header keys frame, t_0par, invented.
+            ECSV, CSV, FITS or VOTable. Columns in the file's units, else days, mas, mas/yr, kpc, degrees, MJD: event
+            (or name, id); l, b or ra, dec; any of `MEASURED` with _err, or _lo and _hi (the lower and upper error);
+            solution, delta_chi2; frame, t_0par; samples (a file beside the table); and the numbers of `PLAIN`. Empty
+            cells mean not measured. Header keys frame, t_0par, invented.
         frame : str, optional
             Where neither column nor header says it; unsaid means heliocentric, with a note.
         t_0par : float, optional
@@ -314,14 +315,17 @@ def _frame_of_header(head, frame, t_0par, where):
     epoch = said_epoch(head, t_0par, where)
     if chosen == "geocentric":
         if epoch is None:
-            raise InputError(f"{where}: geocentric, but no reference epoch; give t_0par [MJD] in its header")
+            raise InputError(
+                f"{where}: geocentric, but no reference epoch; give t_0par [MJD] in its header, or --t-0par"
+            )
         epoch = reference_epoch(epoch, where)
     return chosen, epoch if chosen == "geocentric" else None, notes
 
 
 def check_columns(table, where):
     """Raise unless every column is known and the needed ones are there; return how the place is given."""
-    known = [*_WORDS, *_PLACES, *PLAIN, "t_0par"]
+    label = next((c for c in LABELS if c in table.colnames), "event")
+    known = [*_WORDS, label, *_PLACES, *PLAIN, "t_0par"]
     for name in MEASURED:
         known += [name, f"{name}_err", f"{name}_lo", f"{name}_hi"]
     strangers = []

@@ -79,7 +79,7 @@ def header_of(table):
 
 def is_posterior(table):
     """Return whether a table holds the samples of one fit rather than a row per event."""
-    places = {"l", "b", "ra", "dec", "event"} & set(table.colnames)
+    places = {"l", "b", "ra", "dec", "event", "name", "id"} & set(table.colnames)
     return not places and ("prior" in header_of(table) or "t_E_err" not in table.colnames)
 
 

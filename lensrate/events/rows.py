@@ -6,7 +6,19 @@ import numpy as np
 from ..errors import InputError, one_of
 from ..galaxy.frames import galactic_from_icrs
 from ..io import read_rows
-from .observed import _PLACES, _POSITIVE, FRAMES, MEASURED, PLAIN, Measure, Observed, Problems, Solution, check_columns
+from .observed import (
+    _PLACES,
+    _POSITIVE,
+    FRAMES,
+    LABELS,
+    MEASURED,
+    PLAIN,
+    Measure,
+    Observed,
+    Problems,
+    Solution,
+    check_columns,
+)
 from .posterior import header_of, read_draws, reference_epoch
 
 __all__ = ["read_events", "said_epoch"]
@@ -23,7 +35,8 @@ def read_events(table, frame, t_0par, skip_bad, where, beside):
     lon, lat = (_numbers(table, c, "deg", _PLACES[c], problems, needed=True) for c in place)
     measured = {name: _measure(table, name, problems) for name in MEASURED}
     plain = {name: _numbers(table, name, unit, span, problems) for name, (unit, span, _) in PLAIN.items()}
-    names, solutions, files = (_texts(table, c) for c in ("event", "solution", "samples"))
+    label = next((c for c in LABELS if c in table.colnames), "event")
+    names, solutions, files = (_texts(table, c) for c in (label, "solution", "samples"))
     frames, epochs = _frames(table, head, frame, t_0par, where, problems, notes)
     for one, other in (("pi_EN", "pi_EE"), ("mu_S_N", "mu_S_E")):
         odd = np.isfinite(measured[one][0]) != np.isfinite(measured[other][0])
@@ -222,7 +235,7 @@ def _frames(table, head, frame, t_0par, where, problems, notes):
         if name == "geocentric":
             given = own[i] if np.isfinite(own[i]) else general
             if given is None:
-                problems.add(i + 1, "t_0par", "geocentric, but no reference epoch [MJD]")
+                problems.add(i + 1, "t_0par", "geocentric, but no reference epoch [MJD]; add this column, or --t-0par")
             else:
                 try:
                     epoch = reference_epoch(given, where)

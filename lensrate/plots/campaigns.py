@@ -1,5 +1,7 @@
 """Pictures of a campaign: its fields, what it is expected to find, how that depends on kick speed."""
 
+from textwrap import fill
+
 import numpy as np
 
 from ..io import PICTURES, check_target
@@ -54,7 +56,7 @@ def _page(forecast, n, seed):
     s = forecast.scenario
     figure.suptitle(
         f"{forecast.campaign.name}: {forecast.by_class()[-1]:.3g} events expected\n"
-        f"scenario {s.name} ({s.hash}), kicks {s.kicks}; u$_0$ < {forecast.campaign.u_0_limit:g}; found events, "
+        f"scenario {s.name} ({s.hash}), {s.kick_words()}\nu$_0$ < {forecast.campaign.u_0_limit:g}; found events, "
         "luminous lenses included",
         fontsize=10,
     )
@@ -123,9 +125,9 @@ def yields(forecast, ax=None):
     ax.set_xlim(-0.6, len(shown) - 0.4)
     ax.set_xticks(range(len(shown)), [_label(forecast.classes[i]).replace(" ", "\n") for i in shown], fontsize=7)
     ax.set_ylabel("expected events")
-    words = ["line: 68 % of counts"]
-    words += ["bar: range over assumptions"] if forecast.ranges is not None else []
-    text = "; ".join(words)
+    text = "line: 68 % of counts"
+    if forecast.range_over:
+        text = fill(f"{text}; bar: range over {', '.join(forecast.range_over)}", 66)
     if scaled is not None:
         text += f"\ndiamond: scaled to observed, {', '.join(forecast.scaled_fields()[:6])} only"
     ax.set_title(text, fontsize=8)
@@ -172,14 +174,14 @@ def kick_yield(curve, ax=None):
     ax = _axes(ax, (6.4, 4.2))
     edges, y = curve.edges, 1e9 * curve.per_born[1:]
     left = max(edges[0], 3.0)
-    ax.stairs(y, np.maximum(edges, left), color="black", lw=1.8, label="yield")
+    ax.stairs(y, np.maximum(edges, left), color="black", lw=1.8, label="yield, with its sampling error")
     e = 1e9 * curve.sampling[1:]
     centre = np.sqrt(np.maximum(edges[:-1], left) * edges[1:])
     ax.errorbar(centre, y, e, fmt="none", ecolor="black", elinewidth=1)
     ax.set_xscale("log")
     ax.set_xlim(left, edges[-1])
     ax.set_ylim(0, 1.15 * max(y.max(), 1e9 * curve.per_born[0]))
-    ax.axhline(1e9 * curve.per_born[0], color="0.5", lw=0.8, ls=(0, (2, 2)))
+    ax.axhline(1e9 * curve.per_born[0], color="0.5", lw=1.0, ls=(0, (2, 2)), label="yield of unkicked ones")
     ax.set_xlabel(r"kick speed  [km s$^{-1}$]")
     label = curve.lens.replace("_", " ")
     ax.set_ylabel(rf"expected events per $10^9$ {label}s born so")
@@ -190,11 +192,10 @@ def kick_yield(curve, ax=None):
         twin.plot(v, v * parse_kick(name).pdf(v), color=colour, ls=dash, lw=1.3, label=text)
     twin.set_ylim(0, None)
     twin.set_ylabel("share of births per ln(speed)")
-    twin.legend(fontsize=7, frameon=False, loc="center left")
+    handles = [*ax.get_legend_handles_labels()[0], *twin.get_legend_handles_labels()[0]]
+    ax.legend(handles=handles, fontsize=7, frameon=False, loc="upper center", bbox_to_anchor=(0.5, -0.16), ncols=3)
     made = curve.made
-    ax.set_title(
-        f"{made['campaign']}; scenario {made['scenario']} ({made['scenario_hash']})\ndashed: unkicked", fontsize=8
-    )
+    ax.set_title(f"{made['campaign']}; scenario {made['scenario']} ({made['scenario_hash']})", fontsize=8)
     return ax
 
 

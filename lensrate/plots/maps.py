@@ -68,10 +68,11 @@ def skymap(result, ax=None, quantity="rate_all", overlay=(), **style):
         image = result.grid.image(values * factor)
         settings = {"origin": "lower", "extent": extent, "norm": norm, "cmap": _MAP, "interpolation": "nearest"}
         drawn = ax.imshow(image, **{**settings, **style})
-        _contours(ax, result, image, norm)
+        lines = _contours(ax, result, image, norm)
         # a dark pixel is not a small value
         ax.set_facecolor("0.75")
     else:
+        lines = None
         l = _near(result.l.value, 0.5 * (extent[0] + extent[1]))
         settings = {"c": values * factor, "norm": norm, "cmap": _MAP, "s": 60, "edgecolors": "0.3", "linewidths": 0.6}
         drawn = ax.scatter(l, result.b.value, **{**settings, **style})
@@ -102,6 +103,9 @@ def skymap(result, ax=None, quantity="rate_all", overlay=(), **style):
             bar.formatter = matplotlib.ticker.FuncFormatter(lambda x, _: f"{x:g}")
         bar.minorlocator = matplotlib.ticker.NullLocator()
         bar.update_ticks()
+    if lines is not None:
+        # what a line stands for is marked on the bar
+        bar.add_lines(lines, erase=False)
     return ax
 
 
@@ -173,14 +177,15 @@ def _size(extent):
 
 
 def _contours(ax, result, image, norm):
-    """A few lines of equal value, which survive a copy in black and white."""
+    """A few lines of equal value, which survive a copy in black and white; None where there are none."""
     if min(image.shape) < 4 or not np.isfinite(image).all():
-        return
+        return None
     low, high = norm.vmin, norm.vmax
     levels = np.geomspace(low, high, 7)[1:-1] if isinstance(norm, LogNorm) else np.linspace(low, high, 7)[1:-1]
-    if high > low:
-        l, b = result.grid.axes()
-        ax.contour(l[::-1], b, image, levels=levels, colors="white", linewidths=0.6, alpha=0.6)
+    if not high > low:
+        return None
+    l, b = result.grid.axes()
+    return ax.contour(l[::-1], b, image, levels=levels, colors="white", linewidths=0.6, alpha=0.6)
 
 
 def _draw_overlay(ax, overlay, extent):
@@ -214,16 +219,24 @@ def overview_maps(result, overlay=()):
         wanted[-1] = "rate_per_deg2_black_hole"
     wanted = [w for w in wanted if w in known]
     extent = _extent(result, overlay)
-    wide, high = _size(extent)
-    columns = 3 if high > 0.7 * wide else 2
+    # panels as high as the map in them is, so that nothing stays empty
+    middle = np.radians(0.5 * (extent[2] + extent[3]))
+    ratio = (extent[3] - extent[2]) / ((extent[0] - extent[1]) * max(np.cos(middle), 0.2))
+    columns = 3 if ratio > 0.6 else 2
     rows = -(-len(wanted) // columns)
-    figure = blank(0.72 * wide * columns, 0.72 * high * rows + 0.5)
+    wide = 4.0 if columns == 3 else 5.6
+    high = min((wide - 1.25) * ratio, 9.0)
+    figure = blank(min(wide, high / ratio + 1.25) * columns, (high + 0.5) * rows + 0.75)
     axes = figure.subplots(rows, columns, squeeze=False)
-    for ax, name in zip(axes.flat, wanted):
+    for i, (ax, name) in enumerate(zip(axes.flat, wanted)):
         skymap(result, ax, name, overlay)
+        if i % columns:
+            ax.set_ylabel("")
+        if i + columns < len(wanted):
+            ax.set_xlabel("")
     for ax in axes.flat[len(wanted) :]:
         ax.remove()
-    figure.suptitle(_title(result), fontsize="small")
+    figure.suptitle(fill(_title(result), 130), fontsize="small")
     return figure
 
 
@@ -231,7 +244,8 @@ def _title(result):
     s = result.scenario
     kinds = {result.kinematics.get(n) for n in ("neutron_star", "black_hole")} - {None, "stellar"}
     note = f"; neutron stars and black holes {' or '.join(sorted(kinds))}" if kinds else ""
-    return f"scenario {s.name} ({s.hash}); {result.header()}{note}"
+    lines = "; the bar marks the values of the lines" if result.grid is not None else ""
+    return f"scenario {s.name} ({s.hash}); {result.header()}{note}{lines}"
 
 
 def save_skymap(result, path, quantity="overview", overlay=(), overwrite=False):

@@ -17,7 +17,8 @@ _PI = (2e-3, 3.0)
 def odds(result, ax=None, **marker):
     """Draw events at their t_E and pi_E over contours of each class (half and nine tenths of its events).
 
-    Filled markers have a probability above 0.95, open ones have not; events without a parallax stand on the lower edge.
+    A marker has the shape and colour of the event's likeliest class, filled where that has a probability above 0.95;
+    events without a parallax stand in a strip below.
 
     Parameters
     ----------
@@ -35,7 +36,7 @@ def odds(result, ax=None, **marker):
     from ..events.odds import densities
 
     if ax is None:
-        _, ax = plt.subplots(figsize=(6.4, 5.2), layout="constrained")
+        _, ax = plt.subplots(figsize=(6.4, 5.8), layout="constrained")
     events = list(result)
     middle = np.median([e.l if e.l < 180 else e.l - 360 for e in events]), np.median([e.b for e in events])
     near = min(events, key=lambda e: np.hypot((e.l if e.l < 180 else e.l - 360) - middle[0], e.b - middle[1]))
@@ -52,34 +53,43 @@ def odds(result, ax=None, **marker):
         levels = sorted(rank[np.searchsorted(inside, share)] for share in (0.9, 0.5))
         colour, style = _colour(name, own), _style(name, own)
         ax.contour(t, pi, d.T, levels=levels, colors=[colour], linestyles=[style], linewidths=[0.8, 1.7])
-        handles.append(ax.plot([], [], color=colour, ls=style, label=_label(name))[0])
+        look = {"marker": _MARKERS.get(name, "P"), "mfc": "white", "ms": 6.5, "label": _label(name)}
+        handles.append(ax.plot([], [], color=colour, ls=style, **look)[0])
         own += name not in _MARKERS
+    # below what is measured, a strip for what is not
+    border = pi_lim[0]
+    strip, bottom = (border / 1.25, border / 1.6) if len(pis) < len(events) else (border, border)
+    if len(pis) < len(events):
+        ax.axhspan(bottom, border, color="0.93", zorder=0)
+        words = "$\\pi_\\mathrm{E}$ not\nmeasured"
+        ax.text(1.01, strip, words, transform=ax.get_yaxis_transform(), fontsize="x-small", va="center")
     for e in events:
         sure = e.probability.max() > 0.95
         colour = _colour(e.most_likely)
-        y = e.pi_E if e.pi_E else pi_lim[0] * 1.15
-        shape = _MARKERS.get(e.most_likely, "P") if e.pi_E else "|"
-        if e.pi_E:
-            face = {"facecolors": colour if sure else "white", "edgecolors": colour, "linewidths": 1.4}
-        else:
-            face = {"color": colour}
+        y = e.pi_E if e.pi_E else strip
+        face = {"facecolors": colour if sure else "white", "edgecolors": colour, "linewidths": 1.4}
+        shape = _MARKERS.get(e.most_likely, "P")
         ax.scatter([e.t_E.value], [y], marker=shape, zorder=5, **{"s": 46, **face, **marker})
         m = e.t_E
         ax.plot([max(m.value - m.lo, t_lim[0]), m.value + m.hi], [y, y], color=colour, lw=0.9, zorder=4)
     ax.set_xscale("log")
     ax.set_yscale("log")
     ax.set_xlim(*t_lim)
-    ax.set_ylim(*pi_lim)
+    ax.set_ylim(bottom, pi_lim[1])
     ax.set_xlabel(r"$t_\mathrm{E}$  [d]")
     ax.set_ylabel(r"$\pi_\mathrm{E}$")
     what = f"{result.sample or 'events'}{' (invented)' if result.invented else ''}, scenario {result.scenario.name}"
     frames = "/".join(sorted({e.frame for e in events}))
     ax.set_title(
         f"{what} ({result.scenario.hash})\nclasses at l = {near.l:g}°, b = {near.b:g}° (thick 50 %, thin 90 %); "
-        f"events {frames}, filled: P > 0.95",
+        f"events {frames}",
         fontsize="small",
     )
-    ax.legend(handles=handles, frameon=False, fontsize="small", loc="upper right")
+    grey = {"color": "0.3", "ls": "none", "marker": "o", "ms": 6.5}
+    handles.append(ax.plot([], [], label="event, likeliest class below 0.95", mfc="white", **grey)[0])
+    handles.append(ax.plot([], [], label="event, above 0.95", **grey)[0])
+    look = {"frameon": False, "fontsize": "x-small", "handlelength": 3.2, "ncols": 3}
+    ax.legend(handles=handles, loc="upper center", bbox_to_anchor=(0.5, -0.12), **look)
     return ax
 
 
@@ -104,6 +114,6 @@ def save_odds(result, path, overwrite=False):
         Unknown ending, existing file, or a file that could not be written.
     """
     path = check_target(path, PICTURES, overwrite, "--plot")
-    figure = blank(6.4, 5.2)
+    figure = blank(6.4, 5.8)
     odds(result, ax=figure.add_subplot())
     return write_figure(figure, path, result.meta(), overwrite)

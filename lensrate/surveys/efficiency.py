@@ -295,7 +295,7 @@ class Efficiency:
         """Return the statements in one line, for headers."""
         if self.name == "complete":
             return "every event found"
-        has = ", ".join(self.includes) or "nothing else"
+        has = ", ".join(self.includes) or f"none of {', '.join(INCLUDES)}"
         low, high = self.t_E[0], self.t_E[-1]
         return f"efficiency '{self.name}' per {self.per.replace('_', ' ')}, {low:g}-{high:g} d, includes {has}"
 
@@ -373,10 +373,10 @@ def _rows_in_range(where, name, value, low, high, open_low=False):
     bad = ~np.isfinite(value) | (value < low) | (value > high) | (open_low & (value <= low))
     if np.any(bad):
         i = int(np.argmax(bad))
-        first = "above" if open_low else "at least"
-        raise InputError(
-            f"{where}: row {i + 1}, column {name}: {value[i]:g} given, must be {first} {low:g} and at most {high:g}"
-        )
+        wanted = f"{'above' if open_low else 'at least'} {low:g} and at most {high:g}"
+        if not np.isfinite(value[i]):
+            wanted = "a finite number"
+        raise InputError(f"{where}: row {i + 1}, column {name}: {value[i]:g} given, must be {wanted}")
 
 
 def locate(name, beside):

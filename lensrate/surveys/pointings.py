@@ -113,6 +113,7 @@ def rank(
             **skymap.meta(),
             "ranked": {
                 "lens": lens,
+                "asked": int(top),
                 "per": per,
                 "formula": FORMULA,
                 "field_area_deg2": A.tolist(),

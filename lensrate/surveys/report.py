@@ -1,17 +1,11 @@
-"""What a campaign's forecast looks like in a proposal: headline, tables, LaTeX, methods paragraph, BibTeX."""
-
-import re
+"""What a campaign's forecast looks like in a proposal: headline, tables, LaTeX, methods paragraph."""
 
 import astropy.units as u
 import numpy as np
 
 from ..remnants.classes import LABELS
 
-__all__ = ["bibtex", "headline", "latex", "methods", "table_by_class", "table_by_field"]
-
-_CITED = re.compile(
-    r"^(?P<who>.+?) (?P<year>(18|19|20)\d\d), (?P<journal>[A-Za-z&. ]+?) (?P<volume>\d+), (?P<page>L?\d+)"
-)
+__all__ = ["headline", "latex", "methods", "table_by_class", "table_by_field"]
 
 
 def table_by_class(forecast):
@@ -94,7 +88,8 @@ def _listed(words):
 
 
 def _short(x):
-    return f"{x:.3g}" if x < 1000 else f"{x:.0f}"
+    """Three significant digits, trailing zeros kept."""
+    return f"{x:#.3g}".rstrip(".") if 0 < x < 1000 else f"{x:.0f}"
 
 
 def latex(forecast):
@@ -142,8 +137,9 @@ def methods(forecast):
     )
     n, days = len(c.calendar.seasons), c.calendar.exposure(c.efficiency.includes).sum()
     found = "every event is taken as found" if c.efficiency.name == "complete" else (
-        f"the detection efficiency is one per {c.efficiency.per.replace('_', ' ')} against t_E and includes "
-        f"{', '.join(c.efficiency.includes) or 'nothing else'}"
+        f"the detection efficiency is one per {c.efficiency.per.replace('_', ' ')} against t_E and "
+        + (f"already includes {_listed(list(c.efficiency.includes))}" if c.efficiency.includes else
+           "holds no loss by seasons, gaps or blending")
     )  # fmt: skip
     spread = (
         f" The range is the least and most over {_listed(forecast.range_over)} (family '{forecast.family}'), each "
@@ -180,39 +176,3 @@ def methods(forecast):
 
 def _fields(names, forecast):
     return "all fields" if len(names) == len(forecast.fields) else _listed(names[:8]) + " and others" * (len(names) > 8)
-
-
-def bibtex(references):
-    """Return BibTeX entries of reference strings, made from what they state.
-
-    Parameters
-    ----------
-    references : iterable of str
-        "Author year, Journal volume, page (topic); ...".
-
-    Returns
-    -------
-    str
-    """
-    entries, used = [], {}
-    for text in dict.fromkeys(part.strip() for r in references for part in r.split(";")):
-        found = _CITED.search(text.split(": ", 1)[-1])
-        if not found:
-            continue
-        who = found["who"].strip()
-        stem = re.sub(r"[^A-Za-z]", "", re.split(r"[,+& ]", who)[0]) + found["year"]
-        page = (found["journal"], found["volume"], found["page"])
-        if page in used.values():
-            continue
-        key = stem
-        while key in used:
-            key += "a" if key == stem else "b"
-        used[key] = page
-        who = who.replace(" et al.", " and others").replace("+", " and others").replace(" & ", " and ")
-        who = re.sub(r",\s*(?=[A-Z])", " and ", who)
-        journal = found["journal"].replace("&", r"\&")
-        entries.append(
-            f"@article{{{key},\n  author = {{{who}}},\n  year = {{{found['year']}}},\n  journal = {{{journal}}},\n"
-            f"  volume = {{{found['volume']}}},\n  pages = {{{found['page']}}}\n}}"
-        )
-    return "\n\n".join(entries)

@@ -229,6 +229,9 @@ def parse_shape(where, table, l_deg, b_deg, to_galactic=None):
     InputError
         None or several given, a size that is not above zero, too large, or a polygon that crosses itself.
     """
+    for key in ("height_deg", "angle_deg"):
+        if key in table and "width_deg" not in table:
+            raise InputError(f"{where}: {key} is one of a rectangle and needs width_deg beside it")
     kinds = {"radius_deg": "circle", "width_deg": "rectangle", "polygon": "polygon", "area_deg2": "patch"}
     given = [k for k in kinds if k in table]
     if len(given) != 1:

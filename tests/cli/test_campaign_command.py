@@ -73,6 +73,9 @@ def test_bad_input_is_named(tmp_path, small):
         ((small, "--save", "out.txt"), "ending"),
         ((small, "--by", "field"), "--save"),
         ((small, "--seed", "3"), "--plot"),
+        ((small, "--exact", "--family", "none"), "goes with a --family"),
+        ((small, "--kick-yield", "neutron_star", "--save", "a.csv", "--by", "field"), "--by has no effect here"),
+        ((small, "--kick-yield", "neutron_star", "--plot", "a.png", "--events", "500"), "--events has no effect"),
     ):
         out = run(*args)
         assert out.exit_code != 0 and words in f"{out.output} {out.exception}", args

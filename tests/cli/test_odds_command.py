@@ -67,6 +67,10 @@ def test_samples_of_a_fit(tmp_path):
         (["x.csv", "--pi-E", "3"], "--pi-E belongs to an event typed"),
         (["--t-E", "3"], "--at L B is needed"),
         (["--t-E", "3", "--at", "1", "-2", "--pi-E-err", "1"], "--pi-E-err without --pi-E"),
+        (["x.csv", "--icrs"], "--icrs has no effect here: it goes with --at"),
+        (["--t-E", "3", "--at", "1", "-2", "--skip-bad"], "--skip-bad has no effect here"),
+        (["x.csv", "--u-0-limit", "0.5"], "--u-0-limit has no effect here"),
+        (["x.csv", "--seed", "3"], "--seed has no effect here: it goes with --rank"),
     ],
 )
 def test_usage(args, words):

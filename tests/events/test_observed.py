@@ -225,3 +225,12 @@ def test_samples_with_a_missing_column(tmp_path):
         t.write(tmp_path / "e.ecsv", overwrite=True)
         with pytest.raises(InputError, match=words):
             Sample.read(tmp_path / "e.ecsv")
+
+
+def test_what_may_name_an_event():
+    plain = {k: v for k, v in PLAIN.items() if k != "event"}
+    for label in ("name", "id"):
+        sample = Sample.from_table(Table({**plain, label: ["a", "b"]}), "heliocentric")
+        assert [e.name for e in sample] == ["a", "b"] and not sample.notes
+    both = Sample.from_table(table(name=["x", "y"]), "heliocentric")
+    assert [e.name for e in both] == ["M-1", "M-2"] and "columns not used: name" in both.notes

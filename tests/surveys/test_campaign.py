@@ -11,6 +11,7 @@ from scipy.stats import poisson
 import lensrate
 from lensrate import InputError, Scenario
 from lensrate.surveys import report
+from lensrate.surveys.bibliography import bibtex
 from lensrate.surveys.campaign import Campaign
 from lensrate.surveys.campaign_spread import campaign_spread
 from lensrate.surveys.family import Family
@@ -244,8 +245,15 @@ def test_a_proposal_can_quote_it(kicked):
     text = report.methods(kicked)
     assert kicked.scenario.hash in text and "limit:I=20" in text and "u_0 < 1" in text
     assert report.latex(kicked).count(r"\\") == len(kicked.classes) + 2
-    entries = report.bibtex(kicked.references)
+    entries = bibtex(kicked.references, kicked.meta())
     assert "@article{Kroupa2001" in entries and entries.count("{") == entries.count("}")
+    assert f"({kicked.scenario.hash}), campaign {kicked.campaign.hash}" in entries.split("@article")[0]
+    # words beside the authors are none of them; laws of the family and numbers of arXiv are there
+    for authors in ("Cummings and others", "Ozel and others", "Stanek", "Kroupa and Tout and Gilmore",
+                    "{GRAVITY Collaboration}", "Verbunt and Igoshev and Cator", "Disberg and Mandel"):  # fmt: skip
+        assert f"author = {{{authors}}}" in entries, authors
+    assert "eprint = {2505.22102}" in entries and "On the variation of the initial mass function" in entries
+    assert report._short(30.0) == "30.0" and report._short(0.5) == "0.500" and report._short(251.2) == "251"
     assert "neutron stars" in report.headline(kicked)
     header = kicked.header()
     for word in ("limit:I=20", "u_0 < 1", "heliocentric", "all t_E", "luminous"):
