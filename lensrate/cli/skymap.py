@@ -313,9 +313,7 @@ def report_ranking(ranking):
     time = "" if made["visit_h"] is None else f", a visit every {made['cadence_d']:g} d"
     hour = " and telescope hour" if timed and made["per"] == "field" else ""
     few = len(ranking) < made["asked"]
-    why = "the map holds no more fields that lie inside it, apart from each other, with such events"
-    if named:
-        why = "the list holds no more with such events"
+    why = "the list holds no more" if named else "the map has room for no more, inside it and apart from each other"
     first = f"pointings by events of {who} {per}{hour}{time}"
     note = [wrap(f"{len(ranking)} of {made['asked']} asked for: {why}")] * few
     return "\n".join([first, columns(titles, rows, left=2 if named else 1), *note, "", wrap(made["formula"])])

@@ -62,6 +62,10 @@ def table_by_field(forecast):
              "outside_efficiency", "n_sources")  # fmt: skip
     table = QTable(rows=rows, names=names)
     table["l"].unit = table["b"].unit = u.deg
+    dust = {f.field.name: f.sightline.sources["extinction"] for f in forecast.fields}
+    for band in dict.fromkeys(band for each in dust.values() for band in each):
+        table[f"A_{band}"] = np.array([dust[name].get(band, np.nan) for name in table["field"]]) * u.mag
+    table["extinction_from"] = [{f.field.name: f.dust_from for f in forecast.fields}[name] for name in table["field"]]
     return table
 
 

@@ -68,7 +68,7 @@ def skymap(
     Raises
     ------
     InputError
-        A grid that is none, too many pixels, unequal lengths, an efficiency for another u_0 limit.
+        A grid that is none, too many pixels, unequal lengths, an efficiency of other sources or another u_0 limit.
     ConvergenceError
         A rate came out negative or not finite.
 
@@ -210,9 +210,7 @@ def _efficiency_notes(efficiency, scenario):
         notes.append(
             "the efficiency is per catalogued object, the map's sources are real stars: blends hold several of those"
         )
-    limit = efficiency.source_limit
-    if limit and limit != scenario.sources:
-        notes.append(f"the efficiency is stated for sources {limit}, the map's are {scenario.sources}")
+    efficiency.check_sources("skymap", scenario.sources)
     return tuple(notes)
 
 

@@ -214,7 +214,8 @@ class SkyMap:
 
     def header(self):
         """Return the line that stands above every table."""
-        dust = f"A_{self.extinction_band} by pixel" if self.extinction_band else "no dust used"
+        each = "pixel" if self.grid is not None else "field"
+        dust = f"A_{self.extinction_band} by {each}" if self.extinction_band else "no dust used"
         end = f"; {self.efficiency}" if self.efficiency else "; no efficiency"
         if self.campaign is not None:
             end += f"; stars and areas of campaign {self.campaign['campaign']}"

@@ -225,6 +225,8 @@ def test_what_a_range_goes_over_and_where_dust_comes_from_is_said(kicked):
     assert [f.dust_from for f in made.fields] == ["stated", "dust disc"]
     assert any("1 of 2 fields" in w and f"B {smooth:.2f} mag" in w for w in made.warnings)
     assert "is that of a smooth disc of dust, which knows no clouds, for B" in report.methods(made)
+    row = made.to_table("field")[-1]
+    assert (row["field"], row["extinction_from"]) == ("B", "dust disc") and row["A_I"].value == smooth
     assert UNKICKED.kick_words() == "no natal kicks" and "black holes the same momentum" in Scenario().kick_words()
 
 
