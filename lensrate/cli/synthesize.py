@@ -21,7 +21,7 @@ from .text import columns, safe, wrap
     show_default=True,
     help="Orbits for each component and kick bin; errors fall with the root of it, time grows with it.",
 )
-@click.option("--bundles", type=click.IntRange(64, 65_536), default=4096, hidden=True)
+@click.option("--bundles", type=click.IntRange(64, 65_536), default=6144, hidden=True)
 @click.option("--iterations", type=click.IntRange(0, 10_000), default=300, hidden=True)
 @click.option("--seed", type=click.IntRange(0), default=1, show_default=True, help="Of the random numbers.")
 @click.option("--jobs", type=click.IntRange(1, 256), default=1, show_default=True, help="Threads.")

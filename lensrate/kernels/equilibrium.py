@@ -62,10 +62,35 @@ def cell_of(scale, m_edges, t_edges, n_phi, x, y, z):
 
 
 @kernel
+def _add_columns(eye, far, l_edges, b_edges, x, y, z, weight, row):
+    """Add what a body and its image half a turn away contribute to columns in blocks of sky.
+
+    eye: place of the Sun and unit vectors toward l = b = 0, along l and along b, shape (4, 3); far: distance of the
+    sources [kpc]; edges of l and of |b| [rad]; row gets weight (1 - D / far) / (2 D), whose sum over a block's solid
+    angle is the mean of the integral of density times D (1 - D / far) over D.
+    """
+    n_b = b_edges.size - 1
+    for turn in (1.0, -1.0):
+        dx, dy, dz = turn * x - eye[0, 0], turn * y - eye[0, 1], z - eye[0, 2]
+        D = math.sqrt(dx * dx + dy * dy + dz * dz)
+        up = abs(dx * eye[3, 0] + dy * eye[3, 1] + dz * eye[3, 2])
+        # the sine is close to the angle: this spares most arcs
+        if D < far and b_edges[0] * 0.99 * D <= up < b_edges[n_b] * D:
+            ahead = dx * eye[1, 0] + dy * eye[1, 1] + dz * eye[1, 2]
+            aside = dx * eye[2, 0] + dy * eye[2, 1] + dz * eye[2, 2]
+            l, b = math.atan2(aside, ahead), math.asin(up / D)
+            if l_edges[0] <= l and b_edges[0] <= b:
+                i, j = _interval(l_edges, l), _interval(b_edges, b)
+                if i < l_edges.size - 1 and j < n_b:
+                    row[i * n_b + j] += 0.5 * weight * (1.0 - D / far) / D
+
+
+@kernel
 def occupy(
-    kinds, pars, omega, ds, states, start, end, stride, scale, m_edges, t_edges, n_phi, times, occupancy, snapshots
-):
-    """Follow bundles of LANES orbits, note the time spent in each cell, and take snapshots.
+    kinds, pars, omega, ds, states, start, end, stride, scale, m_edges, t_edges, n_phi, eye, far, l_edges, b_edges,
+    times, occupancy, columns, snapshots,
+):  # fmt: skip
+    """Follow bundles of LANES orbits, note the time spent in each cell and on each column, and take snapshots.
 
     Parameters
     ----------
@@ -79,10 +104,14 @@ def occupy(
         Steps between notes.
     scale, m_edges, t_edges, n_phi
         As for `cell_of`.
+    eye, far, l_edges, b_edges
+        As for `_add_columns`.
     times : ndarray, shape (n * LANES, s)
         Rising times of the snapshots.
     occupancy : ndarray, shape (n, cells + 1)
         Gets shares that sum to one per bundle, the last for outside.
+    columns : ndarray, shape (n, blocks)
+        Gets the sums of `_add_columns` over the whole time that counts; may be empty.
     snapshots : ndarray, shape (n * LANES, s, 6)
     """
     s = np.zeros(ROWS * LANES)
@@ -92,6 +121,7 @@ def occupy(
         load(states, first, s)
         taken[:] = 0
         occupancy[b, :] = 0.0
+        columns[b, :] = 0.0
         running = LANES
         while running > 0:
             take_steps(kinds, pars, omega, ds, s, stride)
@@ -102,11 +132,14 @@ def occupy(
                     release(s, i, snapshots[first + i, taken[i]])
                     taken[i] += 1
                 if start <= t < end:
-                    c = cell_of(scale, m_edges, t_edges, n_phi, s[i], s[LANES + i], s[2 * LANES + i])
-                    occupancy[b, c] += 1.0 / s[WEIGHT + i]
+                    x, y, z, w = s[i], s[LANES + i], s[2 * LANES + i], 1.0 / s[WEIGHT + i]
+                    occupancy[b, cell_of(scale, m_edges, t_edges, n_phi, x, y, z)] += w
+                    if columns.shape[1] > 0:
+                        _add_columns(eye, far, l_edges, b_edges, x, y, z, w, columns[b])
                 if t < end:
                     running += 1
         total = occupancy[b].sum()
         occupancy[b] /= total
+        columns[b] /= total
         for i in range(LANES):
             release(s, i, states[first + i])

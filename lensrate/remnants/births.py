@@ -12,7 +12,8 @@ import numpy as np
 from ..errors import InputError
 from ..galaxy.density import NuclearDisc
 from ..units import KPC_PER_MYR
-from .equilibrium import cells_of, own_velocities
+from .cells import cells_of
+from .equilibrium import own_velocities
 
 __all__ = ["KICK_EDGES", "Window", "analytic", "draw", "kicked", "self_held", "window"]
 

@@ -6,23 +6,22 @@ from dataclasses import dataclass
 import astropy.units as u
 import numpy as np
 
-from ..galaxy.density import Bar
 from ..kernels.orbits import FAR, SOFT
 from ..kernels.potential import LANES
 from ..units import KPC_PER_MYR
 from .births import self_held, window
-from .equilibrium import TRAIN_GYR, cells_of
+from .cells import cells_of
+from .equilibrium import followed_gyr
 from .orbits import integrate, step
 
 __all__ = ["PILOT", "Estimate", "estimate", "steps"]
 
 PILOT = 8  # one tracer in so many finds the velocities about which cells are divided
 _GYR = 1e3 * KPC_PER_MYR
-_DROPPED = 0.5  # Gyr before an equilibrium's training window
 _FADES = 450.0  # km/s; orbits of faster kicks lead outward, where steps are long, and end beyond 100 kpc
 _OVERHEAD = 1.1  # a step with its notes and deposits over one in the short measurement
 _PROCESS = 250e6  # bytes of the interpreter with its libraries
-_CELLS = 900  # of an equilibrium, at most
+_CELLS = 1800  # of an equilibrium, at most
 
 
 @dataclass(frozen=True)
@@ -57,8 +56,7 @@ def steps(component, galaxy, potential, settings):
     cells = cells_of(component, galaxy, potential)
     radius = np.interp(np.linspace(0.05, 0.95, 10), cells.profile[1], cells.profile[0]) / cells.scale[0]
     per_time = np.mean(1 / np.hypot(radius, SOFT) + 1 / FAR) / step(settings.eta)
-    train = TRAIN_GYR[isinstance(component.density, Bar)]
-    held = 0 if self_held(component) else settings.bundles * LANES * (_DROPPED + 2 * train) * _GYR
+    held = 0 if self_held(component) else settings.bundles * LANES * followed_gyr() * _GYR
     edges = np.asarray(settings.kick_edges, dtype=float)
     speed = np.concatenate([[0.0], 0.5 * (edges[1:] + edges[:-1])])
     share = 0.05 + 0.95 * np.exp(-((speed / _FADES) ** 3))
@@ -91,7 +89,7 @@ def estimate(components, galaxy, potential, settings, jobs=1):
     # a thread sums all of it, a batch, and works on copies of them
     working = jobs * cells * 8 * (6 * 40 + settings.batches)
     bundles = settings.bundles * LANES * 8
-    held = bundles * 4 * 6 * len(components) + settings.bundles * _CELLS * 8 * 4
+    held = bundles * 4 * 6 * len(components) + settings.bundles * _CELLS * 4 * 5
     return Estimate(total * _seconds_a_step(potential, settings) * _OVERHEAD / jobs, _PROCESS + kept + working + held)
 
 

@@ -1,7 +1,8 @@
 """Run the orbits of a Galaxy: equilibrium of each component, births with kicks, fields of every element.
 
 Each element (component and kick bin) is one job with its own random stream, and sums its batches in order, so the
-result is the same whatever the number of threads.
+result is the same whatever the number of threads. What is finished, and what is done of an element that takes long,
+is kept in a folder.
 """
 
 import hashlib
@@ -19,21 +20,20 @@ from .._version import __version__
 from ..errors import DataFileError, InputError
 from ..galaxy.density import Uniform
 from ..io import whole_bytes
-from ..kernels import fields as kernels
 from ..parallel import run_map
-from .births import KICK_EDGES, analytic, draw, kicked, self_held, window
-from .cost import PILOT, steps
-from .equilibrium import CHUNK, Equilibrium, cells_of, solve
+from .births import KICK_EDGES, self_held
+from .cells import cells_of
+from .cost import steps
+from .element import HEIGHTS
+from .element import element as _element
+from .equilibrium import CHUNK, Equilibrium, solve
 from .fields import Grid, RemnantField
 from .kicked import galaxy_numbers
-from .moments import batch_ratios, encode, frames
-from .orbits import states_energies, step
+from .orbits import step
 
 __all__ = ["HEIGHTS", "REGIONS", "Settings", "forget", "stellar_components", "synthesize"]
 
 _CHECK = hashlib.sha256().digest_size  # bytes before a finished piece
-_RING = 1.5  # kpc on either side of the Sun's radius, where heights are counted
-HEIGHTS = np.concatenate([[0.0], np.geomspace(0.01, 50.0, 61), [np.inf]])
 
 
 @dataclass(frozen=True)
@@ -60,7 +60,7 @@ class Settings:
     tracers: int = 20_000
     batches: int = 4
     kick_edges: tuple = KICK_EDGES
-    bundles: int = 2048
+    bundles: int = 6144
     iterations: int = 300
     eta: float = 0.15
     stride: int = 8
@@ -128,11 +128,17 @@ def synthesize(galaxy, potential, settings=None, *, jobs=1, executor=None, progr
 
     def make(plan):
         place, number, stream = plan
-        return _element(components[place], held[place], number, stream, galaxy, potential, settings, stop)
+        # what an executor does elsewhere has no folder at hand
+        part = pieces.part(_name(plan)) if executor is None else None
+        return _element(components[place], held[place], number, stream, galaxy, potential, settings, stop, part)
 
     def run(plan):
         found = pieces.get(_name(plan))
-        return (found, True) if found is not None else (pieces.keep(_name(plan), make(plan)), False)
+        if found is not None:
+            return found, True
+        made = pieces.keep(_name(plan), make(plan))
+        pieces.drop(f"{_name(plan)}_part")
+        return made, False
 
     def tell(plan, result):
         work.add(components[plan[0]].element, 1 + plan[1], 1.0, result[1])
@@ -229,59 +235,6 @@ def _held(component, key, galaxy, potential, settings, stream, pieces, work, job
     return Equilibrium(
         kept["states"], kept["weights"], float(1 / np.sum(kept["weights"] ** 2)), json.loads(str(kept["mismatch"]))
     )
-
-
-def _element(component, equilibrium, number, stream, galaxy, potential, settings, stop=None):
-    """Follow the tracers of one element; return stored arrays, shares and its density."""
-    grid, edges = settings.grid, settings.kick_edges
-    felt = potential if self_held(component) else potential.for_orbits()
-    kinds, pars = felt.packed
-    ages, ds = window(component), step(settings.eta)
-    bins = (HEIGHTS.size - 3) / np.log(HEIGHTS[-2] / HEIGHTS[1])
-    ring = np.array([galaxy.R0 - _RING, galaxy.R0 + _RING, np.log(HEIGHTS[1]), bins])
-
-    def follow(rng, n, frame, sums, fourth, heights, ends):
-        if stop is not None and stop.is_set():
-            raise KeyboardInterrupt
-        if equilibrium is None:
-            rows = analytic(component, galaxy, felt, n, rng)
-        else:
-            rows = draw(equilibrium, n, rng)
-        if number > 0:
-            rows = kicked(rows, edges[number - 1], edges[number], rng)
-        # blocks of like energy take like numbers of steps
-        order = np.argsort(states_energies(felt, rows)[:, 0], kind="stable")
-        rows = np.ascontiguousarray(rows[order])
-        span = (ages.young, ages.old, ages.growth, settings.stride)
-        cells = (grid.pack(), grid.n_four, frame)
-        kernels.deposit_orbits(kinds, pars, felt.omega, ds, rows, *span, *cells, ring, sums, fourth, heights, ends)
-
-    cells = (kernels.PARTS, grid.n_R, grid.n_z, grid.n_phi, 10)
-    rngs = [np.random.default_rng(s) for s in stream.spawn(settings.batches + 1)]
-    sums, fourth, heights, ends = np.zeros(cells), np.zeros(cells[1:4]), np.zeros(HEIGHTS.size - 1), np.zeros(4)
-    follow(rngs[0], max(64, settings.tracers // PILOT), np.zeros((*cells[1:4], 6)), sums, fourth, heights, ends)
-    frame = frames(sums.sum(axis=0), grid)
-    fourth[:] = 0.0
-    total, heights, ends = np.zeros(cells), np.zeros(HEIGHTS.size - 1), np.zeros(4)
-    weights = np.empty((settings.batches, *cells[1:4]))
-    n = -(-settings.tracers // settings.batches)
-    for b, rng in enumerate(rngs[1:]):
-        sums[:] = 0.0
-        follow(rng, n, frame, sums, fourth, heights, ends)
-        weights[b] = sums[..., 0].sum(axis=0)
-        total += sums
-    scale = settings.stride * ds / (ages.total * ends[0])
-    ln_rho, four, two = encode(total, scale, grid, frame, fourth)
-    inside = total[..., 0].sum() * scale
-    return {
-        "ln_rho": ln_rho,
-        "four": four,
-        "two": two,
-        "batches": batch_ratios(weights),
-        "heights": heights * scale,
-        "ends": np.array([ends[1] / ends[0], 1 - ends[2] / ends[0], 1 - inside]),
-        "density": total[..., 0].sum(axis=0) * scale / grid.volumes(),
-    }
 
 
 #: regions in which the synthesised stars are held against the stars of the Galaxy set: R and |z| between [kpc]
@@ -400,3 +353,14 @@ class _Pieces:
                 buffer.write(hashlib.sha256(body.getbuffer()).digest())
                 buffer.write(body.getbuffer())
         return arrays
+
+    def drop(self, key):
+        """Remove a piece, if it is there."""
+        if self.folder is not None:
+            (self.folder / f"{key}.npz").unlink(missing_ok=True)
+
+    def part(self, key):
+        """Return how to get and to keep what is done of a piece, None without a folder."""
+        if self.folder is None:
+            return None
+        return lambda: self.get(f"{key}_part"), lambda arrays: self.keep(f"{key}_part", arrays)

@@ -8,9 +8,10 @@ from lensrate.errors import InputError
 from lensrate.galaxy.density import Uniform
 from lensrate.galaxy.model import Galaxy
 from lensrate.galaxy.potential import Potential
-from lensrate.kernels.equilibrium import cell_of
+from lensrate.kernels.equilibrium import _add_columns, cell_of
 from lensrate.remnants.births import analytic, draw, kicked, window
-from lensrate.remnants.equilibrium import cells_of, richardson_lucy, rotation_table, solve
+from lensrate.remnants.cells import COLUMNS_END, LATITUDES, LONGITUDES, cells_of, columns_of, eye_of
+from lensrate.remnants.equilibrium import richardson_lucy, rotation_table, solve
 from lensrate.units import KPC_PER_MYR
 
 GALAXY = Galaxy.read("default")
@@ -55,6 +56,20 @@ def test_cells_of_a_bar_hold_the_mass_of_drawn_points():
     assert cells.mass == pytest.approx(BY_NAME["bulge"].density.mass.value, rel=2e-3)
 
 
+def test_columns_of_drawn_points_are_those_of_the_density():
+    eye = eye_of(GALAXY, POTENTIAL)
+    wanted = columns_of(BY_NAME["bulge"], GALAXY, BY_NAME["bulge"].density.mass.value)
+    groups = np.zeros((20, wanted.size))
+    for row, rng in zip(groups, np.random.default_rng(12).spawn(20)):
+        for x, y, z in bar_points(4000, rng):
+            sky = (LONGITUDES, LATITUDES)
+            _add_columns(eye, COLUMNS_END, *sky, x, y, z, 1 / 4000, row)
+    mean, error = groups.mean(axis=0), groups.std(axis=0, ddof=1) / np.sqrt(20)
+    # Student's t of 19 degrees of freedom has a mean square of 19 / 17
+    assert np.mean(((mean - wanted) / error) ** 2) == pytest.approx(19 / 17, abs=5 * np.sqrt(3 / wanted.size))
+    assert mean.sum() == pytest.approx(wanted.sum(), rel=0.02)
+
+
 @pytest.mark.parametrize("name", ["thick_disc", "thin_disc_old", "nuclear_disc", "halo"])
 def test_analytic_births_fill_the_cells(name):
     cells = cells_of(BY_NAME[name], GALAXY, POTENTIAL)
@@ -83,7 +98,7 @@ def test_a_disc_is_held():
 
 
 def test_the_bar_is_held():
-    held = solve(BY_NAME["bulge"], GALAXY, POTENTIAL.for_orbits(), np.random.default_rng(6), bundles=256, train_gyr=4.0)
+    held = solve(BY_NAME["bulge"], GALAXY, POTENTIAL.for_orbits(), np.random.default_rng(6), bundles=512)
     assert held.mismatch["later"] < 0.25 < 0.4 < held.mismatch["start"]
     # the latitudes of bulge fields
     assert held.mismatch["later_high"] < 0.12

@@ -1,5 +1,6 @@
 """Fields: the grid's own error, symmetries, files, and a small synthesis from orbits to densities."""
 
+import threading
 from dataclasses import replace
 
 import astropy.units as u
@@ -10,7 +11,8 @@ from lensrate.errors import DataFileError, InputError
 from lensrate.galaxy.model import Galaxy
 from lensrate.galaxy.potential import Potential
 from lensrate.kernels.fields import _part
-from lensrate.remnants.equilibrium import cells_of
+from lensrate.remnants import element
+from lensrate.remnants.cells import cells_of
 from lensrate.remnants.fields import GRID_ERROR, Grid, RemnantField
 from lensrate.remnants.moments import batch_ratios, encode, frames, gaussians
 from lensrate.remnants.synthesis import Settings, synthesize
@@ -238,6 +240,33 @@ def test_synthesis_does_not_depend_on_threads_and_resumes(small, tmp_path):
     assert resumed.mismatch == small.mismatch
     other = synthesize(THICK, POTENTIAL, replace(SMALL, seed=4), checkpoint=tmp_path)
     assert not np.array_equal(small.ln_rho, other.ln_rho)
+
+
+def test_an_element_left_at_any_block_goes_on_to_the_same_result(monkeypatch):
+    monkeypatch.setattr(element, "_BLOCK", 128)
+    monkeypatch.setattr(element, "_KEEP_EVERY", -1.0)
+    settings, kept, leave = replace(SMALL, tracers=1024, kick_edges=(0.0, 50.0)), [], threading.Event()
+
+    def keep(done):
+        kept.append({k: v.copy() for k, v in done.items()})
+        if len(kept) == leave_after:
+            leave.set()
+
+    def make(part=None):
+        stream = np.random.SeedSequence(7)
+        return element.element(BY_NAME["nuclear_disc"], None, 1, stream, GALAXY, POTENTIAL, settings, leave, part)
+
+    leave_after = 0
+    whole = make()
+    # in the pilot run, at the end of a batch, within a batch
+    for leave_after in (1, 3, 4):
+        kept.clear()
+        leave.clear()
+        with pytest.raises(KeyboardInterrupt):
+            make((lambda: None, keep))
+        leave.clear()
+        again = make((lambda last=kept[-1]: last, lambda done: None))
+        assert len(kept) == leave_after and all(np.array_equal(whole[k], again[k]) for k in whole)
 
 
 def test_unkicked_tracers_stay_where_the_stars_are(small):
