@@ -52,12 +52,13 @@ def _typed(command):
 @click.option("--seed", type=int, default=1, show_default=True, help="Of simulated outcomes.")
 @click.option("--kick", is_flag=True, help="Birth component and kick of one event's lens, were it a remnant.")
 @click.option("--skip-bad", is_flag=True, help="Leave bad rows out.")
+@click.option("--jobs", type=click.IntRange(1, 256), default=1, show_default=True, help="Threads over events.")
 @assumptions
 @click.option("--plot", metavar="FILE", help="Draw the events over the classes' densities: .png .pdf .svg.")
 @output
 def odds(
     sample, at, icrs, lens_limit, frame, t_0par, outlier, tolerance, family, rank, facilities, campaign, hours, as_of,
-    since, seed, kick, skip_bad, plot, save, as_json, overwrite, quiet, **choices
+    since, seed, kick, skip_bad, jobs, plot, save, as_json, overwrite, quiet, **choices
 ):  # fmt: skip
     """Lens-class odds of each event of SAMPLE, or of one event typed with --t-E ... --at L B.
 
@@ -117,8 +118,9 @@ def odds(
         click.echo(wrap(f"lensrate: {read.summary()}"), err=True)
     others = _family(family, scenario) if family else ()
     result = compute(
-        read, scenario, outlier=outlier, tolerance=tolerance, spread=others, progress=None if quiet else "events"
-    )
+        read, scenario, outlier=outlier, tolerance=tolerance, spread=others, jobs=jobs,
+        progress=None if quiet else "events",
+    )  # fmt: skip
     extra = None
     if result.events and (rank or kick):
         if rank:

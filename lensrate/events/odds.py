@@ -5,12 +5,14 @@ detection efficiency at given data is the same for all classes and drops out.
 """
 
 from collections import OrderedDict
+from threading import Lock
 
 import astropy.units as u
 import numpy as np
 
 from ..errors import ConvergenceError, InputError
 from ..lensing import rates
+from ..lensing.directions import MANY
 from ..lensing.points import Axes, EventRates, Points
 from ..parallel import run_map
 from ..scenario import Scenario, resolve
@@ -26,7 +28,9 @@ __all__ = ["OUTLIER", "class_probabilities", "densities", "event_odds", "event_r
 OUTLIER = 0.01
 _FEWEST = 100  # effective samples below which no odds are given
 _KEEP = 2  # sightlines held in memory at a time
+_CROWD = 10  # events with wide parallax vectors on one sightline that are worth a grid of directions
 _held = OrderedDict()
+_holding = Lock()
 
 
 def event_rates(l, b, scenario="default"):
@@ -50,21 +54,25 @@ def event_rates(l, b, scenario="default"):
     if not isinstance(scenario, Scenario):
         scenario = Scenario.read(scenario)
     key = (scenario.hash, round(float(l), 9), round(float(b), 9))
-    if key in _held:
+    with _holding:
+        if key not in _held:
+            made = _event_rates(l, b, scenario)
+            while len(_held) >= _KEEP:
+                _held.popitem(last=False)
+            _held[key] = made
         _held.move_to_end(key)
         return _held[key]
+
+
+def _event_rates(l, b, scenario):
     model = resolve(scenario)
     x, y = np.radians(float(l)), np.radians(float(b))
     toward = model.sources.toward(x, y, model.galaxy)
     ready = rates.prepare(model, model.galaxy.sightline(x, y), toward, Numerics(**scenario.numerics))
-    made = EventRates(ready)
-    while len(_held) >= _KEEP:
-        _held.popitem(last=False)
-    _held[key] = made
-    return made
+    return EventRates(ready)
 
 
-def odds(sample, scenario="default", *, outlier=OUTLIER, tolerance=0.05, spread=(), progress=None):
+def odds(sample, scenario="default", *, outlier=OUTLIER, tolerance=0.05, spread=(), jobs=1, progress=None):
     """Return the odds of lens classes of every event of a sample.
 
     Parameters
@@ -79,6 +87,8 @@ def odds(sample, scenario="default", *, outlier=OUTLIER, tolerance=0.05, spread=
         Events within this angle [deg] of an earlier one share its sightline.
     spread : iterable of (str, Scenario)
         Further scenarios, whose probabilities are shown as a range.
+    jobs : int
+        Threads over the events of a sightline.
     progress : str, optional
         Label of a progress bar.
 
@@ -103,21 +113,22 @@ def odds(sample, scenario="default", *, outlier=OUTLIER, tolerance=0.05, spread=
 
     def one(group):
         place, members = group
-        out = []
-        for i in members:
-            try:
-                out.append((i, event_odds(events[i], event_rates(*place, scenario), outlier)))
-            except (InputError, ConvergenceError) as error:
-                out.append((i, f"{events[i].name}: {error}" if events[i].name not in str(error) else str(error)))
+        grid = sum(_is_wide(events[i]) for i in members) >= _CROWD
+        out = run_map(judge, [(i, place, scenario, grid) for i in members], jobs)
         ranges = {i: [] for i in members}
         for _, other in spread:
-            for i in members:
-                try:
-                    found = event_odds(events[i], event_rates(*place, other), outlier)
-                except (InputError, ConvergenceError):
-                    continue
-                ranges[i].append(found.probability)
-        return out, ranges
+            for i, found in zip(members, run_map(judge, [(i, place, other, grid) for i in members], jobs)):
+                if not isinstance(found, str):
+                    ranges[i].append(found.probability)
+        return list(zip(members, out)), ranges
+
+    def judge(job):
+        """Odds of one event, or why there are none."""
+        i, place, assumed, grid = job
+        try:
+            return event_odds(events[i], event_rates(*place, assumed), outlier, grid)
+        except (InputError, ConvergenceError) as error:
+            return f"{events[i].name}: {error}" if events[i].name not in str(error) else str(error)
 
     for out, ranges in run_map(one, groups, progress=progress):
         for i, result in out:
@@ -141,6 +152,15 @@ def odds(sample, scenario="default", *, outlier=OUTLIER, tolerance=0.05, spread=
     )
 
 
+def _is_wide(event):
+    """Whether an event asks for many points in directions."""
+    try:
+        found = [likelihood(s, event) for s in event.solutions if s.draws is None]
+    except InputError:
+        return False
+    return any(f.points.angle is not None and len(f.points) > MANY for f in found)
+
+
 def _shared_sightlines(events, tolerance):
     """Places and the events near each, in order of first appearance."""
     places, members = [], []
@@ -159,7 +179,7 @@ def _shared_sightlines(events, tolerance):
     return list(zip(places, members))
 
 
-def event_odds(event, line, outlier=OUTLIER):
+def event_odds(event, line, outlier=OUTLIER, grid=False):
     """Return the odds of one event on a sightline's rates.
 
     Parameters
@@ -169,6 +189,8 @@ def event_odds(event, line, outlier=OUTLIER):
         Of the event's place.
     outlier : float
         As in `odds`.
+    grid : bool
+        As in `EventRates.evaluate`: for one of many events of this sightline with wide parallax vectors.
 
     Returns
     -------
@@ -184,7 +206,7 @@ def event_odds(event, line, outlier=OUTLIER):
     rate = line.rates()
     found = []
     for solution in event.solutions:
-        found.append(_solution(solution, event, line, n))
+        found.append(_solution(solution, event, line, n, grid))
     weight = np.exp(-0.5 * np.array([s.delta_chi2 for s in event.solutions]))
     main, wrong = (sum(w * f[k] for w, f in zip(weight, found)) for k in ("main", "wrong"))
     if not (np.all(np.isfinite(main)) and main.sum() + wrong.sum() > 0):
@@ -231,11 +253,11 @@ def _mixed(main, wrong, outlier):
     return total / total.sum(), min(float(outlier * wrong.sum() / total.sum()), 1.0)
 
 
-def _solution(solution, event, line, n):
+def _solution(solution, event, line, n, grid=False):
     like = likelihood(solution, event)
     hist = np.zeros((n, 4, Axes.n, 2))
     light = LensLimit(solution.plain["I_lens_limit"], line) if "I_lens_limit" in solution.plain else None
-    by_point = _main(like, line, light, hist)
+    by_point = _main(like, line, light, hist, grid)
     main = by_point.sum(axis=1)
     wrong, hist_wrong = np.zeros(n), np.zeros_like(hist)
     if like.wrong > 0:
@@ -255,11 +277,11 @@ def _solution(solution, event, line, n):
     }  # fmt: skip
 
 
-def _main(like, line, light=None, hist=None):
+def _main(like, line, light=None, hist=None, grid=False):
     """Rates by class and point where the fit is right."""
     if like.rests_on == ("t_E",) and light is None and like.points.earth == (0.0, 0.0):
         return line.timescale_only(*like.t_only, hist)[:, None]
-    return line.evaluate(like.points, like.known, light, hist)
+    return line.evaluate(like.points, like.known, light, hist, grid)
 
 
 def _size(event):

@@ -337,3 +337,95 @@ def sum_masses(
         by_point[q] += at_point
         total += at_point
     return total
+
+
+@kernel
+def fill_directions(first, n_rows, base, cell, gauss, mu, cosine, sine, q_max, coarse, out, shares):
+    """Fill out (P, K, F) with the log of one base's density at sizes mu (P, K) and F directions of motion.
+
+    A Gaussian is left out where its exponent is beyond q_max at every direction; -800 where none is left. Fills shares
+    (P, K, F / coarse, C) with what each cell of source distance has of it, around so many directions at a time.
+    """
+    K, F, C = mu.shape[1], cosine.size, shares.shape[3]
+    here = np.empty(F)
+    summed = np.empty((K, F))
+    of_cell = np.empty((C, K, F // coarse))
+    for i in range(n_rows):
+        summed[:] = 0.0
+        of_cell[:] = 0.0
+        for g in range(first[base * n_rows + i], first[base * n_rows + i + 1]):
+            ml, mb, a, b2, c, top = gauss[0, g], gauss[1, g], gauss[2, g], gauss[3, g], gauss[4, g], gauss[5, g]
+            least = 0.5 * (a + c) - math.sqrt(0.25 * (a - c) * (a - c) + 0.25 * b2 * b2)
+            reach = math.sqrt(q_max / max(least, 1e-30))
+            m = math.sqrt(ml * ml + mb * mb)
+            mine = of_cell[cell[g]]
+            for k in range(K):
+                v = mu[i, k]
+                if abs(v - m) > reach:
+                    continue
+                for f in range(F):
+                    dx, dy = v * cosine[f] - ml, v * sine[f] - mb
+                    here[f] = fexp(top - a * dx * dx - b2 * dx * dy - c * dy * dy)
+                target = summed[k]
+                for f in range(F):
+                    target[f] += here[f]
+                for f in range(F // coarse):
+                    # the one or two in the middle stand for all of them
+                    mine[k, f] += here[f * coarse + (coarse - 1) // 2] + here[f * coarse + coarse // 2]
+        for k in range(K):
+            for f in range(F):
+                out[i, k, f] = math.log(summed[k, f]) if summed[k, f] > 1e-280 else -800.0
+            for f in range(F // coarse):
+                total = 0.0
+                for c in range(C):
+                    total += of_cell[c, k, f]
+                for c in range(C):
+                    shares[i, k, f, c] = of_cell[c, k, f] / total if total > 1e-280 else 0.0
+
+
+@kernel
+def between_directions(table, k_first, i_lo, i_hi, h, ln_mu, turn, coarse, shares, out):
+    """Interpolate a table (P, K, F) of logs, cubic in ln mu and direction: out (P, C, Q) at ln_mu, turn (P, Q).
+
+    Row i of the table starts at h * k_first[i]; turn (at least 0) in units of the directions' step, from the first one
+    on. What is found is shared out over source distances by the shares (P, K, F / coarse, C), linear between
+    their nodes.
+    """
+    K, F, C, W = table.shape[1], table.shape[2], shares.shape[3], shares.shape[2]
+    for i in range(i_lo, i_hi):
+        for q in range(ln_mu.shape[1]):
+            x = ln_mu[i, q] / h - k_first[i]
+            k = int(math.floor(x))
+            if k < 0 or k >= K - 1:
+                continue
+            low, v = k, x - k
+            k = min(max(k, 1), K - 3)
+            t = x - k
+            f = int(math.floor(turn[i, q]))
+            s = turn[i, q] - f
+            u0, u1 = -s * (s - 1.0) * (s - 2.0) / 6.0, (s + 1.0) * (s - 1.0) * (s - 2.0) / 2.0
+            u2, u3 = -(s + 1.0) * s * (s - 2.0) / 2.0, (s + 1.0) * s * (s - 1.0) / 6.0
+            f0, f1, f2, f3 = (f + F - 1) % F, f % F, (f + 1) % F, (f + 2) % F
+            z, least = 0.0, 0.0
+            for j in range(4):
+                w = (
+                    -t * (t - 1.0) * (t - 2.0) / 6.0 if j == 0
+                    else (t + 1.0) * (t - 1.0) * (t - 2.0) / 2.0 if j == 1
+                    else -(t + 1.0) * t * (t - 2.0) / 2.0 if j == 2
+                    else (t + 1.0) * t * (t - 1.0) / 6.0
+                )  # fmt: skip
+                row = table[i, k - 1 + j]
+                least = min(least, row[f0], row[f1], row[f2], row[f3])
+                z += w * (u0 * row[f0] + u1 * row[f1] + u2 * row[f2] + u3 * row[f3])
+            if least <= -700.0:
+                continue
+            value = math.exp(z)
+            # the middle of a group of directions is half a step before its middle node
+            x = (turn[i, q] - 0.5 * (coarse - 1)) / coarse + W
+            f = int(math.floor(x))
+            s = x - f
+            one, other = shares[i, low, f % W], shares[i, low, (f + 1) % W]
+            one_up, other_up = shares[i, low + 1, f % W], shares[i, low + 1, (f + 1) % W]
+            for c in range(C):
+                below, above = (1.0 - s) * one[c] + s * other[c], (1.0 - s) * one_up[c] + s * other_up[c]
+                out[i, c, q] = value * ((1.0 - v) * below + v * above)

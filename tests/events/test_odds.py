@@ -14,7 +14,7 @@ from lensrate.events.likelihood import likelihood
 from lensrate.events.observed import Measure, Observed, Sample, Solution
 from lensrate.events.odds import class_probabilities, event_odds, event_rates, odds
 from lensrate.events.posterior import Draws
-from lensrate.lensing import earth, rates
+from lensrate.lensing import directions, earth, rates
 from lensrate.lensing.masses import fine_masses
 from lensrate.lensing.quadrature import Numerics
 from lensrate.lensing.sampler import Sampler
@@ -305,6 +305,25 @@ def test_directions_of_a_sample_are_no_further_samples():
     assert 100 < _of(_as_draws(columns), "geocentric", 60000.0).effective_samples <= 300
 
 
+@pytest.mark.parametrize(
+    "measured",
+    [
+        {"pi_EN": m(0.1, 0.1), "pi_EE": m(0.05, 0.03)},
+        {"pi_EN": m(0.0, 0.05), "pi_EE": m(0.0, 0.02), "mu_rel": m(6.0, 1.0)},
+    ],
+)
+def test_wide_vectors_are_read_off_a_grid_of_directions(measured):
+    e = event("geocentric", 55763.0, t_E=m(60.0, 0.5), **measured)
+    assert len(likelihood(e.solutions[0], e).points) > directions.MANY
+    grid, direct = event_odds(e, line(), grid=True), event_odds(e, line())
+    assert grid.probability == pytest.approx(direct.probability, rel=3e-4)
+    a, b = grid.to_dict(), direct.to_dict()
+    for what, close in (("mass_msun", 2e-3), ("distance_kpc", 1e-2)):
+        for q in ("p16", "p50", "p84"):
+            assert a[what][q] == pytest.approx(b[what][q], rel=close)
+    assert line().nbytes() < 500e6
+
+
 def test_both_frames_give_the_same_answer():
     """The samples of one fit in both frames, its prior carried along: dt d2pi goes with the third power of t_E."""
     target = {"t_0par": 55763.0, "ra": 267.9 * u.deg, "dec": -29.9 * u.deg}
@@ -427,6 +446,21 @@ def test_sample_shares_sightlines_and_keeps_order():
     keys = {"event", "frame", "probability", "prior", "odds_against_star", "outlier_weight", "most_likely", "mass_msun",
             "distance_kpc", "by_class", "solutions", "effective_samples"}  # fmt: skip
     assert all(keys <= set(row) for row in result.to_dict())
+
+
+def test_many_wide_vectors_in_threads():
+    """A crowd uses the grid, in any number of threads, and agrees with each event by itself."""
+    rng = np.random.default_rng(12)
+    crowd = [
+        event(t_E=m(t, 0.01 * t), pi_EN=m(n, 0.1), pi_EE=m(e, 0.04))
+        for t, n, e in zip(rng.uniform(20, 120, 10), rng.normal(0, 0.2, 10), rng.normal(0, 0.1, 10))
+    ]
+    one, two = odds(crowd, UNKICKED), odds(crowd, UNKICKED, jobs=2)
+    alone = [event_odds(e, line(False)) for e in crowd]
+    for a, b, c in zip(one.events, two.events, alone):
+        assert np.array_equal(a.probability, b.probability)
+        assert a.probability[:3] == pytest.approx(c.probability[:3], rel=3e-4)
+        assert not np.array_equal(a.probability, c.probability)
 
 
 def test_mass_spectra_keep_numbers_and_means():

@@ -129,6 +129,10 @@ def test_interrupted_at_any_moment(name, two, tmp_path):
         if victim.returncode == 0:
             assert read_made(target)
             continue
+        if victim.returncode == -signal.SIGINT:
+            # while Python itself was starting or ending, which a shell calls 130 too
+            assert not target.exists() or read_made(target)
+            continue
         stopped += 1
         assert victim.returncode == 130 and "interrupted" in err and not out and not target.exists()
         left = [p.name for p in tmp_path.iterdir() if p.name.startswith((f"try{i}.", f".try{i}."))]
