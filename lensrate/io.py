@@ -270,9 +270,12 @@ def read_rows(path, what="table"):
     try:
         with warnings.catch_warnings():
             warnings.simplefilter("ignore")
-            table = Table.read(
-                path, format=formats.get(ending, "ascii"), **({"comment": "#"} if ending == ".csv" else {})
-            )
+            if ending == ".fits":
+                # from memory, since astropy leaves a damaged file open
+                table = Table.read(BytesIO(path.read_bytes()), format="fits")
+            else:
+                more = {"comment": "#"} if ending == ".csv" else {}
+                table = Table.read(path, format=formats.get(ending, "ascii"), **more)
     except InputError:
         raise
     except Exception as error:  # astropy's readers raise many kinds; all mean that the file is not what it should be

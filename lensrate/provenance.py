@@ -58,7 +58,7 @@ def read_made(path):
         found = _READERS[ending](path)
     except OSError as error:
         raise InputError(f"'{path}': cannot be read ({error.strerror or error})") from None
-    except (ValueError, TypeError, KeyError, RecursionError, struct.error, expat.ExpatError) as error:
+    except (ValueError, TypeError, LookupError, RecursionError, struct.error, expat.ExpatError) as error:
         # what readers of damaged files raise
         reason = " ".join(str(error).split())[:120]
         raise InputError(f"'{path}': damaged, or not written by lensrate ({reason})") from None

@@ -284,7 +284,7 @@ class Scenario:
         for key in _FILES:
             if Path(full[key]).suffix:
                 full[key] = "file"  # where a user's file lies changes nothing; what is in it follows below
-        used = {self.imf or row.get("imf", "kroupa2001") for row in self._galaxy_table["component"]}
+        used = {str(self.imf or row.get("imf", "kroupa2001")) for row in self._galaxy_table["component"]}
         full["sets"] = {
             "galaxy": self._galaxy_table,
             "lifetimes": read_set("lifetimes", self.lifetimes),

@@ -351,3 +351,19 @@ def test_field_files_with_true_checksums_and_false_numbers(kicked_scenario, tmp_
             hdus.writeto(tmp_path / "bad.fits", overwrite=True, checksum=True)
         with little_memory(), pytest.raises(DataFileError, match=r"bad\.fits.*lensrate synthesize"):
             RemnantField.read(tmp_path / "bad.fits")
+
+
+def test_a_family_that_gives_a_component_a_number_for_a_mass_function(tmp_path):
+    path = tmp_path / "mutant.toml"
+    path.write_text(
+        '[axis.imf]\nlabel = "x"\nalternatives = [{name = "a", source = "none", change = {bulge = {imf = 1.5}}}]\n'
+    )
+    with pytest.raises(InputError):
+        Family.read(path).for_base(Scenario.read("default"))
+
+
+def test_a_votable_in_an_encoding_that_there_is_not(tmp_path):
+    path = tmp_path / "mutant.vot"
+    path.write_bytes(b'<?xml version="1.0" encoding="ttf-8"?>\n<VOTABLE version="1.4"/>\n')
+    with pytest.raises(InputError, match="damaged"):
+        read_made(path)
