@@ -169,7 +169,8 @@ class MockEvents:
         """Return what stands above every table."""
         kind = "weighted" if self.weighted else "unweighted"
         made = f"{len(self)} {kind} events{', ' * bool(self.selected)}{self.selected}, seed {self.seed}"
-        return f"{made}; {self.forecast.header()}; t_0, u_0, *_geo geocentric at t_0"
+        drawn = {} if self.selected or not self.field_names else {"drawn": True}
+        return f"{made}; {self.forecast.header(**drawn)}; t_0, u_0, *_geo geocentric at t_0"
 
     def meta(self):
         """Return how this was made, for the metadata of tables and pictures."""

@@ -28,31 +28,33 @@ def with_range(forecast, family, exact=False, jobs=1, executor=None):
     -------
     CampaignForecast
     """
-    rows, labels, skipped, over = [], [], 0, {}
+    rows, labels, skipped, over = [], [], {}, {}
     words = {axis.name: axis.label or axis.name for axis in family.axes}
     for case in family.cases(forecast.scenario):
         made = reweighed(forecast, case.scenario)
         if made is None and exact:
             made = campaign(forecast.campaign, case.scenario, jobs=jobs, executor=executor)
         if made is None:
-            skipped += 1
+            skipped.setdefault(words[case.choices[0][0]], []).append(case.label)
             continue
         rows.append(made.by_class())
         labels.append(case.label)
         if not np.allclose(rows[-1], forecast.by_class(), rtol=1e-12, atol=0.0):
             over.update((words[axis], None) for axis, _ in case.choices)
+    over = [f"{word} (in part)" if word in skipped else word for word in over]
+    without = tuple(label for each in skipped.values() for label in each)
     table = np.array(rows)
     ranges = np.column_stack([table.min(axis=0), table.max(axis=0)])
     cases = tuple(f"{labels[i]} to {labels[j]}" for i, j in zip(table.argmin(axis=0), table.argmax(axis=0)))
     notes = list(forecast.warnings)
     if skipped:
         notes.append(
-            f"the range leaves out {skipped} alternatives of family '{family.name}' that need new integrals; "
-            "ask for the exact range to have them"
+            f"the range leaves out {len(without)} alternatives of family '{family.name}' that need new integrals "
+            f"({', '.join(without)}); ask for the exact range to have them"
         )
     return replace(
-        forecast, family=family.name, family_hash=family.hash, range_over=tuple(over), ranges=ranges,
-        range_cases=cases, warnings=tuple(notes),
+        forecast, family=family.name, family_hash=family.hash, range_over=tuple(over), range_without=without,
+        ranges=ranges, range_cases=cases, warnings=tuple(notes),
         references=tuple(dict.fromkeys([*forecast.references, *family.references])),
     )  # fmt: skip
 

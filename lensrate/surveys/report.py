@@ -105,6 +105,9 @@ def latex(forecast):
     titles += ["Range"] * ranged + [r"$P(\geq 1)$"] + ["Scaled"] * scaled
     lines = [
         "% " + forecast.header(),
+        *([f"% Range: over {_listed(forecast.range_over)}"] if ranged else []),
+        *([f"% Scaled: share of each class times the events observed in {', '.join(forecast.scaled_fields())}"]
+          if scaled else []),
         f"% scenario {forecast.scenario.name} ({forecast.scenario.hash}), lensrate {forecast.version}",
         rf"\begin{{tabular}}{{{columns}}}",
         r"\hline",
@@ -129,9 +132,10 @@ def methods(forecast):
     s, c = forecast.scenario, forecast.campaign
     first = forecast.fields[0].sightline
     counted = {f.counted for f in forecast.fields}
-    stars = "stated by the survey" if counted == {"stated"} else "those of the source model" if (
-        counted == {"source model"}
-    ) else "stated by the survey where known, else those of the source model"  # fmt: skip
+    modelled = "those of the source model (not tested against counts in bulge fields)"
+    stars = {("stated",): "stated by the survey", ("source model",): modelled}.get(
+        tuple(counted), f"stated by the survey where known, else {modelled}"
+    )
     kicked = {first.lenses[n].kinematics for n in ("neutron_star", "black_hole")}
     dark = (
         "neutron stars and black holes follow density and velocity fields from their own orbits in the Galaxy's "
@@ -148,6 +152,7 @@ def methods(forecast):
     spread = (
         f" The range is the least and most over {_listed(forecast.range_over)} (family '{forecast.family}'), each "
         "changed alone; it is no standard deviation."
+        + (f" It leaves out {_listed(forecast.range_without)}." if forecast.range_without else "")
         if forecast.range_over
         else ""
     )
@@ -156,6 +161,16 @@ def methods(forecast):
         f"{', '.join(forecast.scaled_fields())}."
         if forecast.scaled_fields()
         else ""
+    )
+    by_rule = {}
+    for f in c.fields:
+        by_rule.setdefault(f.sources, []).append(f.name)
+    one = len(by_rule) == 1
+    rules = _listed([k if one else f"{k} ({_fields(v, forecast)})" for k, v in by_rule.items()])
+    shared = " Stars that fields share are counted once." if c.overlaps == "count_once" else ""
+    lost = c.calendar.exposure().sum()
+    already = (
+        f" ({lost:.0f} d of them open: what the efficiency holds already is not taken off again)" if days > lost else ""
     )
     dust = {}
     for f in forecast.fields:
@@ -170,9 +185,10 @@ def methods(forecast):
         f"Expected events of {c.name} were computed with lensrate {forecast.version} (scenario {s.name}, "
         f"{s.hash}; Galaxy set {s.galaxy}). For the centre of each of the {len(c.fields)} fields the event rate per "
         f"source and its distribution over t_E were integrated over lens and source distances and velocities, with "
-        f"sources {', '.join(dict.fromkeys(f.sources for f in c.fields))} and u_0 < {c.u_0_limit:g}; {dark}. The "
-        f"stars' own rate carries the change over a field's area.{extinction} Numbers of sources are {stars}; {found}; "
-        f"the exposure is {days:.0f} d in {n} season{'s' if n > 1 else ''}. "
+        f"sources {rules} and u_0 < {c.u_0_limit:g}; {dark}. The "
+        "stars' own rate carries the change over a field's area where its shape is stated."
+        f"{shared}{extinction} Numbers of sources are {stars}; {found}; "
+        f"the exposure is {days:.0f} d in {n} season{'s' if n > 1 else ''}{already}. "
         f"Intervals are the central 68 % of Poisson counts.{spread}{scaled} Binary lenses and sources, finite source "
         "size and blending beyond the stated efficiency are left out."
     )

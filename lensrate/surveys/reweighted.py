@@ -2,8 +2,9 @@
 
 from dataclasses import replace
 
+from .notes import campaign_warnings
 from .shared import integral_key
-from .yields import assembled, campaign, campaign_warnings
+from .yields import assembled, campaign
 
 __all__ = ["reweighed", "reweighted"]
 
@@ -37,7 +38,7 @@ def reweighed(forecast, scenario):
     classes = rows[0].sightline.classes
     return replace(
         forecast, scenario=scenario, classes=classes, fields=tuple(rows), family="", family_hash="",
-        range_over=(), ranges=None, range_cases=(), masses=None,
+        range_over=(), range_without=(), ranges=None, range_cases=(), masses=None,
         warnings=campaign_warnings(forecast.campaign, rows, classes),
         references=tuple(dict.fromkeys(r for f in rows for r in f.sightline.references)),
     )  # fmt: skip

@@ -13,6 +13,7 @@ from ..scenario import Scenario
 from ..units import DAYS_PER_YEAR
 from .campaign import Campaign
 from .dust_map import DustMap
+from .notes import campaign_warnings
 from .stars import field_curve, field_scenario, field_stars
 
 __all__ = [
@@ -20,10 +21,8 @@ __all__ = [
     "FieldForecast",
     "assembled",
     "campaign",
-    "campaign_warnings",
 ]
 
-_OUTSIDE = 0.01  # share of a class's events beyond the efficiency curve that is worth a word
 _ONE_SIGMA = 0.158655  # tail below one standard deviation of a normal distribution
 
 
@@ -92,7 +91,9 @@ class CampaignForecast:
     family, family_hash : str
         Name and checksum of the family of assumptions behind `ranges`, "" for none.
     range_over : tuple of str
-        Which assumptions `ranges` goes over, in words; those that need new integrals are left out unless asked for.
+        Which assumptions `ranges` goes over, in words.
+    range_without : tuple of str
+        Alternatives that it leaves out, since they need new integrals and were not asked for.
     ranges : ndarray, shape (classes + 1, 2)
         Least and most expected events over the family, the last row for all classes.
     range_cases : list of str
@@ -107,6 +108,7 @@ class CampaignForecast:
     family: str = ""
     family_hash: str = ""
     range_over: tuple = ()
+    range_without: tuple = ()
     ranges: np.ndarray | None = None
     range_cases: tuple = ()
     warnings: tuple = ()
@@ -141,11 +143,13 @@ class CampaignForecast:
         """Return the names of fields that state an observed number."""
         return [f.field.name for f in self.fields if f.field.observed_events is not None]
 
-    def header(self):
-        """Return what stands above every table."""
+    def header(self, drawn=False):
+        """Return what stands above every table; `drawn`: above events that nothing was taken from yet."""
         low = min(f.sightline.t_E[0] for f in self.fields)
         eff = self.campaign.efficiency
         span = "all t_E" if eff.name == "complete" else f"{max(eff.t_E[0], low):g} < t_E < {eff.t_E[-1]:g} d"
+        if drawn and eff.name != "complete":
+            span = f"every t_E drawn, efficiency of {span}"
         return f"{self.campaign.header()}; {span}; heliocentric; lenses of every class, luminous ones included"
 
     def meta(self):
@@ -163,6 +167,7 @@ class CampaignForecast:
             "family": self.family or None,
             "family_hash": self.family_hash or None,
             "range_over": list(self.range_over),
+            "range_without": list(self.range_without),
             "warnings": list(self.warnings),
             "references": list(self.references),
         }
@@ -208,6 +213,7 @@ class CampaignForecast:
             "expected": expected,
             "family": self.family or None,
             "range_over": list(self.range_over),
+            "range_without": list(self.range_without),
             "scaled_fields": self.scaled_fields(),
             "mass_measured": {} if self.masses is None else self.masses.to_dict(),
             "mass_settings": None if self.masses is None else self.masses.settings(),
@@ -346,36 +352,3 @@ def assembled(survey, f, centre, number, counted, factor):
         expected,
         number * error * mean * years.sum(),
     )
-
-
-def campaign_warnings(survey, rows, classes):
-    """Return what to mind: the fields' warnings gathered, and events that the efficiency curve does not reach."""
-    kinds = {}
-    for f in rows:
-        for w in f.sightline.warnings:
-            kinds.setdefault("".join(c for c in w if not c.isdigit()), []).append((f.field.name, w))
-    out = []
-    for said in kinds.values():
-        more = f" (and {len(said) - 1} fields more)" if len(said) > 1 and len({w for _, w in said}) > 1 else ""
-        everywhere = len(said) == len(rows) and not more
-        out.append(said[0][1] if everywhere else f"{said[0][0]}: {said[0][1]}{more}")
-    for i, name in enumerate(classes):
-        worst = max(rows, key=lambda f: f.outside[i])
-        if worst.outside[i] > _OUTSIDE and worst.sightline.lenses[name].rate > 0:
-            low, high = survey.efficiency.t_E[0], survey.efficiency.t_E[-1]
-            out.append(
-                f"{worst.outside[i]:.0%} of the {name.replace('_', ' ')} events of field {worst.field.name} have a t_E "
-                f"outside the efficiency curve ({low:g}-{high:g} d): not counted, since nothing is known of them"
-            )
-    smooth = [f for f in rows if f.dust_from == "dust disc"]
-    if smooth:
-        used = [(f.field.name, a) for f in smooth[:6] for a in f.sightline.sources["extinction"].values()]
-        each = ", ".join(f"{name} {a:.2f}" for name, a in used)
-        out.append(
-            f"no extinction is stated for {len(smooth)} of {len(rows)} field{'s' * (len(rows) > 1)}: the "
-            f"smooth dust disc's is used ({each}{' and so on' if len(smooth) > 6 else ''} mag), which knows no clouds; "
-            "a measured one moves the number of sources"
-        )
-    if any(f.field.extinction_map for f in rows):
-        out.append("the extinction map enters source counts and the stars' rate; lens classes share its mean elsewhere")
-    return tuple(out)

@@ -221,13 +221,17 @@ def test_what_a_range_goes_over_and_where_dust_comes_from_is_said(kicked):
     table["field"].append({**smooth, "name": "B", "l": 4.0})
     made = campaign(Campaign.from_dict(table), UNKICKED, family=Family.read("default").only(["kicks", "ifmr"]))
     assert made.range_over == ("remnant masses",) and made.to_dict()["range_over"] == ["remnant masses"]
-    smooth = made.fields[1].sightline.sources["extinction"]["I"]
-    assert [f.dust_from for f in made.fields] == ["stated", "dust disc"]
-    assert any("1 of 2 fields" in w and f"B {smooth:.2f} mag" in w for w in made.warnings)
-    assert "is that of a smooth disc of dust, which knows no clouds, for B" in report.methods(made)
-    row = made.to_table("field")[-1]
-    assert (row["field"], row["extinction_from"]) == ("B", "dust disc") and row["A_I"].value == smooth
-    assert UNKICKED.kick_words() == "no natal kicks" and "black holes the same momentum" in Scenario().kick_words()
+    # an axis of which some alternatives need new integrals is named as such, and these are listed
+    made = campaign(Campaign.from_dict(plain()), UNKICKED, family=Family.read("default").only(["imf"]))
+    assert made.range_over == ("mass function (in part)",)
+    assert any("flat in the bulge" in w for w in made.range_without) and "flat in the bulge" in report.methods(made)
+
+
+def test_what_contradicts_the_forecast_or_is_taken_on_trust_is_said():
+    table = plain()
+    table["field"][0]["observed_events"] = 3
+    told = [w for w in campaign(Campaign.from_dict(table), UNKICKED).warnings if "far beyond chance" in w]
+    assert len(told) == 1 and "3 events observed" in told[0]
 
 
 def test_a_spread_of_a_campaign_is_its_forecasts():
