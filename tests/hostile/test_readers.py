@@ -267,7 +267,7 @@ TIMES = "\n".join(
         ("rows.fits", fits_with("NAXIS2", 10**7)), ("rows.fits", fits_with("NAXIS1", 10**12)),
         ("rows.fits", fits_with("TFIELDS", 10**9)), ("rows.fits", fits_with("PCOUNT", 10**15)),
         ("rows.fits", fits_with("TFORM1", "'999999999999A'")), ("rows.fits", b"SIMPLE  =" + b" " * 100_000),
-        ("rows.fits", gzip.compress(fits_with("NAXIS2", 2))), ("rows.csv", gzip.compress(b"l,b\n" + b"1,2\n" * 10**6)),
+        ("rows.fits", gzip.compress(fits_with("NAXIS2", 2), mtime=0)), ("rows.csv", gzip.compress(b"l,b\n" + b"1,2\n" * 10**6, mtime=0)),
         ("rows.vot", VOT.format('nrows="2000000000000"', "").encode()),
         ("rows.vot", VOT.format("", 'arraysize="99999999999"').encode()), ("rows.vot", (ENTITIES + "]>").encode()),
         ("rows.ecsv", ALIASES.encode()), ("rows.ecsv", TIMES.encode()),
