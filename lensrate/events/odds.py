@@ -113,7 +113,8 @@ def odds(sample, scenario="default", *, outlier=OUTLIER, tolerance=0.05, spread=
 
     def one(group):
         place, members = group
-        grid = sum(_is_wide(events[i]) for i in members) >= _CROWD
+        # few events are no crowd: their points need not be laid out twice
+        grid = len(members) >= _CROWD and sum(_is_wide(events[i]) for i in members) >= _CROWD
         out = run_map(judge, [(i, place, scenario, grid) for i in members], jobs)
         ranges = {i: [] for i in members}
         for _, other in spread:
