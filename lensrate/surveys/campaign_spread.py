@@ -35,7 +35,8 @@ def with_range(forecast, family, exact=False, jobs=1, executor=None):
         if made is None and exact:
             made = campaign(forecast.campaign, case.scenario, jobs=jobs, executor=executor)
         if made is None:
-            skipped.setdefault(words[case.choices[0][0]], []).append(case.label)
+            axis, alternative = case.choices[0]
+            skipped.setdefault(words[axis], []).append(f"{words[axis]} ({alternative})")
             continue
         rows.append(made.by_class())
         labels.append(case.label)
