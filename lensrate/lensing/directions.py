@@ -47,10 +47,13 @@ class Directions:
                     self.ln_density[base], self.shares[base],
                 )  # fmt: skip
 
-    def add(self, base, lo, hi, x, y, out):
-        """Fill out (P, C, Q), rows lo to hi, with the density at motions x, y (P, Q)."""
-        ln_mu = np.log(np.hypot(x, y))
-        turn = np.arctan2(y, x) * (_N / (2 * np.pi)) + (_N - 0.5)
+    def place(self, x, y):
+        """Return where motions x, y (P, Q) lie in every base's table: ln mu and steps of direction."""
+        return np.log(np.hypot(x, y)), np.arctan2(y, x) * (_N / (2 * np.pi)) + (_N - 0.5)
+
+    def add(self, base, lo, hi, place, out):
+        """Fill out (P, C, Q), rows lo to hi, with one base's density at a `place`."""
+        ln_mu, turn = place
         kernels.between_directions(
             self.ln_density[base], self.k_first, lo, hi, self.h, ln_mu, turn, _COARSE, self.shares[base], out
         )  # fmt: skip

@@ -390,8 +390,9 @@ class EventRates:
             jacobian = (mu**2 * np.hypot(x, y))[:, None, :]
             if gauss is None:
                 grid = self.directions()
+                place = grid.place(x, y)
                 for base, (lo, hi) in enumerate(span):
-                    grid.add(base, lo, hi, x, y, h[base])
+                    grid.add(base, lo, hi, place, h[base])
                     h[base, lo:hi] *= jacobian[lo:hi]
                 return h, ln_t, ln_X
             for group, g in zip(self.sets, gauss):
