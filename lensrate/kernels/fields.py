@@ -94,7 +94,7 @@ def deposit_orbits(
     moments : ndarray, shape (4, n_R, n_z, n_phi, 10)
         Added to, by part: weight, sums of v, of their squares and products.
     fourth : ndarray, shape (n_R, n_z, n_phi)
-        Added to: (x_R^2 + x_z^2)^2, with x from the frame's velocity in units of its dispersions.
+        Added to: (x_R^2 + x_rot^2 + x_z^2)^2, with x from the frame's velocity in units of its dispersions.
     heights : ndarray, shape (h,)
         Added to: weight of bound bodies in the ring by |z|; first and last take what lies beyond.
     ends : ndarray, shape (4,)
@@ -152,7 +152,7 @@ def deposit_orbits(
                 f = frame[ir, iz, ip]
                 x_r, x_t, x_z = (v_r - f[0]) * f[3], (v_t - f[1]) * f[4], (v_z - f[2]) * f[5]
                 _add_moments(moments[_part(ir < n_four, x_r, x_t, x_z), ir, iz, ip], w, v_r, v_t, v_z)
-                fourth[ir, iz, ip] += w * (x_r * x_r + x_z * x_z) ** 2
+                fourth[ir, iz, ip] += w * (x_r * x_r + x_t * x_t + x_z * x_z) ** 2
 
 
 @kernel

@@ -77,7 +77,8 @@ def gaussians(sums, grid, frame=None, fourth=None):
     Gaussians of sharply cut parts fall off too early where the whole has the wings of a Gaussian or more. All
     displacements from the cell's mean are then shrunk by one factor f in each ring, and what they lose in variance,
     (1 - f^2) of the covariance between the parts, is given to each part, which leaves the cell's second moments as
-    they are. The fourth moment that decides is the one across the rotation: wings along it are the parts' own.
+    they are. The fourth moment that decides is that of the whole velocity: with the one across the rotation alone the
+    short tail of t_E came out 4 to 7 % too low.
     """
     lent = _lent(sums, grid)
     share = lent[..., :1] / lent[..., :1].sum(axis=0)
@@ -96,17 +97,15 @@ def gaussians(sums, grid, frame=None, fourth=None):
 
 
 def _shrinkage(weight, share, whole, offset, covariance, between, frame, fourth):
-    """Return the factor of displacements at which (x_R^2 + x_z^2)^2 of the Gaussians fits that of the deposits."""
-    across = [0, 2]
-    scale = frame[..., 3:][..., across]
-    whole = (whole - frame[..., :3])[..., across] * scale
-    offset = offset[..., across] * scale
+    """Return the factor of displacements at which the mean |x|^4 of the Gaussians fits that of the deposits."""
+    scale = frame[..., 3:]
+    whole, offset = (whole - frame[..., :3]) * scale, offset * scale
     square = scale[..., :, None] * scale[..., None, :]
-    covariance, between = (a[..., across, :][..., across] * square for a in (covariance, between))
+    covariance, between = covariance * square, between * square
     model = []
     for f in _SHRINK:
         x, c = whole + f * offset, covariance + (1 - f**2) * between
-        trace = c[..., 0, 0] + c[..., 1, 1]
+        trace = np.trace(c, axis1=-2, axis2=-1)
         wing = 2 * np.sum(c**2, axis=(-2, -1)) + 4 * np.einsum("...i,...ij,...j", x, c, x)
         model.append(_pooled(weight * np.sum(share * ((np.sum(x**2, axis=-1) + trace) ** 2 + wing), axis=0)))
     model, wanted = np.array(model), _pooled(fourth)

@@ -142,7 +142,7 @@ def ball_deposits(rng, n, power, scale):
     part = np.array([_part.py_func(True, *row) for row in x])
     sums = np.zeros((4, GRID.n_R, GRID.n_z, GRID.n_phi, 10))
     sums[:] = np.array([rows[part == i].sum(axis=0) for i in range(4)])[:, None, None, None]
-    fourth = np.full(sums.shape[1:4], np.sum((x[:, 0] ** 2 + x[:, 2] ** 2) ** 2))
+    fourth = np.full(sums.shape[1:4], np.sum(np.sum(x**2, axis=1) ** 2))
     return v, part, sums, frame, fourth
 
 
@@ -161,11 +161,10 @@ def test_four_gaussians_keep_the_second_and_fit_the_fourth_moments(power):
     drawn = np.concatenate(
         [rng.multivariate_normal(a, t, round(100_000 * w)) for a, t, w in zip(m, tensor, share[:, 0])]
     )
-    # across the rotation <w^4> / <w^2>^2 is 2 for a Gaussian, and for r^2 exp(-r^2 / 2),
-    # whose r^2 is a chi square of five, 35 (8 / 15) / (5 (2 / 3))^2
-    across = np.sum((drawn - mean)[:, ::2] ** 2, axis=1)
-    wanted = {0: 2.0, 2: 1.68}[power]
-    assert np.mean(across**2) / np.mean(across) ** 2 == pytest.approx(wanted, rel=0.02)
+    # <r^4> / <r^2>^2 is 5 / 3 for a Gaussian, and 35 / 5^2 for r^2 exp(-r^2 / 2), whose r^2 is a chi square of five
+    square = np.sum((drawn - mean) ** 2, axis=1)
+    wanted = {0: 5 / 3, 2: 1.4}[power]
+    assert np.mean(square**2) / np.mean(square) ** 2 == pytest.approx(wanted, rel=0.02)
 
 
 def test_cells_with_four_and_two_gaussians_agree_on_second_moments_everywhere():
