@@ -362,3 +362,40 @@ def shear_timescale(T, first, out):
                 j = first + i - k
                 if 0 <= j < out.shape[1]:
                     out[e, j] += T[e, i, k]
+
+
+@kernel
+def shear_joint(T, weight, first, back, out):
+    """Sum mass-shifted T (E, P, K) at constant ln t_E and ln theta_E or ln pi_E, as `shear_timescale` does.
+
+    weight (C, E, M): of each class, element and mass, zeros skipped. out (C, m, n) gets T[e, i, k] times it at
+    (i + mass, first + i - k + mass), or with `back` (pi_E, which falls with mass) at (i - mass + M - 1, ...).
+    """
+    C, E, M = weight.shape
+    K = T.shape[2]
+    layer = np.empty(K)
+    out[:] = 0.0
+    # elements of each class and mass, the used ones first
+    used = np.empty((C, M, E), dtype=np.int64)
+    many = np.zeros((C, M), dtype=np.int64)
+    for c in range(C):
+        for e in range(E):
+            for m in range(M):
+                if weight[c, e, m] != 0.0:
+                    used[c, m, many[c, m]] = e
+                    many[c, m] += 1
+    # a row of all elements stays in the cache
+    for i in range(T.shape[1]):
+        for c in range(C):
+            for m in range(M):
+                if many[c, m] == 0:
+                    continue
+                layer[:] = 0.0
+                for n in range(many[c, m]):
+                    e = used[c, m, n]
+                    w, source = weight[c, e, m], T[e, i]
+                    for k in range(K):
+                        layer[k] += w * source[k]
+                line = out[c, i - m + M - 1 if back else i + m]
+                for k in range(K):
+                    line[first + i + m - k] += layer[k]

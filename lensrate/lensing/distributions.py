@@ -153,15 +153,9 @@ def joint(grid, T, masses, which):
     n = masses.weight.shape[2]
     n_t, n_y = P + K - 1 + n - 1, P + n - 1
     t = timescale_grid(grid)[0] * np.exp(grid.h * (np.arange(n_t) + masses.k0))
-    out = np.zeros((masses.weight.shape[0], n_t, n_y))
-    i, k = np.arange(P)[:, None], np.arange(K)[None, :]
-    for m in range(n):
-        # ln theta_E rises with the mass, ln pi_E falls
-        row = i - k + K - 1 + m
-        column = i + m if which == "theta_E" else i - m + n - 1
-        w = masses.weight[:, :, m]
-        if np.any(w):
-            out[:, row, column] += np.tensordot(w, T, axes=1)
+    out = np.empty((masses.weight.shape[0], n_y, n_t))
+    kernels.shear_joint(np.ascontiguousarray(T), np.ascontiguousarray(masses.weight), K - 1, which == "pi_E", out)
+    out = out.swapaxes(1, 2)
     if which == "theta_E":
         y = np.sqrt(KAPPA * grid.pi[0]) * np.exp(grid.h * (np.arange(n_y) + masses.k0))
     else:

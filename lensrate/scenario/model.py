@@ -127,7 +127,8 @@ class Model:
 
     def spectra(self):
         """Return the MassSpectrum, or None, of each class (rows) on each element (columns)."""
-        return [[self.spectrum(name, i) for i in range(len(self.component_of))] for name in self.classes]
+        get, elements = self._spectra.get, range(len(self.component_of))
+        return [[get((name, i)) for i in elements] for name in self.classes]
 
     def without_fields(self):
         """Return the components of stars that the kick-resolved fields do not hold."""
@@ -184,16 +185,26 @@ class Model:
 
 def _shares(law, mass, edges):
     """Share of each kick bin for remnants of each mass: unkicked, the bins; (bins + 1, n). The rest escaped."""
-    if not isinstance(law, tuple):
-        return np.array(_scaled_shares(law, None, tuple(edges)))[:, None] * np.ones(mass.size)
-    return np.array([_scaled_shares(law[0], law[1] / m, tuple(edges)) for m in mass]).T
+    return _known_shares(law, np.asarray(mass, dtype=float).tobytes(), tuple(edges))
 
 
-@lru_cache(maxsize=4096)
-def _scaled_shares(law, factor, edges):
-    """Shares of a law at speeds times a factor; black holes of every component have the same few masses."""
-    weights = (law if factor is None or law.name == "none" else law.scaled(factor)).bin_weights(np.array(edges))
-    return (weights.unkicked, *weights.inside)
+@lru_cache(maxsize=1024)
+def _known_shares(law, mass, edges):
+    """`_shares` with masses as bytes: components born alike have the same, whatever else changes."""
+    mass, edges = np.frombuffer(mass), np.array(edges)
+    law, heaviness = (law[0], mass / law[1]) if isinstance(law, tuple) else (law, None)
+    if heaviness is None or law.name == "none":
+        one = law.bin_weights(edges)
+        out = np.repeat([[one.unkicked], *([x] for x in one.inside)], mass.size, axis=1)
+    elif law.kind == "fixed":
+        each = [law.scaled(1 / m).bin_weights(edges) for m in heaviness]
+        out = np.array([[w.unkicked, *w.inside] for w in each]).reshape(mass.size, edges.size).T
+    else:
+        # speeds that fall with the mass pass an edge where the law itself passes mass times it
+        below = law.cdf(edges[:, None] * heaviness)
+        out = np.concatenate([below[:1], np.diff(below, axis=0)])
+    out.setflags(write=False)
+    return out
 
 
 def _times(spectrum, share):

@@ -11,11 +11,11 @@ import os
 os.environ.setdefault("OMP_NUM_THREADS", "1")
 os.environ.setdefault("NUMBA_NUM_THREADS", "1")
 
-import platform
 import time
 
 import astropy.units as u
 import numpy as np
+from report import duration, heading, row
 
 import lensrate
 from lensrate.lensing.sampler import Sampler
@@ -83,40 +83,36 @@ def plain(sampler, n, seed):
 
 
 def main():
-    print(f"{platform.processor() or platform.machine()}, Python {platform.python_version()}, one thread, (1, -3.9)")
+    heading("Mock events", "one thread, (1, -3.9), best of several")
     forecast = lensrate.sightline(1 * u.deg, -3.9 * u.deg)
     sampler = Sampler.of(forecast)
-    print(f"tables: {best(lambda: Sampler.of(forecast), 3):.2f} s")
+    tables = best(lambda: Sampler.of(forecast), 3)
+    row("tables of a sightline", duration(tables))
     w = plain(sampler, N, 1)[-1]
     share = w.sum() ** 2 / (w.size * np.sum(w**2))
     error = np.sqrt(w.size * np.var(w))
     slow = N / best(lambda: plain(sampler, N, 1), 3)
-    print(f"numpy: {slow / 1e6:.2f} million a second, effective share {share:.2f}, ", end="")
-    print(f"rate {w.sum() / sampler.rate - 1:+.1e} +- {error / sampler.rate:.1e}")
-    for name, options in (
-        ("weighted, core columns", {}),
-        ("unweighted, core columns", {"weighted": False}),
-        ("weighted, source motion too", {"full": True}),
-        ("unweighted, source motion too", {"full": True, "weighted": False}),
+    row("plain vectorised numpy", millions(slow), f"effective share {share:.2f}")
+    row("    its rate against ours", f"{w.sum() / sampler.rate - 1:+.1e}", f"+- {error / sampler.rate:.1e}")
+    for name, options, aim in (
+        ("weighted, core columns", {}, "3"),
+        ("unweighted, core columns", {"weighted": False}, ""),
+        ("weighted, source motion too", {"full": True}, ""),
+        ("unweighted, source motion too", {"full": True, "weighted": False}, ""),
     ):
         d = sampler.draw(N, 2, **options)
         fast = N / best(lambda options=options: sampler.draw(N, 2, **options))
-        print(f"{name:30s} {fast / 1e6:5.2f} million a second, effective share {d.effective_share:.2f}, ", end="")
         gain = fast * d.effective_share / slow / share
-        print(f"{fast / slow:5.1f} times numpy, {gain:5.1f} times in effective events")
-    mock_columns(forecast)
-
-
-def mock_columns(forecast):
-    """All columns of the catalogue, where the catalogue is there."""
-    mock = getattr(lensrate, "mock_events", None) if "mock_events" in lensrate.__all__ else None
-    if mock is None:
-        return
+        row(name, millions(fast), f"{gain:.3g} times in effective events", fast / slow, aim)
     # the tables once per catalogue are stated above
-    tables = best(lambda: Sampler.of(forecast), 3)
     for weighted in (True, False):
-        seconds = best(lambda w=weighted: mock(forecast, number=N, seed=3, weighted=w), 4) - tables
-        print(f"all columns, {'weighted' if weighted else 'unweighted'}: {N / seconds / 1e6:.2f} million a second")
+        seconds = best(lambda w=weighted: lensrate.mock_events(forecast, number=N, seed=3, weighted=w), 4) - tables
+        name = f"all columns, {'weighted' if weighted else 'unweighted'}"
+        row(name, millions(N / seconds), ratio=N / seconds / slow, aim="1")
+
+
+def millions(rate):
+    return f"{rate / 1e6:.2f} M/s"
 
 
 if __name__ == "__main__":

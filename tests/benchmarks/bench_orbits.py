@@ -2,9 +2,8 @@
 
 Both integrate the same bodies in the same needle-bar potential for 2 Gyr; errors are of Jacobi's integral over
 (233 km/s)^2. Times are the best of three after a warm-up, of the processor, since other work may share it. Steps are
-those of a body in a Gyr, one force each; adaptive methods do not say theirs. The last lines hold galpy's leapfrog
-against the time-transformed one: for the same number of steps, and at the same error, between the steps measured or
-beyond the shortest by second order, where the error falls by four and the cost doubles.
+those of a body in a Gyr, one force each; adaptive methods do not say theirs. Ratios hold every method of galpy
+against the time-transformed leapfrog at the same error, and its leapfrog for the same number of steps too.
 """
 
 # ruff: noqa: E402  (one thread and the path of the tests are set before the imports)
@@ -12,7 +11,6 @@ import os
 
 os.environ.setdefault("OMP_NUM_THREADS", "1")
 
-import platform
 import sys
 import tempfile
 import time
@@ -21,6 +19,7 @@ from pathlib import Path
 
 import astropy.units as u
 import numpy as np
+from report import duration, heading, row
 
 sys.path[:0] = [str(Path(__file__).parents[1] / "remnants"), str(Path(__file__).parents[1])]
 warnings.simplefilter("ignore")
@@ -95,23 +94,25 @@ def theirs(potential, place, velocity, states, **options):
     return cost, steps, errors(potential, states, end)
 
 
-def against_leapfrog(mine, leapfrogs):
-    """Say what galpy's leapfrog costs over ours at our p90, by power laws between its steps, and over one step."""
-    cost, steps, (_, p90, _) = mine[1:]
-    log = np.log([[c, e[1]] for _, c, _, e in leapfrogs])
-    order = np.argsort(log[:, 1])
-    beyond = max(0.0, 0.5 * (log[order[0], 1] - np.log(p90)))
-    same_error = np.exp(np.interp(np.log(p90), log[order, 1], log[order, 0]) + beyond) / cost
-    same_steps = np.median([c / s for _, c, s, _ in leapfrogs]) / (cost / steps)
-    return f"{mine[0]}: leapfrog_c costs {same_error:.0f} times as much at p90 {p90:.1e}, {same_steps:.1f} times a step"
+def at_error(rows, p90):
+    """Cost at an error, by power laws between the steps measured; beyond them by second order (error over four, cost
+    twice)."""
+    log = np.log([[cost, error[1]] for _, cost, _, error in rows])
+    log = log[np.argsort(log[:, 1])]
+    wanted = np.log(p90)
+    beyond = 0.5 * (max(0.0, log[0, 1] - wanted) - max(0.0, wanted - log[-1, 1]))
+    return np.exp(np.interp(wanted, log[:, 1], log[:, 0]) + beyond)
 
 
 def main():
     needle, default = Potential.read("needle"), Potential.read("default").for_orbits()
     place, velocity = (q.value for q in population(needle, BODIES, 1))
     states = bar_states(needle, place, velocity)
-    print(platform.processor() or platform.machine(), f"{BODIES} bodies, {GYR} Gyr, microseconds per body and Gyr")
-    rows = [(f"lensrate eta {eta}", *ours(needle, states, eta)) for eta in (0.1, 0.05, 0.025)]
+    heading("Orbits", f"one thread, {BODIES} bodies, {GYR} Gyr; per body and Gyr; error: p90 of Jacobi's integral")
+    mine = [(f"eta {eta}", *ours(needle, states, eta)) for eta in (0.2, 0.1, 0.05, 0.025)]
+    for label, cost, steps, error in mine:
+        row(f"lensrate {label}", duration(1e-6 * cost), f"{error[1]:.1e}, {steps:.0f} steps")
+    rows = []
     for method, options in (
         ("dop853_c", {"rtol": 1e-4, "atol": 1e-4}),
         ("dop853_c", {"rtol": 1e-5, "atol": 1e-5}),
@@ -122,13 +123,21 @@ def main():
         shown = {"dt": "dt {:.3g} Myr".format(options["dt"] / KPC_PER_MYR)} if "dt" in options else options
         label = " ".join([method, *(v if k == "dt" else f"{k} {v:.2g}" for k, v in shown.items())])
         rows.append((label, *theirs(needle, place, velocity, states, method=method, **options)))
+    for label, cost, steps, error in rows:
+        fixed = f", {steps:.0f} steps" if np.isfinite(steps) else ""
+        aim = "15" if label.startswith("dop") else ""
+        row(f"galpy {label}", duration(1e-6 * cost), f"{error[1]:.1e}{fixed}", cost / at_error(mine, error[1]), aim)
+    print("    ratio: its time over lensrate's at the same error")
+    leapfrogs = [r for r in rows if r[0].startswith("leapfrog_c")]
+    for label, cost, _, error in mine[1:3]:
+        row(f"lensrate {label} against galpy's leapfrog", duration(1e-6 * cost), f"{error[1]:.1e}",
+            at_error(leapfrogs, error[1]) / cost)  # fmt: skip
+    same = np.median([c / n for _, c, n, _ in leapfrogs]) / (mine[1][1] / mine[1][2])
+    row("    the same for one step of each", duration(1e-6 * mine[1][1] / mine[1][2]), "", same, "25")
     place, velocity = (q.to(w) for q, w in zip(population(default, BODIES, 1), (u.kpc, u.km / u.s)))
-    rows.append(("lensrate eta 0.1, default", *ours(default, bar_states(default, place.value, velocity.value), 0.1)))
-    print(f"{'':40s}{'us':>8s}{'steps':>8s}{'median':>10s}{'p90':>10s}{'p99':>10s}")
-    for label, cost, steps, (median, p90, p99) in rows:
-        print(f"{label:40s}{cost:8.1f}{steps:8.0f}{median:10.1e}{p90:10.1e}{p99:10.1e}")
-    leapfrogs = [row for row in rows if row[0].startswith("leapfrog_c")]
-    print(*(against_leapfrog(row, leapfrogs) for row in rows[:3]), sep="\n")
+    _, cost, steps, error = "", *ours(default, bar_states(default, place.value, velocity.value), 0.1)
+    step_ratio = (mine[1][1] / mine[1][2]) / (cost / steps)
+    row("default potential, eta 0.1, a step", duration(1e-6 * cost / steps), f"{error[1]:.1e}", step_ratio, "0.4")
 
 
 if __name__ == "__main__":

@@ -1,4 +1,4 @@
-"""One sightline: against nested adaptive quadrature, all kicks and components, other kick laws, start-up.
+"""One sightline: against nested adaptive quadrature, all kicks and components, other kick laws.
 
     python tests/benchmarks/bench_sightline.py
 
@@ -12,8 +12,6 @@ import os
 os.environ.setdefault("OMP_NUM_THREADS", "1")
 os.environ.setdefault("NUMBA_NUM_THREADS", "1")
 
-import platform
-import subprocess
 import sys
 import time
 from dataclasses import replace
@@ -21,6 +19,7 @@ from pathlib import Path
 
 import astropy.units as u
 import numpy as np
+from report import duration, heading, median, row
 
 sys.path[:0] = [str(Path(__file__).parents[1] / "lensing")]
 
@@ -31,16 +30,6 @@ from lensrate.kernels import rates as kernels
 from lensrate.lensing import rates
 from lensrate.lensing.quadrature import lens_pairs
 from lensrate.units import FOUR_G_C2, KAPPA, MAS
-
-
-def median(run, n=5):
-    run()
-    times = []
-    for _ in range(n):
-        start = time.process_time()
-        run()
-        times.append(time.process_time() - start)
-    return float(np.median(times))
 
 
 def against_quad():
@@ -71,24 +60,17 @@ def against_quad():
     return slow, median(fast, 25), abs(out[1][0, 0] / exact - 1), abs(out[0][0, 0] / depth - 1)
 
 
-def seconds(*args):
-    before = os.times()
-    subprocess.run([sys.executable, *args], capture_output=True, check=True)
-    after = os.times()
-    return after.children_user + after.children_system - before.children_user - before.children_system
-
-
 def main():
-    print(f"{platform.processor() or platform.machine()}, Python {platform.python_version()}, one thread")
+    heading("One sightline", "one thread")
     slow, fast, *errors = against_quad()
-    print(f"rate of one lens and source component: nested scipy quad {slow:.2f} s, with tau here {1e3 * fast:.2f} ms:")
-    print(f"    {slow / fast:.0f} times faster; differences of rate {errors[0]:.1e} and tau {errors[1]:.1e}")
-    print("    (quad asked for 3e-6 inside, 1e-5 outside)")
+    row("optical depth and rate of one lens and source", duration(fast), f"nested scipy quad {duration(slow)}",
+        slow / fast, "1000")  # fmt: skip
+    row("    difference of rate, of optical depth", f"{errors[0]:.1e}", f"{errors[1]:.1e}; quad asked for 1e-5")
     place = {"l": 1 * u.deg, "b": -3 * u.deg}
     result = lensrate.sightline(**place)
     whole = median(lambda: lensrate.sightline(**place))
     stars = median(lambda: lensrate.sightline(**place, kicks="none"))
-    print(f"all kicks, components and classes of a sightline: {whole:.2f} s; without kicks {stars:.2f} s")
+    row("all kicks, components and classes", duration(whole), f"without kicks {duration(stars)}", aim="1.5 s")
     line = result._integrals.ready
     for name, run in (
         ("optical depth and rate, stars", lambda: rates.moments(line)),
@@ -96,20 +78,12 @@ def main():
         ("rate density, stars", lambda: rates.rate_density(line)),
         ("rate density, all kicks", lambda: rates.kicked_rate_density(line, result._integrals.grid)),
     ):
-        print(f"    {name:32s} {1e3 * median(run):7.1f} ms")
+        row(f"    {name}", duration(median(run)))
     laws = iter(np.linspace(100, 300, 60))
     other = median(lambda: result.reforecast(kicks=f"maxwell:{next(laws):.3f}"), 40)
-    print(f"another kick law from the same integrals: {1e3 * other:.1f} ms, {whole / other:.0f} times faster")
-    libraries = "import numpy, numba, astropy.units, scipy.special, click"
-    bare, first, start = [], [], []
-    # in turns, so that what else the machine does weighs on all alike
-    for _ in range(7):
-        bare.append(seconds("-c", libraries))
-        start.append(seconds("-m", "lensrate", "--help"))
-        first.append(seconds("-m", "lensrate", "sightline", "1.0", "-3.9"))
-    bare, first, start = (float(np.median(x[1:])) for x in (bare, first, start))
-    print(f"first forecast, warm cache {first:.2f} s: {first / bare:.2f} times an interpreter")
-    print(f"that imports the same libraries ({bare:.2f} s); --help {start:.2f} s")
+    row("another kick law, same integrals", duration(other), f"whole sightline {duration(whole)}", whole / other, "5 ms")
+    t_E = median(lambda: result.joint("pi_E"))
+    row("density over (t_E, pi_E), all classes", duration(t_E), aim="20 ms")
 
 
 if __name__ == "__main__":

@@ -10,12 +10,12 @@ import os
 os.environ.setdefault("OMP_NUM_THREADS", "1")
 os.environ.setdefault("NUMBA_NUM_THREADS", "1")
 
-import platform
 import subprocess
 import sys
 import time
 
 import numpy as np
+from report import duration, heading, row
 
 PLACES = [(l, b) for b in (-6.0, -4.0, -3.0, -2.0, -1.0, 0.0, 2.0, 5.0) for l in (-4.0, 0.0, 3.0)]
 MEMORY = """
@@ -52,17 +52,15 @@ def peak(n):
 
 
 def main():
-    print(platform.processor() or platform.machine())
+    heading("Sky map", "one thread")
     fast, slow = pixel_times()
-    print(f"{'':32s} mean    largest  s a pixel, {len(PLACES)} of the bulge")
-    print(f"{'sources gathered':30s} {fast.mean():8.3f} {fast.max():8.3f}")
-    print(
-        f"{'as a sightline':30s} {slow.mean():8.3f} {slow.max():8.3f}   {slow.mean() / fast.mean():.1f} times as long"
-    )
-    print(f"2,000 pixels on two cores: {2000 * fast.mean() / 2 / 60:.1f} min")
+    row(f"a pixel, sources gathered, mean of {len(PLACES)}", duration(fast.mean()),
+        f"as a sightline {duration(slow.mean())}", slow.mean() / fast.mean())  # fmt: skip
+    row("    its largest", duration(fast.max()), duration(slow.max()))
+    row("2,000 pixels on two cores, worked out", f"{2000 * fast.mean() / 2 / 60:.1f} min")
     sizes = (20, 80) if "quick" in sys.argv else (100, 400)
     few, many = (peak(n) for n in sizes)
-    print(f"peak memory: {few:.0f} MB for {sizes[0]} pixels, {many:.0f} MB for {sizes[1]}: {many / few:.3f}")
+    row(f"peak memory, {sizes[1]} pixels", f"{many:.0f} MB", f"{sizes[0]} pixels: {few:.0f} MB")
 
 
 if __name__ == "__main__":
