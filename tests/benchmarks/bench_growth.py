@@ -2,7 +2,8 @@
 
     python tests/benchmarks/bench_growth.py
 
-One thread, processor time; tracers are in bench_synthesis.py. A power of one is the best that can be had; the fixed part is what the first costs more.
+One thread, processor time; tracers are in bench_synthesis.py. A power of one is the best that can be had; the fixed
+part is what the first costs more.
 """
 
 # ruff: noqa: E402  (one thread is set before the imports)
