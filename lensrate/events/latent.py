@@ -225,9 +225,7 @@ def _proposal(s, event, line, rng, n, earth):
     m = s.measured
     t, w_t = like_of._nodes(m["t_E"], 3, 9, wide=0.35)
     if "pi_EN" in m:
-        sizes = {k: m[k] for k in ("theta_E", "mu_rel") if k in m}
-        X, angle, w_X = like_of._parallax_nodes(s, event, sizes)
-        coarse = like_of._outer(t, w_t / t, X, w_X / X**2, angle, earth, False)
+        coarse = like_of.parallax_points(s, event, t, w_t / t, earth)
     else:
         X, w_X = like_of._nodes(m["pi_E"], 9, 15) if "pi_E" in m else like_of._open_nodes()
         w_X = w_X / X if "pi_E" in m else w_X

@@ -51,7 +51,7 @@ class LensLimit:
         model = self._rates.ready.model
         # the first bases are the components themselves
         mine = [k for k, base in enumerate(masses.bases) if base < model.n_stellar]
-        events = self._rates.table[0].sum(axis=(1, 2, 3))[masses.bases[mine]]
+        events = self._rates.table.sum(axis=(1, 2, 3))[masses.bases[mine]]
         weight = masses.number[:, mine] * events
         of_mass = weight.sum(axis=1) * np.sqrt(mass)
         weight = weight / np.maximum(weight.sum(axis=1, keepdims=True), 1e-300)

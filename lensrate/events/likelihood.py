@@ -4,7 +4,7 @@ Likelihoods are one at their peak, so degenerate solutions compare by their delt
 live in the data's frame; the rate is carried there, so errors never have to be.
 """
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import astropy.units as u
 import numpy as np
@@ -24,6 +24,7 @@ _NARROW = 0.2  # relative error above which Gauss-Hermite nodes give way to even
 _MOST_DRAWS = 2000
 _ANGLES = 16
 _POLAR_STEP = 0.16  # of ln pi_E
+_FEWEST_TURNS = 36  # directions: the rate of cold lenses turns too
 _CONDITIONED_ANGLES = 32
 _ROOT = np.sqrt(2.0 * np.pi)
 
@@ -42,7 +43,7 @@ class Likelihood:
     t_only : (ndarray, ndarray)
         Timescales [d] and weights, each per ln t_E, of the same solution with t_E alone.
     draws : int
-        Number of posterior samples that the points are, in order, each in as many directions; 0 where they are none.
+        Number of posterior samples that the points are, in order; 0 where they are none.
         The samples' scatter limits the answer.
     rests_on : tuple of str
         The quantities that enter.
@@ -83,9 +84,8 @@ def likelihood(solution, event, direct=False):
     m = solution.measured
     if "t_E" not in m:
         raise InputError(f"{event.name}: no t_E")
-    t, w_t = _nodes(m["t_E"], 1 if _relative(m["t_E"]) < 0.02 else 3, 9, wide=0.35)
+    t, w_t = _timescales(m["t_E"])
     directed = "pi_EN" in m
-    turning = direct or known is not None and known.motion is not None or earth != (0.0, 0.0)
     wrong, rests = 1.0, ["t_E"]
     for name in ("theta_E", "mu_rel"):
         if name in m:
@@ -94,12 +94,10 @@ def likelihood(solution, event, direct=False):
     measured_sizes = {k: m[k] for k in ("pi_E", "theta_E", "mu_rel") if k in m}
     if directed:
         rests.append("pi_E")
-        X, angle, w_X = _parallax_nodes(solution, event, measured_sizes)
         size = max(np.hypot(m["pi_EN"].value, m["pi_EE"].value), m["pi_EN"].err, m["pi_EE"].err)
         volume = 2 * np.pi * m["pi_EN"].err * m["pi_EE"].err * np.sqrt(1 - solution.pi_E_corr**2)
         wrong *= volume / (2 * np.pi * size**2 * _LN_SPAN)
-        points = _outer(t, w_t / t, X, w_X / X**2, angle, earth, False)
-        used = "pi_E"
+        points, used = _vector_points(solution, event, measured_sizes, t, w_t, earth)
     else:
         if "pi_E" in m:
             rests.append("pi_E")
@@ -111,19 +109,17 @@ def likelihood(solution, event, direct=False):
             X, w_X = _nodes(m[used], 9, 15)
             w_X = w_X / X
         if used == "mu_rel":
-            points = _crossed(t, w_t / t, X, w_X, earth)
+            points = _crossed(t, w_t, X, w_X, earth)
         else:
-            points = _outer(t, w_t / t, X, w_X, None, earth, used == "theta_E")
-        if turning:
-            n = _CONDITIONED_ANGLES if known is not None and known.motion is not None else _ANGLES
-            points = _turned(points, n, earth)
+            points = _outer(t, w_t, X, w_X, None, earth, used == "theta_E")
+        if direct or earth != (0.0, 0.0):
+            # a frame that moves has no table
+            points = replace(points, turns=_CONDITIONED_ANGLES if known is not None else _ANGLES)
     points = _with_terms(points, m, used)
     if known is not None:
         rests += ["source motion"] * (known.motion is not None) + ["source distance"] * (known.distance is not None)
-        if points.angle is None:
-            points = _turned(points, _ANGLES, earth)
     alone = len(rests) == 1
-    return Likelihood(points, known, 0.0 if alone else wrong, (t, w_t / t), 0, tuple(rests))
+    return Likelihood(points, known, 0.0 if alone else wrong, (t, w_t), 0, tuple(rests))
 
 
 def _open_nodes():
@@ -134,6 +130,14 @@ def _open_nodes():
 
 def _relative(measure):
     return max(measure.lo, measure.hi) / max(abs(measure.value), 1e-12)
+
+
+def _timescales(measure):
+    """Nodes over a timescale, in whose logarithm the rate is smooth, and their weights per ln t_E."""
+    relative = _relative(measure)
+    n = 1 if relative < 0.01 else 3 if relative < 0.1 else 5 if relative < 0.2 else 9
+    t, w = _nodes(measure, n, n, wide=0.35)
+    return t, w / t
 
 
 def _nodes(measure, few, more, wide=_NARROW):
@@ -161,23 +165,48 @@ def _nodes(measure, few, more, wide=_NARROW):
     return x, weight * np.exp(-0.5 * ((x - measure.value) / sigma) ** 2)
 
 
-def _parallax_nodes(solution, event, others):
+def _vector_points(solution, event, sizes, t, w_t, earth):
+    """Points over timescale and parallax vector, and the size that they run over."""
+    m = solution.measured
+    north, east = m["pi_EN"], m["pi_EE"]
+    own = max(north.err, east.err) / max(np.hypot(north.value, east.value), 1e-12)
+    used = min((k for k in sizes if k != "pi_E"), key=lambda k: _relative(m[k]), default=None)
+    if used is not None and _relative(m[used]) < 0.7 * own:
+        # the vector then is a likelihood of mass and direction
+        X, w_X = _nodes(m[used], 5, 9)
+        turn, w_turn = _turns(north, east)
+        n, e = np.tile(np.array([np.cos(turn), np.sin(turn)]), X.size)
+        angle = np.tile(_angle(np.cos(turn), np.sin(turn), event), X.size)
+        weight = np.repeat(w_X / X, turn.size) * np.tile(w_turn, X.size)
+        X = np.repeat(X, turn.size)
+        crossed = used == "mu_rel"
+        points = _crossed(t, w_t, X, weight, earth) if crossed else _outer(t, w_t, X, weight, None, earth, True)
+        vector = np.array([north.value, north.lo, north.hi, east.value, east.lo, east.hi, solution.pi_E_corr])
+        return replace(
+            points, angle=np.tile(angle, t.size), vector=vector, toward=np.tile(np.array([n, e]), t.size)
+        ), used  # fmt: skip
+    return parallax_points(solution, event, t, w_t, earth), "pi_E"
+
+
+def parallax_points(solution, event, t, w_t, earth):
+    """Points over timescale and parallax vector, with parallaxes as sizes."""
+    north, east = solution.measured["pi_EN"], solution.measured["pi_EE"]
+    if max(north.err, east.err) >= _NARROW * np.hypot(north.value, east.value):
+        # the rate varies with the logarithm of a parallax, and near zero faster than the errors
+        return _polar_points(solution, event, t, w_t, earth)
+    X, angle, w_X = _parallax_nodes(solution, event)
+    return _outer(t, w_t, X, w_X / X**2, angle, earth, False)
+
+
+def _parallax_nodes(solution, event):
     """Sizes, angles from +l toward +b and weights (per pi_EN and pi_EE) over a parallax vector's likelihood."""
     north, east = solution.measured["pi_EN"], solution.measured["pi_EE"]
-    size = max(np.hypot(north.value, east.value), 1e-12)
-    own = max(north.err, east.err) / size
-    finest = min([_relative(v) for k, v in others.items() if k != "pi_E"], default=own)
-    split = max(north.lo / north.hi, north.hi / north.lo, east.lo / east.hi, east.hi / east.lo) > 1.3
-    if own >= _NARROW:
-        # the rate varies with the logarithm of a parallax, and near zero faster than the errors
-        return _polar_nodes(solution, event, min(finest / own, 1.0))
-    if finest > 0.7 * own and not split:
+    if max(north.lo / north.hi, north.hi / north.lo, east.lo / east.hi, east.hi / east.lo) < 1.3:
         z, w = np.polynomial.hermite.hermgauss(5)
         z, w = np.sqrt(2.0) * z, np.sqrt(2.0) * w
     else:
-        # even points: the trapezoid rule is exact for Gaussians, and resolves what is narrower than the parallax
-        n = int(np.clip(2 * np.ceil(5.5 * max(own / max(finest, 1e-3), 1.0)) + 1, 13, 25))
-        z = np.linspace(-4.2, 4.2, n)
+        # even points: the trapezoid rule is exact for Gaussians
+        z = np.linspace(-4.2, 4.2, 13)
         w = np.exp(-0.5 * z * z) * (z[1] - z[0])
     z1, z2 = (a.ravel() for a in np.meshgrid(z, z, indexing="ij"))
     weight = np.outer(w, w).ravel()
@@ -191,33 +220,46 @@ def _parallax_nodes(solution, event, others):
     return X[keep], _angle(p_n, p_e, event)[keep], weight[keep]
 
 
-def _polar_nodes(solution, event, ratio):
-    """Points even in angle and logarithm of size, for a parallax vector with large errors."""
+def _turns(north, east, size=None):
+    """Directions from north toward east that a parallax vector (of a given size) may have, and their weights."""
+    sigma = max(north.lo, north.hi, east.lo, east.hi)
+    middle = np.hypot(north.value, east.value)
+    if middle > 4.5 * sigma:
+        x, w = np.polynomial.legendre.leggauss(12)
+        reach = np.arcsin(4.5 * sigma / middle)
+        return np.arctan2(east.value, north.value) + reach * x, reach * w
+    # a trapezoid rule is good to 1e-4 where a Gaussian has a node for each 1.3 dispersions
+    size = middle + sigma if size is None else size
+    n = int(np.clip(np.ceil(2 * np.pi / 1.3 * size / min(north.err, east.err)), _FEWEST_TURNS, 120))
+    return (np.arange(n) + 0.5) * (2 * np.pi / n), np.full(n, 2 * np.pi / n)
+
+
+def _polar_points(solution, event, t, w_t, earth):
+    """Points even in angle and logarithm of size, for a parallax vector with large errors.
+
+    Sizes go with 1 / t_E, so that points of all timescales share few motions.
+    """
     north, east = solution.measured["pi_EN"], solution.measured["pi_EE"]
     sigma = max(north.lo, north.hi, east.lo, east.hi)
     size = np.hypot(north.value, east.value)
-    lo, hi = max(size - 4.5 * sigma, min(0.01 * sigma, 1e-3)), size + 4.5 * sigma
-    step = _POLAR_STEP * max(ratio, 0.2)
-    if lo > 0.5 * size:
-        step = min(step, np.log(hi / lo) / 12)
+    lo, hi = max(size - 4.5 * sigma, min(0.03 * sigma, 3e-3)), size + 4.5 * sigma
+    # neither the rate nor the shorter of the errors may be stepped over
+    step = float(np.clip(1.3 * min(north.err, east.err) / max(size, 1e-12), 0.04, _POLAR_STEP))
+    middle = np.sqrt(t.min() * t.max())
     # a trapezoid rule: the integrand fades out at both ends
-    sizes = np.exp(np.arange(np.log(lo), np.log(hi) + step, step))
-    w_size = np.full(sizes.size, step)
-    if size > 4.5 * sigma:
-        x, w = np.polynomial.legendre.leggauss(12)
-        reach = np.arcsin(4.5 * sigma / size)
-        turn, w_turn = np.arctan2(east.value, north.value) + reach * x, reach * w
-    else:
-        n = int(np.clip(np.ceil(2 * np.pi / 1.1 * size / sigma), 16, 28))
-        turn, w_turn = (np.arange(n) + 0.5) * (2 * np.pi / n), np.full(n, 2 * np.pi / n)
-    X, turn = np.repeat(sizes, turn.size), np.tile(turn, sizes.size)
+    sizes = np.exp(np.arange(np.log(lo * t.min() / middle), np.log(hi * t.max() / middle) + step, step))
+    rings = [_turns(north, east, x) for x in sizes]
+    X, turn, w = (
+        np.concatenate(a) for a in zip(*((np.full(turn.size, x), turn, w) for x, (turn, w) in zip(sizes, rings)))
+    )
+    T, turn, weight = np.repeat(t, X.size), np.tile(turn, t.size), np.outer(w_t, w * step).ravel()
+    X = np.tile(X, t.size) * (middle / T)
     p_n, p_e = X * np.cos(turn), X * np.sin(turn)
     z_n, z_e = ((p - m.value) / np.where(p > m.value, m.hi, m.lo) for p, m in ((p_n, north), (p_e, east)))
     rho = solution.pi_E_corr
-    weight = np.exp(-0.5 * (z_n**2 - 2 * rho * z_n * z_e + z_e**2) / (1 - rho**2))
-    weight *= np.outer(w_size, w_turn).ravel() * X**2
-    keep = weight / X**2 > 1e-6 * (weight / X**2).max()
-    return X[keep], _angle(p_n, p_e, event)[keep], weight[keep]
+    like = np.exp(-0.5 * (z_n**2 - 2 * rho * z_n * z_e + z_e**2) / (1 - rho**2))
+    keep = like > 1e-5 * like.max()
+    return Points(T[keep], X[keep], (weight * like)[keep], False, _angle(p_n, p_e, event)[keep], earth)
 
 
 def _angle(north, east, event):
@@ -238,13 +280,6 @@ def _crossed(t, w_t, mu, w_mu, earth):
     return Points(T, M * T / DAYS_PER_YEAR, np.outer(w_t, w_mu).ravel(), True, None, earth)
 
 
-def _turned(points, n, earth):
-    """The same points in n directions each."""
-    angle = (np.arange(n) + 0.5) * (2 * np.pi / n)
-    repeat = [np.repeat(a, n) for a in (points.t_E, points.X, points.weight * (2 * np.pi / n))]
-    return Points(*repeat, points.on_theta, np.tile(angle, len(points)), earth, np.repeat(points.terms, n, axis=1))
-
-
 def _with_terms(points, measured, used):
     """Add the likelihood of what is measured beside the size that the points run over."""
     terms = np.zeros((3, len(points), 3))
@@ -252,7 +287,7 @@ def _with_terms(points, measured, used):
         if name in measured and name != used and not (name == "pi_E" and "pi_EN" in measured):
             m = measured[name]
             terms[k] = m.value, m.lo, m.hi
-    return Points(points.t_E, points.X, points.weight, points.on_theta, points.angle, points.earth, terms)
+    return replace(points, terms=terms)
 
 
 def _source(solution, event):
@@ -351,8 +386,8 @@ def _of_draws(solution, event, known, earth):
     points = Points(t, X, W, on_theta, angle, earth, terms)
     if known is not None:
         rests += ["source motion"] * (known.motion is not None) + ["source distance"] * (known.distance is not None)
-    if angle is None and (known is not None or earth != (0.0, 0.0)):
-        points = _turned(points, 8, earth)
+    if angle is None and earth != (0.0, 0.0):
+        points = replace(points, turns=_CONDITIONED_ANGLES if known is not None else _ANGLES)
     t_nodes, w_nodes = _nodes(_measure_of(mean[list(column).index("t_E")], s_t), 3, 5)
     return Likelihood(points, known, wrong, (t_nodes, w_nodes / t_nodes), t.size, tuple(rests))
 

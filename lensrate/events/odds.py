@@ -12,7 +12,6 @@ import numpy as np
 
 from ..errors import ConvergenceError, InputError
 from ..lensing import rates
-from ..lensing.directions import MANY
 from ..lensing.points import Axes, EventRates, Points
 from ..parallel import run_map
 from ..scenario import Scenario, resolve
@@ -28,7 +27,6 @@ __all__ = ["OUTLIER", "class_probabilities", "densities", "event_odds", "event_r
 OUTLIER = 0.01
 _FEWEST = 100  # effective samples below which no odds are given
 _KEEP = 2  # sightlines held in memory at a time
-_CROWD = 10  # events with wide parallax vectors on one sightline that are worth a grid of directions
 _held = OrderedDict()
 _holding = Lock()
 
@@ -113,21 +111,19 @@ def odds(sample, scenario="default", *, outlier=OUTLIER, tolerance=0.05, spread=
 
     def one(group):
         place, members = group
-        # few events are no crowd: their points need not be laid out twice
-        grid = len(members) >= _CROWD and sum(_is_wide(events[i]) for i in members) >= _CROWD
-        out = run_map(judge, [(i, place, scenario, grid) for i in members], jobs)
+        out = run_map(judge, [(i, place, scenario) for i in members], jobs)
         ranges = {i: [] for i in members}
         for _, other in spread:
-            for i, found in zip(members, run_map(judge, [(i, place, other, grid) for i in members], jobs)):
+            for i, found in zip(members, run_map(judge, [(i, place, other) for i in members], jobs)):
                 if not isinstance(found, str):
                     ranges[i].append(found.probability)
         return list(zip(members, out)), ranges
 
     def judge(job):
         """Odds of one event, or why there are none."""
-        i, place, assumed, grid = job
+        i, place, assumed = job
         try:
-            return event_odds(events[i], event_rates(*place, assumed), outlier, grid)
+            return event_odds(events[i], event_rates(*place, assumed), outlier)
         except (InputError, ConvergenceError) as error:
             return f"{events[i].name}: {error}" if events[i].name not in str(error) else str(error)
 
@@ -153,15 +149,6 @@ def odds(sample, scenario="default", *, outlier=OUTLIER, tolerance=0.05, spread=
     )
 
 
-def _is_wide(event):
-    """Whether an event asks for many points in directions."""
-    try:
-        found = [likelihood(s, event) for s in event.solutions if s.draws is None]
-    except InputError:
-        return False
-    return any(f.points.angle is not None and len(f.points) > MANY for f in found)
-
-
 def _shared_sightlines(events, tolerance):
     """Places and the events near each, in order of first appearance."""
     places, members = [], []
@@ -180,7 +167,7 @@ def _shared_sightlines(events, tolerance):
     return list(zip(places, members))
 
 
-def event_odds(event, line, outlier=OUTLIER, grid=False):
+def event_odds(event, line, outlier=OUTLIER):
     """Return the odds of one event on a sightline's rates.
 
     Parameters
@@ -190,8 +177,6 @@ def event_odds(event, line, outlier=OUTLIER, grid=False):
         Of the event's place.
     outlier : float
         As in `odds`.
-    grid : bool
-        As in `EventRates.evaluate`: for one of many events of this sightline with wide parallax vectors.
 
     Returns
     -------
@@ -207,7 +192,7 @@ def event_odds(event, line, outlier=OUTLIER, grid=False):
     rate = line.rates()
     found = []
     for solution in event.solutions:
-        found.append(_solution(solution, event, line, n, grid))
+        found.append(_solution(solution, event, line, n))
     weight = np.exp(-0.5 * np.array([s.delta_chi2 for s in event.solutions]))
     main, wrong = (sum(w * f[k] for w, f in zip(weight, found)) for k in ("main", "wrong"))
     if not (np.all(np.isfinite(main)) and main.sum() + wrong.sum() > 0):
@@ -254,11 +239,11 @@ def _mixed(main, wrong, outlier):
     return total / total.sum(), min(float(outlier * wrong.sum() / total.sum()), 1.0)
 
 
-def _solution(solution, event, line, n, grid=False):
+def _solution(solution, event, line, n):
     like = likelihood(solution, event)
     hist = np.zeros((n, 4, Axes.n, 2))
     light = LensLimit(solution.plain["I_lens_limit"], line) if "I_lens_limit" in solution.plain else None
-    by_point = _main(like, line, light, hist, grid)
+    by_point = _main(like, line, light, hist)
     main = by_point.sum(axis=1)
     wrong, hist_wrong = np.zeros(n), np.zeros_like(hist)
     if like.wrong > 0:
@@ -269,8 +254,7 @@ def _solution(solution, event, line, n, grid=False):
         hist_wrong *= factor
     effective = None
     if like.draws:
-        # the directions of one sample are one
-        each = by_point.sum(axis=0).reshape(like.draws, -1).sum(axis=1)
+        each = by_point.sum(axis=0)
         effective = float(each.sum() ** 2 / max((each**2).sum(), 1e-300))
     rests = like.rests_on + (("lens light",) if light is not None else ())
     return {
@@ -278,11 +262,11 @@ def _solution(solution, event, line, n, grid=False):
     }  # fmt: skip
 
 
-def _main(like, line, light=None, hist=None, grid=False):
+def _main(like, line, light=None, hist=None):
     """Rates by class and point where the fit is right."""
     if like.rests_on == ("t_E",) and light is None and like.points.earth == (0.0, 0.0):
         return line.timescale_only(*like.t_only, hist)[:, None]
-    return line.evaluate(like.points, like.known, light, hist, grid)
+    return line.evaluate(like.points, like.known, light, hist)
 
 
 def _size(event):

@@ -5,7 +5,7 @@ import math
 import numpy as np
 
 from ._jit import kernel
-from .odds import _split_gauss
+from .odds import at_row, sizes, weighed
 
 _ROOT = math.sqrt(2.0 * math.pi)
 _FAR = 60.0  # squared distances beyond count as nothing
@@ -13,14 +13,13 @@ _FAR = 60.0  # squared distances beyond count as nothing
 
 @kernel
 def by_mass(
-    h, summed, ln_pi0, step, ln_kappa, on_theta, ln_X, ln_t, W, bases, number, ln_M, width, n_sub, terms, magnitude,
-    spread, threshold, rate, first,
+    h, summed, motion, ln_pi0, step, ln_kappa, on_theta, ln_X, ln_t, W, bases, number, ln_M, width, n_sub, terms,
+    vector, toward, magnitude, spread, threshold, rate, first,
 ):  # fmt: skip
     """Fill rate (Q, J), and rate times ln M: the integrand of `odds.sum_masses`, whose arguments these are."""
-    P, C = h.shape[1], h.shape[2]
+    P = h.shape[1]
     light = magnitude.size > 0
-    sharp = 1.0 / (math.sqrt(2.0) * spread)
-    v = np.empty(4)
+    sharp = 1.0 / (math.sqrt(2.0) * spread) if light else 0.0
     for q in range(ln_X.size):
         if W[q] == 0.0:
             continue
@@ -28,47 +27,17 @@ def by_mass(
             parts = n_sub if width[j] > 0.0 else 1
             for k in range(parts):
                 lm = ln_M[j] + ((k + 0.5) / parts - 0.5) * width[j]
-                sign = -1.0 if on_theta else 1.0
-                ln_pi = 2.0 * ln_X[q] + sign * (ln_kappa + lm)
-                ln_theta = ln_X[q] if on_theta else ln_pi - ln_X[q]
-                ln_par = ln_pi - ln_X[q] if on_theta else ln_X[q]
+                ln_pi, ln_theta, ln_par = sizes(on_theta, ln_X[q], ln_kappa, lm)
                 x = (ln_pi - ln_pi0) / step
                 i = int(math.floor(x))
                 if i < 1 or i > P - 3:
                     continue
-                like = W[q] * 2.0 * math.exp(0.5 * lm) / parts
-                if terms[0, q, 1] > 0.0:
-                    like *= _split_gauss(math.exp(ln_theta), terms[0, q, 0], terms[0, q, 1], terms[0, q, 2])
-                if terms[1, q, 1] > 0.0:
-                    like *= _split_gauss(math.exp(ln_par), terms[1, q, 0], terms[1, q, 1], terms[1, q, 2])
-                if terms[2, q, 1] > 0.0:
-                    mu = math.exp(ln_theta - ln_t[q])
-                    like *= _split_gauss(mu, terms[2, q, 0], terms[2, q, 1], terms[2, q, 2])
+                like = weighed(q, ln_theta, ln_par, ln_theta - ln_t[q], terms, vector, toward)
+                like *= W[q] * 2.0 * math.exp(0.5 * lm) / parts
                 if like <= 0.0:
                     continue
-                t = x - i
-                for m in range(4):
-                    s = 0.0
-                    if light:
-                        for c in range(C):
-                            a = 0.0
-                            for b in range(bases.size):
-                                a += number[j, b] * h[bases[b], i - 1 + m, c, q]
-                            s += a * 0.5 * math.erfc((threshold[i - 1 + m, c] - magnitude[j]) * sharp)
-                    else:
-                        for b in range(bases.size):
-                            s += number[j, b] * summed[q, bases[b], i - 1 + m]
-                    v[m] = s
-                if v[0] > 1e-280 and v[1] > 1e-280 and v[2] > 1e-280 and v[3] > 1e-280:
-                    y = (
-                        -t * (t - 1.0) * (t - 2.0) / 6.0 * math.log(v[0])
-                        + (t + 1.0) * (t - 1.0) * (t - 2.0) / 2.0 * math.log(v[1])
-                        - (t + 1.0) * t * (t - 2.0) / 2.0 * math.log(v[2])
-                        + (t + 1.0) * t * (t - 1.0) / 6.0 * math.log(v[3])
-                    )
-                    r = like * min(math.exp(y), 2.0 * max(v[1], v[2]))
-                else:
-                    r = like * ((1.0 - t) * v[1] + t * v[2])
+                of_light = magnitude[j] if light else 0.0
+                r = like * at_row(h, summed, motion[q], i, x - i, bases, number[j], of_light, sharp, threshold)
                 if r > 0.0:
                     rate[q, j] += r
                     first[q, j] += r * lm

@@ -45,7 +45,7 @@ def _lagrange(t):
 
 
 @kernel
-def _lay(w, ml, mb, cxx, cxy, cyy, accuracy, orders, x, x_w, per_kappa, per_log, log_mu, W):
+def lay(w, ml, mb, cxx, cxy, cyy, accuracy, orders, x, x_w, per_kappa, per_log, log_mu, W):
     """Add one Gaussian to W (scales, kappas); return first and last scale used, (1, 0) if beyond the grid."""
     small, ax, ay, beyond = major_axis(cxx, cxy, cyy)
     order = order_for(small, beyond, accuracy, orders)
@@ -131,7 +131,7 @@ def rate_density(row, geometry, src, lens, element, mu, table, ends, orders, x, 
                     for s in range(src.shape[1]):
                         w = g * src[0, s, p]
                         if w > w_cut * peak[e]:
-                            a, b = _lay(
+                            a, b = lay(
                                 w,
                                 lens[1, r, p] - src[1, s, p],
                                 lens[2, r, p] - src[2, s, p],
@@ -142,7 +142,7 @@ def rate_density(row, geometry, src, lens, element, mu, table, ends, orders, x, 
                             )  # fmt: skip
                             low, high = min(low, a), max(high, b)
                 r += 1
-            _apply(W, low, high, table, ends, T[e, row[start]])
+            apply_table(W, low, high, table, ends, T[e, row[start]], 0, K)
         start = stop
     for e in range(T.shape[0]):
         for i in range(T.shape[1]):
@@ -153,8 +153,8 @@ def rate_density(row, geometry, src, lens, element, mu, table, ends, orders, x, 
 
 
 @kernel
-def _apply(W, low, high, table, ends, out):
-    """Add the table's rows to out (K,) with the weights of scales low:high, and clear these."""
+def apply_table(W, low, high, table, ends, out, k0, k1):
+    """Add the table's rows to out[k0:k1], out (K,), with the weights of scales low:high, and clear these."""
     m = table.shape[0]
     for f in range(low, high):
         sub = f % m
@@ -164,8 +164,8 @@ def _apply(W, low, high, table, ends, out):
             if w == 0.0:
                 continue
             W[f, i] = 0.0
-            # columns j with 0 <= j + shift < K
-            j0, j1 = max(0, -shift), min(ends[i], out.size - shift)
+            # columns j with k0 <= j + shift < k1
+            j0, j1 = max(0, k0 - shift), min(ends[i], k1 - shift)
             if j1 > j0:
                 source = table[sub, i, j0:j1]
                 target = out[j0 + shift : j1 + shift]
