@@ -53,12 +53,13 @@ def _typed(command):
 @click.option("--kick", is_flag=True, help="Birth component and kick of one event's lens, were it a remnant.")
 @click.option("--skip-bad", is_flag=True, help="Leave bad rows out.")
 @click.option("--jobs", type=click.IntRange(1, 256), default=1, show_default=True, help="Threads over events.")
+@click.option("--keep", metavar="FOLDER", help="Keep the sightlines' rate densities there; later runs take them.")
 @assumptions
 @click.option("--plot", metavar="FILE", help="Draw the events over the classes' densities: .png .pdf .svg.")
 @output
 def odds(
     sample, at, icrs, lens_limit, frame, t_0par, outlier, tolerance, family, rank, facilities, campaign, hours, as_of,
-    since, seed, kick, skip_bad, jobs, plot, save, as_json, overwrite, quiet, **choices
+    since, seed, kick, skip_bad, jobs, keep, plot, save, as_json, overwrite, quiet, **choices
 ):  # fmt: skip
     """Lens-class odds of each event of SAMPLE, or of one event typed with --t-E ... --at L B.
 
@@ -80,6 +81,7 @@ def odds(
       lensrate odds --t-E 270 --t-E-err 3 --pi-E 0.09 --theta-E 5.2 --theta-E-err 0.3 --at 359.86 -1.62
       lensrate odds events.csv --frame geocentric --t-0par 55763 --save odds.ecsv --plot odds.png
       lensrate odds events.ecsv --spread kicks --json
+      lensrate odds events.ecsv --keep rates --jobs 2
       lensrate odds running.ecsv --rank black_hole --hours 40 --as-of 2031-06-15 --facilities marram --campaign marram
       lensrate odds --t-E 270 --pi-E 0.09 --theta-E 5.2 --at 359.86 -1.62 --kick --plot kick.png
     """
@@ -118,7 +120,7 @@ def odds(
         click.echo(wrap(f"lensrate: {read.summary()}"), err=True)
     others = _family(family, scenario) if family else ()
     result = compute(
-        read, scenario, outlier=outlier, tolerance=tolerance, spread=others, jobs=jobs,
+        read, scenario, outlier=outlier, tolerance=tolerance, spread=others, jobs=jobs, keep=keep,
         progress=None if quiet else "events",
     )  # fmt: skip
     extra = None

@@ -5,6 +5,7 @@ detection efficiency at given data is the same for all classes and drops out.
 """
 
 from collections import OrderedDict
+from dataclasses import asdict
 from threading import Lock
 
 import astropy.units as u
@@ -12,7 +13,8 @@ import numpy as np
 
 from ..errors import ConvergenceError, InputError
 from ..lensing import rates
-from ..lensing.points import Axes, EventRates, Points
+from ..lensing.kept import Kept, folder_for
+from ..lensing.points import LAYOUT, Axes, EventRates, Points
 from ..parallel import run_map
 from ..scenario import Scenario, resolve
 from ..scenario.numerics import Numerics
@@ -31,14 +33,17 @@ _held = OrderedDict()
 _holding = Lock()
 
 
-def event_rates(l, b, scenario="default"):
-    """Return the event rate density of a sightline, kept for the next call.
+def event_rates(l, b, scenario="default", keep=None):
+    """Return the event rate density of a sightline, held for the next call.
 
     Parameters
     ----------
     l, b : float
         Galactic coordinates [deg].
     scenario : Scenario or str
+    keep : str or Path, optional
+        Folder of files that hold it for later runs: taken from there where it was made under the same assumptions by
+        the same version, else made and written. The numbers are the same.
 
     Returns
     -------
@@ -47,14 +52,16 @@ def event_rates(l, b, scenario="default"):
     Raises
     ------
     InputError, ConvergenceError
-        Unknown scenario; no star passes the source rule.
+        Unknown scenario; no star passes the source rule; the folder cannot be made.
+    DataFileError
+        A file could not be written.
     """
     if not isinstance(scenario, Scenario):
         scenario = Scenario.read(scenario)
     key = (scenario.hash, round(float(l), 9), round(float(b), 9))
     with _holding:
-        if key not in _held:
-            made = _event_rates(l, b, scenario)
+        if key not in _held or keep is not None and not _held[key].is_kept(keep):
+            made = _event_rates(l, b, scenario, keep)
             while len(_held) >= _KEEP:
                 _held.popitem(last=False)
             _held[key] = made
@@ -62,15 +69,20 @@ def event_rates(l, b, scenario="default"):
         return _held[key]
 
 
-def _event_rates(l, b, scenario):
+def _event_rates(l, b, scenario, keep=None):
     model = resolve(scenario)
     x, y = np.radians(float(l)), np.radians(float(b))
     toward = model.sources.toward(x, y, model.galaxy)
-    ready = rates.prepare(model, model.galaxy.sightline(x, y), toward, Numerics(**scenario.numerics))
-    return EventRates(ready)
+    numerics = Numerics(**scenario.numerics)
+    ready = rates.prepare(model, model.galaxy.sightline(x, y), toward, numerics)
+    kept = None
+    if keep is not None:
+        place = {"l_deg": round(float(l), 9), "b_deg": round(float(b), 9)}
+        kept = Kept(keep, {"scenario_hash": scenario.hash, **place, "numerics": asdict(numerics), "layout": LAYOUT})
+    return EventRates(ready, kept=kept)
 
 
-def odds(sample, scenario="default", *, outlier=OUTLIER, tolerance=0.05, spread=(), jobs=1, progress=None):
+def odds(sample, scenario="default", *, outlier=OUTLIER, tolerance=0.05, spread=(), jobs=1, progress=None, keep=None):
     """Return the odds of lens classes of every event of a sample.
 
     Parameters
@@ -89,6 +101,8 @@ def odds(sample, scenario="default", *, outlier=OUTLIER, tolerance=0.05, spread=
         Threads over the events of a sightline.
     progress : str, optional
         Label of a progress bar.
+    keep : str or Path, optional
+        Folder that keeps the sightlines' rate densities for later runs, as in `event_rates`.
 
     Returns
     -------
@@ -97,7 +111,9 @@ def odds(sample, scenario="default", *, outlier=OUTLIER, tolerance=0.05, spread=
     Raises
     ------
     InputError
-        Outlier share or tolerance out of range; unknown scenario.
+        Outlier share or tolerance out of range; unknown scenario; the folder cannot be made.
+    DataFileError
+        A sightline could not be written to the folder.
     """
     if not isinstance(scenario, Scenario):
         scenario = Scenario.read(scenario)
@@ -105,9 +121,12 @@ def odds(sample, scenario="default", *, outlier=OUTLIER, tolerance=0.05, spread=
         raise InputError(f"outlier: {outlier:g} given, must be between 0 and 0.5")
     if not 0.0 <= tolerance <= 5.0:
         raise InputError(f"tolerance: {tolerance:g} deg given, must be between 0 and 5")
+    if keep is not None:
+        # not after minutes of work
+        folder_for(keep)
     events = list(sample)
     groups = _shared_sightlines(events, tolerance)
-    results, failed = {}, {}
+    results, failed, told = {}, {}, {}
 
     def one(group):
         place, members = group
@@ -123,7 +142,10 @@ def odds(sample, scenario="default", *, outlier=OUTLIER, tolerance=0.05, spread=
         """Odds of one event, or why there are none."""
         i, place, assumed = job
         try:
-            return event_odds(events[i], event_rates(*place, assumed), outlier)
+            line = event_rates(*place, assumed, keep)
+            found = event_odds(events[i], line, outlier)
+            told.update(dict.fromkeys(line.notes))
+            return found
         except (InputError, ConvergenceError) as error:
             return f"{events[i].name}: {error}" if events[i].name not in str(error) else str(error)
 
@@ -134,7 +156,7 @@ def odds(sample, scenario="default", *, outlier=OUTLIER, tolerance=0.05, spread=
             else:
                 results[i] = result.with_range(ranges[i]) if ranges[i] else result
     model = resolve(scenario)
-    notes = [*getattr(sample, "notes", ()), *model.warnings]
+    notes = [*getattr(sample, "notes", ()), *model.warnings, *told]
     notes += [failed[i] for i in sorted(failed)]
     return Odds(
         events=tuple(results[i] for i in sorted(results)),

@@ -10,7 +10,7 @@ from ..units import KAPPA, MAS
 from . import rates, rings
 from .quadrature import row_nodes
 
-__all__ = ["Mixture", "Nodes", "split_normal"]
+__all__ = ["SETTINGS", "Mixture", "Nodes", "split_normal"]
 
 # Gaussians no further apart are joined: means in dispersions, relative covariance, source distance [kpc], and for the
 # source's own motion, which is kept apart only where something is known of it
@@ -20,6 +20,8 @@ _FULL = 0.03  # over the number of lens rows: share of a row's rate from which o
 _MOST_FULL = 1e-3
 _CUT = 1e-7  # share of a row's rate below which a Gaussian is left out
 _DIRECTIONS = {False: 2.5, True: 2.0}  # fineness of speed distributions, as numerics.directions; with sources apart
+#: what the numbers of a kept mixture depend on
+SETTINGS = (_JOINED, _WITH_SOURCE, _FULL, _MOST_FULL, _CUT, tuple(_DIRECTIONS.values()))
 
 
 class Mixture:

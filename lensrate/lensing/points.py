@@ -7,6 +7,7 @@ source distances and what is known of the source's own motion are exact, with no
 
 from dataclasses import dataclass, field
 from functools import cached_property
+from pathlib import Path
 from threading import Lock
 
 import numpy as np
@@ -15,10 +16,10 @@ from ..kernels import odds as kernels
 from ..kernels.followup import by_mass
 from ..units import KAPPA
 from .masses import bases_of, fine_masses
-from .mixtures import Mixture, Nodes, split_normal
+from .mixtures import SETTINGS, Mixture, Nodes, split_normal
 from .motions import H, Motions
 
-__all__ = ["Axes", "EventRates", "Points", "SourceData"]
+__all__ = ["LAYOUT", "Axes", "EventRates", "Points", "SourceData"]
 
 _STEP = 0.1 * np.log(10.0)  # of ln pi_rel
 _ROWS = (3e-5, 500.0)  # mas
@@ -26,6 +27,8 @@ _SHARES = (0.0, 0.01, 0.05, 0.15, 0.3, 0.45, 0.6, 0.75, 0.87, 0.95, 0.985, 1.0) 
 _DECADES = 3.4
 _SPEED = 100.0  # km/s, around which the table's motions are gathered
 _RARE = 1e-6  # rate of a row over that of the base's largest, below which it is left out once something is known
+#: what the numbers of a kept sightline depend on
+LAYOUT = (_STEP, _ROWS, _SHARES, H, _DECADES, _SPEED, SETTINGS)
 _FAR = 9.0  # errors away, beyond which masses are left out
 
 
@@ -96,6 +99,8 @@ class EventRates:
         From `rates.prepare`.
     layout : (list, dict), optional
         Bases and spectra in the form of `masses.bases_of`, whose it is by default.
+    kept : Kept, optional
+        Files of this sightline, taken where they are there and written where not.
 
     Attributes
     ----------
@@ -106,7 +111,7 @@ class EventRates:
         Mean source distance of each cell [kpc].
     """
 
-    def __init__(self, ready, layout=None):
+    def __init__(self, ready, layout=None, kept=None):
         model = ready.model
         self.ready = ready
         step = _STEP / (2 if ready.sources.fixed_distance else 1)
@@ -126,8 +131,24 @@ class EventRates:
         self._lock = Lock()
         self._by_timescale = {}
         self._with_source = None
-        self.mixture = Mixture.gathered(self._nodes(), False)
+        self._kept = kept
+        self.mixture, table = self._made("rates", False)
+        if table is not None:
+            self.table = table
         self.gauss = self.mixture.finished(self.mixture.parts)
+
+    def _made(self, what, with_source):
+        """A mixture, and its table where that was kept."""
+        found = self._kept.load(what) if self._kept else None
+        if found is not None:
+            return Mixture(found["first"], found["cell"], found["parts"], self.ln_pi.size), found.get("table")
+        made, table = Mixture.gathered(self._nodes(), with_source), None
+        if self._kept:
+            arrays = {"first": made.first, "cell": made.cell, "parts": made.parts}
+            if not with_source:
+                table = arrays["table"] = self._summed(made)
+            self._kept.save(what, arrays)
+        return made, table
 
     def _nodes(self):
         model, pi, bases = self.ready.model, np.exp(self.ln_pi), self._lens_of_base
@@ -155,6 +176,15 @@ class EventRates:
         middle = 0.5 * (edges[1:] + edges[:-1])
         return edges, np.where(total > 0, total / np.maximum(inverse, 1e-300), middle)
 
+    @property
+    def notes(self):
+        """What was wrong with kept files."""
+        return tuple(self._kept.notes) if self._kept else ()
+
+    def is_kept(self, folder):
+        """Return whether files in this folder hold the sightline."""
+        return self._kept is not None and self._kept.folder.resolve() == Path(folder).resolve()
+
     def nbytes(self):
         """Return the memory that this sightline takes [bytes]."""
         tables = sum(self.__dict__[k].nbytes for k in ("table", "ln_table") if k in self.__dict__)
@@ -165,8 +195,11 @@ class EventRates:
     def table(self):
         """The density summed over directions: (B, P, C, K) per ln pi_rel and ln mu_rel, at motions `_ln_mu`."""
         with self._lock:
-            every = np.tile(np.array([0, self._ln_mu.shape[1]]), (self.n_bases, self.ln_pi.size, 1))
-            return self.mixture.speeds(self.mixture.parts, every, self._ln_mu, H, self.D_S.size)
+            return self._summed(self.mixture)
+
+    def _summed(self, mixture):
+        every = np.tile(np.array([0, self._ln_mu.shape[1]]), (self.n_bases, self.ln_pi.size, 1))
+        return mixture.speeds(mixture.parts, every, self._ln_mu, H, self.D_S.size)
 
     @cached_property
     def ln_table(self):
@@ -177,7 +210,7 @@ class EventRates:
         """The mixture that keeps sources apart, made when first asked for."""
         with self._lock:
             if self._with_source is None:
-                self._with_source = Mixture.gathered(self._nodes(), True)
+                self._with_source, _ = self._made("sources", True)
             return self._with_source
 
     def _given(self, known, rows):

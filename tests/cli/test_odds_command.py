@@ -48,6 +48,41 @@ def test_sample_of_the_survey(tmp_path):
     assert picture.stat().st_size > 10_000 and picture.suffix in PICTURES
 
 
+def test_kept_rates_are_taken_and_damage_is_told(tmp_path):
+    args = [*TYPED, "--json", "--keep", str(tmp_path / "rates")]
+    first, plain = run(odds, args), run(odds, [*TYPED, "--json"])
+    assert first.exit_code == 0 and json.loads(first.stdout) == json.loads(plain.stdout)
+    (file,) = (tmp_path / "rates").iterdir()
+    file.write_bytes(file.read_bytes()[:-7])
+    from lensrate.events import odds as module
+
+    module._held.clear()
+    told = run(odds, args)
+    assert told.exit_code == 0 and "made anew" in " ".join(told.stderr.split())
+    rows = [json.loads(x.stdout)[0]["probability"] for x in (first, told)]
+    assert rows[0] == rows[1]
+
+
+def test_spread_over_a_family(tmp_path):
+    """The range of each class holds the scenario's own answer and those of every member, and reaches both its ends."""
+    family = tmp_path / "mine.toml"
+    family.write_text(
+        'title = "mine"\nreferences = ["our choice"]\n[axis.sources]\nlabel = "sources"\nalternatives = [\n'
+        '{ sources = "limit:I=19", source = "our choice" }, { sources = "distance:8", source = "our choice" } ]\n'
+    )
+    result = run(odds, [*TYPED, "--spread", str(family), "--json"])
+    assert result.exit_code == 0, result.output
+    (row,) = json.loads(result.stdout)
+    assert list(row["range"]) == CLASSES and len(row["made"]["spread"]) == 2
+    members = [[], ["--sources", "limit:I=19"], ["--sources", "distance:8"]]
+    alone = [json.loads(run(odds, [*TYPED, *more, "--json"]).stdout)[0]["probability"] for more in members]
+    for name, (low, high) in row["range"].items():
+        every = [p[name] for p in alone]
+        assert low == pytest.approx(min(every), rel=1e-9, abs=1e-6) and high == pytest.approx(max(every), rel=1e-9)
+        assert high > low
+    assert "over the family" in run(odds, [*TYPED, "--spread", str(family)]).stdout
+
+
 def test_samples_of_a_fit(tmp_path):
     rng = np.random.default_rng(2)
     t = Table({"t_E": rng.normal(120, 4, 800), "pi_E": np.abs(rng.normal(0.08, 0.01, 800))})

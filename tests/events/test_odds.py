@@ -1,5 +1,6 @@
 """Class probabilities: against importance-sampled events, in both frames, from tables, samples and grids alike."""
 
+from collections import OrderedDict
 from functools import cache
 
 import astropy.units as u
@@ -11,6 +12,7 @@ from hypothesis import strategies as st
 
 from lensrate.errors import InputError
 from lensrate.events import likelihood as like_of
+from lensrate.events import odds as module
 from lensrate.events.likelihood import likelihood
 from lensrate.events.observed import Measure, Observed, Sample, Solution
 from lensrate.events.odds import class_probabilities, event_odds, event_rates, odds
@@ -510,6 +512,76 @@ def test_many_wide_vectors_in_threads():
     for a, b, c in zip(one.events, two.events, alone):
         assert np.array_equal(a.probability, b.probability)
         assert np.array_equal(a.probability, c.probability)
+
+
+@pytest.fixture
+def forgotten(monkeypatch):
+    """No sightline held in memory; counts those made."""
+    made = []
+    of = module._event_rates
+    monkeypatch.setattr(module, "_held", OrderedDict())
+    monkeypatch.setattr(module, "_event_rates", lambda *args: made.append(args) or of(*args))
+    return made
+
+
+def test_unordered_fields_are_made_once_each(forgotten):
+    places = [(1.0, -2.0), (3.0, -3.0), (0.0, 4.0)]
+    mixed = [Observed(f"{k}", *places[k % 3], "heliocentric", None, (Solution("", {"t_E": m(20.0 + k, 1.0)}),))
+             for k in range(9)]  # fmt: skip
+    result = odds(mixed, UNKICKED)
+    assert [e.name for e in result] == [str(k) for k in range(9)] and len(forgotten) == 3
+    alone = odds(mixed[4:5], UNKICKED).events[0]
+    assert np.array_equal(alone.probability, result.events[4].probability)
+
+
+def test_spread_is_the_range_over_scenarios():
+    others = [("bright", UNKICKED.replace(sources="limit:I=18")), ("far", UNKICKED.replace(sources="distance:9"))]
+    events = [event(t_E=m(60.0, 3.0), pi_E=m(0.1, 0.02)), event(t_E=m(200.0, 3.0))]
+    result = odds(events, UNKICKED, spread=others)
+    alone = [odds(events, s) for s in (UNKICKED, *(s for _, s in others))]
+    assert result.spread == ("bright", "far")
+    for k, e in enumerate(result):
+        every = np.array([o.events[k].probability for o in alone])
+        assert np.array_equal(e.probability, every[0])
+        assert np.array_equal(e.range[0], every.min(axis=0)) and np.array_equal(e.range[1], every.max(axis=0))
+        assert np.all(e.range[1] > e.range[0])
+
+
+def _all(result):
+    return [(e.probability.tolist(), e.histogram.tobytes(), e.outlier_weight) for e in result]
+
+
+def test_kept_sightlines_give_the_same_numbers(forgotten, tmp_path):
+    events = [event(t_E=m(60.0, 3.0), pi_E=m(0.1, 0.02)), event(**CASES["source distance"])]
+    folder = tmp_path / "rates"
+
+    def again(keep=folder):
+        module._held.clear()
+        return odds(events, UNKICKED, keep=keep)
+
+    plain, first = again(None), again()
+    files = sorted(folder.iterdir())
+    assert len(files) == 2 and _all(first) == _all(plain) and first.notes == plain.notes
+    stamps = [f.stat().st_mtime_ns for f in files]
+    assert _all(again()) == _all(plain)
+    assert [f.stat().st_mtime_ns for f in files] == stamps
+    # another scenario, sightline or numerics has files of its own
+    odds(events[:1], UNKICKED.replace(numerics={"nodes": 6}), keep=folder)
+    odds([Observed("e", 1.0, -2.0, "heliocentric", None, events[0].solutions)], UNKICKED, keep=folder)
+    assert len(list(folder.iterdir())) == 4 and [f.stat().st_mtime_ns for f in files] == stamps
+    rng = np.random.default_rng(3)
+    for path in files:
+        whole = path.read_bytes()
+        flipped = bytearray(whole)
+        flipped[int(rng.integers(len(whole) // 2, len(whole)))] ^= 16
+        other = next(f for f in folder.iterdir() if f != path).read_bytes()
+        for damage in (bytes(flipped), whole[: len(whole) // 3], b"", b"lensrate sightline rates 1\n{}", other):
+            path.write_bytes(damage)
+            result = again()
+            assert any(path.name in note and "made anew" in note for note in result.warnings())
+            assert _all(result) == _all(plain) and path.read_bytes() == whole
+    with pytest.raises(InputError, match="keep: folder .* cannot be made"):
+        again(files[0] / "below")
 
 
 def test_mass_spectra_keep_numbers_and_means():
