@@ -1,6 +1,7 @@
 """Spread independent work over threads or any executor, in order, with a progress bar on stderr."""
 
 import sys
+import warnings
 from concurrent.futures import ThreadPoolExecutor
 from contextlib import contextmanager
 
@@ -77,13 +78,21 @@ class DaskExecutor:
         items = list(items)
         if not items:
             return
-        sent = self._client.scatter(func, broadcast=True, hash=False)
-        futures = self._client.map(_apply, items, work=sent, pure=False, retries=_RETRIES)
+        with warnings.catch_warnings():
+            # functions hold megabytes of tables, and chunks of events are as large: each goes where it is needed, once
+            warnings.filterwarnings("ignore", message="Sending large graph", category=UserWarning)
+            # a task of its own, not scattered data: the scheduler can make it again where a worker is lost
+            sent = self._client.submit(_itself, func, pure=False, retries=_RETRIES)
+            futures = self._client.map(_apply, items, work=sent, pure=False, retries=_RETRIES)
         try:
             for future in futures:
                 yield future.result()
         finally:
             self._client.cancel(futures)
+
+
+def _itself(func):
+    return func
 
 
 def _apply(item, work):

@@ -3,6 +3,7 @@
 import click
 
 from .base import Command
+from .options import dask
 from .text import columns, number, safe, wrap
 
 _NAMES = {
@@ -39,13 +40,14 @@ _NAMES = {
               show_default=True, help="Rows of the table that --save writes.")
 @click.option("--plot", metavar="FILE", help="Draw one page: .png .pdf .svg.")
 @click.option("--jobs", type=click.IntRange(1, 256), default=1, show_default=True, help="Threads over fields.")
+@dask
 @click.option("--save", metavar="FILE", help="Write a table: .ecsv .csv (# begins comments) .fits .vot .json.")
 @click.option("--json", "as_json", is_flag=True, help="Print JSON instead of a table.")
 @click.option("--overwrite", is_flag=True, help="Replace existing files.")
 @click.option("--quiet", "-q", is_flag=True, help="No messages on stderr.")
 def compare(
     sample, campaign_file, scenario_names, kicks, bh_kicks, sources, u_0_limit, efficiency_file, counts, fit, tail,
-    simulations, seed, frame, t_0par, skip_bad, by, plot, jobs, save, as_json, overwrite, quiet,
+    simulations, seed, frame, t_0par, skip_bad, by, plot, jobs, address, save, as_json, overwrite, quiet,
 ):  # fmt: skip
     """Compare observed events (SAMPLE) with what a scenario says the survey finds.
 
@@ -86,10 +88,13 @@ def compare(
     scenarios = _scenarios(scenario_names or (survey.scenario if survey else "default",), kicks, bh_kicks, sources,
                            u_0_limit)
     curve = Efficiency.read(efficiency_file) if efficiency_file else None
-    result = compare_sample(
-        events, scenarios, survey, efficiency=curve, jobs=jobs, progress=None if quiet else "fields", counts=counts,
-        fit=fit, tail=tail, simulations=simulations, seed=seed,
-    )  # fmt: skip
+    from ..parallel import cluster
+
+    with cluster(address) as executor:
+        result = compare_sample(
+            events, scenarios, survey, efficiency=curve, jobs=jobs, executor=executor, counts=counts, fit=fit,
+            progress=None if quiet else "fields", tail=tail, simulations=simulations, seed=seed,
+        )  # fmt: skip
     first = result.comparisons[0]
     if plot:
         from .. import plots

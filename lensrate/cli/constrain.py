@@ -3,6 +3,7 @@
 import click
 
 from .base import Command
+from .options import dask
 from .text import columns, number, safe, wrap
 
 _WIDTHS = ("rate", "field_rate", "shift", "stretch", "slope")
@@ -55,6 +56,7 @@ _WIDTHS = ("rate", "field_rate", "shift", "stretch", "slope")
 @click.option("--samples", "samples_file", metavar="FILE", help="Write 10,000 draws of the posterior.")
 @click.option("--plot", metavar="FILE", help="Draw marginals and pairs: .png .pdf .svg.")
 @click.option("--jobs", type=click.IntRange(1, 256), default=1, show_default=True, help="Threads over fields.")
+@dask
 @click.option("--save", metavar="FILE", help="Write a table: .ecsv .csv (# begins comments) .fits .vot .json.")
 @click.option("--json", "as_json", is_flag=True, help="Print JSON instead of a table.")
 @click.option("--overwrite", is_flag=True, help="Replace existing files.")
@@ -62,7 +64,7 @@ _WIDTHS = ("rate", "field_rate", "shift", "stretch", "slope")
 def constrain(
     sample, plan, campaign_file, parameters, priors, widths, fix_nuisances, galaxies, stages, listed, counts, only_t_E,
     limit_class, masses, scenario_name, kicks, bh_kicks, seasons, measured, mass_error, sigma, mocks, points, steps,
-    seed, frame, t_0par, skip_bad, samples_file, plot, jobs, save, as_json, overwrite, quiet,
+    seed, frame, t_0par, skip_bad, samples_file, plot, jobs, address, save, as_json, overwrite, quiet,
 ):  # fmt: skip
     """Constrain kick law and numbers of remnants from observed events (SAMPLE).
 
@@ -96,27 +98,28 @@ def constrain(
     asked = parse_parameters(parameters, priors, base.lens_class)
     nuisances = Nuisances.fixed() if fix_nuisances else _nuisances(widths)
     label = None if quiet else "fields"
-    if plan:
-        result = _planned(survey, base, asked, nuisances, seasons, _shares(measured, base), mass_error, sigma, counts,
-                          mocks, seed, points, jobs, label)  # fmt: skip
-        text = report_plan(result)
-    else:
-        from ..events.observed import Sample
-        from ..inference.data import Selection
-        from ..remnants.classes import CLASSES
+    from ..events.observed import Sample
+    from ..inference.selection import Selection
+    from ..parallel import cluster
+    from ..remnants.classes import CLASSES
 
-        events = Sample.read(sample, frame, t_0par, skip_bad)
-        selection = Selection.parse(stages, listed, [*CLASSES, *base.lens_class])
-        if limit_class:
-            result = _limits(events, survey, base, limit_class, masses, nuisances, counts, jobs, label)
+    events = None if plan else Sample.read(sample, frame, t_0par, skip_bad)
+    selection = Selection.parse(stages, listed, [*CLASSES, *base.lens_class])
+    with cluster(address) as executor:
+        spread = {"jobs": jobs, "executor": executor, "progress": label}
+        if plan:
+            result = _planned(survey, base, asked, nuisances, seasons, _shares(measured, base), spread, counts,
+                              sigma=sigma, mass_error=mass_error, mocks=mocks, seed=seed, points=points)  # fmt: skip
+            text = report_plan(result)
+        elif limit_class:
+            result = _limits(events, survey, base, limit_class, masses, nuisances, counts, spread)
             text = report_limits(result)
         else:
             from ..inference.constrain import constrain as infer
 
             result = infer(
                 events, parameters, survey, base, priors=priors, nuisances=nuisances, selection=selection,
-                counts=counts, galaxies=galaxies, points=points, steps=steps, seed=seed, only_t_E=only_t_E, jobs=jobs,
-                progress=label,
+                counts=counts, galaxies=galaxies, points=points, steps=steps, seed=seed, only_t_E=only_t_E, **spread,
             )  # fmt: skip
             text = report(result)
     if plot:
@@ -187,21 +190,20 @@ def _shares(measured, base):
     return out
 
 
-def _planned(survey, base, asked, nuisances, seasons, measured, mass_error, sigma, counts, mocks, seed, points, jobs,
-             label):  # fmt: skip
+def _planned(survey, base, asked, nuisances, seasons, measured, spread, counts, **options):
     from ..inference.likelihood import anchors
     from ..inference.planned import planned
     from ..inference.templates import Templates
     from ..surveys.yields import campaign as forecast
 
     own = len(survey.calendar.seasons)
-    templates = Templates.of(forecast(survey, base, jobs=jobs, progress=label), (seasons or own) / own)
+    templates = Templates.of(forecast(survey, base, **spread), (seasons or own) / own)
     anchors(templates, counts)
-    return planned(templates, asked, nuisances, sigma=sigma, measured=measured, mass_error=mass_error, counts=counts,
-                   mocks=mocks, seed=seed, points=points)  # fmt: skip
+    return planned(templates, asked, nuisances, measured=measured, counts=counts, executor=spread["executor"],
+                   **options)  # fmt: skip
 
 
-def _limits(events, survey, base, lens, masses, nuisances, counts, jobs, label):
+def _limits(events, survey, base, lens, masses, nuisances, counts, spread):
     from ..errors import InputError, one_of
     from ..inference.constrain import mass_limits
     from ..surveys.yields import campaign as forecast
@@ -211,8 +213,8 @@ def _limits(events, survey, base, lens, masses, nuisances, counts, jobs, label):
         values = [float(m) for m in masses.split(",")]
     except ValueError:
         raise InputError(f"--masses: '{masses}' is not understood; write numbers of Msun, like 0.01,1,30") from None
-    return mass_limits(events, forecast(survey, base, jobs=jobs, progress=label), lens, values, nuisances=nuisances,
-                       counts=counts)  # fmt: skip
+    return mass_limits(events, forecast(survey, base, **spread), lens, values, nuisances=nuisances, counts=counts,
+                       executor=spread["executor"])  # fmt: skip
 
 
 def report(result):

@@ -3,7 +3,7 @@
 import click
 
 from .base import Command, announce
-from .options import assumptions, output, read_scenario
+from .options import assumptions, dask, output, read_scenario
 from .sightline import direction
 from .text import columns, number, safe, wrap
 
@@ -30,11 +30,12 @@ from .text import columns, number, safe, wrap
 )
 @click.option("--seed", type=click.IntRange(0), help="Same seed, same events; made up and told if not given.")
 @click.option("--jobs", type=click.IntRange(1, 256), default=1, show_default=True, help="Threads.")
+@dask
 @click.option("--plot", metavar="FILE", help="Draw t_E and pi_E by class: .png .pdf .svg.")
 @output
 def events(
-    lon, lat, campaign_file, icrs, number, weighted, equal_classes, only_detected, blend, dates, seed, jobs, plot, save,
-    as_json, overwrite, quiet, **choices,
+    lon, lat, campaign_file, icrs, number, weighted, equal_classes, only_detected, blend, dates, seed, jobs, address,
+    plot, save, as_json, overwrite, quiet, **choices,
 ):  # fmt: skip
     """Mock events toward L B (degrees) or of a campaign, drawn from the rate.
 
@@ -66,14 +67,18 @@ def events(
     }  # fmt: skip
     if dates:
         drawing["dates"] = tuple(mjd_of(day, "--dates") for day in dates)
-    if campaign_file:
-        result = mock_events(_campaign(campaign_file, choices, jobs, quiet), **drawing)
-        if only_detected:
-            result = result.found()
-    else:
-        scenario = read_scenario(**choices)
-        announce(quiet)
-        result = mock_events(*direction(lon, lat, icrs), scenario, **drawing)
+    from ..parallel import cluster
+
+    with cluster(address) as executor:
+        drawing["executor"] = executor
+        if campaign_file:
+            result = mock_events(_campaign(campaign_file, choices, jobs, executor, quiet), **drawing)
+            if only_detected:
+                result = result.found()
+        else:
+            scenario = read_scenario(**choices)
+            announce(quiet)
+            result = mock_events(*direction(lon, lat, icrs), scenario, **drawing)
     if plot:
         from ..plots import save_events
 
@@ -112,7 +117,7 @@ def _check(lon, lat, campaign_file, icrs, only_detected, dates):
             raise click.UsageError(f"--{name}: a campaign states its own; change '{where}' in its file")
 
 
-def _campaign(file, choices, jobs, quiet):
+def _campaign(file, choices, jobs, executor, quiet):
     """Forecast of the campaign, under its own scenario unless one is named."""
     from ..surveys.campaign import Campaign
     from ..surveys.yields import campaign
@@ -122,7 +127,7 @@ def _campaign(file, choices, jobs, quiet):
     name = choices["scenario_name"] if typed else survey.scenario
     scenario = read_scenario(name, choices["kicks"], choices["bh_kicks"])
     announce(quiet)
-    return campaign(survey, scenario, jobs=jobs)
+    return campaign(survey, scenario, jobs=jobs, executor=executor)
 
 
 def report(result):

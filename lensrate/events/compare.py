@@ -1,12 +1,14 @@
 """An observed sample against what a scenario says the survey finds: the forecast is folded, the data are left alone."""
 
-from dataclasses import replace
+from dataclasses import dataclass, replace
 
 import numpy as np
 from scipy.special import gammaln, xlogy
 from scipy.stats import poisson
 
 from ..errors import InputError, one_of
+from ..lensing.sampler import seeds
+from ..parallel import run_map
 from ..units import DAYS_PER_YEAR
 from .comparison import OUTLIER, Comparison, Estimate, FieldCount
 from .fold import LN_T, STEP, Errors, assign, heliocentric
@@ -19,11 +21,14 @@ COUNTS = ("auto", "absolute", "shape")
 _BIN = 0.2 * np.log(10.0)
 _MAGNITUDES = np.arange(13.0, 25.01, 0.5)
 _FEW = 5  # events with a parallax or magnitude from which these are tested
+_CHUNK = 50  # simulated samples that share one stream of random numbers; part of what a seed means
 _LN_PI = np.log(1e6)  # span of ln pi_E of such events
 _ENDS = 5e-4  # of the predicted distribution, left out at either end of the bins
 
 
-def compare(sample, folded, field=None, *, counts="auto", fit=False, tail=100.0, simulations=500, seed=1):
+def compare(
+    sample, folded, field=None, *, counts="auto", fit=False, tail=100.0, simulations=500, seed=1, executor=None
+):
     """Compare observed events with a folded forecast.
 
     Parameters
@@ -43,6 +48,8 @@ def compare(sample, folded, field=None, *, counts="auto", fit=False, tail=100.0,
     simulations : int
         Samples drawn from the forecast for the null distributions; 0 for none (p is then NaN).
     seed : int
+    executor : object with ``map``, optional
+        For the simulations.
 
     Returns
     -------
@@ -71,9 +78,15 @@ def compare(sample, folded, field=None, *, counts="auto", fit=False, tail=100.0,
     errors = Errors.of(x, sigma)
     shapes = Shapes(folded, errors, fit)
     g = shapes.best(x, field) if fit else 0
+    if shapes.at_the_edge(g):
+        notes.append(
+            f"the fit ends at the farthest that is tried: t_E times {np.exp(shapes.places[g][0]):.2f}, spread times "
+            f"{shapes.places[g][1]:.2f}"
+        )
     n = np.bincount(field, minlength=len(folded.names))
     mean = np.where(anchored, shapes.expected[g], n)
-    rng = np.random.default_rng(seed)
+    own, second = seeds(seed).spawn(2)
+    rng = np.random.default_rng(second)
 
     edges = _edges(x, shapes, g, mean)
     bins = shapes.in_bins(g, edges)
@@ -81,7 +94,8 @@ def compare(sample, folded, field=None, *, counts="auto", fit=False, tail=100.0,
     predicted = _by_class(folded, errors, edges, bins, mean)
     density = shapes.density(g, x, field)
     notes += _impossible(events, ~(density > 0), "a t_E of which the forecast finds none")
-    tests = _timescale_tests(shapes, g, x, field, n, anchored, edges, fit, simulations, rng)
+    null = _Null(shapes, None if fit else g, shapes.expected[g], n, anchored, edges)
+    tests = null.tests(g, x, field, simulations, own, executor)
     shares, ln_pi, strange = _parallax_shares(Parallaxes(folded), field, x, sigma, parallax)
     notes += _impossible(events, strange, "a pi_E that the forecast does not know at their t_E")
     if shares.size >= _FEW:
@@ -199,25 +213,47 @@ def _by_class(folded, errors, edges, bins, mean):
     return np.einsum("f,fm,fcm->cm", mean, bins, share)
 
 
-def _timescale_tests(shapes, g, x, field, n, anchored, edges, fit, simulations, rng):
-    def statistics(g, x, field, n):
-        share = shapes.shares(g, x, field)
-        mean = np.where(anchored, shapes.expected[g], n)
-        value = deviance(np.histogram(x, edges)[0], mean @ shapes.in_bins(g, edges))
+@dataclass(frozen=True)
+class _Null:
+    """Tests of timescales: statistics of a sample, and of simulated ones, fitted likewise where `place` is None."""
+
+    shapes: Shapes
+    place: int | None
+    expected: np.ndarray  # events found by field
+    n: np.ndarray  # events seen, where nothing anchors them
+    anchored: np.ndarray
+    edges: np.ndarray
+
+    def statistics(self, g, x, field, n):
+        share = self.shapes.shares(g, x, field)
+        mean = np.where(self.anchored, self.shapes.expected[g], n)
+        value = deviance(np.histogram(x, self.edges)[0], mean @ self.shapes.in_bins(g, self.edges))
         if x.size == 0:
             return 0.0, 0.0, value
         return kolmogorov_smirnov(share), anderson_darling(share), value
 
-    mine, made = statistics(g, x, field, n), []
-    for _ in range(simulations):
-        counts = np.where(anchored, rng.poisson(shapes.expected[g]), n)
-        drawn, where = shapes.draw(g, counts, rng)
-        # what falls outside the bins is as good as at their ends
-        drawn = np.clip(drawn, edges[0], edges[-1])
-        made.append(statistics(shapes.best(drawn, where) if fit else g, drawn, where, counts))
-    names = ("ks", "anderson_darling", "deviance")
-    columns = np.array(made).reshape(-1, 3).T
-    return {k: Simulated(v, p_value(v, s) if s.size else np.nan, simulations) for k, v, s in zip(names, mine, columns)}
+    def __call__(self, job):
+        """Statistics of some simulated samples, (n, 3)."""
+        g, seed, n = job
+        rng, made = np.random.default_rng(seed), []
+        for _ in range(n):
+            counts = np.where(self.anchored, rng.poisson(self.expected), self.n)
+            drawn, where = self.shapes.draw(g, counts, rng)
+            # what falls outside the bins is as good as at their ends
+            drawn = np.clip(drawn, self.edges[0], self.edges[-1])
+            at = self.shapes.best(drawn, where) if self.place is None else self.place
+            made.append(self.statistics(at, drawn, where, counts))
+        return made
+
+    def tests(self, g, x, field, simulations, seed, executor):
+        mine = self.statistics(g, x, field, self.n)
+        sizes = [min(_CHUNK, simulations - k) for k in range(0, simulations, _CHUNK)]
+        jobs = [(g, s, m) for s, m in zip(seed.spawn(len(sizes)), sizes)]
+        columns = np.array([row for rows in run_map(self, jobs, executor=executor) for row in rows]).reshape(-1, 3).T
+        names = ("ks", "anderson_darling", "deviance")
+        return {
+            k: Simulated(v, p_value(v, s) if s.size else np.nan, simulations) for k, v, s in zip(names, mine, columns)
+        }
 
 
 def _uniform_tests(prefix, shares, simulations, rng):

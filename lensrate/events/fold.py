@@ -253,7 +253,7 @@ def _scaled(line, factor):
     return pdf * np.divide(wanted, total, out=np.zeros_like(total), where=total > 0)[:, None]
 
 
-def fold_groups(places, scenario, efficiency=None, jobs=1, progress=None):
+def fold_groups(places, scenario, efficiency=None, jobs=1, progress=None, executor=None):
     """Fold a scenario along the sightlines of groups of events: shapes only, no numbers.
 
     Parameters
@@ -264,6 +264,8 @@ def fold_groups(places, scenario, efficiency=None, jobs=1, progress=None):
         With its source rule.
     efficiency : Efficiency, optional
         Without one every event counts as found.
+    jobs, progress, executor
+        As `parallel.run_map`, over places.
 
     Returns
     -------
@@ -274,7 +276,9 @@ def fold_groups(places, scenario, efficiency=None, jobs=1, progress=None):
     def one(place):
         return sightline(place[0] * u.deg, place[1] * u.deg, scenario)
 
-    lines = [one(places[0]), *run_map(one, places[1:], jobs, None, progress)]
+    # the first alone, so that threads do not compile the same kernels at once
+    alone = [one(places[0])] if executor is None else []
+    lines = [*alone, *run_map(one, places[len(alone) :], jobs, executor, progress)]
     rows = np.array([_scaled(line, 1.0) for line in lines])
     curves = [field_curve(curve, scenario.u_0_limit, line._integrals.ready) for line in lines]
     meta = {k: v for k, v in lines[0].meta().items() if k not in ("l_deg", "b_deg", "field_mismatch")}

@@ -31,8 +31,9 @@ _SKY = ("mu_rel_N", "mu_rel_E", "pi_EN", "pi_EE", "t_E_geo", "pi_EN_geo", "pi_EE
 
 
 def mock_events(
-    l, b=None, scenario="default", *, number=None, seed=None, weighted=False, tilt=None, jobs=1, blend=None, dates=None
-):
+    l, b=None, scenario="default", *, number=None, seed=None, weighted=False, tilt=None, jobs=1, blend=None, dates=None,
+    executor=None,
+):  # fmt: skip
     """Draw a mock catalogue.
 
     Parameters
@@ -56,6 +57,8 @@ def mock_events(
         Further light in the source's place, the same for all.
     dates : (float, float), optional
         MJD between which a sightline's events peak, evenly; 2030 by default. A campaign has its seasons.
+    executor : object with ``map``, optional
+        Instead of threads: for chunks of events, and a campaign's fields.
 
     Returns
     -------
@@ -74,11 +77,11 @@ def mock_events(
     """
     source, kept = _seed(seed)
     extra = None if blend is None else _magnitude(blend)
-    forecast = _forecast(l, b, scenario, jobs)
+    forecast = _forecast(l, b, scenario, jobs, executor)
     if isinstance(forecast, CampaignForecast):
         if dates is not None:
             raise InputError("dates: a campaign has seasons of its own; leave them out")
-        parts = _campaign(forecast, source, number, weighted, tilt, jobs, extra)
+        parts = _campaign(forecast, source, number, weighted, tilt, jobs, extra, executor)
         names, unit = [f.field.name for f in forecast.fields], ""
         first = forecast.fields[0].sightline
     else:
@@ -88,7 +91,7 @@ def mock_events(
             return span[0] + (span[1] - span[0]) * uniform
 
         number = _NUMBER if number is None else number
-        parts = [_catalogue(forecast, _number(number), source, weighted, tilt, jobs, extra, when)]
+        parts = [_catalogue(forecast, _number(number), source, weighted, tilt, jobs, extra, when, None, executor)]
         names, unit, first = [], "1/yr", forecast
     ready = first._integrals.ready
     if not parts:
@@ -108,11 +111,11 @@ def mock_events(
     )
 
 
-def _forecast(l, b, scenario, jobs):
+def _forecast(l, b, scenario, jobs, executor):
     if isinstance(l, (Sightline, CampaignForecast)):
         return l
     if isinstance(l, (Campaign, str, os.PathLike)):
-        return campaign(l, None if scenario == "default" else scenario, jobs=jobs)
+        return campaign(l, None if scenario == "default" else scenario, jobs=jobs, executor=executor)
     return sightline(l, b, scenario)
 
 
@@ -151,7 +154,7 @@ def _dates(given):
     return start, end
 
 
-def _campaign(forecast, root, number, weighted, tilt, jobs, blend):
+def _campaign(forecast, root, number, weighted, tilt, jobs, blend, executor):
     """Events of every field that has any."""
     survey = forecast.campaign
     years = survey.calendar.exposure(survey.efficiency.includes).sum() / DAYS_PER_YEAR
@@ -179,7 +182,7 @@ def _campaign(forecast, root, number, weighted, tilt, jobs, blend):
         if counts[i] == 0:
             continue
         part = _catalogue(
-            f.sightline, int(counts[i]), children[i], weighted, tilt, jobs, blend, when, survey.efficiency
+            f.sightline, int(counts[i]), children[i], weighted, tilt, jobs, blend, when, survey.efficiency, executor
         )
         if weighted or tilt is not None:
             part["weight"] *= weight[i] / part["weight"].sum()
@@ -189,11 +192,11 @@ def _campaign(forecast, root, number, weighted, tilt, jobs, blend):
     return parts
 
 
-def _catalogue(forecast, n, root, weighted, tilt, jobs, blend, when, efficiency=None):
+def _catalogue(forecast, n, root, weighted, tilt, jobs, blend, when, efficiency=None, executor=None):
     """Columns of one sightline's events."""
     first, second = root.spawn(2)
     model, sources = forecast._model, forecast._integrals.ready.sources
-    draws = Sampler.of(forecast).draw(n, first, full=True, weighted=weighted, tilt=tilt, jobs=jobs)
+    draws = Sampler.of(forecast).draw(n, first, full=True, weighted=weighted, tilt=tilt, jobs=jobs, executor=executor)
     band = sources.dust.band
     columns = {
         "lens": draws.lens_class,
@@ -206,17 +209,18 @@ def _catalogue(forecast, n, root, weighted, tilt, jobs, blend, when, efficiency=
     made = [*_SKY, "t_0", "u_0"]
     made += [f"{band}_{what}" for what in ("S", "L", "base", "peak")]
     made += ["birth"]
-    made += ["efficiency"] if efficiency is not None else []
-    columns.update({name: np.empty(n) for name in made})
-    if efficiency is not None:
-        columns["detected"] = np.empty(n, dtype=bool)
+    made += ["efficiency", "detected"] if efficiency is not None else []
+
+    def room(n):
+        return {name: np.empty(n, dtype=bool if name == "detected" else float) for name in made}
+
     first_day, earth = _earth(forecast, when(np.array([0.0, 1.0 - 1e-12])))
     angle = float(sky_angle(forecast.l, forecast.b).to_value(u.rad))
     cosine, sine = np.cos(angle), np.sin(angle)
 
     def fill(job):
-        k, seed = job
-        c = {name: column[k : k + _CHUNK] for name, column in columns.items()}
+        """What was drawn of a chunk, and room for the rest, which is filled."""
+        c, seed = job
         rng = np.random.Generator(np.random.SFC64(seed))
         u_0, t_0, star, born, found = rng.random((5, c["t_E"].size))
         side = np.where(u_0 < 0.5, -1.0, 1.0)
@@ -238,9 +242,26 @@ def _catalogue(forecast, n, root, weighted, tilt, jobs, blend, when, efficiency=
             c["efficiency"][:] = efficiency.of(c["t_E"], second)
             c["detected"][:] = found < c["efficiency"]
 
+    def filled(job):
+        drawn, seed = job
+        c = {**drawn, **room(drawn["t_E"].size)}
+        fill((c, seed))
+        return {name: c[name] for name in made}
+
+    def chunk(columns, k):
+        return {name: column[k : k + _CHUNK] for name, column in columns.items()}
+
     starts = range(0, n, _CHUNK)
-    run_map(fill, list(zip(starts, second.spawn(len(starts)))), jobs)
-    return columns
+    streams = second.spawn(len(starts))
+    whole = room(n)
+    if executor is None:
+        run_map(fill, [(chunk({**columns, **whole}, k), s) for k, s in zip(starts, streams)], jobs)
+    else:
+        parts = executor.map(filled, [(chunk(columns, k), s) for k, s in zip(starts, streams)])
+        for k, part in zip(starts, parts):
+            for name, values in part.items():
+                whole[name][k : k + _CHUNK] = values
+    return {**columns, **whole}
 
 
 def _earth(forecast, days):

@@ -11,7 +11,7 @@ from .fold import LN_T, STEP
 __all__ = ["Parallaxes", "Shapes"]
 
 _TINY = 1e-300
-_SHIFTS = np.linspace(-0.4, 0.4, 41)
+_SHIFTS = np.linspace(-0.9, 0.9, 73)
 _STRETCHES = np.linspace(0.8, 1.25, 10)
 _NODES, _WEIGHTS = np.polynomial.hermite_e.hermegauss(5)
 _FINE = 6  # of the steps in ln pi_E
@@ -102,6 +102,11 @@ class Shapes:
     def in_bins(self, g, edges):
         """Return the share of each field's events between edges of ln t_E, (F, m)."""
         return np.array([np.diff(np.interp(edges, LN_T, row)) for row in self.below[g]])
+
+    def at_the_edge(self, g):
+        """Return whether a shift or stretch is the farthest that is tried."""
+        ends = self.places[[0, -1]]
+        return len(self.places) > 1 and bool(np.any(self.places[g] == ends))
 
     @staticmethod
     def _place(x):

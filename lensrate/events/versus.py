@@ -61,8 +61,9 @@ class Versus:
 
 
 def compare_sample(
-    sample, scenarios=None, survey=None, *, efficiency=None, jobs=1, progress=None, forecast=None, **options
-):
+    sample, scenarios=None, survey=None, *, efficiency=None, jobs=1, executor=None, progress=None, forecast=None,
+    **options,
+):  # fmt: skip
     """Compare a sample with one scenario or several.
 
     Parameters
@@ -80,6 +81,8 @@ def compare_sample(
     progress : str, optional
     forecast : CampaignForecast, optional
         One of the campaign already made, whose integrals serve where they can.
+    executor : object with ``map``, optional
+        Instead of threads: for fields, and the simulations.
     **options
         As `compare`: counts, fit, tail, simulations, seed.
 
@@ -114,8 +117,8 @@ def compare_sample(
             from .compare import _placed
 
             _placed(sample, _Places(survey), None)
-        made = forecast or forecast_of(survey, scenarios[0], jobs=jobs, progress=progress)
-        every = [fold_campaign(survey, forecast=reweighted(made, s, jobs, progress)) for s in scenarios]
+        made = forecast or forecast_of(survey, scenarios[0], jobs=jobs, executor=executor, progress=progress)
+        every = [fold_campaign(survey, forecast=reweighted(made, s, jobs, progress, executor)) for s in scenarios]
     else:
         if options.get("counts") == "absolute":
             raise InputError("counts: nothing anchors the number of events without a campaign; give --campaign FILE")
@@ -125,12 +128,12 @@ def compare_sample(
                 efficiency.check_limit(where, s.u_0_limit)
                 efficiency.check_sources(where, s.sources)
         places, field = grouped(sample.events)
-        every = [fold_groups(places, s, efficiency, jobs, progress) for s in scenarios]
+        every = [fold_groups(places, s, efficiency, jobs, progress, executor) for s in scenarios]
         notes = (
             f"no campaign: {len(places)} sightlines at the events' own places, shapes only, "
             + ("every event counted as found" if efficiency is None else efficiency.describe()),
         )
-    made = [compare(sample, f, field, **options) for f in every]
+    made = [compare(sample, f, field, executor=executor, **options) for f in every]
     return Versus(tuple(replace(c, notes=(*notes, *c.notes)) for c in made))
 
 

@@ -6,14 +6,16 @@ import numpy as np
 
 from ..errors import InputError, kind_of, one_of
 from ..events.observed import Sample
+from ..parallel import run_map
 from ..scenario import Scenario
 from ..surveys.campaign import Campaign
 from ..surveys.reweighted import reweighted
 from ..surveys.yields import campaign as forecast_of
-from .data import Selection, made, observed_data
+from .data import observed_data
 from .likelihood import Likelihood, Nuisances, anchors, check_kicks
 from .parameters import BINS, bin_parameters, parse_parameters
 from .posterior import grid_posterior
+from .selection import Selection
 from .templates import Templates, need_kicks
 
 __all__ = ["METHODS", "MassLimits", "constrain", "mass_limits", "timescales_only"]
@@ -23,7 +25,7 @@ METHODS = ("auto", "grid", "sample")
 
 def constrain(sample, parameters=("kick_scale",), survey=None, scenario=None, *, priors=(), nuisances=None,
               selection=None, counts="auto", galaxies=(), method="auto", points=None, steps=2000, seed=1,
-              only_t_E=False, forecast=None, jobs=1, progress=None):  # fmt: skip
+              only_t_E=False, forecast=None, jobs=1, executor=None, progress=None):  # fmt: skip
     """Return the posterior of parameters from an observed sample.
 
     Parameters
@@ -56,6 +58,8 @@ def constrain(sample, parameters=("kick_scale",), survey=None, scenario=None, *,
         One already made.
     jobs : int
         Threads over fields.
+    executor : object with ``map``, optional
+        Instead of threads; also for events with measured parallaxes or radii.
     progress : callable or str, optional
 
     Returns
@@ -82,14 +86,14 @@ def constrain(sample, parameters=("kick_scale",), survey=None, scenario=None, *,
         sample = timescales_only(sample)
     label = progress if isinstance(progress, str) else None
     if forecast is None:
-        forecast = forecast_of(survey, base, jobs=jobs, progress=label)
+        forecast = forecast_of(survey, base, jobs=jobs, executor=executor, progress=label)
     else:
-        forecast = reweighted(forecast, base, jobs, label)
+        forecast = reweighted(forecast, base, jobs, label, executor)
     every = {base.name: forecast}
     for other in galaxies:
         other = other if isinstance(other, Scenario) else Scenario.read(other)
         name = other.name if other.name not in every else f"{other.name}-{other.hash}"
-        every[name] = reweighted(forecast, other, jobs, label)
+        every[name] = reweighted(forecast, other, jobs, label, executor)
     likelihoods = {}
     for name, f in every.items():
         templates = Templates.of(f)
@@ -98,7 +102,7 @@ def constrain(sample, parameters=("kick_scale",), survey=None, scenario=None, *,
         if BINS in parameters and not likelihoods:
             need_kicks(templates, BINS)
             asked = (*asked, *bin_parameters(templates.edges))
-        data = observed_data(sample, templates, selection)
+        data = observed_data(sample, templates, selection, executor)
         likelihoods[name] = Likelihood(templates, data, asked, nuisances, selection, counts)
     call = progress if callable(progress) else None
     if method == "sample" or (method == "auto" and len(asked) > 3):
@@ -183,7 +187,9 @@ class MassLimits:
         return importlib.import_module("lensrate.plots").mass_limits(self, ax=ax, **style)
 
 
-def mass_limits(sample, forecast, lens, masses, *, level=0.95, nuisances=None, counts="auto", highest=10.0):
+def mass_limits(
+    sample, forecast, lens, masses, *, level=0.95, nuisances=None, counts="auto", highest=10.0, executor=None
+):
     """Return upper limits on a lens class of the scenario against the mass of its objects.
 
     Parameters
@@ -201,6 +207,8 @@ def mass_limits(sample, forecast, lens, masses, *, level=0.95, nuisances=None, c
         As in `constrain`.
     highest : float
         The prior of the amount is uniform from 0 to so many times the scenario's.
+    executor : object with ``map``, optional
+        For the masses.
 
     Returns
     -------
@@ -222,19 +230,34 @@ def mass_limits(sample, forecast, lens, masses, *, level=0.95, nuisances=None, c
     table = scenario.lens_class[lens]
     norm = next(k for k in ("mass_fraction", "number_per_msun", "number_per_star") if k in table)
     parameter = parse_parameters([f"class:{lens}"], [f"class:{lens}=uniform:0,{highest:g}"], scenario.lens_class)
-    limits, expected, plain = [], [], None
-    for m in masses:
-        own = {**scenario.lens_class, lens: {**table, "mass_function": {"kind": "delta", "M": float(m)}}}
-        templates = Templates.of(reweighted(forecast, scenario.replace(lens_class=own)))
-        if plain is None:
-            plain = observed_data(sample, templates)
-        data = made(templates, plain.field, plain.x, plain.sigma, names=plain.names)
-        likelihood = Likelihood(templates, data, parameter, nuisances or Nuisances(), Selection(), counts)
-        limits.append(grid_posterior({"base": likelihood}).upper_limit(f"class:{lens}", level))
-        expected.append(float(templates.expected[:, templates.rows(lens)].sum()))
+    one = _Limit(sample, forecast, lens, parameter, nuisances or Nuisances(), counts, level)
+    limits, expected = zip(*run_map(one, list(map(float, masses)), executor=executor))
     amount = table[norm]
     amount = float(amount["value"] if isinstance(amount, dict) else amount)
     return MassLimits(
         lens, masses, amount * np.array(limits), np.array(expected), amount, norm, level,
         {**{k: v for k, v in forecast.meta().items() if k not in ("warnings", "seed")}, "sample": sample.name},
     )  # fmt: skip
+
+
+@dataclass(frozen=True)
+class _Limit:
+    """Limit on a class whose objects have one mass, and the events of it at the scenario's amount."""
+
+    sample: object
+    forecast: object
+    lens: str
+    parameter: tuple
+    nuisances: object
+    counts: str
+    level: float
+
+    def __call__(self, m):
+        scenario, lens = self.forecast.scenario, self.lens
+        table = {**scenario.lens_class[lens], "mass_function": {"kind": "delta", "M": m}}
+        own = scenario.replace(lens_class={**scenario.lens_class, lens: table})
+        templates = Templates.of(reweighted(self.forecast, own))
+        data = observed_data(self.sample, templates)
+        likelihood = Likelihood(templates, data, self.parameter, self.nuisances, Selection(), self.counts)
+        limit = grid_posterior({"base": likelihood}).upper_limit(f"class:{lens}", self.level)
+        return limit, float(templates.expected[:, templates.rows(lens)].sum())

@@ -4,111 +4,27 @@ An event's own term holds no efficiency: that it was found is a fact about its d
 data, a measurement made or not, enters through declared probabilities by class.
 """
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 
 import numpy as np
 from scipy.special import i0e
 
-from ..errors import InputError, one_of
+from ..errors import InputError
 from ..events.fold import LN_T, STEP, assign, heliocentric
 from ..lensing.distributions import MassGrid
+from ..parallel import run_map
 from ..units import DAYS_PER_YEAR, KAPPA
+from .selection import STAGES, Selection
 from .templates import _plan
 
-__all__ = ["STAGES", "Data", "Selection", "mock", "observed_data"]
+__all__ = ["Data", "made", "mass_weight", "observed_data"]
 
-#: stages of a sample after an event is found, each a subset of the one before
-STAGES = ("parallax", "followed", "mass")
 _NODES, _WEIGHTS = np.polynomial.hermite_e.hermegauss(5)
 _WEIGHTS = _WEIGHTS / np.sqrt(2 * np.pi)
 _STEPS = (0.03, 0.06, 0.12)  # of ln M
 _ROOT = np.sqrt(2 * np.pi)
 # of pi_E: hardly a lens is beyond these; step in the logarithm where a measurement is wide
 _LEAST, _MOST, _FINE = 1e-4, 30.0, 0.12
-
-
-@dataclass(frozen=True)
-class Selection:
-    """Declared probabilities of a sample's stages by class, for events that reached the stage before.
-
-    Attributes
-    ----------
-    parallax, followed, mass : dict of str to float
-        Probability by class; empty: the stage says nothing of the class and drops out.
-    listed : str
-        What an event must have to be in the sample: "found", or a stage.
-    """
-
-    parallax: dict = field(default_factory=dict)
-    followed: dict = field(default_factory=dict)
-    mass: dict = field(default_factory=dict)
-    listed: str = "found"
-
-    def __post_init__(self):
-        one_of("selection: listed", self.listed, ("found", *STAGES))
-        for stage in STAGES:
-            for lens, p in getattr(self, stage).items():
-                if isinstance(p, bool) or not isinstance(p, (int, float)) or not 0 <= p <= 1:
-                    raise InputError(f"selection: {stage} of {lens}: {p!r} given, a probability from 0 to 1 is needed")
-
-    @classmethod
-    def parse(cls, items, listed="found", classes=()):
-        """Read ``STAGE:CLASS=P`` texts; ``all`` for every class.
-
-        Raises
-        ------
-        InputError
-            Unknown stage or class (with the nearest known one), or no probability.
-        """
-        made = {stage: {} for stage in STAGES}
-        for item in items:
-            left, equals, value = str(item).partition("=")
-            stage, colon, lens = left.partition(":")
-            if not (equals and colon):
-                raise InputError(
-                    f"selection: '{item}' is not understood; write STAGE:CLASS=P, e.g. mass:black_hole=0.5"
-                )
-            one_of("selection: stage", stage, STAGES)
-            one_of("selection: class", lens, [*classes, "all"])
-            try:
-                p = float(value)
-            except ValueError:
-                raise InputError(f"selection: '{item}': '{value}' is no probability") from None
-            made[stage].update(dict.fromkeys(classes if lens == "all" else [lens], p))
-        return cls(**made, listed=listed)
-
-    def weight(self, lens, reached):
-        """Return the probability that an event of a class got just as far.
-
-        Parameters
-        ----------
-        lens : str
-        reached : str
-            "found" or the last stage that it reached.
-        """
-        last = -1 if reached == "found" else STAGES.index(reached)
-        chance = [getattr(self, stage).get(lens, 1.0) if getattr(self, stage) else 1.0 for stage in STAGES]
-        # a follow-up that gave no mass leaves no trace in a table: both fail together
-        failed = {-1: chance[:1] if self.parallax else chance[1:], 0: chance[1:], 1: chance[2:], 2: []}[last]
-        declared = {-1: self.declared, 0: self.followed or self.mass, 1: self.mass, 2: False}[last]
-        return float(np.prod(chance[: last + 1]) * (1.0 - np.prod(failed) if declared else 1.0))
-
-    def kept(self, lens):
-        """Return the probability that a found event of a class is in the sample."""
-        out = 1.0
-        if self.listed != "found":
-            for stage in STAGES[: STAGES.index(self.listed) + 1]:
-                out *= getattr(self, stage).get(lens, 1.0) if getattr(self, stage) else 1.0
-        return out
-
-    @property
-    def declared(self):
-        """Whether any probability is."""
-        return any(getattr(self, s) for s in STAGES)
-
-    def to_dict(self):
-        """Return the declarations."""
-        return {**{s: dict(getattr(self, s)) for s in STAGES}, "listed": self.listed}
 
 
 @dataclass(frozen=True, eq=False)
@@ -173,13 +89,13 @@ def made(templates, field, x, sigma, weight=None, joint=None, names=(), notes=()
 
 
 def mass_weight(templates, ln_mass, error):
-    """Return the density of a measured ln M for every part, (R,)."""
+    """Return the density of measured ln M (n,) for every part, (n, R)."""
     mean = np.array([p.ln_mass for p in templates.parts])
     width = np.sqrt(error**2 + np.array([p.spread for p in templates.parts]) ** 2)
-    return np.exp(-0.5 * ((ln_mass - mean) / width) ** 2) / (_ROOT * width)
+    return np.exp(-0.5 * ((np.asarray(ln_mass)[:, None] - mean) / width) ** 2) / (_ROOT * width)
 
 
-def observed_data(sample, templates, selection=None):
+def observed_data(sample, templates, selection=None, executor=None):
     """Return the events of a sample that lie in the templates' fields.
 
     Parameters
@@ -187,6 +103,8 @@ def observed_data(sample, templates, selection=None):
     sample : Sample
     templates : Templates
     selection : Selection, optional
+    executor : object with ``map``, optional
+        For the events with a parallax or an angular radius, the slow ones.
 
     Returns
     -------
@@ -213,10 +131,12 @@ def observed_data(sample, templates, selection=None):
     if outside:
         shown = ", ".join(e.name for e in outside[:8])
         notes.append(f"{len(outside)} events outside all fields are left out: {shown}")
-    weight, joint, values = np.ones((len(events), len(templates.parts))), {}, {}
+    weight, known = np.ones((len(events), len(templates.parts))), []
     for i, (e, pi) in enumerate(zip(events, parallax)):
         theta = _theta(e)
         reached = "found" if pi is None else "mass" if theta is not None else "parallax"
+        if selection.listed == "followed" and reached == "parallax":
+            reached = "followed"  # being in such a sample says so
         if selection.listed != "found" and STAGES.index(selection.listed) > (
             -1 if reached == "found" else STAGES.index(reached)
         ):
@@ -227,9 +147,9 @@ def observed_data(sample, templates, selection=None):
             by = {lens: selection.weight(lens, reached) for lens in templates.classes}
             weight[i] = [by[p.lens] for p in templates.parts]
         if pi is not None or theta is not None:
-            if int(field[i]) not in values:
-                values[int(field[i])] = _Joint(templates, int(field[i]))
-            joint[i] = values[int(field[i])].of(x[i], sigma[i], pi, theta)
+            known.append((i, (int(field[i]), float(x[i]), float(sigma[i]), pi, theta)))
+    values = run_map(_Joints(templates), [job for _, job in known], executor=executor)
+    joint = {i: v for (i, _), v in zip(known, values)}
     return made(templates, field, x, sigma, weight, joint, [e.name for e in events], [*sample.notes, *notes])
 
 
@@ -246,6 +166,19 @@ def _theta(event):
         low, middle, high = best.draws.quantiles("theta_E")
         return middle, 0.5 * (high - low)
     return None
+
+
+class _Joints:
+    """Values of all parts at events of any field."""
+
+    def __init__(self, templates):
+        self._templates, self._kept = templates, {}
+
+    def __call__(self, job):
+        field, *event = job
+        if field not in self._kept:
+            self._kept[field] = _Joint(self._templates, field)
+        return self._kept[field].of(*event)
 
 
 class _Joint:
@@ -331,68 +264,3 @@ def _parallax_nodes(M, pi, theta):
     if theta is not None:
         likely = likely * np.exp(-0.5 * ((theta[0] - KAPPA * M * nodes) / theta[1]) ** 2) / (_ROOT * theta[1])
     return nodes, likely
-
-
-def mock(templates, part_weight, rng, sigma=0.05, slope=0.0, shift=0.0, stretch=1.0, mass_error=0.2, measured=None,
-         rate=None, seen=None):  # fmt: skip
-    """Return the Data of a sample drawn from the templates.
-
-    Parameters
-    ----------
-    templates : Templates
-    part_weight : ndarray, shape (R,)
-        Weight of every part; stellar ones count once.
-    rng : Generator
-    sigma : float
-        Error of ln t_E of every event.
-    slope, shift, stretch : float
-        True nuisances of the stellar parts.
-    mass_error : float
-        Error of ln M of those whose mass is measured.
-    measured : dict of str to float, optional
-        Probability by class that the mass is measured; the likelihood must be told the same.
-    rate : ndarray, shape (F,), optional
-        Factor of each field's number.
-    seen : Templates, optional
-        Those of the inference, where another scenario is true.
-
-    Returns
-    -------
-    Data, lens
-        And the class of every event, as text.
-    """
-    from .likelihood import moved, resloped
-
-    rows = templates.rate.copy()
-    stellar, factor = resloped(templates, slope)
-    rows[:, templates.stellar] = moved(stellar, shift, stretch)
-    dark = np.array([p.lens in ("neutron_star", "black_hole") for p in templates.parts])
-    rows[:, dark] *= factor[:, None, None]
-    found = rows * templates.efficiency[:, None, :] * np.asarray(part_weight)[:, None]
-    if rate is not None:
-        found = found * np.asarray(rate)[:, None, None]
-    fields, x, part = [], [], []
-    for f in range(found.shape[0]):
-        flat = np.cumsum(found[f].ravel())
-        n = rng.poisson(flat[-1] * STEP)
-        at = np.searchsorted(flat, rng.random(n) * flat[-1])
-        part.append(at // LN_T.size)
-        x.append(LN_T[at % LN_T.size] + STEP * (rng.random(n) - 0.5))
-        fields.append(np.full(n, f))
-    field, x, part = np.concatenate(fields), np.concatenate(x), np.concatenate(part)
-    lens = np.array([templates.parts[r].lens for r in part])
-    target = templates if seen is None else seen
-    weight = np.ones((x.size, len(target.parts)))
-    if measured:
-        p = np.array([measured.get(q.lens, 0.0) for q in target.parts])
-        has = rng.random(x.size) < np.array([measured.get(q.lens, 0.0) for q in templates.parts])[part]
-        for i in range(x.size):
-            if has[i]:
-                q = templates.parts[part[i]]
-                ln_mass = q.ln_mass + np.hypot(mass_error, q.spread) * rng.standard_normal()
-                weight[i] = p * mass_weight(target, ln_mass, mass_error)
-            else:
-                weight[i] = 1 - p
-    error = np.full(x.size, float(sigma))
-    return made(target, field, x + sigma * rng.standard_normal(x.size), error, weight), lens
-

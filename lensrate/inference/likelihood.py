@@ -7,8 +7,10 @@ from scipy.special import gammaln
 
 from ..errors import InputError
 from ..events.fold import LN_T, STEP
+from ..kernels.shifted import shifted_sums
 from ..remnants.kicks import parse_kick
-from .data import Selection, node_weights
+from .data import node_weights
+from .selection import Selection
 from .templates import DARK, SLOPES, need_kicks
 
 __all__ = ["Likelihood", "Nuisances", "moved", "resloped"]
@@ -16,7 +18,6 @@ __all__ = ["Likelihood", "Nuisances", "moved", "resloped"]
 _TINY = 1e-300
 _STEPS = 25  # of the search for the nuisances
 _SETTLED = 1e-4
-_FEW = 8  # patterns of weights that are cheap to sum for all fields
 _PIVOT = np.log(20.0)  # ln t_E about which the stars' timescales are stretched
 _MASSES = np.linspace(np.log(0.5), np.log(2.0), 9)  # ln of mass factors, tabulated
 
@@ -68,10 +69,15 @@ class Nuisances:
 
 def resloped(templates, slope):
     """Return stellar parts (F, R', n) and the factor of remnants' numbers (F,) at a change of the low-mass slope."""
+    w = _mixture(slope)[0]
+    return np.tensordot(w, templates.slope_rate, axes=1), w @ templates.slope_factor
+
+
+def _mixture(slope):
+    """Weights of the stars at `SLOPES`, a parabola, and their slopes."""
     d = SLOPES[2]
     u = slope / d
-    w = np.array([0.5 * u * (u - 1), 1 - u * u, 0.5 * u * (u + 1)])
-    return np.tensordot(w, templates.slope_rate, axes=1), w @ templates.slope_factor
+    return np.array([0.5 * u * (u - 1), 1 - u * u, 0.5 * u * (u + 1)]), np.array([u - 0.5, -2 * u, u + 0.5]) / d
 
 
 def moved(rows, shift, stretch, pivot=_PIVOT):
@@ -127,7 +133,9 @@ class Likelihood:
         self.active = np.flatnonzero(self.nuisances.widths > 0)
         if not self.anchored.any():
             self.active = self.active[self.active != 0]
-        free = any(n in ("kick_scale", "slow_weight") or n.startswith("kick_bin_") for n in self.names)
+        self._bins = np.array([i for i, n in enumerate(self.names) if n.startswith("kick_bin_")], dtype=int)
+        self._bin_of = np.array([templates.parts[i].bin for i in templates.rows("neutron_star")], dtype=int)
+        free = {"kick_scale", "slow_weight"} & set(self.names)
         self._fixed_dark = None if free else self._shares({})
 
     # what does not change -------------------------------------------------------------------------------------------
@@ -162,31 +170,28 @@ class Likelihood:
         return np.einsum("nqr,q->nr", (1 - s)[..., None] * low + s[..., None] * high, node_weights())
 
     def _prepare_stars(self):
-        """Groups of events that weigh the stellar parts alike: their sums are made once."""
+        """Stellar rates against ln t_E, a row for each way in which events of a field weigh the parts."""
         t, d = self.templates, self.data
         stellar = t.stellar
-        weight = d.weight[:, stellar]
-        patterns, which, count = np.unique(weight, axis=0, return_inverse=True, return_counts=True)
-        which = np.asarray(which).ravel()
-        if not len(d):
-            patterns, count = np.ones((1, stellar.size)), np.ones(1)
-        # what only one event has (a measured mass) is summed for that event alone
-        shared = (count > 1) | (len(patterns) <= _FEW)
-        self._alone = np.flatnonzero(~shared[which]) if len(d) else np.zeros(0, dtype=int)
-        self._which = np.where(shared, np.cumsum(shared) - 1, 0)[which] if len(d) else which
-        self._star = np.einsum("sfrn,pr->spfn", t.slope_rate, patterns[shared]) if shared.any() else np.zeros(
-            (3, 1, len(t.names), LN_T.size)
-        )
-        self._alone_weight = weight[self._alone]
-        self._alone_rows = np.ascontiguousarray(t.slope_rate.transpose(0, 1, 3, 2)) if self._alone.size else None
-        self._star_found = np.einsum("sfrn,r->sfn", t.slope_rate, self._kept[stellar])
+        plain = np.einsum("sfrn->fns", t.slope_rate)
+        weight = np.where(d.full[:, None], 1.0, d.weight[:, stellar])
+        key = np.concatenate([d.field[:, None], weight], axis=1)
+        kinds, self._row = np.unique(key, axis=0, return_inverse=True)
+        self._row = np.asarray(self._row).ravel()
+        self._star = np.empty((len(kinds), LN_T.size, len(SLOPES)))
+        rows = np.ascontiguousarray(t.slope_rate.transpose(1, 3, 0, 2))  # (F, n, 3, R')
+        for f in np.unique(d.field):
+            mine = kinds[:, 0] == f
+            self._star[mine] = np.moveaxis(rows[f] @ kinds[mine, 1:].T, 2, 0)
         # events with the joint distribution keep their values but for the change of the rate at their t_E
-        self._joint = d.full.any()
-        if self._joint:
-            self._star_value = d.value[:, stellar].sum(axis=1)
-            self._star_plain = np.einsum("sfrn->sfn", t.slope_rate)
-            base = self._at_nodes(self._star_plain[1][:, None])[:, 0]
-            self._star_base = np.where(base > 0, base, 1.0)
+        self._times = np.ones(len(d))
+        if d.full.any():
+            base = self._at_nodes(plain[:, None, :, 1])[:, 0]
+            value = d.value[:, stellar].sum(axis=1)
+            self._times = np.where(d.full, np.divide(value, base, out=np.zeros_like(base), where=base > 0), 1.0)
+        self._nodes, self._node_weights = d.nodes, node_weights()[None]
+        self._found = np.ascontiguousarray(np.einsum("sfrn,r->fns", t.slope_rate, self._kept[stellar]))
+        self._cells, self._cell_weights = np.tile(LN_T, (len(self._found), 1)), self._eff * STEP
 
     # one evaluation -------------------------------------------------------------------------------------------------
 
@@ -203,12 +208,6 @@ class Likelihood:
         scale = values.get("kick_scale", 1.0)
         law = law.scaled(scale) if scale != 1 else law
         out = [self.templates.shares("neutron_star", law)]
-        change = [v for n, v in values.items() if n.startswith("kick_bin_")]
-        if change:
-            # the unkicked keep their share; the whole keeps its number
-            bins = np.array([self.templates.parts[i].bin for i in self.templates.rows("neutron_star")])
-            new = out[0] * np.exp(np.concatenate([[0.0], change]))[bins]
-            out[0] = new * out[0].sum() / new.sum()
         if self._hole == "momentum":
             out.append(self.templates.shares("black_hole", law, momentum=True))
         else:
@@ -220,7 +219,11 @@ class Likelihood:
         """Return the weight of every part at parameter values, (R,); stellar ones are 1."""
         values = dict(zip(self.names, theta))
         dark = self._shares(values) if self._fixed_dark is None else self._fixed_dark.copy()
-        first = self.templates.rows("neutron_star").size
+        first = self._bin_of.size
+        if self._bins.size:
+            # the unkicked keep their share; the whole keeps its number
+            new = dark[:first] * np.exp(np.concatenate([[0.0], np.asarray(theta)[self._bins]]))[self._bin_of]
+            dark[:first] = new * dark[:first].sum() / new.sum()
         dark[:first] *= values.get("neutron_stars", 1.0)
         dark[first:] *= values.get("black_holes", 1.0)
         out = np.ones(len(self.templates.parts))
@@ -251,29 +254,22 @@ class Likelihood:
         nu : array_like, shape (4,)
             ln rate, shift, ln stretch, slope.
         """
+        return self._terms_and_slopes(remnants, nu)[:2]
+
+    def _terms_and_slopes(self, remnants, nu):
+        """As `terms`, with the slopes of both in shift, ln stretch and slope: (3, n) and (3, F)."""
         d, (v, e, own_v, own_e) = self.data, remnants
-        _, shift, ln_stretch, slope = nu
-        stretch = float(np.exp(ln_stretch))
-        u = slope / SLOPES[2]
-        w = np.array([0.5 * u * (u - 1), 1 - u * u, 0.5 * u * (u + 1)])
-        factor = w @ self.templates.slope_factor
-        i, s = _source(d.nodes, shift, stretch)
-        pick = d.field[:, None]
-        table, p = np.tensordot(w, self._star, axes=1), self._which[:, None]
-        near = (1 - s) * table[p, pick, i] + s * table[p, pick, i + 1]
-        if self._alone.size:
-            rows = np.tensordot(w, self._alone_rows, axes=1)  # (F, n, R')
-            k, f = i[self._alone], pick[self._alone]
-            r = s[self._alone][..., None]
-            near[self._alone] = np.einsum("nqr,nr->nq", (1 - r) * rows[f, k] + r * rows[f, k + 1], self._alone_weight)
-        star = near @ node_weights() / stretch
-        if self._joint:
-            plain = np.tensordot(w, self._star_plain, axes=1)
-            now = ((1 - s) * plain[pick, i] + s * plain[pick, i + 1]) @ node_weights() / stretch
-            star = np.where(d.full, self._star_value * now / self._star_base, star)
-        found = np.tensordot(w, self._star_found, axes=1)
-        mu = np.einsum("fn,fn->f", moved(found, shift, stretch), self._eff) * STEP
-        return np.maximum(star + factor[d.field] * v + own_v, _TINY), np.maximum(mu + factor * e + own_e, _TINY)
+        mix, mix_slope = _mixture(nu[3])
+        factor, change = mix @ self.templates.slope_factor, mix_slope @ self.templates.slope_factor
+        star, found = np.empty((4, len(d))), np.empty((4, len(self._found)))
+        how = (LN_T[0], STEP, _PIVOT, float(nu[1]), float(nu[2]), mix, mix_slope)
+        shifted_sums(self._star, self._row, self._nodes, self._node_weights, *how, star)
+        shifted_sums(self._found, np.arange(len(self._found)), self._cells, self._cell_weights, *how, found)
+        star *= self._times
+        star[3] += change[d.field] * v
+        found[3] += change * e
+        rate, mu = star[0] + factor[d.field] * v + own_v, found[0] + factor * e + own_e
+        return np.maximum(rate, _TINY), np.maximum(mu, _TINY), star[1:], found[1:]
 
     def _fields(self, mu, ln_rate):
         """Sum over fields of what counts say, each field's own factor integrated over its Gamma prior."""
@@ -316,14 +312,14 @@ class Likelihood:
         active, sd = self.active, self.nuisances.widths
 
         def value(nu):
-            rate, mu = self.terms(fixed, nu)
-            return float(np.sum(np.log(rate))) + self._fields(mu, nu[0]) + self.ln_prior_nu(nu), rate, mu
+            terms = self._terms_and_slopes(fixed, nu)
+            return float(np.sum(np.log(terms[0]))) + self._fields(terms[1], nu[0]) + self.ln_prior_nu(nu), terms
 
-        best, rate, mu = value(nu)
+        best, terms = value(nu)
         if not active.size:
             return best, nu
         for _ in range(_STEPS):
-            g, H = self._slopes(fixed, nu, rate, mu)
+            g, H = self._slopes(nu, *terms)
             step = np.linalg.solve(H, g)
             if 0.5 * g @ step < _SETTLED:
                 break
@@ -332,31 +328,21 @@ class Likelihood:
                 new = nu.copy()
                 new[active] += size * np.clip(step, -2 * sd[active], 2 * sd[active])
                 new[2:] = np.clip(new[2:], [-0.5, -0.9], [0.5, 0.9])
-                new_best, new_rate, new_mu = value(new)
+                new_best, new_terms = value(new)
                 if new_best > best:
                     break
                 size *= 0.4
             else:
                 break
-            nu, best, rate, mu = new, new_best, new_rate, new_mu
+            nu, best, terms = new, new_best, new_terms
         det = np.linalg.slogdet(H)[1]
         return best + 0.5 * active.size * np.log(2 * np.pi) - 0.5 * det, nu
 
-    def _slopes(self, fixed, nu, rate, mu):
+    def _slopes(self, nu, rate, mu, rate_slope, mu_slope):
         """Gradient of ln posterior in the free nuisances, and its information matrix (squares of first slopes)."""
         active, sd = self.active, self.nuisances.widths
-        ln = np.zeros((active.size, rate.size))
-        a = np.zeros((active.size, mu.size))
-        for j, q in enumerate(active):
-            if q == 0:
-                ln[j], a[j] = self.anchored[self.data.field], self.anchored
-                continue
-            h = 1e-2 * min(sd[q], 0.3)
-            up, down = np.array(nu), np.array(nu)
-            up[q] += h
-            down[q] -= h
-            (r1, m1), (r0, m0) = self.terms(fixed, up), self.terms(fixed, down)
-            ln[j], a[j] = np.log(r1 / r0) / (2 * h), np.log(m1 / m0) / (2 * h)
+        ln = np.concatenate([self.anchored[self.data.field][None], rate_slope / rate])[active]
+        a = np.concatenate([self.anchored[None], mu_slope / mu])[active]
         m, n, width = mu * np.exp(nu[0]), self.n, self.nuisances.field_rate
         if width > 0:
             k = width**-2

@@ -8,7 +8,7 @@ from scipy.special import ndtr, ndtri
 
 from ..errors import InputError, did_you_mean, one_of
 
-__all__ = ["BINS", "PARAMETERS", "Parameter", "Prior", "bin_parameters", "parse_parameters"]
+__all__ = ["BINS", "PARAMETERS", "Parameter", "Prior", "bin_parameters", "from_shares", "parse_parameters"]
 
 #: what can be asked for: meaning, prior where none is given
 PARAMETERS = {
@@ -22,6 +22,7 @@ PARAMETERS = {
 BINS = "kick_bins"
 _FORMS = {"uniform": ("LOW", "HIGH"), "log-uniform": ("LOW", "HIGH"), "normal": ("MEAN", "SIGMA"),
           "lognormal": ("MEDIAN", "DEX")}  # fmt: skip
+_EDGE = 1e-9
 _REACH = 4.0  # standard deviations of a normal prior that a grid spans
 
 
@@ -214,3 +215,28 @@ def bin_parameters(edges):
         Parameter(f"kick_bin_{k + 1}", f"ln of the share kicked with {a:g} to {b:g} km/s over the law's", prior)
         for k, (a, b) in enumerate(zip(edges[:-1], edges[1:]))
     )
+
+
+def from_shares(parameters, share):
+    """Return parameters (..., P) at shares of their priors; bins of kick speed are alike to their neighbours."""
+    out = np.stack([p.prior.quantile(share[..., i]) for i, p in enumerate(parameters)], axis=-1)
+    bins = np.array([i for i, p in enumerate(parameters) if p.name.startswith("kick_bin_")], dtype=int)
+    if bins.size:
+        out[..., bins] = ndtri(np.clip(share[..., bins], _EDGE, 1 - _EDGE)) @ smooth_bins(bins.size).T
+    return out
+
+
+def smooth_bins(n, width=1.0, length=2.0):
+    """Return the matrix that turns independent normal numbers into a smooth run of n: a Gaussian process.
+
+    Parameters
+    ----------
+    n : int
+    width : float
+        Standard deviation of each.
+    length : float
+        In bins, over which neighbours are alike.
+    """
+    k = np.arange(n)
+    covariance = width**2 * np.exp(-0.5 * ((k[:, None] - k) / length) ** 2)
+    return np.linalg.cholesky(covariance + 1e-8 * np.eye(n))

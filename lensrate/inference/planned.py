@@ -8,9 +8,10 @@ from scipy.special import ndtr
 
 from .._version import __version__
 from ..events.fold import LN_T, STEP
-from .calibrate import _no_events
-from .data import mock
+from ..parallel import run_map
+from .calibrate import no_events
 from .likelihood import Likelihood, moved, resloped
+from .mocks import mock
 from .posterior import grid_posterior, made_of, own_values
 
 __all__ = ["Planned", "planned"]
@@ -129,7 +130,7 @@ def _spread(p, sigma):
 
 
 def planned(templates, parameters, nuisances=None, *, sigma=0.05, measured=None, mass_error=0.2, counts="auto",
-            mocks=0, seed=1, points=None, progress=None):  # fmt: skip
+            mocks=0, seed=1, points=None, progress=None, executor=None):  # fmt: skip
     """Return the constraint that a campaign would give, its forecast being true.
 
     Parameters
@@ -150,12 +151,15 @@ def planned(templates, parameters, nuisances=None, *, sigma=0.05, measured=None,
     seed, points : int
         Of the mock samples; grid points a parameter.
     progress : callable, optional
+        Called with the share of the mock samples done.
+    executor : object with ``map``, optional
+        For the mock samples.
 
     Returns
     -------
     Planned
     """
-    probe = Likelihood(templates, _no_events(templates), parameters, nuisances, counts=counts)
+    probe = Likelihood(templates, no_events(templates), parameters, nuisances, counts=counts)
     truth = tuple(own_values(probe))
     data, prior, n = _information(probe, parameters, truth, sigma, measured or {}, mass_error)
     names = [p.name for p in parameters]
@@ -174,8 +178,8 @@ def planned(templates, parameters, nuisances=None, *, sigma=0.05, measured=None,
         {name: seasons * _times_for_two(data, prior, n, i) for i, name in enumerate(names)}, by,
         {c: by[c] * (measured or {}).get(c, 0.0) for c in templates.classes},
         {"prior_widths": probe.nuisances.to_dict(), "free": [_NAMES[i] for i in probe.active]},
-        _mocks(templates, parameters, nuisances, truth, mocks, seed, points, counts, progress, sigma=sigma,
-               mass_error=mass_error, measured=measured) if mocks else None,
+        _mocks(templates, parameters, nuisances, truth, mocks, seed, points, counts, progress, executor,
+               {"sigma": sigma, "mass_error": mass_error, "measured": measured}) if mocks else None,
         {**made_of({"plan": probe}), "sigma_ln_t_E": sigma, "mass_error": mass_error, "mocks": mocks, "seed": seed},
     )  # fmt: skip
 
@@ -261,26 +265,45 @@ def _times_for_two(data, prior, n, i):
     return float(times[good[0]]) if good.size else math.inf
 
 
-def _mocks(templates, parameters, nuisances, truth, n, seed, points, counts, progress, **options):
+def _mocks(templates, parameters, nuisances, truth, n, seed, points, counts, progress, executor, options):
     """Posterior widths at 95 % of mock samples."""
-    rng = np.random.default_rng(seed)
-    probe = Likelihood(templates, _no_events(templates), parameters, nuisances, counts=counts)
-    half, constrained = [], []
-    for k in range(n):
-        data, _ = mock(templates, probe.part_weights(truth), rng, **options)
-        likelihood = Likelihood(templates, data, parameters, nuisances, counts=counts)
-        made = grid_posterior({"mock": likelihood}, points=points)
-        row = []
-        for i, p in enumerate(parameters):
-            low, high = made.quantile(i, [0.025, 0.975])
-            row.append(0.5 * math.log(high / low) if p.prior.logarithmic else 0.5 * (high - low))
-        half.append(row)
-        constrained.append([made.learned[p.name].constrained for p in parameters])
+    one = _Mock(templates, tuple(parameters), nuisances, truth, points, counts, options)
+    done = []
+
+    def tell(item, row):
+        done.append(row)
         if progress is not None:
-            progress((k + 1) / n)
-    low, middle, high = np.quantile(np.array(half), [0.16, 0.5, 0.84], axis=0)
+            progress(len(done) / n)
+
+    run_map(one, np.random.SeedSequence(seed).spawn(n), executor=executor, progress=tell)
+    half, constrained = (np.array(v) for v in zip(*done))
+    low, middle, high = np.quantile(half, [0.16, 0.5, 0.84], axis=0)
     return {
         p.name: {"half_width_95": float(middle[i]), "p16": float(low[i]), "p84": float(high[i]),
-                 "share_constrained": float(np.mean(np.array(constrained)[:, i])), "samples": n}
+                 "share_constrained": float(np.mean(constrained[:, i])), "samples": n}
         for i, p in enumerate(parameters)
     }  # fmt: skip
+
+
+@dataclass(frozen=True)
+class _Mock:
+    """One mock sample, inferred from in full."""
+
+    templates: object
+    parameters: tuple
+    nuisances: object
+    truth: tuple
+    points: int | None
+    counts: str
+    options: dict
+
+    def __call__(self, seed):
+        t, how = self.templates, (self.parameters, self.nuisances)
+        probe = Likelihood(t, no_events(t), *how, counts=self.counts)
+        data, _ = mock(t, probe.part_weights(self.truth), np.random.default_rng(seed), **self.options)
+        made = grid_posterior({"mock": Likelihood(t, data, *how, counts=self.counts)}, points=self.points)
+        half = []
+        for i, p in enumerate(self.parameters):
+            low, high = made.quantile(i, [0.025, 0.975])
+            half.append(0.5 * math.log(high / low) if p.prior.logarithmic else 0.5 * (high - low))
+        return half, [made.learned[p.name].constrained for p in self.parameters]

@@ -1,14 +1,14 @@
 """More than three parameters: an ensemble sampler over parameters and nuisances together (emcee, an optional extra)."""
 
 import numpy as np
-from scipy.special import ndtri
+from scipy.special import ndtr
 
 from ..errors import ConvergenceError, InputError
+from .parameters import from_shares
 from .posterior import Posterior, described, made_of, notes_of, own_values
 
 __all__ = ["sampled_posterior"]
 
-_EDGE = 1e-9
 _ENOUGH = 30.0  # autocorrelation times that a chain should be long
 
 
@@ -37,8 +37,8 @@ def sampled_posterior(likelihood, steps=2000, seed=1, progress=None):
 
     Notes
     -----
-    Affine-invariant ensemble (Goodman & Weare 2010, CAMCoS 5, 65; Foreman-Mackey+ 2013, PASP 125, 306). Parameters are
-    sampled as shares of their priors, nuisances in widths of theirs, so that both priors are simple.
+    Affine-invariant ensemble (Goodman & Weare 2010, CAMCoS 5, 65; Foreman-Mackey+ 2013, PASP 125, 306). Everything
+    is sampled as the normal number whose share its own prior's is, so that a posterior like the prior is a round one.
     """
     try:
         import emcee
@@ -48,31 +48,18 @@ def sampled_posterior(likelihood, steps=2000, seed=1, progress=None):
         ) from None
     parameters, active = likelihood.parameters, likelihood.active
     P, widths = len(parameters), likelihood.nuisances.widths
-    bins = np.array([i for i, p in enumerate(parameters) if p.name.startswith("kick_bin_")], dtype=int)
-    run = smooth_bins(bins.size)
-
-    def values(share):
-        """Parameters at shares of their priors, (..., P); bins of kick speed alike to their neighbours."""
-        out = np.stack([p.prior.quantile(share[..., i]) for i, p in enumerate(parameters)], axis=-1)
-        if bins.size:
-            out[..., bins] = ndtri(np.clip(share[..., bins], _EDGE, 1 - _EDGE)) @ run.T
-        return out
 
     def ln(u):
-        share, z = u[:P], u[P:]
-        if np.any((share <= _EDGE) | (share >= 1 - _EDGE)):
-            return -np.inf
         nu = np.zeros(4)
-        nu[active] = z * widths[active]
+        nu[active] = u[P:] * widths[active]
         if abs(nu[2]) > 0.5 or abs(nu[3]) > 0.9:
             return -np.inf
-        return likelihood.ln([float(v) for v in values(share)], nu) - 0.5 * float(z @ z)
+        return likelihood.ln(from_shares(parameters, ndtr(u[:P])), nu) - 0.5 * float(u @ u)
 
     rng = np.random.default_rng(seed)
     size = P + active.size
     walkers = max(4 * size, 16) // 2 * 2
-    first = rng.uniform(0.2, 0.8, (walkers, P)), 0.3 * rng.standard_normal((walkers, active.size))
-    start = np.concatenate(first, axis=1)
+    start = 0.5 * rng.standard_normal((walkers, size))
     ensemble = emcee.EnsembleSampler(walkers, size, ln)
     ensemble._random = np.random.RandomState(seed)
     for k, _ in enumerate(ensemble.sample(start, iterations=steps)):
@@ -87,7 +74,7 @@ def sampled_posterior(likelihood, steps=2000, seed=1, progress=None):
     if len(chain) < _ENOUGH * worst:
         notes.append(f"the chains are {len(chain) / worst:.0f} autocorrelation times long; more steps are safer")
     flat = chain.reshape(-1, size)
-    draws = values(flat[:, :P])
+    draws = from_shares(parameters, ndtr(flat[:, :P]))
     nu = np.zeros(4)
     nu[active] = np.median(flat[:, P:], axis=0) * widths[active]
     expected = float(likelihood.terms(likelihood.remnants(own_values(likelihood)), np.zeros(4))[1].sum())
@@ -98,20 +85,3 @@ def sampled_posterior(likelihood, steps=2000, seed=1, progress=None):
         parameters, (), np.zeros(0), (), described(likelihood.nuisances, nu, likelihood), {}, float("nan"),
         len(likelihood.data), expected, made, tuple(notes), draws,
     )  # fmt: skip
-
-
-def smooth_bins(n, width=1.0, length=2.0):
-    """Return the matrix that turns independent normal numbers into a smooth run of n: a Gaussian process.
-
-    Parameters
-    ----------
-    n : int
-    width : float
-        Standard deviation of each.
-    length : float
-        In bins, over which neighbours are alike.
-    """
-    k = np.arange(n)
-    covariance = width**2 * np.exp(-0.5 * ((k[:, None] - k) / length) ** 2)
-    return np.linalg.cholesky(covariance + 1e-8 * np.eye(n))
-

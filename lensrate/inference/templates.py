@@ -24,6 +24,7 @@ SLOPES = (-0.3, 0.0, 0.3)
 _SLOPE_BELOW = 0.5  # Msun, Kroupa (2001)
 _GROUPS = 5  # of mass, in a remnant class with a spread of masses
 _STAR_GROUPS = 8
+_MOST = 4096  # shares that are kept
 _DELTA = 0.02  # spread of ln M below which a class has one mass
 
 
@@ -158,6 +159,9 @@ class Templates:
         mine = self.rows(lens)
         if self.edges is None:
             return np.ones(mine.size)
+        key = (lens, law, momentum)
+        if key in self._known:
+            return self._known[key].copy()
         out, kept = np.empty(mine.size), {}
         for j, i in enumerate(mine):
             part = self.parts[i]
@@ -166,7 +170,15 @@ class Templates:
                 weights = own.bin_weights(self.edges)
                 kept[part.group] = np.append(weights.unkicked, weights.inside)
             out[j] = kept[part.group][part.bin]
-        return out
+        if len(self._known) >= _MOST:
+            self._known.clear()
+        self._known[key] = out
+        return out.copy()
+
+    @cached_property
+    def _known(self):
+        """Shares already worked out: the points of a grid serve many samples."""
+        return {}
 
 
 def _plan(model):

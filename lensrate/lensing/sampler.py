@@ -153,7 +153,7 @@ class Sampler:
         """Total rate of the deterministic integrals [1/yr per source, within u_0_limit]."""
         return float(self.class_rate.sum())
 
-    def draw(self, n, rng=None, full=False, weighted=True, tilt=None, jobs=1):
+    def draw(self, n, rng=None, full=False, weighted=True, tilt=None, jobs=1, executor=None):
         """Draw events.
 
         Parameters
@@ -170,6 +170,8 @@ class Sampler:
             Draw a class so many times as often as its rate says, or all classes equally often. Weights undo it.
         jobs : int
             Threads.
+        executor : object with ``map``, optional
+            Instead of threads.
 
         Returns
         -------
@@ -213,14 +215,26 @@ class Sampler:
                 )  # fmt: skip
             return kept - start
 
+        def made(blocks):
+            """Arrays of the events of some blocks."""
+            arrays = _arrays(sum(size for _, size in blocks), full)
+            kept = run((blocks, *arrays, 0))
+            return [a[:, :kept] for a in arrays]
+
         if weighted:
             arrays = _arrays(n, full)
             sizes = [BLOCK] * (n // BLOCK) + ([n % BLOCK] if n % BLOCK else [])
             blocks = list(zip(root.spawn(len(sizes)), sizes))
-            run_map(run, [(blocks[i : i + _GROUP], *arrays, i * BLOCK) for i in range(0, len(blocks), _GROUP)], jobs)
+            starts = range(0, len(blocks), _GROUP)
+            if executor is None:
+                run_map(run, [(blocks[i : i + _GROUP], *arrays, i * BLOCK) for i in starts], jobs)
+            else:
+                for i, part in zip(starts, executor.map(made, [blocks[i : i + _GROUP] for i in starts])):
+                    for whole, piece in zip(arrays, part):
+                        whole[:, i * BLOCK : i * BLOCK + piece.shape[1]] = piece
             return self._draws(arrays, n, n)
         expected = float(factor @ self.class_rate) / envelope
-        return self._draws(*_until(run, root, n, expected, full, jobs), n)
+        return self._draws(*_until(made, root, n, expected, jobs, executor), n)
 
     def _draws(self, arrays, proposals, n):
         floats, words, motion = arrays
@@ -280,20 +294,20 @@ def _arrays(n, full):
     )
 
 
-def _until(run, root, n, share, full, jobs):
-    """Run blocks in order until they hold n events, `share` of a block expected; `jobs` changes nothing."""
+def _until(run, root, n, share, jobs, executor):
+    """Run blocks in order until they hold n events, `share` of a block expected; where they run changes nothing."""
     parts, kept = [], 0
     while kept < n:
         # a little more than expected, so that one turn mostly does
         blocks = min(int(1.01 * (n - kept) / (share * BLOCK)) + 1, 1024)
         sizes = [_GROUP] * (blocks // _GROUP) + ([blocks % _GROUP] if blocks % _GROUP else [])
-        tasks = [([(s, BLOCK) for s in root.spawn(m)], *_arrays(m * BLOCK, full), 0) for m in sizes]
-        for task, made in zip(tasks, run_map(run, tasks, jobs)):
+        tasks = [[(s, BLOCK) for s in root.spawn(m)] for m in sizes]
+        for task, arrays in zip(tasks, run_map(run, tasks, jobs, executor)):
             if kept < n:
-                parts.append((task[1:4], made, len(task[0]) * BLOCK))
-                kept += made
-    joined = [np.concatenate([arrays[i][:, :made] for arrays, made, _ in parts], axis=1) for i in range(3)]
-    return joined, sum(p[2] for p in parts)
+                parts.append((arrays, len(task) * BLOCK))
+                kept += arrays[0].shape[1]
+    joined = [np.concatenate([arrays[i] for arrays, _ in parts], axis=1) for i in range(3)]
+    return joined, sum(p[1] for p in parts)
 
 
 def seeds(rng):

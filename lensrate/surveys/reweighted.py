@@ -44,7 +44,7 @@ def reweighed(forecast, scenario):
     )  # fmt: skip
 
 
-def reweighted(forecast, scenario, jobs=1, progress=None):
+def reweighted(forecast, scenario, jobs=1, progress=None, executor=None):
     """Return the forecast of the same campaign under another scenario, cheaply where that can be.
 
     Parameters
@@ -52,7 +52,7 @@ def reweighted(forecast, scenario, jobs=1, progress=None):
     forecast : CampaignForecast
     scenario : Scenario
         One that differs in kick laws, masses or lens classes shares the integrals; any other is forecast anew.
-    jobs, progress
+    jobs, progress, executor
         As in `yields.campaign`.
 
     Returns
@@ -65,4 +65,6 @@ def reweighted(forecast, scenario, jobs=1, progress=None):
         As `yields.campaign`.
     """
     made = reweighed(forecast, scenario)
-    return made if made is not None else campaign(forecast.campaign, scenario, jobs=jobs, progress=progress)
+    if made is not None:
+        return made
+    return campaign(forecast.campaign, scenario, jobs=jobs, executor=executor, progress=progress)

@@ -19,8 +19,9 @@ import numpy as np
 from scipy import stats
 
 from lensrate.inference.calibrate import calibrate
-from lensrate.inference.data import made, mock
+from lensrate.inference.data import made
 from lensrate.inference.likelihood import Likelihood, Nuisances
+from lensrate.inference.mocks import mock
 from lensrate.inference.parameters import parse_parameters
 from lensrate.inference.planned import planned
 from lensrate.inference.templates import Templates
