@@ -12,10 +12,10 @@ import time
 from pathlib import Path
 
 HERE = Path(__file__).parent
-#: the quick ones, in the order of the table; calibration, closure and inference take their time and keep files of
+#: the quick ones, in the order of the table; the others take their time and keep files of
 #: their own
 PARTS = ("limits", "sightline", "startup", "orbits", "events", "odds", "skymap", "synthesis", "growth")
-OWN = ("calibration", "closure", "inference")
+OWN = ("calibration", "closure", "coverage", "inference")
 
 
 def main(arguments):
