@@ -37,7 +37,7 @@ def _typed(command):
 @click.option("--t-0par", "t_0par", type=float, metavar="MJD", help="Reference epoch of geocentric events.")
 @click.option(
     "--outlier", type=float, default=0.01, show_default=True,
-    help="Share of fits wrong in all but t_E: the floor under what a fit rules out.",
+    help="Share of fits wrong in all but t_E (geocentric taken as heliocentric): the floor under what a fit rules out.",
 )
 @click.option(
     "--tolerance", type=float, default=0.05, show_default=True, help="Events so near [deg] share a sightline."
@@ -64,6 +64,9 @@ def odds(
     """Lens-class odds of each event of SAMPLE, or of one event typed with --t-E ... --at L B.
 
     SAMPLE is a table or a file of posterior samples. A typed number without an error gets 5 % (t_E) or 10 %.
+
+    Printed for one event: P, the probability; prior, the class's share of all events there; P/P(star); floor x0.1 and
+    x10, what P were with a tenth and with ten times the share --outlier of wrong fits: far apart where P rests on it.
 
     \b
     Columns of a table (units of the file, else d, mas, mas/yr, kpc, deg, mag, MJD; empty: not measured):
@@ -344,6 +347,7 @@ def report_one(result):
         lines.append(
             f"floor: in a share {result.outlier:g} of fits all but t_E is taken as wrong, so that no slip rules a "
             "class out; P with a tenth and with ten times that share stands beside it"
+            + "; it takes the geocentric t_E as heliocentric" * (e.frame == "geocentric")
         )
     if e.outlier_weight > 0:
         lines.append(f"the fit is wrong with probability {e.outlier_weight:.4f}")

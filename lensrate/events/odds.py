@@ -92,7 +92,8 @@ def odds(sample, scenario="default", *, outlier=OUTLIER, tolerance=0.05, spread=
         Every assumption.
     outlier : float
         Probability that everything in a fit but its t_E is wrong and says nothing: each measured pi_E, theta_E and
-        mu_rel is then spread evenly in the logarithm over four decades.
+        mu_rel is then spread evenly in the logarithm over four decades. That branch takes a geocentric t_E as
+        heliocentric.
     tolerance : float
         Events within this angle [deg] of an earlier one share its sightline.
     spread : iterable of (str, Scenario)
@@ -248,6 +249,7 @@ def event_odds(event, line, outlier=OUTLIER):
         rests=found[0]["rests"],
         t_E=event.t_E,
         pi_E=_size(event),
+        pi_E_range=_reach(event),
     )
 
 
@@ -303,6 +305,26 @@ def _size(event):
         c = best.draws.columns
         size = c.get("pi_E", np.hypot(c["pi_EN"], c["pi_EE"]) if "pi_EN" in c else None)
         return None if size is None else float(np.median(size))
+    return None
+
+
+def _reach(event):
+    """Lower and upper end of the error bar of that size, or None."""
+    best = min(event.solutions, key=lambda s: s.delta_chi2)
+    m = best.measured
+    if "pi_E" in m:
+        return max(m["pi_E"].value - m["pi_E"].lo, 0.0), m["pi_E"].value + m["pi_E"].hi
+    if "pi_EN" in m:
+        north, east = m["pi_EN"], m["pi_EE"]
+        n, e = north.value * north.err, east.value * east.err
+        size = _size(event)
+        # to first order, along the vector
+        along = np.sqrt(max(n * n + e * e + 2 * best.pi_E_corr * n * e, 0.0)) / size if size > 0 else north.err
+        return max(size - float(along), 0.0), size + float(along)
+    if best.draws is not None and _size(event) is not None:
+        c = best.draws.columns
+        size = c.get("pi_E", np.hypot(c["pi_EN"], c["pi_EE"]) if "pi_EN" in c else None)
+        return tuple(float(x) for x in np.quantile(size, [0.16, 0.84]))
     return None
 
 

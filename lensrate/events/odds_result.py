@@ -51,6 +51,8 @@ class EventOdds:
         Of posterior samples.
     rests : tuple of str
         Quantities that entered.
+    pi_E, pi_E_range : float, (float, float), or None
+        Size of the best solution's parallax, and the ends of its error bar.
     range : tuple of ndarray or None
         Lowest and highest probability over the scenarios of a spread, this one included.
     """
@@ -70,6 +72,7 @@ class EventOdds:
     rests: tuple
     t_E: object
     pi_E: float | None = None
+    pi_E_range: tuple | None = None
     range: tuple | None = None
 
     def with_range(self, others):

@@ -68,7 +68,8 @@ def read_events(table, frame, t_0par, skip_bad, where, beside):
             if (frames[i], epochs[i]) != (frames[first], epochs[first]):
                 problems.add(i + 1, "frame", f"not the frame of row {first + 1}, of the same event")
     if problems.found and not skip_bad:
-        raise InputError(problems.text())
+        some = "; the other rows are read with --skip-bad (skip_bad=True)" if len(set(problems.rows)) < n else ""
+        raise InputError(problems.text() + some)
     bad = {r - 1 for r in problems.rows}
     events = []
     for name, rows in groups.items():

@@ -72,6 +72,10 @@ def odds(result, ax=None, **marker):
         ax.scatter([e.t_E.value], [y], marker=shape, zorder=5, **{"s": 46, **face, **marker})
         m = e.t_E
         ax.plot([max(m.value - m.lo, t_lim[0]), m.value + m.hi], [y, y], color=colour, lw=0.9, zorder=4)
+        if e.pi_E and e.pi_E_range:
+            # an error as large as the parallax reaches the border, since zero is off the scale
+            low, high = (np.clip(x, border, pi_lim[1]) for x in e.pi_E_range)
+            ax.plot([m.value, m.value], [low, high], color=colour, lw=0.9, zorder=4)
     ax.set_xscale("log")
     ax.set_yscale("log")
     ax.set_xlim(*t_lim)

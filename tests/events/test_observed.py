@@ -166,6 +166,10 @@ def test_ten_thousand_bad_rows_are_summarised():
         Sample.from_table(t)
     text = str(told.value)
     assert len(text) < 600 and "row 1, column t_E" in text and "9995 more (9995 in column t_E)" in text
+    assert text.endswith("the other rows are read with --skip-bad (skip_bad=True)")
+    with pytest.raises(InputError) as none_left:
+        Sample.from_table(t[:-1])
+    assert "skip" not in str(none_left.value)
     sample = Sample.from_table(t, skip_bad=True)
     assert len(sample) == 1 and sample.left_out == n and sample.events[0].rows == (n + 1,)
     assert "10000 rows left out" in sample.summary()

@@ -584,6 +584,23 @@ def test_kept_sightlines_give_the_same_numbers(forgotten, tmp_path):
         again(files[0] / "below")
 
 
+def test_parallaxes_have_error_bars():
+    """Along the vector: the gradient of its size; bars of the picture span them."""
+    made = [
+        event(t_E=m(60.0, 3.0), pi_E=m(0.1, 0.02, 0.03)),
+        event(t_E=m(70.0, 3.0), pi_EN=m(0.3, 0.02), pi_EE=m(-0.4, 0.05)),
+        event(t_E=m(80.0, 3.0)),
+    ]
+    result = odds(made, UNKICKED)
+    along = np.hypot(0.6 * 0.02, 0.8 * 0.05)
+    assert result.events[0].pi_E_range == pytest.approx((0.08, 0.13))
+    assert result.events[1].pi_E_range == pytest.approx((0.5 - along, 0.5 + along))
+    assert result.events[2].pi_E_range is None
+    ax = result.plot()
+    bars = [line.get_ydata() for line in ax.lines if len(line.get_xdata()) == 2 and np.ptp(line.get_xdata()) == 0]
+    assert [tuple(b) for b in bars] == [pytest.approx(e.pi_E_range) for e in result.events[:2]]
+
+
 def test_mass_spectra_keep_numbers_and_means():
     model = resolve(Scenario.read("default"))
     for name in ("star", "white_dwarf", "black_hole"):
