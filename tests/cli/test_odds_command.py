@@ -1,6 +1,7 @@
 """``lensrate odds``: a typed event, a table, a file of samples, and what it refuses."""
 
 import json
+import re
 
 import numpy as np
 import pytest
@@ -129,3 +130,23 @@ def test_wrong_input(args, words):
 
     result = run(odds, args)
     assert isinstance(result.exception, InputError) and words in str(result.exception)
+
+
+def test_a_night_planned_and_planned_again(tmp_path):
+    """The whole command: table, plan under a budget, file, picture; the next night tells what changed."""
+    running = Table.read(data_folder() / "samples" / "marram_running.ecsv")
+    sample, kept, picture = (tmp_path / name for name in ("two.ecsv", "night.json", "night.png"))
+    running[[str(e) in ("M31-126", "M31-140") for e in running["event"]]].write(sample)
+    args = [str(sample), "--rank", "black_hole", "--facilities", "marram", "--kicks", "none", "--quiet"]
+    args += ["--hours", "12", "--as-of", "2031-06-15", "--seed", "1"]
+    first = run(odds, [*args, "--save", str(kept), "--plot", str(picture)])
+    assert first.exit_code == 0, first.output
+    lines = first.stdout.splitlines()
+    assert "taken within 12 h" in first.stdout and max(map(len, lines)) <= 100
+    for name in ("M31-126", "M31-140"):
+        assert any(line.startswith(f"{name}: black hole") for line in lines)  # the reason in a line
+    hours = re.search(r"in all ([\d.]+) h, ([\d.]+) bits", first.stdout)
+    assert 0 < float(hours[1]) <= 12.0 and float(hours[2]) > 0
+    assert picture.stat().st_size > 10_000
+    later = run(odds, [*args[:-4], "--as-of", "2031-06-25", "--seed", "1", "--since", str(kept)])
+    assert later.exit_code == 0 and "2031-06-25" in later.stdout and later.stdout != first.stdout
