@@ -69,7 +69,7 @@ class Kept:
             return None
         try:
             return self._read(path)
-        except (OSError, ValueError, KeyError, TypeError, AttributeError, OverflowError) as error:
+        except (OSError, ValueError, KeyError, TypeError, AttributeError, OverflowError, RecursionError) as error:
             self.notes.append(f"{path}: not used and made anew ({error})")
             return None
 

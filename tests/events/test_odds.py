@@ -575,7 +575,8 @@ def test_kept_sightlines_give_the_same_numbers(forgotten, tmp_path):
         flipped = bytearray(whole)
         flipped[int(rng.integers(len(whole) // 2, len(whole)))] ^= 16
         other = next(f for f in folder.iterdir() if f != path).read_bytes()
-        for damage in (bytes(flipped), whole[: len(whole) // 3], b"", b"lensrate sightline rates 1\n{}", other):
+        for damage in (bytes(flipped), whole[: len(whole) // 3], b"", b"lensrate sightline rates 1\n{}", other,
+                       b"lensrate sightline rates 1\n" + b"[" * 500_000):  # fmt: skip
             path.write_bytes(damage)
             result = again()
             assert any(path.name in note and "made anew" in note for note in result.warnings())
