@@ -35,7 +35,6 @@ else:
 
         return types.float64(types.int64), codegen
 
-
     @intrinsic
     def _bits32(typingctx, i):
         """As `_bits`, in single precision."""

@@ -14,13 +14,11 @@ os.environ.setdefault("NUMBA_NUM_THREADS", "1")
 
 import astropy.units as u
 import numpy as np
-from report import duration, exponent, heading, median, row
+from bench_limits import kicked_integral
+from report import duration, exponent, fixed_part, heading, median, row
 
 import lensrate
-from lensrate.kernels import rates as kernels
-from lensrate.lensing import rates
 from lensrate.lensing.sampler import Sampler
-from lensrate.units import FOUR_G_C2, KAPPA, MAS
 
 
 def grown(what, sizes, cost):
@@ -28,32 +26,12 @@ def grown(what, sizes, cost):
     costs = [cost(n) for n in sizes]
     power, fixed = exponent(sizes, costs)
     span = f"{what}, {sizes[0]:,} to {sizes[-1]:,}"
-    row(span, f"n^{power:.2f}", f"fixed {duration(fixed)}, last {duration(costs[-1])}")
+    row(span, f"n^{power:.2f}", f"fixed {fixed_part(fixed, costs)}, last {duration(costs[-1])}")
 
 
 def sightlines(n):
     l = (1 + 0.01 * np.arange(n)) * u.deg
     return median(lambda: [lensrate.sightline(x, -3 * u.deg, kicks="none") for x in l], 5)
-
-
-def elements(line, every):
-    """Optical depth and rate of one in so many kicked Gaussians, as `rates.kicked_moments` has them; seconds."""
-    kicked = line.model.kicked
-    D_L, w_L = rates.panel_nodes(rates._lens_edges(line, line.kicked_table.end), rates._LENS_NODES)
-    first, D_S, src = rates._behind(line, D_L, rates._joined(line.edges), rates._KICKED_NODES)
-    out = np.zeros((2, len(kicked.host), D_L.size))
-    depth, bundles = np.empty(D_L.size), np.empty(src.shape)
-    counts = kernels.gather_behind(D_L, first, D_S, src, rates._BUNDLE, depth, bundles)
-    lens = np.ascontiguousarray(line.kicked_table.at(D_L)[:, ::every])
-    element = np.ascontiguousarray(kicked.element_of_row[::every])
-
-    def run():
-        kernels.lens_moments(
-            D_L, w_L, lens, element, first, counts, depth, bundles, FOUR_G_C2, KAPPA, MAS, rates._KICKED_DIRECTIONS,
-            *out,
-        )  # fmt: skip
-
-    return median(run)
 
 
 def main():
@@ -62,7 +40,8 @@ def main():
     result = lensrate.sightline(1 * u.deg, -3 * u.deg)
     line = result._integrals.ready
     n = line.model.kicked.element_of_row.size
-    grown("Gaussians of kicked elements, rate", (n // 8, n // 4, n // 2, n), lambda k: elements(line, n // k))
+    sizes = (n // 8, n // 4, n // 2, n)
+    grown("Gaussians of kicked elements, rate", sizes, lambda k: median(kicked_integral(line, n // k)[0]))
     sampler = Sampler.of(result)
     grown(
         "mock events, core columns", (20_000, 80_000, 320_000, 1_280_000), lambda k: median(lambda: sampler.draw(k, 1))

@@ -129,19 +129,29 @@ def stars(line, best):
     return taken, speeds(best, evaluations), evaluations
 
 
-def kicked(line, best):
+def kicked_integral(line, every=1):
+    """The call that gives optical depth and rate of one in so many kicked Gaussians, as `rates.kicked_moments` makes
+    it, and what it sums over: lens nodes, lens rows, sources behind each node."""
     D_L, w_L = rates.panel_nodes(rates._lens_edges(line, line.kicked_table.end), rates._LENS_NODES)
     first, D_S, src = rates._behind(line, D_L, rates._joined(line.edges), rates._KICKED_NODES)
-    element = line.model.kicked.element_of_row
-    lens = line.kicked_table.at(D_L)
+    element = np.ascontiguousarray(line.model.kicked.element_of_row[::every])
+    lens = np.ascontiguousarray(line.kicked_table.at(D_L)[:, ::every])
     out = np.zeros((2, len(line.model.kicked.host), D_L.size))
     depth, bundles = np.empty(D_L.size), np.empty(src.shape)
     counts = kernels.gather_behind(D_L, first, D_S, src, rates._BUNDLE, depth, bundles)
-    n = rates._KICKED_DIRECTIONS
-    taken = median(lambda: kernels.lens_moments(
-        D_L, w_L, lens, element, first, counts, depth, bundles, FOUR_G_C2, KAPPA, MAS, n, *out
-    ))  # fmt: skip
-    evaluations = 0
+
+    def run():
+        kernels.lens_moments(
+            D_L, w_L, lens, element, first, counts, depth, bundles, FOUR_G_C2, KAPPA, MAS, rates._KICKED_DIRECTIONS,
+            *out,
+        )  # fmt: skip
+
+    return run, (D_L, lens, first, counts, bundles)
+
+
+def kicked(line, best):
+    run, (D_L, lens, first, counts, bundles) = kicked_integral(line)
+    n, taken, evaluations = rates._KICKED_DIRECTIONS, median(run), 0
     for m in range(D_L.size):
         behind = bundles[:, :, first[m] : first[m] + counts[m]]
         used = (lens[0, :, m] > 0)[:, None, None] & (behind[0] > 0)[None]

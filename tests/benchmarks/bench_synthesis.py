@@ -11,7 +11,7 @@ import json
 import subprocess
 import sys
 
-from report import duration, exponent, heading, row
+from report import duration, exponent, fixed_part, heading, row
 
 RUN = """
 import json, os, resource, sys, time
@@ -55,8 +55,9 @@ def main():
     one = [run(n, 1, pair) for n in SIZES]
     for n, r in zip(SIZES, one):
         row(f"{n:,} tracers an element, one thread", duration(r["cpu"]), f"peak {r['MB']:.0f} MB")
-    power, fixed = exponent(SIZES, [r["cpu"] for r in one])
-    row("growth with tracers", f"n^{power:.2f}", f"fixed {duration(fixed)}")
+    costs = [r["cpu"] for r in one]
+    power, fixed = exponent(SIZES, costs)
+    row("growth with tracers", f"n^{power:.2f}", f"fixed {fixed_part(fixed, costs)}")
     two = run(SIZES[-1], 2, pair)
     ratio = one[-1]["wall"] / two["wall"]
     wall = f"one thread {duration(one[-1]['wall'])}"

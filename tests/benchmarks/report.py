@@ -52,6 +52,11 @@ def median(run, n=5, clock=time.process_time):
     return float(np.median(times))
 
 
+def fixed_part(fixed, costs):
+    """The fixed cost as text, none where it is below a hundredth of the first."""
+    return duration(fixed) if fixed > 0.01 * costs[0] else "none"
+
+
 def exponent(sizes, costs):
     """Power with which cost grows with size, and the fixed cost beside it: cost = fixed + c size^p, least squares of
     the relative errors."""

@@ -365,7 +365,6 @@ def test_the_sampler_agrees_with_the_grid(templates):
     np.testing.assert_allclose(a, b, atol=0.12)
 
 
-
 def test_the_stars_slopes_are_those_of_the_sums(templates):
     """Analytic slopes of rates and numbers against differences; the kernel against interpolated tables."""
     L = likelihood(templates, n=4)
