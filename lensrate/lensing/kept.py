@@ -68,18 +68,18 @@ class Kept:
         if not path.exists():
             return None
         try:
-            return self._read(path)
+            return self._read(path, what)
         except (OSError, ValueError, KeyError, TypeError, AttributeError, OverflowError, RecursionError) as error:
             self.notes.append(f"{path}: not used and made anew ({error})")
             return None
 
-    def _read(self, path):
+    def _read(self, path, what):
         with open(path, "rb") as f:
             if f.readline(200) != _MARK:
                 raise ValueError("not a file of sightline rates")
             head = json.loads(f.readline(1 << 20))
-            if head["made"] != self.made:
-                raise ValueError("of other assumptions than its name says")
+            if head["what"] != what or head["made"] != self.made:
+                raise ValueError("not what its name says")
             out = {}
             for name, (dtype, shape) in head["layout"].items():
                 f.seek(-f.tell() % _ALIGN, 1)
@@ -103,6 +103,7 @@ class Kept:
         """
         arrays = {name: np.ascontiguousarray(a) for name, a in arrays.items()}
         head = {
+            "what": what,
             "made": self.made,
             "layout": {name: [a.dtype.str, a.shape] for name, a in arrays.items()},
             "sums": {name: zlib.crc32(a.data.cast("B")) for name, a in arrays.items()},

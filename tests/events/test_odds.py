@@ -574,8 +574,9 @@ def test_kept_sightlines_give_the_same_numbers(forgotten, tmp_path):
         whole = path.read_bytes()
         flipped = bytearray(whole)
         flipped[int(rng.integers(len(whole) // 2, len(whole)))] ^= 16
-        other = next(f for f in folder.iterdir() if f != path).read_bytes()
-        for damage in (bytes(flipped), whole[: len(whole) // 3], b"", b"lensrate sightline rates 1\n{}", other,
+        # every other file under this name: of the same sightline, and of others
+        swapped = [f.read_bytes() for f in folder.iterdir() if f != path]
+        for damage in (bytes(flipped), whole[: len(whole) // 3], b"", b"lensrate sightline rates 1\n{}", *swapped,
                        b"lensrate sightline rates 1\n" + b"[" * 500_000):  # fmt: skip
             path.write_bytes(damage)
             result = again()
