@@ -11,30 +11,8 @@ import math
 import numpy as np
 
 from ._jit import kernel
-from .maths import fexp, mean_abs
-
-#: (1 + q)^2 / q at q = 2.5, ratio of variances, and mean squared over trace, up to which 8 directions give 1e-4
-_ROUND, _SLOW = 4.9, 3.0
-
-
-@kernel
-def mean_speed(ml, mb, cll, clb, cbb, cos, sin):
-    """Mean length of a 2-D Gaussian vector: half-circle trapezoid over the mean |projection|, spectrally exact.
-
-    cos, sin (n,): directions even in half a circle; of 16 or more (an even number) every second one will do unless
-    the Gaussian is long or far from rest.
-    """
-    n = cos.size
-    trace = cll + cbb
-    easy = trace * trace < _ROUND * (cll * cbb - clb * clb) and ml * ml + mb * mb < _SLOW * trace
-    step = 2 if easy and n >= 16 else 1
-    total = 0.0
-    for i in range(0, n, step):
-        c, s = cos[i], sin[i]
-        sig = math.sqrt(max(cll * c * c + 2.0 * clb * c * s + cbb * s * s, 1e-30))
-        total += sig * mean_abs((ml * c + mb * s) / sig)
-    # E|v| = (1/4) oint E|v.e| dphi, and the integrand has period pi
-    return total * 0.5 * math.pi * step / n
+from .maths import fexp
+from .speeds import BLOCK, gather, half_circle, mean_lengths
 
 
 @kernel
@@ -44,11 +22,10 @@ def moments(outer, D_S, src, D_L, w_L, lens, element, four_g_c2, kappa, mas, n_d
     D_S (J,), src (6, S, J); pairs: outer (N,) index into D_S, D_L and w_L (N,) nodes and quadrature weights [kpc],
     lens (6, L, N). Adds to tau (E, S), gamma (E, S) [1/yr] and distance (E,), the rate-weighted sum of D_L.
     """
-    cos = np.empty(n_dir)
-    sin = np.empty(n_dir)
-    for i in range(n_dir):
-        cos[i] = math.cos(math.pi * i / n_dir)
-        sin[i] = math.sin(math.pi * i / n_dir)
+    directions = half_circle(n_dir)
+    vectors, fill = np.empty((2, 5, BLOCK)), np.zeros(2, dtype=np.int64)
+    weight, far, length = np.empty((2, BLOCK)), np.empty((2, BLOCK)), np.empty(BLOCK)
+    place = np.empty((2, BLOCK, 2), dtype=np.int64)
     for p in range(outer.size):
         j = outer[p]
         d = D_L[p]
@@ -67,22 +44,39 @@ def moments(outer, D_S, src, D_L, w_L, lens, element, four_g_c2, kappa, mas, n_d
                 if w <= 0.0:
                     continue
                 tau[e, s] += g_tau * w * n
-                g = (
-                    g_rate
-                    * w
-                    * n
-                    * mean_speed(
-                        lens[1, r, p] - src[1, s, j],
-                        lens[2, r, p] - src[2, s, j],
-                        lens[3, r, p] + src[3, s, j],
-                        lens[4, r, p] + src[4, s, j],
-                        lens[5, r, p] + src[5, s, j],
-                        cos,
-                        sin,
-                    )
-                )
-                gamma[e, s] += g
-                distance[e] += g * d
+                kind = gather(
+                    lens[1, r, p] - src[1, s, j],
+                    lens[2, r, p] - src[2, s, j],
+                    lens[3, r, p] + src[3, s, j],
+                    lens[4, r, p] + src[4, s, j],
+                    lens[5, r, p] + src[5, s, j],
+                    n_dir, vectors, fill,
+                )  # fmt: skip
+                k = fill[kind] - 1
+                weight[kind, k], far[kind, k] = g_rate * w * n, d
+                place[kind, k, 0], place[kind, k, 1] = e, s
+                if fill[kind] == BLOCK:
+                    _add(kind, vectors, fill, directions, length, weight, place, gamma)
+                    _add_distance(kind, length, weight, far, place, BLOCK, distance)
+    for kind in range(2):
+        n_left = fill[kind]
+        _add(kind, vectors, fill, directions, length, weight, place, gamma)
+        _add_distance(kind, length, weight, far, place, n_left, distance)
+
+
+@kernel
+def _add(kind, vectors, fill, directions, length, weight, place, gamma):
+    """Add the rates of a block's vectors to gamma (E, S) at their places, leave their mean lengths, empty the block."""
+    mean_lengths(vectors, kind, fill[kind], directions, length)
+    for k in range(fill[kind]):
+        gamma[place[kind, k, 0], place[kind, k, 1]] += weight[kind, k] * length[k]
+    fill[kind] = 0
+
+
+@kernel
+def _add_distance(kind, length, weight, far, place, n, distance):
+    for k in range(n):
+        distance[place[kind, k, 0]] += weight[kind, k] * length[k] * far[kind, k]
 
 
 @kernel
@@ -135,11 +129,10 @@ def lens_moments(D_L, w_L, lens, element, first, n_bundles, depth, src, four_g_c
     D_L, w_L (M,) nodes and weights [kpc], lens (6, L, M); first, n_bundles, depth, src from gather_behind. Adds to tau
     and gamma (E, M).
     """
-    cos = np.empty(n_dir)
-    sin = np.empty(n_dir)
-    for i in range(n_dir):
-        cos[i] = math.cos(math.pi * i / n_dir)
-        sin[i] = math.sin(math.pi * i / n_dir)
+    directions = half_circle(n_dir)
+    vectors, fill = np.empty((2, 5, BLOCK)), np.zeros(2, dtype=np.int64)
+    weight, length = np.empty((2, BLOCK)), np.empty(BLOCK)
+    place = np.empty((2, BLOCK, 2), dtype=np.int64)
     for m in range(D_L.size):
         d = D_L[m]
         for r in range(element.size):
@@ -153,15 +146,21 @@ def lens_moments(D_L, w_L, lens, element, first, n_bundles, depth, src, four_g_c
                 for s in range(src.shape[1]):
                     w = src[0, s, p]
                     if w > 0.0:
-                        gamma[e, m] += g_rate * w * mean_speed(
+                        kind = gather(
                             lens[1, r, m] - src[1, s, p],
                             lens[2, r, m] - src[2, s, p],
                             lens[3, r, m] + src[3, s, p],
                             lens[4, r, m] + src[4, s, p],
                             lens[5, r, m] + src[5, s, p],
-                            cos,
-                            sin,
-                        )
+                            n_dir, vectors, fill,
+                        )  # fmt: skip
+                        k = fill[kind] - 1
+                        weight[kind, k] = g_rate * w
+                        place[kind, k, 0], place[kind, k, 1] = e, m
+                        if fill[kind] == BLOCK:
+                            _add(kind, vectors, fill, directions, length, weight, place, gamma)
+    for kind in range(2):
+        _add(kind, vectors, fill, directions, length, weight, place, gamma)
 
 
 @kernel

@@ -11,6 +11,7 @@ import numpy as np
 
 from ..galaxy.model import Galaxy
 from ..kernels import rates as kernels
+from ..kernels import speeds
 from ..lensing import distributions, geometry, rates
 from ..lensing.quadrature import Isogrid, Numerics
 from ..lensing.sightline import sightline
@@ -73,8 +74,10 @@ def _halo_mass(radius):
 
 def _speed(m_l, m_b, s_1, s_2):
     """Mean length of a 2-D Gaussian velocity."""
-    angle = np.pi * np.arange(_DIRECTIONS) / _DIRECTIONS
-    return float(kernels.mean_speed(m_l, m_b, s_1**2, 0.0, s_2**2, np.cos(angle), np.sin(angle)))
+    vectors, length = np.zeros((2, 5, speeds.BLOCK)), np.empty(speeds.BLOCK)
+    vectors[1, :, 0] = m_l, m_b, s_1**2, 0.0, s_2**2
+    speeds.mean_lengths(vectors, 1, 1, speeds.half_circle(_DIRECTIONS), length)
+    return float(length[0])
 
 
 def _wide_timescales(step_dex, rows):

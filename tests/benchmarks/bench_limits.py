@@ -28,6 +28,7 @@ from lensrate.kernels import rates as kernels
 from lensrate.kernels.maths import fexp, mean_abs
 from lensrate.kernels.orbits import follow
 from lensrate.kernels.potential import HOMEOIDS, LANES, MIYAMOTO_NAGAI, NFW
+from lensrate.kernels.speeds import ROUND, SLOW
 from lensrate.lensing import rates
 from lensrate.lensing.sampler import Sampler
 from lensrate.remnants.orbits import step
@@ -102,16 +103,16 @@ def least(best, **counts):
 
 
 def directions(lens, src, n):
-    """Directions that `mean_speed` takes of n, for arrays of lens and source moments."""
+    """Directions that `mean_lengths` takes of n, for arrays of lens and source moments."""
     ml, mb, cll, clb, cbb = lens[1] - src[1], lens[2] - src[2], *(lens[i] + src[i] for i in (3, 4, 5))
     trace = cll + cbb
-    easy = (trace**2 < kernels._ROUND * (cll * cbb - clb**2)) & (ml**2 + mb**2 < kernels._SLOW * trace)
-    return np.where(easy & (n >= 16), (n + 1) // 2, n)
+    easy = (trace**2 < ROUND * (cll * cbb - clb**2)) & (ml**2 + mb**2 < SLOW * trace)
+    return np.where(easy & (n >= 16), n // 2, n)
 
 
 def speeds(best, evaluations):
-    """A direction of `mean_speed`: a root, a division, a look-up, and 14 multiply-adds by its text."""
-    return least(best, root=evaluations, divide=evaluations, look=evaluations, add=14 * evaluations)
+    """A direction of `mean_lengths`: a root, a division, a look-up, and 6 multiply-adds by its text."""
+    return least(best, root=evaluations, divide=evaluations, look=evaluations, add=6 * evaluations)
 
 
 def stars(line, best):
