@@ -255,7 +255,7 @@ def speeds(
     """
     K, m = mu.shape[1], table.shape[0]
     per_log = m / h
-    W = np.zeros((K * m, table.shape[1]))
+    W = np.zeros((K * m, table.shape[1] + 1))
     for i in range(n_rows):
         k0, k1 = window[i, 0], window[i, 1]
         g, stop = first[base * n_rows + i], first[base * n_rows + i + 1]

@@ -75,41 +75,59 @@ def merge_rows(src, group, out):
 
 
 @kernel
-def interpolate_rows(step, table, D, out):
-    """Fill out (6, rows, N) at distances D from a table (6, rows, n) at step, 2 step, ...; nothing beyond its end.
+def places(step, n, D, cell, part, here, beyond):
+    """Fill the places of distances D in a table at step, 2 step, ... n step, (N,) each.
 
-    Density and velocity are linear in distance; before the first point the first one's hold.
+    cell and part: the point before, and how far toward the next one; here, beyond: distances of both over that of D.
     """
-    n = table.shape[2]
-    cell = np.empty(D.size, dtype=np.int64)
-    part = np.empty(D.size)
-    # proper motions of a given velocity go with the inverse of the distance: near the observer they bend, velocities
-    # do not; these are the table's distances over that of the point
-    here = np.empty(D.size)
-    beyond = np.empty(D.size)
     for i in range(D.size):
         x = D[i] / step - 1.0
         near = x < 0.0
         cell[i] = 0 if near else min(int(x), n - 1)
         part[i] = 0.0 if near else x - cell[i]
+        # proper motions of a given velocity go with the inverse of the distance: near the observer they bend,
+        # velocities do not
         here[i] = (cell[i] + 1) * step / D[i]
         beyond[i] = (cell[i] + 2) * step / D[i]
+
+
+@kernel(inline="always")
+def density_between(rho, j, t):
+    """Density at a place of a table's row, (n,); nothing beyond its end."""
+    return (1.0 - t) * rho[j] + t * rho[j + 1] if j < rho.size - 1 else 0.0
+
+
+@kernel(inline="always")
+def motion_between(table, j, t, here, beyond, out):
+    """Fill out (5,) with the motion at a place of a table (6, n) where its density is not zero."""
+    # where one end is empty its motion means nothing
+    u = 0.0 if table[0, j + 1] <= 0.0 else (1.0 if table[0, j] <= 0.0 else t)
+    a, b = (1.0 - u) * here, u * beyond
+    for q in range(1, 3):
+        out[q - 1] = a * table[q, j] + b * table[q, j + 1]
+    a, b = a * here, b * beyond
+    for q in range(3, 6):
+        out[q - 1] = a * table[q, j] + b * table[q, j + 1]
+
+
+@kernel
+def interpolate_rows(step, table, D, out):
+    """Fill out (6, rows, N) at distances D from a table (6, rows, n) at step, 2 step, ...; nothing beyond its end.
+
+    Density and velocity are linear in distance; before the first point the first one's hold.
+    """
+    cell = np.empty(D.size, dtype=np.int64)
+    part, here, beyond = np.empty(D.size), np.empty(D.size), np.empty(D.size)
+    places(step, table.shape[2], D, cell, part, here, beyond)
+    motion = np.empty(5)
     for r in range(table.shape[1]):
-        rho = table[0, r]
         for i in range(D.size):
-            j, t = cell[i], part[i]
-            if j >= n - 1:
-                for q in range(6):
-                    out[q, r, i] = 0.0
-                continue
-            out[0, r, i] = (1.0 - t) * rho[j] + t * rho[j + 1]
+            out[0, r, i] = density_between(table[0, r], cell[i], part[i])
             if out[0, r, i] <= 0.0:
+                if cell[i] >= table.shape[2] - 1:
+                    for q in range(1, 6):
+                        out[q, r, i] = 0.0
                 continue
-            # where one end is empty its motion means nothing
-            u = 0.0 if rho[j + 1] <= 0.0 else (1.0 if rho[j] <= 0.0 else t)
-            a, b = (1.0 - u) * here[i], u * beyond[i]
-            for q in range(1, 3):
-                out[q, r, i] = a * table[q, r, j] + b * table[q, r, j + 1]
-            a, b = a * here[i], b * beyond[i]
-            for q in range(3, 6):
-                out[q, r, i] = a * table[q, r, j] + b * table[q, r, j + 1]
+            motion_between(table[:, r], cell[i], part[i], here[i], beyond[i], motion)
+            for q in range(5):
+                out[q + 1, r, i] = motion[q]

@@ -170,6 +170,12 @@ class _Table:
         self.step = self.end / n
         self.values = kicked.profile(ready.line, self.step * np.arange(1, n + 1) * (1 - 1e-12))
 
+    def places(self, D):
+        """Return where distances D [kpc], (n,), are in the table, as its kernels take it."""
+        out = np.empty(D.size, dtype=np.int64), np.empty(D.size), np.empty(D.size), np.empty(D.size)
+        profiles.places(self.step, self.values.shape[2], D, *out)
+        return out
+
     def at(self, D):
         """Return the profile at distances D [kpc], (6, rows, n)."""
         out = np.empty((6, self.values.shape[1], D.size))
@@ -281,8 +287,12 @@ def kicked_rate_density(ready, grid):
     light = src[0].sum(axis=0) > 1e-7 * src[0].sum(axis=0).max()
     row, D, src = row[light], D[light], _merged(ready.model, np.ascontiguousarray(src[:, :, light]), two=True)
     kicked = ready.model.kicked
-    lens = ready.kicked_table.at(1.0 / (grid.pi[row] + 1.0 / D))
-    return rings.rate_density(grid, row, D, src, lens, kicked.element_of_row, _KICKED_RINGS, 1e-4)
+    # the table itself: a profile at every node would take 200 MB, and most nodes are too faint to be looked at
+    table = ready.kicked_table
+    places = table.places(1.0 / (grid.pi[row] + 1.0 / D))
+    return rings.rate_density(
+        grid, row, D, src, table.values, kicked.element_of_row, _KICKED_RINGS, 1e-4, places
+    )
 
 
 def _joined(edges):

@@ -50,6 +50,9 @@ class Rings:
         # the density per ln rho of the length of a round unit Gaussian about kappa (Rice 1945, eq. 3.10-11)
         table = rho**2 * np.exp(-0.5 * (rho - kappa[:, None]) ** 2) * i0e(rho * kappa[:, None])
         ends = J - np.argmax((table > _NOTHING)[:, :, ::-1].any(axis=0), axis=1)
+        # `apply_table` takes rows four at a time, to the last one's end
+        ends = np.maximum.accumulate(ends)
+        table[:, np.arange(J) >= ends[:, None]] = 0.0
         return cls(table, ends, per_kappa, 2.5 * directions)
 
 
@@ -65,7 +68,10 @@ def _rules():
     return x, w / w.sum(axis=1, keepdims=True)
 
 
-def rate_density(grid, row, D_S, src, lens, element, directions, weight_cut):
+_AT_NODES = np.empty(0, dtype=np.int64), np.empty(0), np.empty(0), np.empty(0)
+
+
+def rate_density(grid, row, D_S, src, lens, element, directions, weight_cut, places=_AT_NODES):
     """Return the mass-free rate density of a sightline's nodes.
 
     Parameters
@@ -74,13 +80,15 @@ def rate_density(grid, row, D_S, src, lens, element, directions, weight_cut):
     row, D_S : ndarray, shape (N,)
         Row of the grid, rising, and source distance [kpc] of each node.
     src, lens : ndarray, shapes (6, S, N), (6, L, N)
-        Profiles at the nodes; source weights sum to one over a row.
+        Profiles at the nodes; source weights sum to one over a row. With `places`, the lens's is a table (6, L, n).
     element : ndarray of int, shape (L,)
         Element of each lens row, rising.
     directions : float
         Fineness; errors fall with its fourth power.
     weight_cut : float
         Nodes below this part of an element's largest weight are dropped.
+    places : tuple of ndarray, shape (N,) each
+        Of the nodes in a table along the sightline, from `kernels.profile.places`.
 
     Returns
     -------
@@ -92,7 +100,7 @@ def rate_density(grid, row, D_S, src, lens, element, directions, weight_cut):
     rings = _rings(grid.h, grid.mu.size, directions)
     T = np.empty((int(element[-1]) + 1, grid.pi.size, grid.mu.size))
     kernels.rate_density(
-        row, geometry, src, lens, element, grid.mu, rings.table, rings.ends, _ORDERS, *_rules(), rings.accuracy,
-        rings.per_kappa, weight_cut, T,
+        row, geometry, src, lens, *places, element, grid.mu, rings.table, rings.ends, _ORDERS, *_rules(),
+        rings.accuracy, rings.per_kappa, weight_cut, T,
     )  # fmt: skip
     return T
