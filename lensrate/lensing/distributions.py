@@ -5,7 +5,7 @@ ln t_E = (ln kappa M pi_rel) / 2 - ln mu_rel, ln theta_E = (ln kappa M pi_rel) /
 """
 
 from dataclasses import dataclass
-from functools import lru_cache
+from functools import cached_property, lru_cache
 
 import numpy as np
 
@@ -13,6 +13,8 @@ from ..kernels import rates as kernels
 from ..units import DAYS_PER_YEAR, KAPPA
 
 __all__ = ["MassGrid", "Quantiles", "joint", "timescale_grid", "timescales", "unit_timescales"]
+
+_SMALL = 200_000  # multiplications that the libraries below numpy do in one thread: two would wait for each other
 
 
 @dataclass(frozen=True)
@@ -25,7 +27,7 @@ class MassGrid:
     mass: np.ndarray  # (classes, elements) sum of number M, exact
 
     @classmethod
-    def deposit(cls, h, spectra):
+    def deposit(cls, h, spectra, bins=()):
         """Lay spectra down with 4-point Lagrange weights, which keep moments up to the third power of ln M.
 
         Parameters
@@ -34,29 +36,36 @@ class MassGrid:
             Step of ln t_E; masses are 2h apart in ln M.
         spectra : list of list of MassSpectrum or None
             [class][element]; None where a class does not ride on an element.
+        bins : list of (int, int, ndarray (n,), ndarray (k, n))
+            Class, first element, masses and numbers of elements beyond those of `spectra`.
 
         Returns
         -------
         MassGrid
         """
-        shape = (len(spectra), len(spectra[0]) if spectra else 0)
+        known = len(spectra[0]) if spectra else 0
+        shape = len(spectra), max([known, *(first + len(numbers) for _, first, _, numbers in bins)])
         root, mass = np.zeros(shape), np.zeros(shape)
-        # kick bins share one array of masses: they are laid down together
+        # components born alike share one array of masses: they are laid down together
         alike = {}
         for c, row in enumerate(spectra):
             for e, s in enumerate(row):
                 if s is not None and s.mass.size:
-                    alike.setdefault(id(s.mass), (s.mass, [], []))[1].append((c, e))
-                    alike[id(s.mass)][2].append(s.number)
-        if not alike:
+                    masses, classes, elements, numbers = alike.setdefault(id(s.mass), (s.mass, [], [], []))
+                    classes.append(c)
+                    elements.append(e)
+                    numbers.append(s.number)
+        parts = [(masses, (c, e), np.array(numbers)) for masses, c, e, numbers in alike.values()]
+        for c, first, masses, numbers in bins:
+            if masses.size:
+                parts.append((masses, (c, slice(first, first + len(numbers))), numbers))
+        if not parts:
             return cls(0, np.zeros((*shape, 4)), root, mass)
-        low, high = min(m.min() for m, _, _ in alike.values()), max(m.max() for m, _, _ in alike.values())
-        k0 = int(np.floor(np.log(low) / (2 * h))) - 1
-        n = int(np.floor(np.log(high) / (2 * h))) + 3 - k0
+        laid = [_lagrange(np.asarray(masses, dtype=float).tobytes(), h) for masses, _, _ in parts]
+        k0 = min(first for _, _, first in laid)
+        n = max(first + matrix.shape[1] for _, matrix, first in laid) - k0
         weight = np.zeros((*shape, n))
-        for masses, places, numbers in alike.values():
-            roots, matrix, first = _lagrange(np.asarray(masses, dtype=float).tobytes(), h)
-            at, numbers = tuple(np.array(places).T), np.array(numbers)
+        for (masses, at, numbers), (roots, matrix, first) in zip(parts, laid):
             w = numbers * roots
             root[at], mass[at] = w.sum(axis=1), numbers @ masses
             weight[*at, first - k0 : first - k0 + matrix.shape[1]] = w @ matrix
@@ -120,12 +129,17 @@ def timescales(grid, unit, masses, by_element=True):
     n, m = weight.shape[2], unit.shape[1]
     t = timescale_grid(grid)[0] * np.exp(grid.h * (np.arange(m + n - 1) + masses.k0))
     by_class, elements = np.zeros((weight.shape[0], t.size)), np.zeros((unit.shape[0] if by_element else 0, t.size))
-    together = weight.sum(axis=0)
-    for k in range(n):
-        if np.any(weight[:, :, k]):
-            by_class[:, k : k + m] += weight[:, :, k] @ unit
-            if by_element:
-                elements[:, k : k + m] += together[:, k, None] * unit
+    for c in range(weight.shape[0]):
+        riding, shifts = (np.flatnonzero(np.any(weight[c], axis=axis)) for axis in (1, 0))
+        if riding.size:
+            rows, few = unit[riding], max(1, _SMALL // (riding.size * m))
+            for some in (shifts[i : i + few] for i in range(0, shifts.size, few)):
+                for k, row in zip(some, weight[c][np.ix_(riding, some)].T @ rows):
+                    by_class[c, k : k + m] += row
+    if by_element:
+        together = weight.sum(axis=0)
+        for k in range(n):
+            elements[:, k : k + m] += together[:, k, None] * unit
     # positive but for the Lagrange weights' undershoot at sharp mass edges
     return t, np.maximum(by_class, 0.0), np.maximum(elements, 0.0)
 
@@ -168,6 +182,15 @@ def joint(grid, T, masses, which):
     return t, y, out
 
 
+@lru_cache(maxsize=16)
+def _refined(t, fine):
+    """Step of the logarithm of even timescales (given as bytes), and both refined: ln t_E and t_E [d]."""
+    x = np.log(np.frombuffer(t))
+    h = x[1] - x[0]
+    finer = np.append((x[:-1, None] + np.arange(fine) / fine * h).ravel(), x[-1])
+    return h, finer, np.exp(finer)
+
+
 class Quantiles:
     """Cumulative distribution of a rate per ln t_E, for quantiles, means and rates inside a range.
 
@@ -182,19 +205,22 @@ class Quantiles:
     """
 
     def __init__(self, t, pdf, fine=8):
-        x = np.log(t)
-        h = x[1] - x[0]
+        h, self._x, self._t = _refined(np.ascontiguousarray(t, dtype=float).tobytes(), fine)
         padded = np.concatenate([[0.0], pdf, [0.0]])
         slope = 0.5 * (padded[2:] - padded[:-2])
         s = np.arange(fine) / fine
         f0, f1, d0, d1 = pdf[:-1, None], pdf[1:, None], slope[:-1, None], slope[1:, None]
         f = f0 + s * (d0 + s * (3 * (f1 - f0) - 2 * d0 - d1 + s * (2 * (f0 - f1) + d0 + d1)))
-        self._x = np.append((x[:-1, None] + s * h).ravel(), x[-1])
         self._f = np.maximum(np.append(f.ravel(), pdf[-1]), 0.0)
-        step = h / fine
-        self._cum = np.concatenate([[0.0], np.cumsum(0.5 * step * (self._f[1:] + self._f[:-1]))])
-        tf = np.exp(self._x) * self._f
-        self._cum_t = np.concatenate([[0.0], np.cumsum(0.5 * step * (tf[1:] + tf[:-1]))])
+        self._step = h / fine
+        self._cum = self._summed(self._f)
+
+    def _summed(self, f):
+        return np.concatenate([[0.0], np.cumsum(0.5 * self._step * (f[1:] + f[:-1]))])
+
+    @cached_property
+    def _cum_t(self):
+        return self._summed(self._t * self._f)
 
     def below(self, t):
         """Return the rate of events with a t_E below each of `t` [d], of its shape."""

@@ -101,7 +101,7 @@ def assemble(model, integrals, u_0, limits, where):
     ConvergenceError
         A rate came out negative or not finite.
     """
-    masses = distributions.MassGrid.deposit(integrals.grid.h, model.spectra())
+    masses = distributions.MassGrid.deposit(integrals.grid.h, *model.by_masses())
     t, pdf, pdf_e = distributions.timescales(integrals.grid, integrals.unit, masses, limits is not None)
     tau, gamma = masses.mass * integrals.tau, u_0 * masses.root * integrals.gamma  # (C, E)
     error = u_0 * np.sqrt(np.sum((masses.root * integrals.error) ** 2, axis=1))

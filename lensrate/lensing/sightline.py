@@ -272,7 +272,7 @@ class Sightline:
         """
         one_of("y", y, ("pi_E", "theta_E"))
         grid = self._integrals.grid
-        masses = distributions.MassGrid.deposit(grid.h, self._model.spectra())
+        masses = distributions.MassGrid.deposit(grid.h, *self._model.by_masses())
         t, values, density = distributions.joint(grid, self._integrals.T, masses, y)
         unit = u.mas if y == "theta_E" else u.one
         named = {name: self.u_0_limit * d / u.yr for name, d in zip(self.classes, density)}

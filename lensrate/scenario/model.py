@@ -85,8 +85,8 @@ class Model:
         return [*range(self.n_stellar), *hosts]
 
     @cached_property
-    def _spectra(self):
-        m = self.n_stellar
+    def _stellar(self):
+        """Spectrum of each class on each component's own element; of remnants those that are not kicked."""
         out = {}
         for i, (component, pop) in enumerate(zip(self.galaxy.components, self.populations)):
             for name in CLASSES:
@@ -94,18 +94,44 @@ class Model:
             for name, own in self.own.items():
                 rides = component.name in own.rides_on or component.element in own.rides_on
                 out[name, i] = own.spectrum(pop) if rides else None
-        if self.kicked is not None:
-            for i, pop in enumerate(self.populations):
-                if pop is None or i not in self.kicked.host:
-                    continue
-                for name, law in self.laws.items():
-                    shares = _shares(law, pop.spectra[name].mass, self.kicked.edges)
-                    first = m + list(self.kicked.host).index(i)
-                    out[name, i] = _times(pop.spectra[name], shares[0])
-                    # bin 0 of the fields is the synthesised unkicked population: a check, not used
-                    out[name, first] = None
-                    for k in range(1, len(self.kicked.edges)):
-                        out[name, first + k] = _times(pop.spectra[name], shares[k])
+        for (name, i), numbers in self._binned.items():
+            spectrum = self.populations[i].spectra[name]
+            out[name, i] = MassSpectrum(spectrum.mass, numbers[0], spectrum.initial_mass)
+        return out
+
+    @cached_property
+    def _spectra(self):
+        out = dict(self._stellar)
+        for (name, i), numbers in self._binned.items():
+            spectrum, first = self.populations[i].spectra[name], self._first_bin(i)
+            # bin 0 of the fields is the synthesised unkicked population: a check, not used
+            out[name, first] = None
+            for k in range(1, len(numbers)):
+                out[name, first + k] = MassSpectrum(spectrum.mass, numbers[k], spectrum.initial_mass)
+        return out
+
+    def _first_bin(self, i):
+        return self.n_stellar + self.kicked.host.index(i)
+
+    @cached_property
+    def _binned(self):
+        """Numbers at the mass nodes in each kick bin, (bins + 1, n), by class and component that the fields hold."""
+        bins = {} if self.kicked is None else self._bins
+        return {(name, i): self.populations[i].spectra[name].number * share for (name, i), share in bins.items()}
+
+    @cached_property
+    def _bins(self):
+        """Shares of the kick bins, as `_shares`, by class and component that the fields hold."""
+        known, out = {}, {}
+        for i in dict.fromkeys(self.kicked.host):
+            if self.populations[i] is None:
+                continue
+            for name, law in self.laws.items():
+                mass = self.populations[i].spectra[name].mass
+                # components born alike share their masses
+                if (name, id(mass)) not in known:
+                    known[name, id(mass)] = _shares(law, mass, self.kicked.edges)
+                out[name, i] = known[name, id(mass)]
         return out
 
     @cached_property
@@ -130,6 +156,23 @@ class Model:
         get, elements = self._spectra.get, range(len(self.component_of))
         return [[get((name, i)) for i in elements] for name in self.classes]
 
+    def by_masses(self):
+        """Return what `spectra` does with the kick bins of a class and component together, as `MassGrid.deposit` takes.
+
+        Returns
+        -------
+        stellar : list of list of MassSpectrum or None
+            By class and component.
+        bins : list of (int, int, ndarray (n,), ndarray (k, n))
+            Class, first element, masses, and numbers on this element and those that follow.
+        """
+        stellar = [[self._stellar.get((name, i)) for i in range(self.n_stellar)] for name in self.classes]
+        bins = []
+        for (name, i), numbers in self._binned.items():
+            mass = self.populations[i].spectra[name].mass
+            bins.append((CLASSES.index(name), self._first_bin(i) + 1, mass, numbers[1:]))
+        return stellar, bins
+
     def without_fields(self):
         """Return the components of stars that the kick-resolved fields do not hold."""
         held = set(self.kicked.host)
@@ -139,11 +182,11 @@ class Model:
     def escaped_at_birth(self, name):
         """Return the share of a class that is kicked faster than the fields' last bin."""
         born = kept = 0.0
-        for i, pop in enumerate(self.populations):
-            if pop is not None and i in self.kicked.host and pop.spectra[name].mass.size:
-                shares = _shares(self.laws[name], pop.spectra[name].mass, self.kicked.edges).sum(axis=0)
-                born += pop.spectra[name].number.sum()
-                kept += pop.spectra[name].number @ shares
+        for (own, i), shares in self._bins.items():
+            number = self.populations[i].spectra[name].number
+            if own == name and number.size:
+                born += number.sum()
+                kept += number @ shares.sum(axis=0)
         return 1.0 - kept / born if born > 0 else 0.0
 
     def changed(self, scenario):
@@ -205,10 +248,6 @@ def _known_shares(law, mass, edges):
         out = np.concatenate([below[:1], np.diff(below, axis=0)])
     out.setflags(write=False)
     return out
-
-
-def _times(spectrum, share):
-    return MassSpectrum(spectrum.mass, spectrum.number * share, spectrum.initial_mass)
 
 
 def _rebuilt(base, changed):
@@ -300,8 +339,9 @@ def _build(scenario):
 def _references(scenario, galaxy):
     out = list(galaxy.references)
     for name in dict.fromkeys(scenario.imf or c.imf for c in galaxy.components if c.stars):
-        out += Imf.read(name).references
-    out += [*Lifetimes.read(scenario.lifetimes).references, *Ifmr.read(scenario.ifmr).references]
+        out.append(read_set("imf", name)["reference"])
+    # what is in them was looked at when they were read for their numbers
+    out += [read_set("lifetimes", scenario.lifetimes)["reference"], read_set("ifmr", scenario.ifmr)["reference"]]
     for name in ("dwarf_sequence", "giants", "extinction_law", scenario.dust):
         if not (scenario.luminosity and name in ("dwarf_sequence", "giants")):
             out.append(read_set("sources", name)["reference"])

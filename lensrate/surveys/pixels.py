@@ -77,7 +77,7 @@ class PixelWork:
     @cached_property
     def masses(self):
         """Mass spectra of classes on elements, on the grid of the t_E distribution."""
-        return distributions.MassGrid.deposit(self._step * LN10, self.model.spectra())
+        return distributions.MassGrid.deposit(self._step * LN10, *self.model.by_masses())
 
     @property
     def _step(self):
@@ -158,7 +158,7 @@ class PixelWork:
         masses = self.masses
         if abs(grid.h / (self._step * LN10) - 1) > 1e-9:
             # one source distance has a finer grid of its own
-            masses = distributions.MassGrid.deposit(grid.h, self.model.spectra())
+            masses = distributions.MassGrid.deposit(grid.h, *self.model.by_masses())
         t, pdf, _ = distributions.timescales(grid, unit, masses, by_element=False)
         return np.array([self.efficiency.mean(t, f)[0] for f in pdf])
 
