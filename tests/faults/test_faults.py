@@ -42,8 +42,11 @@ def run(*args):
 
 
 def start(*args):
+    # a suite in the background of a script ignores Ctrl-C, and so would what it starts
+    program = "import os, signal, sys; signal.signal(signal.SIGINT, signal.SIG_DFL); os.execv(sys.argv[1], sys.argv[1:])"
+    asked = [sys.executable, "-m", "lensrate", *map(str, args)]
     return subprocess.Popen(
-        [sys.executable, "-m", "lensrate", *map(str, args)], stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True
+        [sys.executable, "-c", program, *asked], stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True
     )
 
 
