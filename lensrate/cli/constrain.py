@@ -6,6 +6,7 @@ from .base import Command
 from .options import dask
 from .text import columns, number, safe, wrap
 
+_MOST_CASES = 8  # that a table names
 _WIDTHS = ("rate", "field_rate", "shift", "stretch", "slope")
 
 
@@ -24,6 +25,9 @@ _WIDTHS = ("rate", "field_rate", "shift", "stretch", "slope")
 @click.option("--fix-nuisances", is_flag=True, help="Hold all of them fixed: narrower than what is known.")
 @click.option("--galaxy", "galaxies", metavar="NAME|FILE", multiple=True,
               help="A further scenario, as likely beforehand, to average over; may be repeated.")
+@click.option("--family", metavar="NAME|FILE",
+              help="Average over all combinations of this family of assumptions, by its weights if it states some.")
+@click.option("--axis", "axes", metavar="NAME", multiple=True, help="Only this axis of --family; may be repeated.")
 @click.option("--selection", "stages", metavar="STAGE:CLASS=P", multiple=True,
               help="Declared probability that an event of a class reached parallax, followed or mass.")
 @click.option("--listed", default="found", show_default=True, metavar="STAGE",
@@ -62,9 +66,9 @@ _WIDTHS = ("rate", "field_rate", "shift", "stretch", "slope")
 @click.option("--overwrite", is_flag=True, help="Replace existing files.")
 @click.option("--quiet", "-q", is_flag=True, help="No messages on stderr.")
 def constrain(
-    sample, plan, campaign_file, parameters, priors, widths, fix_nuisances, galaxies, stages, listed, counts, only_t_E,
-    limit_class, masses, scenario_name, kicks, bh_kicks, seasons, measured, mass_error, sigma, mocks, points, steps,
-    seed, frame, t_0par, skip_bad, samples_file, plot, jobs, address, save, as_json, overwrite, quiet,
+    sample, plan, campaign_file, parameters, priors, widths, fix_nuisances, galaxies, family, axes, stages, listed,
+    counts, only_t_E, limit_class, masses, scenario_name, kicks, bh_kicks, seasons, measured, mass_error, sigma, mocks,
+    points, steps, seed, frame, t_0par, skip_bad, samples_file, plot, jobs, address, save, as_json, overwrite, quiet,
 ):  # fmt: skip
     """Constrain kick law and numbers of remnants from observed events (SAMPLE).
 
@@ -75,6 +79,7 @@ def constrain(
     Examples:
       lensrate constrain events.ecsv --campaign marram -p kick_scale -p neutron_stars --plot corner.png
       lensrate constrain events.ecsv --campaign marram -p black_holes --prior black_holes=log-uniform:0.1,10
+      lensrate constrain events.ecsv --campaign marram -p neutron_stars --family default --axis bar_mass --axis imf
       lensrate constrain --from marram -p kick_scale --seasons 10 --measured neutron_star=0.5
       lensrate constrain events.ecsv --campaign c.toml --scenario s.toml --limit-class dark --masses 0.01,1,30
     """
@@ -86,6 +91,7 @@ def constrain(
     if plot:
         check_target(plot, PICTURES, overwrite, "--plot")
     _check_together(sample, plan, campaign_file, samples_file, plot, limit_class, masses, parameters)
+    _refuse_idle(plan, limit_class, parameters, mocks, fix_nuisances)
     from ..inference.likelihood import Nuisances
     from ..inference.parameters import parse_parameters
     from ..scenario import Scenario
@@ -119,7 +125,8 @@ def constrain(
 
             result = infer(
                 events, parameters, survey, base, priors=priors, nuisances=nuisances, selection=selection,
-                counts=counts, galaxies=galaxies, points=points, steps=steps, seed=seed, only_t_E=only_t_E, **spread,
+                counts=counts, galaxies=galaxies, family=family, axes=axes, points=points, steps=steps, seed=seed,
+                only_t_E=only_t_E, **spread,
             )  # fmt: skip
             text = report(result)
     if plot:
@@ -150,6 +157,33 @@ def _check_together(sample, plan, campaign_file, samples_file, plot, limit_class
         raise click.UsageError("--limit-class and --masses go together")
     if limit_class and samples_file:
         raise click.UsageError("--samples has no effect with --limit-class")
+
+
+def _refuse_idle(plan, limit_class, parameters, mocks, fix_nuisances):
+    """Refuse options that were typed and would do nothing."""
+    from ..inference.parameters import BINS
+
+    context = click.get_current_context()
+    sampler = BINS in parameters or len(parameters) > 3
+    alone, limits = "it goes with a SAMPLE, not --from", "--limit-class takes timescales alone, with priors of its own"
+    idle = {}
+    for name in ("parameters", "priors", "stages", "listed", "galaxies", "family", "axes", "only_t_E", "points",
+                 "steps"):  # fmt: skip
+        idle[name] = (bool(limit_class), limits)
+    if plan:
+        names = ("stages", "listed", "galaxies", "family", "axes", "only_t_E", "steps", "frame", "t_0par", "skip_bad")
+        idle |= {name: (True, alone) for name in names}
+        idle["points"] = (not mocks, "with --from it goes with --mocks")
+    elif not limit_class:
+        idle["points"] = (sampler, "more than three parameters are sampled, not put on a grid")
+        idle["steps"] = (not sampler, "up to three parameters are put on a grid")
+    for name in ("seasons", "measured", "mass_error", "sigma", "mocks"):
+        idle[name] = (not plan, "it goes with --from")
+    idle["widths"] = (fix_nuisances, "--fix-nuisances holds all of them")
+    for parameter in context.command.params:
+        useless, why = idle.get(parameter.name, (False, ""))
+        if useless and context.get_parameter_source(parameter.name).name == "COMMANDLINE":
+            raise click.UsageError(f"{max(parameter.opts, key=len)} has no effect here: {why}")
 
 
 def _pairs(items, what):
@@ -223,18 +257,49 @@ def report(result):
     invented = " (invented)" if made["sample_invented"] else ""
     words = f"{safe(made['sample'])}{invented}: {result.events} events, {number(result.expected, 4)} expected"
     lines = [_head(result, words), wrap(made["header"]), ""]
-    rows = []
-    for p in result.parameters:
+    rows, single = [], [p for p in result.parameters if not p.name.startswith("kick_bin_")]
+    for p in single:
         got = result.learned[p.name]
         rows.append([p.name, p.prior.text, *(number(q) for q in got.quantiles), f"{got.bits:.2f}", f"{got.shift:+.2f}",
                      f"{got.shrinkage:.2f}"])  # fmt: skip
-    titles = ["parameter", "prior", "2.5%", "16%", "50%", "84%", "97.5%", "bits", "shift", "shrinkage"]
-    lines += [columns(titles, rows, left=2), "shift: of the mean in the prior's sigmas; shrinkage: of the variance"]
-    lines += ["", *(wrap(result.verdict(p.name)) for p in result.parameters), "", _nuisance_line(result.nuisances)]
+    if single:
+        titles = ["parameter", "prior", "2.5%", "16%", "50%", "84%", "97.5%", "bits", "shift", "shrinkage"]
+        lines += [columns(titles, rows, left=2), "shift: of the mean in the prior's sigmas; shrinkage: of the variance"]
+        lines += ["", *(wrap(result.verdict(p.name)) for p in single), ""]
+    if len(single) < len(result.parameters):
+        lines += [_speed_table(result), ""]
+    lines.append(_nuisance_line(result.nuisances))
     if result.cases:
-        shares = ", ".join(f"{safe(k)} {v:.2f}" for k, v in result.cases.items())
-        lines.append(wrap(f"posterior shares of the Galaxy sets: {shares}"))
+        lines.append(wrap(_case_line(result)))
     return "\n".join(lines)
+
+
+def _case_line(result):
+    """Posterior and prior shares of what was averaged over, the likeliest first."""
+    before, made = result.made["galaxies_prior"], result.made
+    order = sorted(result.cases, key=result.cases.get, reverse=True)
+    parts = [f"{safe(k)} {result.cases[k]:.2f} ({before[k]:.2f})" for k in order[:_MOST_CASES]]
+    if len(order) > _MOST_CASES:
+        rest = sum(result.cases[k] for k in order[_MOST_CASES:])
+        parts.append(f"{len(order) - _MOST_CASES} others {rest:.2f}")
+    what = "Galaxy sets"
+    if "family" in made:
+        what = f"the family '{safe(made['family'])}', weights {made['family_weights']}"
+    return f"averaged over {len(order)} cases of {what}; posterior share (prior): {'; '.join(parts)}"
+
+
+def _speed_table(result):
+    """Shares of neutron stars by kick speed, and whether any of them says more than its prior."""
+    rows, bins = [], [result.learned[n] for n in result.names if n.startswith("kick_bin_")]
+    for row, got in zip(result.kick_shares().to_rows(), bins):
+        found = [f"{row[k]:.3f}" for k in ("law", "p2.5", "p16", "p50", "p84", "p97.5")]
+        prior = f"{row['prior_p16']:.3f}-{row['prior_p84']:.3f}"
+        rows.append([f"{row['low_kms']:g}-{row['high_kms']:g}", *found, prior, f"{got.bits:.2f}"])
+    titles = ["kick [km/s]", "law", "2.5%", "16%", "50%", "84%", "97.5%", "prior 68%", "bits"]
+    known, most = sum(g.constrained for g in bins), max(g.bits for g in bins)
+    said = f"{known} of {len(bins)} bins constrained" if known else "no bin is constrained: what is quoted is the prior"
+    return (f"share of neutron stars by kick speed\n{columns(titles, rows, left=1)}\n"
+            f"{said} (at most {most:.2f} bits beyond the prior)")  # fmt: skip
 
 
 def _head(result, words):

@@ -9,7 +9,8 @@ from ..events.observed import Sample
 from ..parallel import run_map
 from ..scenario import Scenario
 from ..surveys.campaign import Campaign
-from ..surveys.reweighted import reweighted
+from ..surveys.family import Family
+from ..surveys.reweighted import reweighed, reweighted
 from ..surveys.yields import campaign as forecast_of
 from .data import observed_data
 from .likelihood import Likelihood, Nuisances, anchors, check_kicks
@@ -18,14 +19,15 @@ from .posterior import grid_posterior
 from .selection import Selection
 from .templates import Templates, need_kicks
 
-__all__ = ["METHODS", "MassLimits", "constrain", "mass_limits", "timescales_only"]
+__all__ = ["METHODS", "MassLimits", "averaged", "constrain", "mass_limits", "timescales_only"]
 
 METHODS = ("auto", "grid", "sample")
+_MOST_SETS = 200  # of a family; each costs a grid of its own
 
 
 def constrain(sample, parameters=("kick_scale",), survey=None, scenario=None, *, priors=(), nuisances=None,
-              selection=None, counts="auto", galaxies=(), method="auto", points=None, steps=2000, seed=1,
-              only_t_E=False, forecast=None, jobs=1, executor=None, progress=None):  # fmt: skip
+              selection=None, counts="auto", galaxies=(), family=None, axes=None, method="auto", points=None,
+              steps=2000, seed=1, only_t_E=False, forecast=None, jobs=1, executor=None, progress=None):  # fmt: skip
     """Return the posterior of parameters from an observed sample.
 
     Parameters
@@ -47,7 +49,12 @@ def constrain(sample, parameters=("kick_scale",), survey=None, scenario=None, *,
     counts : str
         "auto", "shape" or "absolute".
     galaxies : sequence of Scenario or str
-        Further Galaxy sets, equally likely beforehand, over which the posterior is averaged.
+        Further Galaxy sets, as likely beforehand as the scenario, over which the posterior is averaged.
+    family : Family or str, optional
+        Instead: all combinations of its axes (those that combine), as likely beforehand as its weights say, evenly
+        where it has none.
+    axes : list of str, optional
+        Only these axes of the family.
     method : str
         "auto": a grid up to three parameters, else the sampler; "grid"; "sample".
     points, steps, seed : int
@@ -69,7 +76,8 @@ def constrain(sample, parameters=("kick_scale",), survey=None, scenario=None, *,
     Raises
     ------
     InputError
-        Unknown parameter, impossible prior, no events in the fields, nothing that anchors counts that are asked for.
+        Unknown parameter, impossible prior, no events in the fields, nothing that anchors counts that are asked for;
+        a family of too many combinations, or of none besides the scenario.
     """
     one_of("method", method, METHODS)
     kind_of("sample", sample, Sample, "a Sample, from `Sample.read`,")
@@ -89,11 +97,16 @@ def constrain(sample, parameters=("kick_scale",), survey=None, scenario=None, *,
         forecast = forecast_of(survey, base, jobs=jobs, executor=executor, progress=label)
     else:
         forecast = reweighted(forecast, base, jobs, label, executor)
-    every = {base.name: forecast}
-    for other in galaxies:
-        other = other if isinstance(other, Scenario) else Scenario.read(other)
-        name = other.name if other.name not in every else f"{other.name}-{other.hash}"
-        every[name] = reweighted(forecast, other, jobs, label, executor)
+    if (galaxies or family) and (method == "sample" or (method == "auto" and (BINS in parameters or len(asked) > 3))):
+        raise InputError(
+            "galaxies, family: the sampler takes one Galaxy set; use three parameters or fewer, without kick_bins"
+        )
+    sets, weights, words = averaged(base, galaxies, family, axes)
+    every = {}
+    for name, scenario in sets.items():
+        # many differ in what integrals do not know
+        f = next((r for r in (reweighed(k, scenario) for k in every.values()) if r is not None), None)
+        every[name] = f or reweighted(forecast, scenario, jobs, label, executor)
     likelihoods = {}
     for name, f in every.items():
         templates = Templates.of(f)
@@ -106,14 +119,61 @@ def constrain(sample, parameters=("kick_scale",), survey=None, scenario=None, *,
         likelihoods[name] = Likelihood(templates, data, asked, nuisances, selection, counts)
     call = progress if callable(progress) else None
     if method == "sample" or (method == "auto" and len(asked) > 3):
-        if len(likelihoods) > 1:
-            raise InputError("galaxies: the sampler takes one Galaxy set; use three parameters or fewer")
         from .sampler import sampled_posterior
 
         out = sampled_posterior(next(iter(likelihoods.values())), steps, seed, call)
     else:
-        out = grid_posterior(likelihoods, points=points, progress=call)
-    return replace(out, made={**out.made, "sample": sample.name, "sample_invented": sample.invented, "seed": seed})
+        out = grid_posterior(likelihoods, weights, points, call)
+    made = {**out.made, "sample": sample.name, "sample_invented": sample.invented, "seed": seed, **words}
+    return replace(out, made=made)
+
+
+def averaged(base, galaxies=(), family=None, axes=None):
+    """Return the scenarios that a posterior is averaged over, the base first.
+
+    Parameters
+    ----------
+    base, galaxies, family, axes
+        As in `constrain`.
+
+    Returns
+    -------
+    scenarios : dict of str to Scenario
+    weights : list of float
+        Prior shares, summing to one.
+    words : dict
+        What a record of it says of the family; empty without one.
+
+    Raises
+    ------
+    InputError
+        Both given; axes without a family; nothing besides the base; too many combinations.
+    """
+    if galaxies and family:
+        raise InputError("galaxies, family: both given; write the sets as alternatives of an axis of the family")
+    if axes and not family:
+        raise InputError("axes: they belong to a family, and none is given; give family (--family)")
+    if not family:
+        out = {base.name: base}
+        for other in galaxies:
+            other = other if isinstance(other, Scenario) else Scenario.read(other)
+            out[other.name if other.name not in out else f"{other.name}-{other.hash}"] = other
+        return out, [1 / len(out)] * len(out), {}
+    family = family if isinstance(family, Family) else Family.read(family)
+    family = family.only(axes) if axes else family
+    cases = family.cases(base, combine=True)
+    if len(cases) == 1:
+        raise InputError(f"family '{family.name}': nothing in it differs from scenario '{base.name}'")
+    if len(cases) > _MOST_SETS:
+        each = ", ".join(f"{a.name} {1 + len(a.alternatives)}" for a in family.for_base(base).axes if a.combine)
+        raise InputError(
+            f"family '{family.name}': {len(cases)} combinations ({each}), at most {_MOST_SETS} are averaged over; "
+            "choose axes (--axis)"
+        )
+    stated = cases[0].weight is not None
+    weights = [c.weight if stated else 1 / len(cases) for c in cases]
+    words = {"family": family.name, "family_hash": family.hash, "family_weights": "stated" if stated else "even"}
+    return {c.label: c.scenario for c in cases}, weights, words
 
 
 def _law(forecast):

@@ -232,6 +232,16 @@ class Likelihood:
             out[i] = values.get(f"class:{self.templates.parts[i].lens}", 1.0)
         return out
 
+    def kick_bins(self):
+        """Return the edges of the kick bins [km/s] and the law's shares of neutron stars, the unkicked first.
+
+        None where the bins are not free.
+        """
+        if not self._bins.size:
+            return None
+        first = [p.group for p in self.templates.parts if p.lens == "neutron_star"]
+        return self.templates.edges, self._fixed_dark[: self._bin_of.size][np.array(first) == first[0]]
+
     def remnants(self, theta):
         """Return rate at each event, and expected number by field, of remnants and own classes: shares @ parts."""
         w = self.part_weights(theta)[np.concatenate([self._dark, self._own])]

@@ -55,6 +55,8 @@ class Posterior:
     notes : tuple of str
     draws : ndarray or None, shape (n, P)
         Of a sampler, where there is no grid.
+    kick_bins : tuple or None
+        Edges [km/s] and the law's shares of neutron stars, the unkicked first, where kick bins are free.
     """
 
     parameters: tuple
@@ -69,6 +71,7 @@ class Posterior:
     made: dict
     notes: tuple = ()
     draws: np.ndarray | None = None
+    kick_bins: tuple | None = None
     version: str = __version__
     _kept: dict = field(default_factory=dict, repr=False)
 
@@ -109,6 +112,9 @@ class Posterior:
                 share, prior = weight, self.prior_weight[i]
             some = share > 0
             bits = float(np.sum(share[some] * np.log2(share[some] / prior[some])))
+            if self.draws is not None:
+                # what so few independent draws of the prior itself would seem to say
+                bits -= (_BINS - 1) * self.made.get("autocorrelation", 1.0) / (2 * np.log(2) * len(values))
             x = np.log(values) if p.prior.logarithmic else values
             grid, w = p.prior.grid(401)
             y = np.log(grid) if p.prior.logarithmic else grid
@@ -141,6 +147,12 @@ class Posterior:
             f"{name}: {middle:.3g} ({low:.3g} to {high:.3g} at 95 %), {got.bits:.2f} bits beyond its prior "
             f"{p.prior.text}; spread {np.sqrt(max(1 - got.shrinkage, 0.0)):.2f} of the prior's"
         )
+
+    def kick_shares(self):
+        """Return the shares of neutron stars by kick speed where kick bins are free, see `speeds.kick_shares`."""
+        from .speeds import kick_shares
+
+        return kick_shares(self)
 
     def samples(self, n=10_000, seed=1):
         """Return draws of the parameters, (n, P), spread within the grid's cells as the prior is."""
@@ -206,8 +218,10 @@ class Posterior:
                 "upper_95": self.upper_limit(p.name), "bits": got.bits, "shift_in_prior_sigma": got.shift,
                 "shrinkage": got.shrinkage, "constrained": got.constrained, "verdict": self.verdict(p.name),
             }  # fmt: skip
+        speeds = self.kick_shares()
         return {
             "parameters": rows, "nuisances": self.nuisances, "galaxies": self.cases, "ln_evidence": self.ln_evidence,
+            **({} if speeds is None else {"kick_shares": speeds.to_rows()}),
             "events": self.events, "expected": self.expected, "notes": list(self.notes), **self.made,
             "version": self.version,
         }  # fmt: skip
@@ -275,7 +289,10 @@ def grid_posterior(likelihoods, weights=None, points=None, progress=None):
             if progress is not None and done % 50 == 0:
                 progress(done / (ln.size * len(likelihoods)))
         surfaces.append(ln + ln_prior)
-    share = np.log(np.full(len(surfaces), 1 / len(surfaces)) if weights is None else np.asarray(weights, dtype=float))
+    share = np.full(len(surfaces), 1 / len(surfaces)) if weights is None else np.asarray(weights, dtype=float)
+    before = dict(zip(likelihoods, map(float, share))) if len(likelihoods) > 1 else {}
+    with np.errstate(divide="ignore"):  # a set without weight takes no part
+        share = np.log(share)
     each = np.array([logsumexp(s) for s in surfaces]) + share
     total = logsumexp(each)
     weight = np.exp(logsumexp(np.array(surfaces) + share.reshape([-1] + [1] * len(parameters)), axis=0) - total)
@@ -284,7 +301,7 @@ def grid_posterior(likelihoods, weights=None, points=None, progress=None):
     expected = float(first.terms(first.remnants(own_values(first)), np.zeros(4))[1].sum())
     return Posterior(
         parameters, grid, weight, prior, described(first.nuisances, best[likeliest], first), cases, float(total),
-        len(first.data), expected, made_of(likelihoods), notes_of(first),
+        len(first.data), expected, {**made_of(likelihoods), "galaxies_prior": before}, notes_of(first),
     )  # fmt: skip
 
 

@@ -59,7 +59,7 @@ def sampled_posterior(likelihood, steps=2000, seed=1, progress=None):
     rng = np.random.default_rng(seed)
     size = P + active.size
     walkers = max(4 * size, 16) // 2 * 2
-    start = 0.5 * rng.standard_normal((walkers, size))
+    start = 0.5 * rng.standard_normal((walkers, size))  # walkers far out would not come back
     ensemble = emcee.EnsembleSampler(walkers, size, ln)
     ensemble._random = np.random.RandomState(seed)
     for k, _ in enumerate(ensemble.sample(start, iterations=steps)):
@@ -83,5 +83,5 @@ def sampled_posterior(likelihood, steps=2000, seed=1, progress=None):
             "acceptance": float(np.mean(ensemble.acceptance_fraction))}  # fmt: skip
     return Posterior(
         parameters, (), np.zeros(0), (), described(likelihood.nuisances, nu, likelihood), {}, float("nan"),
-        len(likelihood.data), expected, made, tuple(notes), draws,
+        len(likelihood.data), expected, made, tuple(notes), draws, likelihood.kick_bins(),
     )  # fmt: skip

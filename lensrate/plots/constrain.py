@@ -7,7 +7,7 @@ from ..io import PICTURES, check_target
 from .saving import blank, write_figure
 from .sightlines import _axes
 
-__all__ = ["marginal", "mass_limits", "posterior", "save_mass_limits", "save_posterior"]
+__all__ = ["kick_speeds", "marginal", "mass_limits", "posterior", "save_mass_limits", "save_posterior"]
 
 _POSTERIOR, _PRIOR, _LINE = "#0072B2", "#E69F00", "#D55E00"
 _LEVELS = (0.68, 0.95)
@@ -111,6 +111,8 @@ def _pair(result, i, j, ax, seed):
 def posterior(result, ax=None, seed=1):
     """Draw the posterior: one parameter into `ax`, several as a triangle of pairs on a figure of their own.
 
+    Free kick bins are drawn as `kick_speeds`, other parameters beside them.
+
     Parameters
     ----------
     result : Posterior
@@ -125,7 +127,76 @@ def posterior(result, ax=None, seed=1):
     """
     if len(result.parameters) == 1:
         return marginal(result, result.names[0], ax)
-    return _triangle(result, seed).axes
+    return _figure(result, seed).axes
+
+
+def kick_speeds(result, ax=None):
+    """Draw the shares of neutron stars by kick speed: posterior, prior and the scenario's law, bin by bin.
+
+    Parameters
+    ----------
+    result : Posterior
+        With free kick bins.
+    ax : matplotlib Axes, optional
+        Made if not given.
+
+    Returns
+    -------
+    matplotlib Axes
+    """
+    ax = _axes(ax, (6.4, 4.2))
+    found = result.kick_shares()
+    n = len(found.law)
+    places = np.arange(n + 1) - 0.5
+    for q, color, label in ((found.prior_quantiles, _PRIOR, "prior"), (found.quantiles, _POSTERIOR, "posterior")):
+        for low, high, alpha, words in ((0, 4, 0.18, "95 %"), (1, 3, 0.35, "68 %")):
+            if color == _PRIOR:
+                ax.stairs(q[high], places, baseline=q[low], color=color, lw=1.1, ls=(0, (4, 2)) if low else ":",
+                          label=f"{label}, {words}")  # fmt: skip
+            else:
+                ax.stairs(q[high], places, baseline=q[low], color=color, alpha=alpha, fill=True, lw=0,
+                          label=f"{label}, {words}")  # fmt: skip
+        if color == _POSTERIOR:
+            ax.stairs(q[2], places, baseline=None, color=color, lw=1.6, label="posterior, median")
+    ax.stairs(found.law, places, baseline=None, color="black", lw=1.2, ls="-.", label="the scenario's law")
+    ax.set_yscale("log")
+    ax.set_ylim(max(found.law.max() / 500, 1e-4), min(2 * found.prior_quantiles[4].max(), 1.0))
+    _log(ax.yaxis, *ax.get_ylim())
+    ax.set_xticks(places, [f"{e:g}" for e in found.edges], fontsize=7)
+    ax.set_xlim(places[0], places[-1])
+    ax.set_xlabel("kick speed, edges of the bins  [km/s]")
+    ax.set_ylabel("share of neutron stars in the bin")
+    ax.legend(fontsize=7, frameon=False, ncols=2, loc="lower right")
+    return ax
+
+
+def _figure(result, seed=1):
+    if result.kick_bins is not None:
+        return _speeds_and_others(result)
+    return _triangle(result, seed)
+
+
+def _speeds_and_others(result):
+    """Speeds, and below them a marginal for each parameter that is no bin."""
+    others = [n for n in result.names if not n.startswith("kick_bin_")]
+    figure = blank(7.4, 4.8 + 2.6 * bool(others))
+    if others:
+        top, below = figure.subfigures(2, 1, height_ratios=[4.8, 2.6])
+        for name, ax in zip(others, np.atleast_1d(below.subplots(1, len(others)))):
+            marginal(result, name, ax)
+    else:
+        top = figure
+    kick_speeds(result, top.add_subplot())
+    bits = max(result.learned[n].bits for n in result.names if n.startswith("kick_bin_"))
+    figure.suptitle(f"{_title(result)}\nno bin is more than {bits:.2f} bits beyond its prior", fontsize=8)
+    return figure
+
+
+def _title(result):
+    made = result.made
+    words = " (invented)" if made.get("sample_invented") else ""
+    return (f"{made.get('sample', '')}{words}: {result.events} events; scenario {made['scenario']} "
+            f"({made['scenario_hash']})")  # fmt: skip
 
 
 def _triangle(result, seed=1):
@@ -151,13 +222,9 @@ def _triangle(result, seed=1):
                 ax.set_xlabel(_name(result.names[i]) if j == n - 1 else "", fontsize=8)
                 ax.tick_params(labelsize=6)
     figure.axes[0].legend(loc="lower left", fontsize=7, frameon=False)
-    made = result.made
-    words = " (invented)" if made.get("sample_invented") else ""
-    title = f"{made.get('sample', '')}{words}: {result.events} events; scenario {made['scenario']} "
-    title += f"({made['scenario_hash']})"
     free = ", ".join(result.nuisances["free"]) or "none"
     more = "contours 68 and 95 %; " if n > 1 else ""
-    figure.suptitle(f"{title}\n{more}lines: median and 95 %; nuisances free: {free}", fontsize=8)
+    figure.suptitle(f"{_title(result)}\n{more}lines: median and 95 %; nuisances free: {free}", fontsize=8)
     return figure
 
 
@@ -191,7 +258,7 @@ def mass_limits(result, ax=None):
 def save_posterior(result, path, overwrite=False):
     """Write the picture with its provenance in the file's metadata; see `saving.write_figure`."""
     check_target(path, PICTURES, overwrite, "--plot")
-    return write_figure(_triangle(result), path, result.meta(), overwrite)
+    return write_figure(_figure(result), path, result.meta(), overwrite)
 
 
 def save_mass_limits(result, path, overwrite=False):

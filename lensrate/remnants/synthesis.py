@@ -126,17 +126,13 @@ def synthesize(galaxy, potential, settings=None, *, jobs=1, executor=None, progr
     # threads leave early when the run is broken off; other executors pickle their work, which an event forbids
     stop = threading.Event() if executor is None else None
 
-    def make(plan):
-        place, number, stream = plan
-        # what an executor does elsewhere has no folder at hand
-        part = pieces.part(_name(plan)) if executor is None else None
-        return _element(components[place], held[place], number, stream, galaxy, potential, settings, stop, part)
+    make = _Elements(components, held, galaxy, potential, settings)
 
     def run(plan):
         found = pieces.get(_name(plan))
         if found is not None:
             return found, True
-        made = pieces.keep(_name(plan), make(plan))
+        made = pieces.keep(_name(plan), make(plan, stop, pieces.part(_name(plan))))
         pieces.drop(f"{_name(plan)}_part")
         return made, False
 
@@ -169,6 +165,22 @@ def synthesize(galaxy, potential, settings=None, *, jobs=1, executor=None, progr
         mismatch=mismatch,
         provenance=pieces.made,
     )
+
+
+@dataclass(frozen=True)
+class _Elements:
+    """What makes an element of a plan; sent to other processes, so it holds no folder, executor or event."""
+
+    components: list
+    held: list
+    galaxy: object
+    potential: object
+    settings: object
+
+    def __call__(self, plan, stop=None, part=None):
+        place, number, stream = plan
+        return _element(self.components[place], self.held[place], number, stream, self.galaxy, self.potential,
+                        self.settings, stop, part)  # fmt: skip
 
 
 def _name(plan):

@@ -1,8 +1,10 @@
 """Coverage of the inference over many mock samples: alike, with declared stages, and where the truth is another.
 
     python tests/benchmarks/bench_coverage.py [SAMPLES]
+    python tests/benchmarks/bench_coverage.py bins [SAMPLES]
 
 The Marram campaign (invented), four times its seasons; the table of a run is kept in calibration.txt beside this file.
+The second line is for free kick bins, which take a sampler, 45 s of processor time a sample, and many seasons.
 """
 
 # ruff: noqa: E402  (one thread is set before the imports)
@@ -18,7 +20,7 @@ import numpy as np
 from lensrate.inference.calibrate import calibrate, no_events
 from lensrate.inference.likelihood import Likelihood, Nuisances
 from lensrate.inference.mocks import mock
-from lensrate.inference.parameters import parse_parameters
+from lensrate.inference.parameters import bin_parameters, parse_parameters
 from lensrate.inference.selection import Selection
 from lensrate.inference.templates import Templates
 from lensrate.remnants.kicks import parse_kick
@@ -40,7 +42,7 @@ def say(*words):
 
 
 def table(title, *what, **options):
-    """One calibration's lines."""
+    """One calibration and its lines."""
     start = time.process_time()
     found = calibrate(*what, **options)
     seconds = (time.process_time() - start) / len(found.share)
@@ -52,6 +54,22 @@ def table(title, *what, **options):
         below, above = np.mean(found.share[:, i] < 0.025), np.mean(found.share[:, i] > 0.975)
         say(f"  {name:14s} {words}; truth in the lowest 2.5 %: {below:.3f}, highest: {above:.3f}; even: KS p "
             f"{ks[i]:.2f}, chi2 p {chi2[i]:.2f}; {found.bits[:, i].mean():.2f} bits")  # fmt: skip
+    return found
+
+
+def bins(forecast, n, seasons=200.0):
+    """Free shares of the kick bins, from a sample of lenses with measured masses alone."""
+    t = Templates.of(forecast, seasons)
+    years = seasons * len(forecast.campaign.calendar.seasons)
+    masses = {"star": 0.002, "brown_dwarf": 0.0, "white_dwarf": 0.05, "neutron_star": 0.5, "black_hole": 0.5}
+    found = table(f"free kick bins, {years:.0f} seasons, listed: those with a mass", t, bin_parameters(t.edges), n, 15,
+                  selection=Selection(mass=masses, listed="mass"), steps=800)  # fmt: skip
+    inside = [np.abs(found.share - 0.5) < 0.5 * q for q in (0.68, 0.95)]
+    words = ", ".join(
+        # the bins of a sample go together, so samples are what is counted
+        f"{q} %: {x.mean():.3f} +- {x.mean(axis=1).std() / np.sqrt(len(x)):.3f}" for q, x in zip((68, 95), inside)
+    )
+    say(f"  all bins: {words}; {found.events.mean():.0f} events a sample")
 
 
 def power(forecast, n=12):
@@ -79,8 +97,11 @@ def power(forecast, n=12):
 
 
 def main():
-    n = int(sys.argv[1]) if len(sys.argv) > 1 else 600
+    asked = sys.argv[1:]
     forecast = campaign("marram")
+    if asked[:1] == ["bins"]:
+        return bins(forecast, int(asked[1]) if len(asked) > 1 else 100)
+    n = int(asked[0]) if asked else 600
     many = Templates.of(forecast, 4.0)
     seasons = 4 * len(forecast.campaign.calendar.seasons)
     say(f"Inference, Marram (invented), {seasons} seasons, {many.expected.sum():.0f} events if all were in every "

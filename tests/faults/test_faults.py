@@ -43,7 +43,7 @@ def run(*args):
 
 def start(*args):
     # a suite in the background of a script ignores Ctrl-C, and so would what it starts
-    program = "import os, signal, sys; signal.signal(signal.SIGINT, signal.SIG_DFL); os.execv(sys.argv[1], sys.argv[1:])"
+    program = "import os, sys, signal as s; s.signal(s.SIGINT, s.SIG_DFL); os.execv(sys.argv[1], sys.argv[1:])"
     asked = [sys.executable, "-m", "lensrate", *map(str, args)]
     return subprocess.Popen(
         [sys.executable, "-c", program, *asked], stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True

@@ -1,7 +1,5 @@
 """Inference: parts that add up to forecasts, likelihoods against direct sums and integrals, calibrated posteriors."""
 
-import importlib.util
-
 import numpy as np
 import pytest
 from mocks import draw_table
@@ -349,20 +347,6 @@ def test_limits_on_a_class_of_ones_own(kicked):
         mass_limits(sample, forecast, "drak", [1.0])
     with pytest.raises(InputError, match="above 0"):
         mass_limits(sample, forecast, "dark", [-1.0])
-
-
-@pytest.mark.skipif(importlib.util.find_spec("emcee") is None, reason="the optional sampler is not installed")
-@pytest.mark.slow
-def test_the_sampler_agrees_with_the_grid(templates):
-    from lensrate.inference.sampler import sampled_posterior
-
-    many = Templates.of(templates.forecast, 4.0)
-    probe = likelihood(many)
-    data, _ = mock(many, probe.part_weights([1.0]), np.random.default_rng(3), measured=MEASURED)
-    L = Likelihood(many, data, NUMBERS)
-    grid, drawn = grid_posterior({"a": L}), sampled_posterior(L, steps=1500)
-    a, b = (np.log(r.quantile(0, [0.16, 0.5, 0.84])) for r in (grid, drawn))
-    np.testing.assert_allclose(a, b, atol=0.12)
 
 
 def test_the_stars_slopes_are_those_of_the_sums(templates):

@@ -6,6 +6,7 @@ from dataclasses import replace
 import astropy.units as u
 import numpy as np
 import pytest
+from mocks import Posted
 
 from lensrate.errors import DataFileError, InputError
 from lensrate.galaxy.model import Galaxy
@@ -239,6 +240,13 @@ def test_synthesis_does_not_depend_on_threads_and_resumes(small, tmp_path):
     assert resumed.mismatch == small.mismatch
     other = synthesize(THICK, POTENTIAL, replace(SMALL, seed=4), checkpoint=tmp_path)
     assert not np.array_equal(small.ln_rho, other.ln_rho)
+
+
+def test_a_synthesis_can_be_sent_elsewhere(tmp_path):
+    tiny = Settings(tracers=256, batches=2, kick_edges=(0.0, 100.0), bundles=64, iterations=5, eta=0.5)
+    here = synthesize(THICK, POTENTIAL, tiny)
+    there = synthesize(THICK, POTENTIAL, tiny, executor=Posted(), checkpoint=tmp_path, progress=lambda *_: None)
+    assert np.array_equal(here.ln_rho, there.ln_rho) and np.array_equal(here.four, there.four)
 
 
 def test_an_element_left_at_any_block_goes_on_to_the_same_result(monkeypatch):
