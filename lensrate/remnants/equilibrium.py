@@ -142,26 +142,10 @@ def solve(
     """
     cells = cells_of(component, galaxy, potential)
     pieces = -(-bundles // CHUNK)
-    train, drop = (train_gyr or TRAIN_GYR) * 1e3 * KPC_PER_MYR, _DROPPED * 1e3 * KPC_PER_MYR
-    gap, half = _GAP * train, 0.5 * _JUDGED * train
-    kinds, pars = potential.packed
-    eye, wanted = eye_of(galaxy, potential), columns_of(component, galaxy, cells.mass)
+    wanted = columns_of(component, galaxy, cells.mass)
     share = _COLUMNS_WEIGH / wanted.size
-
-    def run(piece):
-        number, rng = piece
-        shares = (number + (np.arange(CHUNK) + 0.5) / CHUNK) / pieces
-        states, times = _start(component, galaxy, potential, cells, shares, rng)
-        windows, columns = np.empty((3, CHUNK, cells.target.size)), np.empty((CHUNK, wanted.size))
-        snapshots, none = np.empty((*times.shape, 6)), np.empty((times.shape[0], 0, 6))
-        orbit = (kinds, pars, potential.omega, step(eta), states)
-        grid = (_STRIDE, cells.scale, cells.m_edges, cells.t_edges, cells.n_phi)
-        grid += (eye, COLUMNS_END, LONGITUDES, LATITUDES)
-        kernels.occupy(*orbit, drop, drop + train, *grid, drop + train * times, windows[0], columns, snapshots)
-        kernels.occupy(*orbit, gap, gap + half, *grid, times[:, :0], windows[1], columns[:, :0], none)
-        kernels.occupy(*orbit, 0.0, half, *grid, times[:, :0], windows[2], columns[:, :0], none)
-        return windows.astype(np.float32), (share / wanted * columns).astype(np.float32), snapshots
-
+    train = (train_gyr or TRAIN_GYR) * 1e3 * KPC_PER_MYR
+    run = _Bundles(component, galaxy, potential, cells, wanted, pieces, train, eta)
     parts = run_map(run, enumerate(rng.spawn(pieces)), jobs, executor, progress)
     trained, first, second = (np.concatenate([p[0][i] for p in parts]) for i in range(3))
     asked = np.hstack([trained, np.concatenate([p[1] for p in parts])])
@@ -169,6 +153,38 @@ def solve(
     mismatch = _judged(weights, trained, weights @ first, weights @ second, cells)
     states = np.concatenate([p[2] for p in parts]).reshape(weights.size, LANES * _SNAPSHOTS, 6)
     return Equilibrium(states, weights, float(1 / np.sum(weights**2)), mismatch)
+
+
+@dataclass(frozen=True)
+class _Bundles:
+    """What runs a piece of the bundles through the three windows; other processes take it too."""
+
+    component: object
+    galaxy: object
+    potential: object
+    cells: object
+    wanted: np.ndarray
+    pieces: int
+    train: float
+    eta: float
+
+    def __call__(self, piece):
+        (number, rng), potential, cells = piece, self.potential, self.cells
+        kinds, pars = potential.packed
+        drop = _DROPPED * 1e3 * KPC_PER_MYR
+        train, gap, half = self.train, _GAP * self.train, 0.5 * _JUDGED * self.train
+        shares = (number + (np.arange(CHUNK) + 0.5) / CHUNK) / self.pieces
+        states, times = _start(self.component, self.galaxy, potential, cells, shares, rng)
+        windows, columns = np.empty((3, CHUNK, cells.target.size)), np.empty((CHUNK, self.wanted.size))
+        snapshots, none = np.empty((*times.shape, 6)), np.empty((times.shape[0], 0, 6))
+        orbit = (kinds, pars, potential.omega, step(self.eta), states)
+        grid = (_STRIDE, cells.scale, cells.m_edges, cells.t_edges, cells.n_phi)
+        grid += (eye_of(self.galaxy, potential), COLUMNS_END, LONGITUDES, LATITUDES)
+        kernels.occupy(*orbit, drop, drop + train, *grid, drop + train * times, windows[0], columns, snapshots)
+        kernels.occupy(*orbit, gap, gap + half, *grid, times[:, :0], windows[1], columns[:, :0], none)
+        kernels.occupy(*orbit, 0.0, half, *grid, times[:, :0], windows[2], columns[:, :0], none)
+        share = _COLUMNS_WEIGH / self.wanted.size / self.wanted
+        return windows.astype(np.float32), (share * columns).astype(np.float32), snapshots
 
 
 def _judged(weights, trained, first, second, cells):
