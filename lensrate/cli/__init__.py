@@ -44,6 +44,20 @@ for command in (
     cli.add_command(command)
 
 
+def _interrupted():
+    _complain("interrupted; nothing half written was left")
+    sys.exit(130)
+
+
+def _holds_interrupt(error):
+    """Whether an exception was raised from, or while handling, Ctrl-C."""
+    while error is not None:
+        if isinstance(error, KeyboardInterrupt):
+            return True
+        error = error.__cause__ or error.__context__
+    return False
+
+
 def main(args=None):
     """Run the command line; exit code 0 done, 1 failed run, 2 wrong input, 130 interrupted."""
     # loading libraries makes a million objects that stay: looking through them for garbage takes a tenth of a forecast
@@ -57,8 +71,12 @@ def main(args=None):
         error.show(sys.stderr)
         sys.exit(error.exit_code)
     except (click.Abort, KeyboardInterrupt):
-        _complain("interrupted; nothing half written was left")
-        sys.exit(130)
+        _interrupted()
+    except SystemError as error:
+        # compiled code that Ctrl-C meets on its way out says so in its own manner
+        if not _holds_interrupt(error):
+            raise
+        _interrupted()
     except BrokenPipeError:
         # the reader of our output went away, as `head` does
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())

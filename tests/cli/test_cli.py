@@ -335,3 +335,29 @@ def test_pipes_stay_clean():
     code = "from lensrate.cli import main; main(['sightline', '1', '-3', '--sources', 'distance:8', '--json'])"
     out = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True)
     assert json.loads(out.stdout)["l_deg"] == 1.0 and out.stderr == ""
+
+
+def test_an_interrupt_inside_compiled_code_is_an_interrupt(monkeypatch, capsys):
+    import lensrate.cli as command
+
+    def kernel(how):
+        def body(*args, **kwargs):
+            try:
+                raise KeyboardInterrupt
+            except KeyboardInterrupt as stop:
+                raise SystemError("returned a result with an exception set") from (stop if how == "cause" else None)
+
+        return body
+
+    for how in ("cause", "context"):
+        monkeypatch.setattr(command.cli, "main", kernel(how))
+        with pytest.raises(SystemExit) as left:
+            command.main([])
+        assert left.value.code == 130 and "interrupted" in capsys.readouterr().err
+
+    def broken(*args, **kwargs):
+        raise SystemError("of another kind")
+
+    monkeypatch.setattr(command.cli, "main", broken)
+    with pytest.raises(SystemError, match="another kind"):
+        command.main([])
