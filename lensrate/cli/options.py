@@ -4,7 +4,7 @@ import click
 
 from ..errors import InputError
 
-__all__ = ["assumptions", "dask", "output", "parse_extinction"]
+__all__ = ["assumptions", "dask", "output", "parse_extinction", "read_scenario", "refuse_idle_extinction"]
 
 
 def assumptions(command):
@@ -77,3 +77,15 @@ def read_scenario(scenario_name, kicks=None, bh_kicks=None, sources=None, extinc
         changes["extinction"] = measured
     scenario = Scenario.read(scenario_name)
     return scenario.replace(**changes) if changes else scenario
+
+
+def refuse_idle_extinction(scenario):
+    """Refuse an extinction that was typed where the source rule has no magnitude that dust could change."""
+    if click.get_current_context().get_parameter_source("extinction").name != "COMMANDLINE":
+        return
+    from ..sources.rules import parse_rule
+
+    if not hasattr(parse_rule(scenario.sources), "band"):
+        raise click.UsageError(
+            f"--extinction has no effect here: it goes with sources of a magnitude limit, not with '{scenario.sources}'"
+        )

@@ -3,7 +3,7 @@
 import click
 
 from .base import Command, announce
-from .options import assumptions, output, read_scenario
+from .options import assumptions, output, read_scenario, refuse_idle_extinction
 from .text import columns, number, safe, wrap
 
 _PICTURES = ("overview", "timescales", "stacked", "depth", "pi_E", "theta_E")
@@ -13,7 +13,8 @@ _PICTURES = ("overview", "timescales", "stacked", "depth", "pi_E", "theta_E")
 @click.argument("lon", metavar="[L B]", required=False)
 @click.argument("lat", metavar="", required=False)
 @click.option(
-    "--table", "table_file", metavar="FILE", help="Many sightlines: columns l, b (or ra, dec), optionally A_I etc."
+    "--table", "table_file", metavar="FILE",
+    help="Many sightlines: columns l, b (or ra, dec), optionally name, A_V, A_I, A_J, A_H, A_Ks.",
 )
 @click.option("--icrs", is_flag=True, help="Take RA Dec (degrees, or hh:mm:ss dd:mm:ss) instead of l b.")
 @assumptions
@@ -66,6 +67,7 @@ def sightline(
         if table_file:
             raise InputError("--plot: draws one sightline; leave out --table, or --plot")
     scenario = read_scenario(**choices)
+    refuse_idle_extinction(scenario)
     announce(quiet)
     if table_file:
         _many(table_file, icrs, scenario, t_E_range, jobs, save, as_json, overwrite, quiet)
@@ -90,8 +92,12 @@ def sightline(
         click.echo(dump_json(result.to_dict()))
     else:
         click.echo(report(result, by))
+    _tell(result.warnings, quiet)
+
+
+def _tell(warnings, quiet):
     if not quiet:
-        for warning in result.warnings:
+        for warning in warnings:
             click.echo(wrap(f"note: {warning}"), err=True)
 
 
@@ -108,10 +114,14 @@ def direction(lon, lat, icrs):
     """Turn typed coordinates into Galactic ones, Quantity."""
     import astropy.units as u
 
+    from ..errors import InputError
     from ..galaxy.frames import galactic_from_icrs
 
     if icrs:
-        return galactic_from_icrs(_angle("ra", lon, 15.0) * u.deg, _angle("dec", lat, 1.0) * u.deg)
+        ra = _angle("ra", lon, 15.0)
+        if not 0.0 <= ra <= 360.0:
+            raise InputError(f"ra: '{safe(lon)}' given, must be between 0 and 360 degrees, or 0 and 24 hours")
+        return galactic_from_icrs(ra * u.deg, _angle("dec", lat, 1.0) * u.deg)
     return _angle("l", lon, None) * u.deg, _angle("b", lat, None) * u.deg
 
 
@@ -193,22 +203,32 @@ def _many(table_file, icrs, scenario, t_E_range, jobs, save, as_json, overwrite,
 
     from ..io import dump_json, read_rows, write_table
     from ..lensing.many import directions_of, forecasts, gather
+    from ..sources.rules import parse_rule
 
-    l, b, measured, carried = directions_of(read_rows(table_file, "--table"), icrs)
+    l, b, measured, carried = directions_of(read_rows(table_file, "--table"), icrs, f"--table '{table_file}'")
+    label = next((c for c in carried.colnames if c.lower() in ("name", "field")), None)
+    notes = []
+    if any(measured) and not hasattr(parse_rule(scenario.sources), "band"):
+        notes.append(f"the table's extinctions have no effect: sources '{scenario.sources}' have no magnitude limit")
+    unused = [c for c in carried.colnames if c != label]
+    if unused:
+        notes.append(f"columns not used, carried along: {', '.join(map(safe, unused))}")
     results = forecasts(
         l, b, scenario, extinction=measured, t_E_range=tuple(t_E_range) * u.day if t_E_range else None,
         jobs=jobs, progress=None if quiet else "sightlines",
     )  # fmt: skip
     table = gather(results, scenario, carried)
-    rows = [r.to_dict() for r in results]
+    table.meta["warnings"] = [*notes, *table.meta["warnings"]]
+    rows = [{**({"name": str(carried[label][i])} if label else {}), **r.to_dict()} for i, r in enumerate(results)]
     for i, row in enumerate(rows):
         row["row"] = {c: str(carried[c][i]) for c in carried.colnames}
     if save:
         write_table(table, save, overwrite, payload={"sightlines": rows})
+    meta = table.meta
     if as_json:
         click.echo(dump_json(rows))
+        _tell(meta["warnings"], quiet)
         return
-    meta = table.meta
     many = "sightline" if len(table) == 1 else "sightlines"
     click.echo(
         f"lensrate {meta['version']}   {len(table)} {many}   "
@@ -228,10 +248,8 @@ def _many(table_file, icrs, scenario, t_E_range, jobs, save, as_json, overwrite,
              f"{r.sources['mean_distance_kpc']:.2f}", number(r.sources["source_density_per_arcmin2"], 4)]
         )  # fmt: skip
     if carried.colnames:
-        # the first further column, usually a name, tells the rows apart
-        first = carried.colnames[0]
+        # a name, or else the first further column, tells the rows apart
+        first = label or carried.colnames[0]
         titles, body = [first, *titles], [[safe(str(carried[first][i]))[:12], *row] for i, row in enumerate(body)]
     click.echo(columns(titles, body, left=bool(carried.colnames)))
-    if not quiet:
-        for warning in meta["warnings"]:
-            click.echo(wrap(f"note: {warning}"), err=True)
+    _tell(meta["warnings"], quiet)

@@ -5,7 +5,7 @@ from pathlib import Path
 import click
 
 from .base import Command, announce
-from .options import assumptions, output, read_scenario
+from .options import assumptions, output, read_scenario, refuse_idle_extinction
 from .text import columns, number, safe, wrap
 
 _SHOWN = 40  # fields that are listed one by one
@@ -74,6 +74,7 @@ def skymap(
     fields = settings.pop("fields")
     survey = None if fields is None else fields.survey
     scenario = read_scenario(**choices) if survey is None else _scenario_of(survey, choices)
+    refuse_idle_extinction(scenario)
     from ..scenario import resolve
     from ..surveys.skyrecord import known_names
 

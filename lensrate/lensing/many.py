@@ -14,9 +14,10 @@ from .sightline import sightline
 __all__ = ["directions_of", "forecasts", "gather", "sightlines"]
 
 _EXTINCTIONS = tuple(f"A_{band}" for band in BANDS)
+_DUST_WORDS = ("extinction", "reddening", "dust")
 
 
-def directions_of(table, icrs=False):
+def directions_of(table, icrs=False, where="table", more=()):
     """Return Galactic directions and measured extinctions from a table's columns.
 
     Parameters
@@ -26,6 +27,10 @@ def directions_of(table, icrs=False):
         an empty cell leaves the dust disc's value. Other columns are carried along.
     icrs : bool
         Take ra, dec.
+    where : str
+        Which table, for complaints.
+    more : tuple of str
+        Further columns that the caller reads.
 
     Returns
     -------
@@ -38,52 +43,88 @@ def directions_of(table, icrs=False):
     Raises
     ------
     InputError
-        Missing column, unknown extinction, text, NaN or a latitude beyond 90, with the row number.
+        Missing column, one that nearly has the name of a known one, unknown extinction, text, NaN, a latitude beyond
+        90 or a right ascension outside 0 to 360, with row and value.
     """
     wanted = ("ra", "dec") if icrs or ("l" not in table.colnames and "ra" in table.colnames) else ("l", "b")
     values = []
     for name in wanted:
         if name not in table.colnames:
             near = did_you_mean(name, table.colnames)
-            raise InputError(f"table: no column '{name}'{near} (columns: {', '.join(table.colnames)})")
-        values.append(_column(table, name, u.deg))
-    for i, value in enumerate(values[1]):
-        if abs(value) > 90.0:
-            raise InputError(f"table: row {i + 1}, column {wanted[1]}: {value:g} deg given, must be between -90 and 90")
+            raise InputError(f"{where}: no column '{name}'{near} (columns: {', '.join(table.colnames)})")
+        values.append(_column(table, name, u.deg, where))
+    spans = ((0.0, 360.0) if wanted[0] == "ra" else (-np.inf, np.inf), (-90.0, 90.0))
+    for name, column, (low, high) in zip(wanted, values, spans):
+        for i in np.flatnonzero((column < low) | (column > high))[:1]:
+            raise InputError(
+                f"{where}: row {i + 1}, column {name}: {column[i]:g} deg given, must be between {low:g} and {high:g}"
+            )
     lon, lat = (v * u.deg for v in values)
     if wanted[0] == "ra":
         lon, lat = galactic_from_icrs(lon, lat)
     extinction = [{} for _ in values[0]]
-    for name in table.colnames:
-        if not name.startswith(("A_", "a_")):
+    _refuse_near_misses(table, where, ("l", "b", "ra", "dec", *_EXTINCTIONS, *more))
+    for name in _EXTINCTIONS:
+        if name not in table.colnames:
             continue
-        if name not in _EXTINCTIONS:
-            near = did_you_mean(name, _EXTINCTIONS)
-            raise InputError(f"table: column '{name}' is no known extinction{near} (known: {', '.join(_EXTINCTIONS)})")
-        for row, a in zip(extinction, _column(table, name, u.mag, blanks=True)):
+        for row, a in zip(extinction, _column(table, name, u.mag, where, blanks=True)):
             if np.isfinite(a):
                 row[name[2:]] = float(a)
     used = {*wanted, *_EXTINCTIONS}
     return lon, lat, extinction, table[[c for c in table.colnames if c not in used]]
 
 
-def _column(table, name, unit, blanks=False):
+def _refuse_near_misses(table, where, known):
+    """Raise for a column that is an unknown extinction, or a known column written differently."""
+    plain = {_plain(k): k for k in known}
+    for name in table.colnames:
+        if name in known:
+            continue
+        dust = name.startswith(("A_", "a_")) or any(word in name.lower() for word in _DUST_WORDS)
+        # radius for radius_deg: the unit left out
+        short = [k for k in known if k.startswith(f"{name.lower()}_") and k not in _EXTINCTIONS]
+        if dust or short or _plain(name) in plain:
+            near = short[0] if short else plain.get(_plain(name))
+            meant = f", did you mean '{near}'?" if near else did_you_mean(name, _EXTINCTIONS)
+            raise InputError(f"{where}: column '{name}' is not known{meant} (known: {', '.join(known)})")
+
+
+def _plain(name):
+    return name.lower().replace("_", "").replace(" ", "").replace("-", "")
+
+
+def _column(table, name, unit, where, blanks=False):
     column = table[name]
     empty = np.zeros(len(table), dtype=bool)
     if hasattr(column, "mask") and np.any(column.mask):
         if not blanks:
-            raise InputError(f"table: row {int(np.argmax(column.mask)) + 1}, column {name}: no value")
+            raise InputError(f"{where}: row {int(np.argmax(column.mask)) + 1}, column {name}: no value")
         empty = np.asarray(column.mask)
         column = column.filled(0)
     try:
         value = np.atleast_1d(np.asarray(u.Quantity(column, column.unit or unit).to_value(unit), dtype=float)).copy()
-    except (TypeError, ValueError, u.UnitConversionError):
-        raise InputError(f"table: column {name} must hold numbers in {unit}") from None
+    except u.UnitConversionError:
+        raise InputError(f"{where}: column {name} is in '{column.unit}', must be in '{unit}'") from None
+    except (TypeError, ValueError):
+        raise InputError(f"{where}: {_first_text(column, name)} in {unit}") from None
     bad = ~np.isfinite(value)
     if bad.any():
-        raise InputError(f"table: row {int(np.argmax(bad)) + 1}, column {name}: {value[bad][0]} is not a finite number")
+        raise InputError(
+            f"{where}: row {int(np.argmax(bad)) + 1}, column {name}: {value[bad][0]} is not a finite number"
+        )
     value[empty] = np.nan
     return value
+
+
+def _first_text(column, name):
+    """Say which cell of a column is no number."""
+    for i, cell in enumerate(np.asarray(column)):
+        text = cell.decode("utf-8", "replace") if isinstance(cell, bytes) else str(cell)
+        try:
+            float(text)
+        except ValueError:
+            return f"row {i + 1}, column {name}: '{text}' is not a number"
+    return f"column {name} does not hold numbers"
 
 
 def forecasts(l, b, scenario="default", *, extinction=None, t_E_range=None, jobs=1, executor=None, progress=None):

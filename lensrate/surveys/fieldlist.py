@@ -73,9 +73,9 @@ class FieldList:
         if Path(path).suffix.lower() == ".toml" or str(path) in shipped("campaigns"):
             return cls._campaign(path)
         table = read_rows(path, what)
-        l, b, extinction, carried = directions_of(table, icrs)
+        l, b, extinction, carried = directions_of(table, icrs, f"{what} '{path}'", (*_SHAPES, "visit_s"))
         n = l.size
-        column = next((c for c in _NAMES if c in carried.colnames), None)
+        column = next((c for c in carried.colnames if c.lower() in _NAMES), None)
         names = [str(v) for v in carried[column]] if column else [str(i + 1) for i in range(n)]
         shapes = None
         if any(c in carried.colnames for c in _SHAPES):

@@ -158,13 +158,13 @@ def test_pictures_are_written_with_their_provenance(tmp_path):
 
 def test_many_sightlines(tmp_path):
     path = tmp_path / "fields.csv"
-    path.write_text("name,l,b,A_I\nM01,1.0,-2.9,1.25\nM02,359.0,-2.0,2.0\nM03,2.0,-4.0,\n")
+    path.write_text("night,name,l,b,A_I\n1,M01,1.0,-2.9,1.25\n1,M02,359.0,-2.0,2.0\n2,M03,2.0,-4.0,\n")
     code, out, err = run("sightline", "--table", path, "--json", "--jobs", "2")
-    assert code == 0, err
+    assert code == 0 and "columns not used, carried along: night" in err, err
     rows = json.loads(out)
     one = forecast("1.0", "-2.9", "--extinction", "I=1.25")
     assert rows[0]["lenses"] == one["lenses"] and rows[0]["sources"]["extinction"] == {"I": 1.25}
-    assert rows[1]["sources"]["extinction"] == {"I": 2.0} and rows[1]["row"] == {"name": "M02"}
+    assert rows[1]["sources"]["extinction"] == {"I": 2.0} and rows[1]["row"]["name"] == rows[1]["name"] == "M02"
     assert rows[0]["scenario_hash"] == one["scenario_hash"] != rows[2]["scenario_hash"]
     dust = forecast("2.0", "-4.0")
     assert rows[2]["sources"]["extinction"] == dust["sources"]["extinction"]
@@ -230,6 +230,9 @@ BAD = [
     (["1", "-3", "--plot", "out.gif"], ".png"),
     (["--table", "absent.csv"], "absent.csv"),
     (["--icrs", "17:99:00", "-29"], "17:99:00"),
+    (["--icrs", "25:03:32", "-30:02:05"], "ra: '25:03:32' given, must be between 0 and 360 degrees, or 0 and 24 hours"),
+    (["--icrs", "-92.5", "-30"], "ra: '-92.5' given"),
+    (["1", "-3", "--sources", "clump", "--extinction", "I=3.1"], "--extinction has no effect here"),
 ]  # fmt: skip
 
 
@@ -247,9 +250,12 @@ def test_bad_input_is_one_clear_line(args, word, tmp_path, monkeypatch):
         ("l,b\n1,-3\n2,-95\n", "row 2, column b"),
         ("l,b\n1,nan\n", "row 1, column b"),
         ("l,lat\n1,-3\n", "column 'b'"),
-        ("l,b\n1,south\n", "column b must hold numbers"),
+        ("l,b\n1,-3\n1,south\n", "fields.csv': row 2, column b: 'south' is not a number in deg"),
+        ("ra,dec\n268,-30\n367,-30\n", "row 2, column ra: 367 deg given, must be between 0 and 360"),
         ("l,b,A_I\n1,-3,-2\n", "extinction"),
         ("l,b,A_i\n1,-3,2\n", "did you mean 'A_I'"),
+        ("l,b,AI\n1,-3,2\n", "column 'AI' is not known, did you mean 'A_I'? (known: l, b, ra, dec, A_V, A_I"),
+        ("l,b,extinction\n1,-3,2\n", "column 'extinction' is not known"),
         ("", "no rows"),
         ("l,b\n1,-3,4\n", "cannot be read"),
         ("l,b\n", "no rows"),

@@ -114,6 +114,7 @@ def test_fields(tmp_path):
         ([*GRID, "--rank", "all", "--visit-time", "0"], "above 0"),
         ([*GRID, "--rank", "all", "--sources", "distance:8"], "are not counted"),
         (["--fields", "none.csv"], "no file"),
+        ([*GRID, "--sources", "clump", "--extinction", "I=1"], "--extinction has no effect here"),
     ],
 )
 def test_what_is_refused(tmp_path, monkeypatch, args, words):
@@ -122,6 +123,13 @@ def test_what_is_refused(tmp_path, monkeypatch, args, words):
     assert code == 2 and not out
     assert words in " ".join(err.split())
     assert not list(tmp_path.iterdir())  # nothing half done, and told before the work
+
+
+def test_a_size_without_its_unit_is_no_unknown_column(tmp_path):
+    path = tmp_path / "fields.csv"
+    path.write_text("Name,l,b,radius,seeing\nA,1,-3,0.5,good\n")
+    code, _, err = run("skymap", *QUICK, "--fields", path)
+    assert code == 2 and "column 'radius' is not known, did you mean 'radius_deg'?" in " ".join(err.split())
 
 
 def test_killed_and_taken_up_again(tmp_path):
