@@ -5,6 +5,7 @@ import re
 import click
 
 from ..errors import did_you_mean
+from .complete import completed
 
 __all__ = ["Command", "Group", "announce"]
 
@@ -14,8 +15,13 @@ _NEGATIVE = re.compile(r"-(\d|\.\d|inf|nan)", re.IGNORECASE)
 class Command(click.Command):
     """A command whose arguments may be negative numbers, typed as they are: ``lensrate sightline 1.0 -3.9``."""
 
+    def __init__(self, name, *args, **kwargs):
+        super().__init__(name, *args, **kwargs)
+        completed(name, self.params)
+
     def parse_args(self, ctx, args):
-        if not args and any(isinstance(p, click.Argument) and p.required for p in self.params):
+        needed = any(isinstance(p, click.Argument) and p.required for p in self.params)
+        if not args and needed and not ctx.resilient_parsing:
             args = ["--help"]
         return super().parse_args(ctx, self._negatives_last(args))
 

@@ -110,7 +110,7 @@ def odds(
         check_target(plot, PICTURES, overwrite, "--plot")
     _check_plan(rank, hours, as_of, since, kick)
     scenario = read_scenario(**choices)
-    _no_idle_options(typed, rank, kick, scenario, as_json)
+    _no_idle_options(typed, rank, scenario)
     from ..events.observed import Sample
     from ..events.odds import odds as compute
 
@@ -153,6 +153,8 @@ def odds(
         from .followup import report_kick, report_plan
 
         click.echo(report_plan(extra) if rank else report_kick(extra))
+        if others:
+            click.echo("\n" + report_ranges(result))
     elif result.events:
         click.echo(report_one(result) if len(result) == 1 else report(result))
     if not quiet:
@@ -165,7 +167,7 @@ def odds(
         raise ConvergenceError(f"no event could be judged: {result.failed[0] if result.failed else 'none given'}")
 
 
-def _no_idle_options(typed, rank, kick, scenario, as_json):
+def _no_idle_options(typed, rank, scenario):
     """Refuse options that were typed and would do nothing."""
     context = click.get_current_context()
     alone = "it goes with a SAMPLE"
@@ -177,14 +179,12 @@ def _no_idle_options(typed, rank, kick, scenario, as_json):
             not scenario.sources.startswith("peak"),
             "all classes share it, so odds do not depend on it but with a limit at peak",
         ),
-        "family": (bool(rank or kick) and not as_json, "ranges are shown without --rank and --kick, or in --json"),
     }
     for name in ("facilities", "campaign", "seed"):
         idle[name] = (not rank, "it goes with --rank")
-    words = {"family": "spread"}
     for option, (useless, why) in idle.items():
         if useless and context.get_parameter_source(option).name == "COMMANDLINE":
-            raise click.UsageError(f"--{words.get(option, option).replace('_', '-')} has no effect here: {why}")
+            raise click.UsageError(f"--{option.replace('_', '-')} has no effect here: {why}")
 
 
 def _check_plan(rank, hours, as_of, since, kick):
@@ -303,7 +303,24 @@ def report(result):
     for e in result:
         says.setdefault(_general(e.says()), []).append(safe(e.name))
     lines = [wrap(f"{', '.join(names)}: {text}") for text, names in says.items()]
+    if any(e.range is not None for e in result):
+        lines += ["", report_ranges(result)]
     return "\n".join([*_head(result), "", columns(titles, rows), "", *lines])
+
+
+def report_ranges(result):
+    """Return the table of each event's least and most probability over a family of assumptions."""
+    titles = ["range of P", *(_SHORT.get(c, c.replace("_", " ")) for c in result.events[0].classes)]
+    rows = []
+    for e in result:
+        ends = zip(*e.range) if e.range is not None else [None] * len(e.classes)
+        rows.append([safe(e.name)[:18], *("-" if pair is None else "-".join(map(_short_p, pair)) for pair in ends)])
+    over = f"least and most over this scenario and {len(result.spread)} others: {'; '.join(result.spread)}"
+    return "\n".join([columns(titles, rows), wrap(over)])
+
+
+def _short_p(x):
+    return "<1e-6" if x < 1e-6 else f"{x:.3f}" if x >= 0.01 else f"{x:.0e}".replace("e-0", "e-")
 
 
 def _general(text):

@@ -244,8 +244,8 @@ class Odds:
         Returns
         -------
         astropy.table.QTable
-            event, l, b, frame, P and prior by class, most_likely, mass and distance with their 16th and 84th
-            percentiles, outlier weight, effective samples, what it rests on.
+            event, l, b, frame, P and prior by class (and P_CLASS_low, P_CLASS_high of a spread), most_likely, mass and
+            distance with their 16th and 84th percentiles, outlier weight, effective samples, what it rests on.
         """
         from astropy.table import QTable
 
@@ -261,6 +261,12 @@ class Odds:
         for c in classes:
             table[f"prior_{c}"] = np.array([e.prior[e.classes.index(c)] for e in self.events])
             table[f"prior_{c}"].info.description = "share of all events on the sightline"
+        if classes and all(e.range is not None for e in self.events):
+            for i, c in enumerate(classes):
+                for end, word in ((0, "low"), (1, "high")):
+                    table[f"P_{c}_{word}"] = np.array([e.range[end][i] for e in self.events])
+                    text = f"{('lowest', 'highest')[end]} probability over the family of assumptions"
+                    table[f"P_{c}_{word}"].info.description = text
         table["most_likely"] = [e.most_likely for e in self.events]
         for quantity, unit, column in (
             ("mass_msun", u.Msun, "M"),

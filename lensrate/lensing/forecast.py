@@ -119,7 +119,7 @@ def assemble(model, integrals, u_0, limits, where):
         kind = model.kinematics(name)
         share = row.rate / everything.rate if everything.rate > 0 else np.nan
         # inside a range of t_E the sampling error keeps its ratio to the rate
-        e = float(e * row.rate / max(gamma[len(lenses)].sum(), 1e-300)) if kind == "kicked" else None
+        e = float(e * row.rate / max(gamma[len(lenses)].sum(), 1e-300)) if kind in ("kicked", "mixed") else None
         lenses[name] = replace(row, share_of_events=share, kinematics=kind, rate_standard_error=e)
     kinds = {lens.kinematics for lens in lenses.values() if lens.rate > 0}
     errors = [lens.rate_standard_error for lens in lenses.values() if lens.rate_standard_error is not None]

@@ -126,6 +126,7 @@ class Sightline:
         )
         stars += "under 1 km/s, El-Badry & Rix 2018, are neglected)"
         words = {"kicked": "their own orbits in the Galaxy's potential", "unkicked": "the same, unkicked"}
+        words["mixed"] = "those of the components in the fields " + words["kicked"] + ", the others unkicked"
         dark = (f"{n.replace('_', ' ')}s: {words[self.lenses[n].kinematics]}" for n in ("neutron_star", "black_hole"))
         return "; ".join([stars, *dark])
 

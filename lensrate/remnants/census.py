@@ -222,7 +222,7 @@ def _one(name, model, elements):
         local_density_per_pc3=local,
         nearest_pc=NEAREST * local ** (-1 / 3) if local > 0 else float("nan"),
         mean_mass_msun=float(mass / today),
-        sampling_errors=elements.errors(numbers, today) if model.kinematics(name) == "kicked" else {},
+        sampling_errors=elements.errors(numbers, today) if model.kinematics(name) in ("kicked", "mixed") else {},
     )
 
 

@@ -206,13 +206,15 @@ class Model:
         )  # fmt: skip
 
     def kinematics(self, name):
-        """Return the word for a class: stellar, kicked or unkicked."""
+        """Return the word for a class: stellar, kicked, unkicked, or mixed where fields hold some birth components."""
         if name not in ("neutron_star", "black_hole"):
             return "stellar"
         if self.kicked is None:
             return "unkicked"
         law = self.laws[name]
-        return "unkicked" if (law[0] if isinstance(law, tuple) else law).name == "none" else "kicked"
+        if (law[0] if isinstance(law, tuple) else law).name == "none" or not self._bins:
+            return "unkicked"
+        return "mixed" if self.without_fields() else "kicked"
 
     def mass_note(self):
         """Return a line on what the stated masses count and the ratio of total to luminous mass."""

@@ -121,7 +121,7 @@ class PixelWork:
                 f"skymap l = {l:g}, b = {b:g}: a rate is negative or not finite; check the scenario's numbers"
             )
         sampled = u_0 * np.sqrt(np.sum((masses.root * error) ** 2, axis=1))
-        kicked = np.array([self.model.kinematics(name) == "kicked" for name in self.model.classes])
+        kicked = np.array([self.model.kinematics(name) in ("kicked", "mixed") for name in self.model.classes])
         return Pixel(
             optical_depth=_plain((masses.mass * tau).sum(axis=1)),
             rate=_plain(rate),

@@ -140,7 +140,7 @@ def methods(forecast):
     dark = (
         "neutron stars and black holes follow density and velocity fields from their own orbits in the Galaxy's "
         f"potential, for natal kicks after {s.kicks} (black holes: {s.bh_kicks})"
-        if "kicked" in kicked
+        if kicked & {"kicked", "mixed"}
         else "neutron stars and black holes follow the stars of their birth component, without natal kicks"
     )
     n, days = len(c.calendar.seasons), c.calendar.exposure(c.efficiency.includes).sum()

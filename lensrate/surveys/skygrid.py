@@ -73,6 +73,11 @@ class SkyGrid:
                 f"{fits:g} deg or more, a smaller area, or several maps"
             )
 
+        # ends are those of the last pixels
+        n_b, n_l = self.shape
+        object.__setattr__(self, "l_end", round(self.l_start + self.step * (n_l - 1), 9) + 0.0)
+        object.__setattr__(self, "b_end", round(self.b_start + self.step * (n_b - 1), 9) + 0.0)
+
     def _count(self, span):
         return math.floor(span / self.step + _SAME) + 1
 

@@ -79,12 +79,14 @@ def skymap(
     """
     if not isinstance(scenario, Scenario):
         scenario = Scenario.read(scenario)
+    ends = l, b
     grid, l, b = _pixels(l, b, step)
     extinction = [{}] * l.size if extinction is None else [dict(e) for e in extinction]
     for what, given in (("extinctions", extinction), ("names", names)):
         if len(given) not in ((0, l.size) if what == "names" else (l.size,)):
             raise InputError(f"skymap: {l.size} directions and {len(given)} {what} given; equal numbers are needed")
     notes = () if efficiency is None else _efficiency_notes(efficiency, scenario)
+    notes += () if grid is None else _end_notes(grid, *ends)
     work = PixelWork(scenario, efficiency, precise)
     directions = [(float(x), float(y), e) for x, y, e in zip(l, b, extinction)]
     model = resolve(scenario)
@@ -190,6 +192,19 @@ def _pixels(l, b, step):
             raise InputError(f"{name}: {q.size} numbers given, a grid needs two: its first and last pixel")
     grid = SkyGrid(*map(float, l), *map(float, b), strip("step", step, u.deg, shape=()))
     return grid, *grid.centres()
+
+
+def _end_notes(grid, l, b):
+    """Say where the grid ends if that is before the end asked for."""
+    notes = []
+    for name, asked, end in (("l", l, grid.l_end), ("b", b, grid.b_end)):
+        asked = float(asked[1].to_value(u.deg))
+        short = asked - end if name == "b" else (asked - end) % 360.0
+        # once around, the last pixel is beside the first
+        if 1e-6 * grid.step < short < grid.step * (1 - 1e-6):
+            end = end % 360.0 if name == "l" and grid.l_start >= 0 else end
+            notes.append(f"the last pixel is at {name} = {end:g}, not {asked:g}: that is no whole number of steps away")
+    return tuple(notes)
 
 
 def _efficiency_notes(efficiency, scenario):

@@ -82,6 +82,16 @@ def test_spread_over_a_family(tmp_path):
         assert low == pytest.approx(min(every), rel=1e-9, abs=1e-6) and high == pytest.approx(max(every), rel=1e-9)
         assert high > low
     assert "over the family" in run(odds, [*TYPED, "--spread", str(family)]).stdout
+    # of a sample: a table of its own, and columns of the file
+    sample, save = tmp_path / "two.csv", tmp_path / "o.ecsv"
+    sample.write_text("event,l,b,t_E,t_E_err,pi_E,pi_E_err\nA,1.2,-2.9,120,6,0.08,0.008\nB,1.2,-2.9,20,1,,\n")
+    args = [str(sample), "--spread", str(family), "--kicks", "none", "--save", str(save)]
+    lines = run(odds, args).stdout.splitlines()
+    assert max(map(len, lines)) <= 100 and "2 others" in " ".join(lines)
+    of_a = next(line for line in lines[lines.index("") + 4 :] if line.startswith("A "))
+    low, high = row["range"]["star"]
+    assert f"{low:.3f}-{high:.3f}" in of_a
+    assert QTable.read(save)["P_star_high"][0] == pytest.approx(high, rel=1e-9)
 
 
 def test_samples_of_a_fit(tmp_path):

@@ -33,10 +33,12 @@ def run(*args):
 
 
 def test_json_keeps_its_contract():
-    code, out, err = run("skymap", *GRID, *QUICK, "--json", "--rank", "black_hole", "--top", 2, "--field-area", 0.5)
-    assert code == 0, err
+    beyond = ["--l", "359", "1.4", *GRID[3:]]
+    code, out, err = run("skymap", *beyond, *QUICK, "--json", "--rank", "black_hole", "--top", 2, "--field-area", 0.5)
+    assert code == 0 and "the last pixel is at l = 1, not 1.4" in " ".join(err.split()), err
     result = json.loads(out)
     assert list(result) == ["grid", "quantities", "pixels", "meta", "ranking", "ranked"]
+    assert result["grid"]["l_end"] == 361 and result["grid"]["b_end"] == -3
     assert result["grid"]["shape"] == [2, 3] and len(result["pixels"]) == 6
     assert [(p["l_deg"], p["b_deg"]) for p in result["pixels"][:3]] == [(359, -4), (0, -4), (1, -4)]
     wanted = {"l_deg", "b_deg", "source_density", "mean_source_distance", "share_black_hole", "mean_t_E_all"}

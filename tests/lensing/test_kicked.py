@@ -31,6 +31,16 @@ def test_the_main_job_is_kicked(baade):
     assert not any("unkicked" in w for w in baade.warnings) and any("unkicked" in w for w in unkicked.warnings)
 
 
+def test_fields_of_some_components_are_mixed():
+    """Where the fields hold the bulge alone, the word beside each class says what the note says of the discs."""
+    bar = lensrate.sightline(1 * u.deg, -3.9 * u.deg, DEFAULT.replace(galaxy="hangould2003"), sources="distance:8")
+    assert any("born there are unkicked" in w for w in bar.warnings)
+    assert {bar.lenses[c].kinematics for c in DARK} == {"mixed"} and "others unkicked" in bar.velocities()
+    assert all(0 < bar.lenses[c].rate_standard_error < bar.lenses[c].rate for c in DARK)
+    none = lensrate.sightline(1 * u.deg, -3.9 * u.deg, bar.scenario, kicks="none")
+    assert none.lenses["neutron_star"].kinematics == "unkicked"
+
+
 def test_no_kick_is_the_stellar_field(baade):
     """The law none and a scenario without fields give the same numbers, bit for bit."""
     none = baade.reforecast(kicks="none").lenses
