@@ -55,6 +55,11 @@ def data_folder():
     )
 
 
+def _sha256(path):
+    with open(path, "rb") as f:  # in pieces: fields have 30 MB
+        return hashlib.file_digest(f, "sha256").hexdigest()
+
+
 @cache
 def checksums():
     """Return {relative path: sha256} of every shipped file, from ``SHA256SUMS``."""
@@ -85,7 +90,7 @@ def find(relative):
     listed = checksums().get(relative)
     if listed is None:
         raise DataFileError(f"{relative}: not listed in SHA256SUMS of {data_folder()}")
-    if hashlib.sha256(path.read_bytes()).hexdigest() != listed:
+    if _sha256(path) != listed:
         raise DataFileError(
             f"{relative}: its sha256 differs from the shipped one; reinstall lensrate, "
             "or keep your own copy under another name"
@@ -128,7 +133,7 @@ def field_path(name):
 
 @cache
 def _checksum(path, _stamp):
-    return hashlib.sha256(Path(path).read_bytes()).hexdigest()
+    return _sha256(path)
 
 
 def field_checksum(name):

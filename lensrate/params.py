@@ -1,6 +1,7 @@
 """Declared parameters: a frozen record states unit and meaning of each number once."""
 
 from dataclasses import dataclass, field, fields
+from functools import lru_cache
 
 import astropy.units as u
 import numpy as np
@@ -98,6 +99,9 @@ class Params:
         return cls(**values)
 
 
+_unit = lru_cache(maxsize=256)(u.Unit)  # the same few words again and again, each of which takes half a millisecond
+
+
 def _quantity(entry, where, unit):
     if isinstance(entry, dict):
         if "value" not in entry:
@@ -112,7 +116,7 @@ def _quantity(entry, where, unit):
     if isinstance(value, bool) or not isinstance(value, (int, float)):
         raise InputError(f"{where}: {value!r} is not a number")
     try:
-        return float(value) * (unit if given is None else u.Unit(given))
+        return float(value) * (unit if given is None else _unit(given))
     except (ValueError, TypeError):
         raise InputError(f"{where}: unit '{given}' is not known to astropy") from None
     except OverflowError:
