@@ -10,7 +10,7 @@ from pathlib import Path
 import numpy as np
 
 from .claims import check_claims, check_nodes
-from .errors import DataFileError, InputError, did_you_mean
+from .errors import DataFileError, InputError
 
 __all__ = ["PICTURES", "TABLES", "check_target", "dump_json", "read_rows", "whole_bytes", "whole_file", "write_table"]
 
@@ -46,7 +46,7 @@ def check_target(path, endings, overwrite=False, what="--save"):
     path = Path(path)
     if path.suffix.lower() not in endings:
         raise InputError(
-            f"{what}: ending '{path.suffix}' of '{path}' is not known{did_you_mean(path.suffix, endings)} "
+            f"{what}: ending '{path.suffix}' of '{path}' is not known "
             f"(known: {', '.join(endings)})"
         )
     folder = path.parent

@@ -96,7 +96,11 @@ class Params:
         missing = [f for f, d in known.items() if f not in values and d.default is d.default_factory]
         if missing:
             raise InputError(f"{where}: {cls.__name__} needs {', '.join(missing)}")
-        return cls(**values)
+        try:
+            return cls(**values)
+        except InputError as error:
+            # what a record says of its own numbers lacks where they stand
+            raise InputError(f"{where}: {error}") from None
 
 
 _unit = lru_cache(maxsize=256)(u.Unit)  # the same few words again and again, each of which takes half a millisecond

@@ -9,7 +9,7 @@ from pathlib import Path
 from xml.parsers import expat
 
 from .claims import check_fits
-from .errors import InputError, did_you_mean
+from .errors import InputError
 from .io import PICTURES, TABLES
 
 __all__ = ["read_made"]
@@ -53,7 +53,7 @@ def read_made(path):
     if ending not in known and ending in (".txt", "", ".out", ".log"):
         ending = ".json"  # what was redirected from --json may be called anything
     if ending not in known:
-        raise InputError(f"'{path}': ending '{ending}' is not one of ours{did_you_mean(ending, known)}")
+        raise InputError(f"'{path}': ending '{ending}' is not one of ours (known: {', '.join(known)})")
     try:
         found = _READERS[ending](path)
     except OSError as error:

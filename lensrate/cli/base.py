@@ -23,9 +23,9 @@ class Command(click.Command):
         needed = any(isinstance(p, click.Argument) and p.required for p in self.params)
         if not args and needed and not ctx.resilient_parsing:
             args = ["--help"]
-        return super().parse_args(ctx, self._negatives_last(args))
+        return super().parse_args(ctx, self._negatives_last(args, ctx))
 
-    def _negatives_last(self, args):
+    def _negatives_last(self, args, ctx):
         """Move positional words behind ``--`` so that click does not take -3.9 for an option."""
         takes = {}
         for p in self.params:
@@ -40,6 +40,10 @@ class Command(click.Command):
                 break
             if word.startswith("-") and len(word) > 1 and not _NEGATIVE.match(word):
                 n = takes.get(word, 0)
+                if len(args) - i - 1 < n and not ctx.resilient_parsing:
+                    # told here, since what is put behind would be taken for the value
+                    some = "an argument" if n == 1 else f"{n} arguments"
+                    raise click.BadOptionUsage(word, f"Option '{word}' requires {some}.", ctx)
                 options += args[i : i + 1 + n]
                 i += 1 + n
             else:

@@ -49,6 +49,7 @@ def events(
       lensrate events 1.0 -3.9 --equal-classes --number 5000 --save rare.ecsv
       lensrate events --campaign marram --seed 1 --save season.ecsv --detected
     """
+    from ..errors import InputError
     from ..io import PICTURES, TABLES, check_target
 
     _check(lon, lat, campaign_file, icrs, only_detected, dates)
@@ -67,6 +68,8 @@ def events(
     }  # fmt: skip
     if dates:
         drawing["dates"] = tuple(mjd_of(day, "--dates") for day in dates)
+        if not drawing["dates"][0] < drawing["dates"][1]:
+            raise InputError(f"--dates: {dates[0]} to {dates[1]} given, the second must be later than the first")
     from ..parallel import cluster
 
     with cluster(address) as executor:

@@ -121,6 +121,9 @@ def _forecast(l, b, scenario, jobs, executor):
 
 def _seed(seed):
     """A root of all random numbers, and what to write down so that it can be had again."""
+    if seed is None:
+        # short enough to be typed again
+        seed = int(np.random.SeedSequence().generate_state(1)[0])
     root = seeds(seed)
     if isinstance(seed, (int, np.integer)):
         return root, int(seed)

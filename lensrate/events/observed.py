@@ -45,8 +45,9 @@ PLAIN = {
 }
 LABELS = ("event", "name", "id", "ID", "Name")  # columns that may name an event, the first of them
 _WORDS = ("event", "solution", "frame", "samples")
-_PLACES = {"l": (-720.0, 720.0), "b": (-90.0, 90.0), "ra": (-720.0, 720.0), "dec": (-90.0, 90.0)}
-_SHOWN = 5
+_PLACES = {"l": (-720.0, 720.0), "b": (-90.0, 90.0), "ra": (0.0, 360.0), "dec": (-90.0, 90.0)}
+_SHOWN = 5  # complaints told in full
+_LISTED = 20  # further rows told by number
 
 
 @dataclass(frozen=True)
@@ -146,15 +147,18 @@ class Problems:
 
     def text(self):
         """Return one message for all of them."""
-        first = "; ".join(f"row {r}, column {c}: {t}" for r, c, t in self.found[:_SHOWN])
-        rest = self.found[_SHOWN:]
+        found = sorted(self.found, key=lambda x: x[0])
+        first = "; ".join(f"row {r}, column {c}: {t}" for r, c, t in found[:_SHOWN])
+        rest = found[_SHOWN:]
         if not rest:
             return f"{self.where}: {first}"
         count = {}
         for _, column, _ in rest:
             count[column] = count.get(column, 0) + 1
         more = ", ".join(f"{n} in column {c}" for c, n in sorted(count.items(), key=lambda x: -x[1])[:6])
-        return f"{self.where}: {first}; and {len(rest)} more ({more}); {len(self.rows)} rows in all"
+        rows = list(dict.fromkeys(str(r) for r, _, _ in rest))
+        which = ", ".join(rows[:_LISTED]) + (" and so on" if len(rows) > _LISTED else "")
+        return f"{self.where}: {first}; and {len(rest)} more ({more}) in rows {which}; {len(self.rows)} rows in all"
 
 
 @dataclass(frozen=True, eq=False)

@@ -23,6 +23,7 @@ from .posterior import header_of, read_draws, reference_epoch
 
 __all__ = ["read_events", "said_epoch"]
 
+_TOLD = 5  # events that are told by name
 _APART = 0.01  # deg, solutions of one event agree in place
 
 
@@ -59,14 +60,22 @@ def read_events(table, frame, t_0par, skip_bad, where, beside):
             except InputError as error:
                 problems.add(i + 1, "samples", str(error))
     groups = _groups(names, n)
-    for rows in groups.values():
+    again = []
+    for event, rows in groups.items():
         first = rows[0]
+        if len({solutions[i] for i in rows}) < len(rows):
+            again.append(f"{event} in rows {', '.join(str(i + 1) for i in rows)}")
         for i in rows[1:]:
             around = (lon[i] - lon[first] + 180.0) % 360.0 - 180.0
             if np.hypot(around * np.cos(np.radians(lat[first])), lat[i] - lat[first]) > _APART:
-                problems.add(i + 1, place[0], f"not the place of row {first + 1}, of the same event")
+                problems.add(i + 1, place[0], f"not the place of row {first + 1}, of the same event {event}")
             if (frames[i], epochs[i]) != (frames[first], epochs[first]):
-                problems.add(i + 1, "frame", f"not the frame of row {first + 1}, of the same event")
+                problems.add(i + 1, "frame", f"not the frame of row {first + 1}, of the same event {event}")
+    if again:
+        told = "; ".join(again[:_TOLD]) + f"; and {len(again) - _TOLD} more" * (len(again) > _TOLD)
+        notes.append(
+            f"rows of one event that column solution does not tell apart, taken as its degenerate solutions: {told}"
+        )
     if problems.found and not skip_bad:
         some = "; the other rows are read with --skip-bad (skip_bad=True)" if len(set(problems.rows)) < n else ""
         raise InputError(problems.text() + some)

@@ -184,7 +184,10 @@ class Bar(Density):
         if self.profile not in BAR_PROFILES:
             raise InputError(f"Bar.profile: '{self.profile}' is not known (known: {', '.join(BAR_PROFILES)})")
         if (self.mass.value > 0) == (self.rho_centre.value > 0):
-            raise InputError("Bar: give either mass or rho_centre, above zero")
+            raise InputError(
+                f"Bar: mass {self.mass:g}, rho_centre {self.rho_centre:g} given; either mass or rho_centre is needed, "
+                "above 0"
+            )
 
     def volume(self):
         """Return mass over central density, kpc^3, by quadrature over the surfaces."""

@@ -319,13 +319,14 @@ class Sightline:
             Made if not given.
         kind : str
             "timescales" (by class, log axes), "stacked", "depth" (optical depth along the sightline), "pi_E" or
-            "theta_E" (two-dimensional, by class).
+            "theta_E" (two-dimensional, by class); or "overview": timescales and depth side by side, on a figure of
+            their own.
         **style
             Passed on to the drawing function.
 
         Returns
         -------
-        matplotlib Axes
+        matplotlib Axes, of an overview the Figure
         """
         import importlib
 

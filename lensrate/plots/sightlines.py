@@ -3,7 +3,7 @@
 import matplotlib.pyplot as plt
 import numpy as np
 
-from ..errors import one_of
+from ..errors import InputError, one_of
 from ..io import PICTURES, check_target
 from ..remnants.classes import LABELS
 from .saving import blank, write_figure
@@ -259,7 +259,11 @@ def overview(result):
 
 def sightline(result, ax=None, kind="timescales", **style):
     """Draw one of the pictures of a sightline by name; see `Sightline.plot`."""
-    one_of("kind", kind, _KINDS[1:])  # an overview has two axes, so it is a figure: see `overview`
+    one_of("kind", kind, _KINDS)
+    if kind == "overview":
+        if ax is not None or style:
+            raise InputError("overview: a figure of two pictures, which takes no ax and no style; choose another kind")
+        return overview(result)
     if kind in ("pi_E", "theta_E"):
         return joint(result, ax=ax, y=kind, **style)
     return {"timescales": timescales, "stacked": stacked, "depth": depth}[kind](result, ax=ax, **style)

@@ -4,6 +4,7 @@ import hashlib
 import json
 import math
 import os
+import re
 from dataclasses import asdict, dataclass, field, replace
 from dataclasses import fields as declared
 from functools import cached_property
@@ -14,7 +15,7 @@ from ..datafiles import field_checksum, field_names, names, parse_toml, read_set
 from ..errors import InputError, did_you_mean, one_of
 from ..galaxy.model import Galaxy
 from ..remnants.classes import LensClass
-from ..remnants.kicks import parse_kick
+from ..remnants.kicks import FORMS, parse_kick
 from ..sources.bands import BANDS
 from ..sources.rules import parse_rule
 from .numerics import Numerics
@@ -72,13 +73,13 @@ class Scenario:
         parse_rule(self.sources)
         parse_kick(self.kicks)
         if self.bh_kicks not in _BH_KICKS:
+            word = self.bh_kicks.strip().partition(":")[0]
+            if not self.bh_kicks.strip().endswith(".toml"):
+                one_of("bh_kicks", word, [*_BH_KICKS, *FORMS, *names("kicks")])
             try:
                 parse_kick(self.bh_kicks)
             except InputError as error:
-                near = did_you_mean(self.bh_kicks.partition(":")[0], _BH_KICKS)
-                said = str(error).removeprefix("kicks: ")
-                hint = f" ({near[2:]})" if near else ""
-                raise InputError(f"bh_kicks{hint}: {said}; or {', '.join(_BH_KICKS)}") from None
+                raise InputError(f"bh_kicks: {str(error).removeprefix('kicks: ')}") from None
         for kind, key in _PICKED.items():
             text = getattr(self, key)
             if not text.endswith(".toml"):
@@ -248,7 +249,24 @@ class Scenario:
         -------
         Galaxy
         """
-        return Galaxy.from_dict(self._galaxy_table, self.galaxy)
+        try:
+            return Galaxy.from_dict(self._galaxy_table, self.galaxy)
+        except InputError as error:
+            raise InputError(self._by_own_key(str(error))) from None
+
+    def _by_own_key(self, text):
+        """Complaints of the Galaxy set that this scenario's own numbers cause, by the key that holds them."""
+        found = re.match(rf"{re.escape(self.galaxy)}: (?:(sun|rotation)|component (\d+))(?=[.:])", text)
+        if not found:
+            return text
+        rest, key = text[found.end() :], found[1]
+        if key is None:
+            rows, i = self._galaxy_table["component"], int(found[2]) - 1
+            own = len(rows) - len(self.component)
+            if i >= own:
+                return f"scenario '{self.name}': component {i - own + 1}{rest}"
+            key = next((k for k in self.change if k in (rows[i].get("name"), rows[i].get("element"))), None)
+        return f"scenario '{self.name}': change.{key}{rest}" if key in self.change else text
 
     def galaxy_toml(self):
         """Return the Galaxy set with this scenario's changes as TOML that `Galaxy.read` takes.

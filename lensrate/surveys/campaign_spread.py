@@ -51,7 +51,7 @@ def with_range(forecast, family, exact=False, jobs=1, executor=None):
     if skipped:
         notes.append(
             f"the range leaves out {len(without)} alternatives of family '{family.name}' that need new integrals "
-            f"({', '.join(without)}); ask for the exact range to have them"
+            f"({', '.join(without)}); --exact (exact=True) takes them in"
         )
     return replace(
         forecast, family=family.name, family_hash=family.hash, range_over=tuple(over), range_without=without,

@@ -13,6 +13,8 @@ from .efficiency import locate
 
 __all__ = ["Photometry", "positive"]
 
+# what the numbers of a campaign count, for complaints
+_OF = {"cadence_d": "days", "monitored_stars": "stars", "star_density_per_arcmin2": "stars per square arcminute"}
 _NO_ERROR = 1.0  # mag; an error larger than this is taken for one in mmag
 
 
@@ -108,6 +110,8 @@ def positive(where, table, key, high, optional=False):
     value = table.get(key)
     if value is None and optional:
         return None
-    if isinstance(value, bool) or not isinstance(value, (int, float)) or not 0 < value <= high:
-        raise InputError(f"{where}.{key}: {value!r} given, must be above 0 and at most {high:g}")
+    if isinstance(value, bool) or not isinstance(value, (int, float)):
+        raise InputError(f"{where}.{key}: {value!r} given, must be a number of {_OF[key]}, without quotes or a unit")
+    if not 0 < value <= high:
+        raise InputError(f"{where}.{key}: {value!r} given, must be above 0 and at most {high:g} {_OF[key]}")
     return float(value)

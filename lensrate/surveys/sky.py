@@ -247,7 +247,10 @@ def parse_shape(where, table, l_deg, b_deg, to_galactic=None):
         if value is None:
             raise InputError(f"{where}: width_deg needs {key} beside it")
         if isinstance(value, bool) or not isinstance(value, (int, float)) or not 0 < value <= largest:
-            raise InputError(f"{where}.{key}: {value!r} given, must be above 0 and at most {largest:g}")
+            unit = "square degrees" if key == "area_deg2" else "degrees"
+            raise InputError(
+                f"{where}.{key}: {value!r} given, must be a number of {unit} above 0 and at most {largest:g}"
+            )
         return float(value)
 
     if given[0] == "radius_deg":

@@ -95,3 +95,16 @@ def test_wrong_input(args, capsys):
         main(["events", *args])
     assert stop.value.code == 2
     assert "Traceback" not in capsys.readouterr().err
+
+
+@pytest.mark.parametrize(
+    "dates, words",
+    [
+        (("2031-02-10",), "Option '--dates' requires 2 arguments."),
+        (("2031-02-10", "2030-02-10"), "--dates: 2031-02-10 to 2030-02-10 given, the second must be later"),
+    ],
+)
+def test_dates_are_complained_of_as_typed(dates, words, capsys):
+    with pytest.raises(SystemExit):
+        main(["events", "1", "-3.9", "--dates", *dates])
+    assert words in " ".join(capsys.readouterr().err.split())

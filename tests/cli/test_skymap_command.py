@@ -109,7 +109,7 @@ def test_fields(tmp_path):
         ([*GRID, "--icrs"], "goes with --fields"),
         ([*GRID, "--picture", "rate_all"], "goes with --plot"),
         ([*GRID, "--plot", "m.png", "--picture", "rate_al"], "did you mean 'rate_all'"),
-        ([*GRID, "--save", "map.fit"], "did you mean '.fits'"),
+        ([*GRID, "--save", "map.fit"], "is not known (known: .ecsv, .csv, .fits"),
         ([*GRID, "--save", "/nowhere/map.fits"], "does not exist"),
         ([*GRID, "--efficiency", "none.ecsv"], "no file"),
         ([*GRID, "--rank", "all", "--field-area", "-1"], "above 0"),

@@ -195,6 +195,7 @@ def test_seed_and_threads(weighted):
         assert np.array_equal(one[name], two[name], equal_nan=one[name].dtype.kind == "f"), name
     assert not np.array_equal(one["u_0"], other["u_0"]) and not np.array_equal(one["t_E"], other["t_E"])
     made = lensrate.mock_events(f, number=10)
+    assert 0 <= made.seed < 2**32  # short enough to be typed again
     again = lensrate.mock_events(f, number=10, seed=made.seed)
     assert np.array_equal(made["I_peak"], again["I_peak"])
 

@@ -1,5 +1,7 @@
 """Observed events read from every format and form; bad rows told with row and column, many of them summarised."""
 
+import re
+
 import astropy.units as u
 import numpy as np
 import pytest
@@ -94,6 +96,23 @@ def test_what_is_typed_is_used_or_refused():
         Sample.from_table(one, t_0par=60100.0)
     assert any("no event is geocentric" in n for n in Sample.from_table(table(), "heliocentric", 60100.0).notes)
     assert any("weight is not used" in n for n in Sample.from_table(table(weight=[1.0, 2.0])).notes)
+
+
+def test_bad_rows_are_told_in_order_and_repeated_events_too():
+    n = 9
+    rows = {"event": [f"e{i}" for i in range(n - 1)] + ["e0"], "l": [1.0] * n, "b": [-2.0] * (n - 1) + [-3.0]}
+    rows |= {"ra": [268.0] * n, "t_E": [20.0, -1.0, 20.0, 20.0, -1.0, 20.0, 20.0, 20.0, 20.0]}
+    rows |= {"t_E_err": [1.0, 1.0, 0.0, 1.0, 1.0, 1.0, 1.0, 0.0, 1.0], "pi_E": [0.1] * n, "pi_E_err": [0.1] * n}
+    with pytest.raises(InputError) as told:
+        Sample.from_table(Table(rows))
+    words = str(told.value)
+    assert [int(r) for r in re.findall(r"row (\d+), column", words)] == sorted({2, 3, 5, 8, 9})
+    assert "row 9, column l: not the place of row 1, of the same event e0" in words
+    rows["pi_E_err"][5:7] = 0.0, 0.0
+    with pytest.raises(InputError, match=r"and 2 more \(1 in column t_E_err, 1 in column l\) in rows 8, 9"):
+        Sample.from_table(Table(rows))
+    twice = table(event=["e0", "e0"], l=[1.2, 1.2], b=[-2.9, -2.9])
+    assert any("does not tell apart" in n and "e0 in rows 1, 2" in n for n in Sample.from_table(twice).notes)
 
 
 def test_frames(tmp_path):

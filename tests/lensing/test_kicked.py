@@ -31,6 +31,13 @@ def test_the_main_job_is_kicked(baade):
     assert not any("unkicked" in w for w in baade.warnings) and any("unkicked" in w for w in unkicked.warnings)
 
 
+def test_an_overview_is_a_figure_of_its_own(baade):
+    left, right = baade.plot(kind="overview").axes
+    assert "E" in left.get_xlabel() and "kpc" in right.get_xlabel()
+    with pytest.raises(InputError, match="takes no ax"):
+        baade.plot(kind="overview", ax=left)
+
+
 def test_fields_of_some_components_are_mixed():
     """Where the fields hold the bulge alone, the word beside each class says what the note says of the discs."""
     bar = lensrate.sightline(1 * u.deg, -3.9 * u.deg, DEFAULT.replace(galaxy="hangould2003"), sources="distance:8")
