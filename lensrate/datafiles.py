@@ -17,6 +17,7 @@ __all__ = [
     "names",
     "parse_toml",
     "read_set",
+    "sample_names",
 ]
 
 _DEEPEST = 32  # levels of nested tables
@@ -106,6 +107,11 @@ def names(kind):
 @cache
 def _names(folder, kind, ending):
     return tuple(sorted(p.stem for p in (folder / kind).glob(f"*{ending}")))
+
+
+def sample_names():
+    """Return the sorted names of the shipped (invented) samples of events."""
+    return list(_names(data_folder(), "samples", ".ecsv"))
 
 
 def field_names():

@@ -12,7 +12,10 @@ import numpy as np
 from .claims import check_claims, check_nodes
 from .errors import DataFileError, InputError
 
-__all__ = ["PICTURES", "TABLES", "check_target", "dump_json", "read_rows", "whole_bytes", "whole_file", "write_table"]
+__all__ = [
+    "PICTURES", "TABLES", "check_target", "dump_json", "header_of", "read_rows", "whole_bytes", "whole_file",
+    "write_table",
+]  # fmt: skip
 
 TABLES = (".ecsv", ".csv", ".fits", ".vot", ".json")
 PICTURES = (".png", ".pdf", ".svg")
@@ -297,3 +300,29 @@ def read_rows(path, what="table"):
                 f"{what}: '{path}': column {name} has several values in a cell; leave it out, or one value a row"
             )
     return table
+
+
+def header_of(table):
+    """Return a table's header as a dict with small keys, comment lines ``key: value`` of CSV included."""
+    head = {}
+    for key, value in table.meta.items():
+        if key.lower() == "made":
+            # the one header card of lensrate's own FITS files
+            try:
+                head.update(json.loads(value))
+            except (TypeError, ValueError):
+                continue
+        elif key == "comments":
+            for line in value:
+                name, colon, text = str(line).partition(":")
+                if colon and name.strip().isidentifier():
+                    try:
+                        head[name.strip()] = json.loads(text)
+                    except ValueError:
+                        head[name.strip()] = text.strip()
+        else:
+            head[key] = value
+    # FITS knows capitals only
+    small = {"FRAME": "frame", "T_0PAR": "t_0par", "PRIOR": "prior", "EVENT": "event", "INVENTED": "invented"}
+    small |= {name.upper(): name for name in ("l", "b", "ra", "dec", "solution", "per", "includes", "u_0_limit")}
+    return {small.get(k, k): v for k, v in head.items()}

@@ -11,10 +11,11 @@ from pathlib import Path
 import astropy.units as u
 import numpy as np
 
+from ..datafiles import find, sample_names
 from ..errors import InputError, did_you_mean, kind_of, one_of
 from ..galaxy.frames import galactic_from_icrs
-from ..io import read_rows
-from .posterior import Draws, header_of, is_posterior, read_draws, reference_epoch
+from ..io import header_of, read_rows
+from .posterior import Draws, is_posterior, read_draws, reference_epoch
 
 __all__ = ["FRAMES", "MEASURED", "Measure", "Observed", "Problems", "Sample", "Solution"]
 
@@ -200,7 +201,8 @@ class Sample:
             ECSV, CSV, FITS or VOTable. Columns in the file's units, else days, mas, mas/yr, kpc, degrees, MJD: event
             (or name, id); l, b or ra, dec; any of `MEASURED` with _err, or _lo and _hi (the lower and upper error);
             solution, delta_chi2; frame, t_0par; samples (a file beside the table); and the numbers of `PLAIN`. Empty
-            cells mean not measured. Header keys frame, t_0par, invented.
+            cells mean not measured. Header keys frame, t_0par, invented. Or the name of a shipped one, for example
+            "marram_running" (invented).
         frame : str, optional
             Where neither column nor header says it; unsaid means heliocentric, with a note.
         t_0par : float, optional
@@ -221,6 +223,8 @@ class Sample:
         if frame is not None:
             one_of("frame", frame, FRAMES)
         kind_of("sample", path, (str, os.PathLike), "a file")
+        if str(path) in sample_names() and not os.path.exists(path):
+            path = find(f"samples/{path}.ecsv")
         table = read_rows(path, "sample")
         where = f"sample '{path}'"
         if is_posterior(table):

@@ -6,8 +6,9 @@ from dataclasses import dataclass
 import numpy as np
 
 from ..errors import InputError, did_you_mean, one_of
+from ..io import header_of
 
-__all__ = ["Draws", "header_of", "is_posterior", "read_draws", "reference_epoch"]
+__all__ = ["Draws", "is_posterior", "read_draws", "reference_epoch"]
 
 #: what a fit may have sampled, with the unit
 COLUMNS = {"t_E": "d", "pi_E": "", "pi_EN": "", "pi_EE": "", "theta_E": "mas", "mu_rel": "mas/yr"}
@@ -49,32 +50,6 @@ class Draws:
         order = np.argsort(self.columns[name])
         cumulative = np.cumsum(self.weight[order])
         return tuple(float(np.interp(p * cumulative[-1], cumulative, self.columns[name][order])) for p in q)
-
-
-def header_of(table):
-    """Return a table's header as a dict with small keys, comment lines ``key: value`` of CSV included."""
-    head = {}
-    for key, value in table.meta.items():
-        if key.lower() == "made":
-            # the one header card of lensrate's own FITS files
-            try:
-                head.update(json.loads(value))
-            except (TypeError, ValueError):
-                continue
-        elif key == "comments":
-            for line in value:
-                name, colon, text = str(line).partition(":")
-                if colon and name.strip().isidentifier():
-                    try:
-                        head[name.strip()] = json.loads(text)
-                    except ValueError:
-                        head[name.strip()] = text.strip()
-        else:
-            head[key] = value
-    # FITS knows capitals only
-    small = {"FRAME": "frame", "T_0PAR": "t_0par", "PRIOR": "prior", "EVENT": "event", "INVENTED": "invented"}
-    small |= {"L": "l", "B": "b", "RA": "ra", "DEC": "dec", "SOLUTION": "solution"}
-    return {small.get(k, k): v for k, v in head.items()}
 
 
 def is_posterior(table):

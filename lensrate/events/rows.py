@@ -5,7 +5,7 @@ import numpy as np
 
 from ..errors import InputError, one_of
 from ..galaxy.frames import galactic_from_icrs
-from ..io import read_rows
+from ..io import header_of, read_rows
 from .observed import (
     _PLACES,
     _POSITIVE,
@@ -19,7 +19,7 @@ from .observed import (
     Solution,
     check_columns,
 )
-from .posterior import header_of, read_draws, reference_epoch
+from .posterior import read_draws, reference_epoch
 
 __all__ = ["read_events", "said_epoch"]
 

@@ -10,7 +10,7 @@ from pathlib import Path
 import numpy as np
 
 from ..errors import InputError, did_you_mean, one_of
-from ..io import read_rows
+from ..io import header_of, read_rows
 from ..lensing.distributions import Quantiles
 from ..sources.rules import LimitRule, PeakRule, parse_rule
 
@@ -75,8 +75,8 @@ class Efficiency:
         ----------
         path : str or Path
             Columns t_E (points) or t_E_low, t_E_high (bins) in days unless they carry a unit, efficiency, and
-            optionally I_S (mag) or u_0. The header (``meta`` of an ECSV file) may hold per, includes, u_0_limit,
-            source_limit.
+            optionally I_S (mag) or u_0. The header (``meta`` of an ECSV file, ``# key: value`` lines of a CSV file)
+            may hold per, includes, u_0_limit, source_limit.
         per, includes, u_0_limit, source_limit : optional
             The statements, where the header does not make them; one that contradicts the header is refused.
 
@@ -92,7 +92,7 @@ class Efficiency:
         where = f"efficiency '{path}'"
         table = read_rows(path, "efficiency")
         given = {"per": per, "includes": includes, "u_0_limit": u_0_limit, "source_limit": source_limit}
-        stated = _statements(where, dict(table.meta), given)
+        stated = _statements(where, header_of(table), given)
         second = next((name for name in SECOND if name in table.colnames), "")
         known = ("t_E", "t_E_low", "t_E_high", "efficiency", *SECOND)
         for name in table.colnames:
@@ -322,7 +322,8 @@ def _statements(where, header, given):
     if missing:
         raise InputError(
             f"{where}: does not say {' and '.join(missing)}; state per = 'source' or 'catalogued_object', and "
-            f"includes = a list of {', '.join(INCLUDES)} (or [] for none), in its header or where it is named"
+            f"includes = a list of {', '.join(INCLUDES)} (or [] for none), in its header (in a CSV file lines like "
+            "'# per: source' and '# includes: gaps, blending' or '# includes: none') or where a campaign names it"
         )
     out["u_0_limit"] = 1.0 if out["u_0_limit"] is None else out["u_0_limit"]
     out["source_limit"] = out["source_limit"] or ""

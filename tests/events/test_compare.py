@@ -83,11 +83,11 @@ def test_p_values_are_even_under_the_truth_and_estimates_unbiased(forecast, fold
 def test_p_values_are_even_under_the_truth_where_a_fit_comes_first(forecast, folded):
     """Events 1.3 times as long: after the fit nothing is left to see, and the simulated samples are fitted too."""
     p = {"ks": [], "anderson_darling": [], "deviance": []}
-    for i in range(60):
+    for i in range(40):
         table = draw_table(forecast, 300 + i)
         table["t_E"] *= 1.3
         table["t_E_err"] *= 1.3
-        found = compare(Sample.from_table(table), folded, simulations=60, fit=True, seed=i).tests
+        found = compare(Sample.from_table(table), folded, simulations=40, fit=True, seed=i).tests
         for name, values in p.items():
             values.append(found[name].p)
     for name, values in p.items():

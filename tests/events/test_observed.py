@@ -257,3 +257,10 @@ def test_what_may_name_an_event():
         assert [e.name for e in sample] == ["a", "b"] and not sample.notes
     both = Sample.from_table(table(name=["x", "y"]), "heliocentric")
     assert [e.name for e in both] == ["M-1", "M-2"] and "columns not used: name" in both.notes
+
+
+def test_shipped_samples_go_by_their_names():
+    sample = Sample.read("marram_running")
+    assert sample.invented and len(sample) == 6
+    with pytest.raises(InputError, match="no file 'marram_runing'"):
+        Sample.read("marram_runing")

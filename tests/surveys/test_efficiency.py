@@ -125,3 +125,17 @@ def test_seasons_that_cannot_be(table, words):
 def test_seasons_in_the_wrong_order():
     with pytest.raises(InputError, match="in order"):
         Calendar((season("2032-02-01", "2032-10-31"), season()))
+
+
+def test_the_statements_of_a_plain_csv_file(tmp_path):
+    path = tmp_path / "curve.csv"
+    rows = "t_E,efficiency\n1,0.1\n10,0.4\n"
+    path.write_text("# per: source\n# includes: gaps, blending\n# u_0_limit: 0.8\n# source_limit: I=20\n" + rows)
+    read = Efficiency.read(path)
+    assert read.per == "source" and set(read.includes) == {"gaps", "blending"}
+    assert read.u_0_limit == 0.8 and read.source_limit == "limit:I=20"
+    path.write_text("# per: catalogued_object\n# includes: none\n" + rows)
+    assert Efficiency.read(path).includes == ()
+    path.write_text("# per = source\n" + rows)
+    with pytest.raises(InputError, match="# per: source"):
+        Efficiency.read(path)
