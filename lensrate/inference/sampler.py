@@ -37,8 +37,10 @@ def sampled_posterior(likelihood, steps=2000, seed=1, progress=None):
 
     Notes
     -----
-    Affine-invariant ensemble (Goodman & Weare 2010, CAMCoS 5, 65; Foreman-Mackey+ 2013, PASP 125, 306). Everything
-    is sampled as the normal number whose share its own prior's is, so that a posterior like the prior is a round one.
+    Ensemble of differential evolution, every tenth step a whole difference (ter Braak 2006, Stat. Comput. 16, 239), by
+    emcee (Foreman-Mackey+ 2013, PASP 125, 306). Its stretch moves need two to three times the steps in 15 dimensions.
+    Everything is sampled as the normal number whose share its own prior's is, so that a posterior like the prior is a
+    round one.
     """
     try:
         import emcee
@@ -60,7 +62,8 @@ def sampled_posterior(likelihood, steps=2000, seed=1, progress=None):
     size = P + active.size
     walkers = max(4 * size, 16) // 2 * 2
     start = 0.5 * rng.standard_normal((walkers, size))  # walkers far out would not come back
-    ensemble = emcee.EnsembleSampler(walkers, size, ln)
+    moves = [(emcee.moves.DEMove(), 0.9), (emcee.moves.DEMove(gamma0=1.0), 0.1)]
+    ensemble = emcee.EnsembleSampler(walkers, size, ln, moves=moves)
     ensemble._random = np.random.RandomState(seed)
     for k, _ in enumerate(ensemble.sample(start, iterations=steps)):
         if progress is not None and k % 50 == 0:
