@@ -39,11 +39,18 @@ def test_python_example_runs(tmp_path, monkeypatch):
 
 def test_scenario_example_runs(tmp_path, monkeypatch):
     monkeypatch.chdir(tmp_path)
-    Path("mine.toml").write_text(block("toml")[0])
+    Path("mine.toml").write_text(block("toml")[1])
     out = run("lensrate sightline 1.0 -3.9 --scenario mine.toml -q")
     assert "free planet" in out
-    Path("dark.toml").write_text(block("toml")[1])
+    Path("dark.toml").write_text(block("toml")[2])
     assert "primordial black hole" in run("lensrate sightline 280.46 -32.89 --scenario dark.toml -q")
+
+
+def test_campaign_example_runs(tmp_path, monkeypatch):
+    monkeypatch.chdir(tmp_path)
+    Path("mine.toml").write_text(block("toml")[0])
+    Path("curve.csv").write_text("# per: source\n# includes: none\nt_E,efficiency\n1,0.01\n20,0.3\n300,0.1\n")
+    assert "one deep field (invented)" in run("lensrate campaign mine.toml --kicks none --family none -q")
 
 
 def test_commands_and_files_are_there():
