@@ -320,7 +320,7 @@ def report_ranges(result):
 
 
 def _short_p(x):
-    return "<1e-6" if x < 1e-6 else f"{x:.3f}" if x >= 0.01 else f"{x:.0e}".replace("e-0", "e-")
+    return "<1e-6" if x < 1e-6 else f"{x:.4f}" if x >= 1e-3 else f"{x:.1e}".replace("e-0", "e-")
 
 
 def _general(text):

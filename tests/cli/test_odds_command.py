@@ -90,7 +90,7 @@ def test_spread_over_a_family(tmp_path):
     assert max(map(len, lines)) <= 100 and "2 others" in " ".join(lines)
     of_a = next(line for line in lines[lines.index("") + 4 :] if line.startswith("A "))
     low, high = row["range"]["star"]
-    assert f"{low:.3f}-{high:.3f}" in of_a
+    assert f"{low:.4f}-{high:.4f}" in of_a
     assert QTable.read(save)["P_star_high"][0] == pytest.approx(high, rel=1e-9)
 
 
