@@ -27,6 +27,7 @@ def test_help_loads_nothing_heavy():
         ("sightline 1 -3.9 --kicks hob", ["file,hob", "plain,hobbs2005"]),
         ("odds my.csv --spread ", ["file,", "plain,default", "plain,kicks"]),
         ("odds my", ["file,my"]),
+        ("odds marram_r", ["file,marram_r", "plain,marram_running"]),
         ("synthesize --checkpoint ", ["dir,"]),
     ],
 )

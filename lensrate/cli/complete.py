@@ -3,7 +3,7 @@
 import click
 from click.shell_completion import CompletionItem
 
-from ..datafiles import names
+from ..datafiles import names, sample_names
 from ..errors import LensrateError
 
 __all__ = ["completed"]
@@ -23,6 +23,9 @@ _NAMED = {
     "--galaxy": ("galaxy", ()),
     ("campaign", "file"): ("campaigns", ()),
     ("scenario", "name"): ("scenarios", ()),
+    ("odds", "sample"): ("samples", ()),
+    ("compare", "sample"): ("samples", ()),
+    ("constrain", "sample"): ("samples", ()),
 }
 _KINDS = {"FILE": "file", "SAMPLE": "file", "FOLDER": "dir"}
 
@@ -38,7 +41,8 @@ class _Text(click.types.StringParamType):
         # the shell's own files come first: in bash what follows takes precedence where there is any
         out = [CompletionItem(incomplete, type=self.kind)] if self.kind else []
         try:
-            known = [*self.words, *(names(self.named) if self.named else ())]
+            shipped = sample_names() if self.named == "samples" else names(self.named) if self.named else ()
+            known = [*self.words, *shipped]
         except LensrateError:
             known = []
         return [*out, *(CompletionItem(word) for word in known if word.startswith(incomplete))]
