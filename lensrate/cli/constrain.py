@@ -139,7 +139,7 @@ def constrain(
         write_table(result.samples_table(seed=seed), samples_file, overwrite)
     click.echo(dump_json(result.to_dict()) if as_json else text)
     if not quiet:
-        for note in dict.fromkeys([*getattr(result, "notes", ()), *result.made.get("warnings", ())]):
+        for note in dict.fromkeys([*getattr(result, "notes", result.made.get("notes", ())), *result.made.get("warnings", ())]):
             click.echo(wrap(f"note: {note}"), err=True)
 
 
@@ -325,7 +325,8 @@ def report_plan(result):
     for p in result.parameters:
         s = [result.sigma[p.name], result.sigma_fixed[p.name], result.sigma_prior[p.name]]
         kind = "ln" if p.prior.logarithmic else "linear"
-        rows.append([p.name, p.prior.text, kind, *(number(x) for x in s), number(result.seasons_for_two[p.name])])
+        seasons = number(result.seasons_for_two[p.name]) if p.prior.logarithmic else "-"
+        rows.append([p.name, p.prior.text, kind, *(number(x) for x in s), seasons])
     titles = ["parameter", "prior", "scale", "sigma", "all else fixed", "prior's", "seasons for a factor 2"]
     lines += [columns(titles, rows, left=3), ""]
     lines += [wrap(result.words(p.name)) for p in result.parameters]
@@ -342,7 +343,10 @@ def report_plan(result):
 
 def report_limits(result):
     """Return limits against mass for people."""
-    rows = [[number(m), number(x), number(n)] for m, x, n in zip(result.mass, result.limit, result.expected)]
+    rows = [
+        [number(m), number(x) if known else "not constrained", number(n)]
+        for m, x, n, known in zip(result.mass, result.limit, result.expected, result.constrained)
+    ]
     head = wrap(f"{result.lens.replace('_', ' ')}: upper limits on {result.norm.replace('_', ' ')} at "
-                f"{result.level:.0%}; the scenario has {result.amount:g}")  # fmt: skip
+                f"{result.level:.0%}; the scenario has {result.amount:g}; prior {result.made['prior']} times that")  # fmt: skip
     return "\n".join([head, "", columns(["mass [Msun]", "limit", "events at the scenario's"], rows)])

@@ -12,7 +12,7 @@ from scipy import stats
 from ..parallel import run_map
 from .data import made
 from .likelihood import Likelihood
-from .mocks import mock
+from .mocks import mass_shift, mock
 from .parameters import from_shares
 from .posterior import grid_posterior
 
@@ -130,7 +130,7 @@ class _Sample:
         data, _ = mock(
             true, probe.part_weights(theta), rng, slope=float(np.clip(nu[3], -0.9, 0.9)), shift=nu[1],
             stretch=float(np.exp(nu[2])), rate=field * np.exp(nu[0]), selection=self.selection, seen=self.templates,
-            **self.options,
+            ln_mass=mass_shift(self.parameters, theta), **self.options,
         )  # fmt: skip
         L = Likelihood(self.templates, data, self.parameters, self.nuisances, self.selection, self.counts)
         if self.steps:

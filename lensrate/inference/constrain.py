@@ -19,7 +19,7 @@ from .posterior import grid_posterior
 from .selection import Selection
 from .templates import Templates, need_kicks
 
-__all__ = ["METHODS", "MassLimits", "averaged", "constrain", "mass_limits", "timescales_only"]
+__all__ = ["METHODS", "MassLimits", "averaged", "constrain", "mass_limits"]
 
 METHODS = ("auto", "grid", "sample")
 _MOST_SETS = 200  # of a family; each costs a grid of its own
@@ -60,7 +60,7 @@ def constrain(sample, parameters=("kick_scale",), survey=None, scenario=None, *,
     points, steps, seed : int
         Grid points a parameter; steps and seed of the sampler.
     only_t_E : bool
-        Leave parallaxes and angular radii out.
+        Leave the values of parallaxes and angular radii out; which stage of `selection` an event reached still counts.
     forecast : CampaignForecast, optional
         One already made.
     jobs : int
@@ -90,8 +90,6 @@ def constrain(sample, parameters=("kick_scale",), survey=None, scenario=None, *,
     base = scenario if scenario is not None else (forecast.scenario if forecast else survey.scenario)
     base = base if isinstance(base, Scenario) else Scenario.read(base)
     asked = parse_parameters(list(parameters), priors, base.lens_class)
-    if only_t_E:
-        sample = timescales_only(sample)
     label = progress if isinstance(progress, str) else None
     if forecast is None:
         forecast = forecast_of(survey, base, jobs=jobs, executor=executor, progress=label)
@@ -115,7 +113,7 @@ def constrain(sample, parameters=("kick_scale",), survey=None, scenario=None, *,
         if BINS in parameters and not likelihoods:
             need_kicks(templates, BINS)
             asked = (*asked, *bin_parameters(templates.edges))
-        data = observed_data(sample, templates, selection, executor)
+        data = observed_data(sample, templates, selection, executor, only_t_E)
         likelihoods[name] = Likelihood(templates, data, asked, nuisances, selection, counts)
     call = progress if callable(progress) else None
     if method == "sample" or (method == "auto" and len(asked) > 3):
@@ -182,16 +180,6 @@ def _law(forecast):
     return parse_kick(forecast.scenario.kicks)
 
 
-def timescales_only(sample):
-    """Return a sample without its parallaxes, angular radii and proper motions."""
-    events = []
-    for e in sample.events:
-        t = e.t_E
-        solution = replace(e.solutions[0], measured={"t_E": t}, draws=None, delta_chi2=0.0)
-        events.append(replace(e, solutions=(solution,)))
-    return replace(sample, events=tuple(events))
-
-
 @dataclass(frozen=True, eq=False)
 class MassLimits:
     """Upper limits on a lens class against its mass.
@@ -205,6 +193,8 @@ class MassLimits:
         Largest amount at `level`, in units of what the scenario states (for a mass fraction: the fraction).
     expected : ndarray, shape (n,)
         Events of the class found, at the scenario's amount.
+    constrained : ndarray of bool, shape (n,)
+        Where not, the limit is that of the prior alone.
     amount : float
         The scenario's own.
     norm : str
@@ -217,6 +207,7 @@ class MassLimits:
     mass: np.ndarray
     limit: np.ndarray
     expected: np.ndarray
+    constrained: np.ndarray
     amount: float
     norm: str
     level: float
@@ -230,6 +221,7 @@ class MassLimits:
         table = QTable()
         table["mass"] = self.mass * u.Msun
         table["upper_limit"], table["expected_events"] = self.limit, self.expected
+        table["constrained"] = self.constrained
         table["upper_limit"].info.description = f"{self.norm} at {self.level:.0%}"
         table.meta.update({**self.made, "lens": self.lens, "level": self.level})
         return table
@@ -238,7 +230,7 @@ class MassLimits:
         """Return plain numbers."""
         return {"lens": self.lens, "norm": self.norm, "level": self.level, "mass_msun": list(map(float, self.mass)),
                 "upper_limit": list(map(float, self.limit)), "expected_events": list(map(float, self.expected)),
-                **self.made}  # fmt: skip
+                "constrained": list(map(bool, self.constrained)), **self.made}  # fmt: skip
 
     def plot(self, ax=None, **style):
         """Draw the limits against mass; returns matplotlib Axes."""
@@ -255,7 +247,7 @@ def mass_limits(
     Parameters
     ----------
     sample : Sample
-        Of which timescales count alone.
+        Of which timescales alone count.
     forecast : CampaignForecast
         Of a scenario with the class.
     lens : str
@@ -266,7 +258,7 @@ def mass_limits(
     nuisances, counts
         As in `constrain`.
     highest : float
-        The prior of the amount is uniform from 0 to so many times the scenario's.
+        The prior of the amount is uniform from 0 to so many times the scenario's, a mass fraction's at most to 1.
     executor : object with ``map``, optional
         For the masses.
 
@@ -286,23 +278,27 @@ def mass_limits(
         raise InputError("masses: numbers above 0 Msun are needed")
     if not 0.5 <= level < 1:
         raise InputError(f"level: {level:g} given, must be at least 0.5 and below 1")
-    sample = timescales_only(sample)
     table = scenario.lens_class[lens]
     norm = next(k for k in ("mass_fraction", "number_per_msun", "number_per_star") if k in table)
-    parameter = parse_parameters([f"class:{lens}"], [f"class:{lens}=uniform:0,{highest:g}"], scenario.lens_class)
-    one = _Limit(sample, forecast, lens, parameter, nuisances or Nuisances(), counts, level)
-    limits, expected = zip(*run_map(one, list(map(float, masses)), executor=executor))
     amount = table[norm]
     amount = float(amount["value"] if isinstance(amount, dict) else amount)
-    return MassLimits(
-        lens, masses, amount * np.array(limits), np.array(expected), amount, norm, level,
-        {**{k: v for k, v in forecast.meta().items() if k not in ("warnings", "seed")}, "sample": sample.name},
-    )  # fmt: skip
+    if norm == "mass_fraction":
+        highest = min(highest, 1 / amount)
+    parameter = parse_parameters([f"class:{lens}"], [f"class:{lens}=uniform:0,{highest!r}"], scenario.lens_class)
+    one = _Limit(sample, forecast, lens, parameter, nuisances or Nuisances(), counts, level)
+    limits, expected, constrained, notes = zip(*run_map(one, list(map(float, masses)), executor=executor))
+    made = {
+        **{k: v for k, v in forecast.meta().items() if k != "seed"}, "sample": sample.name,
+        "sample_invented": sample.invented, "nuisances": one.nuisances.to_dict(), "counts": counts,
+        "prior": parameter[0].prior.text, "notes": list(dict.fromkeys(n for each in notes for n in each)),
+    }  # fmt: skip
+    return MassLimits(lens, masses, amount * np.array(limits), np.array(expected), np.array(constrained), amount, norm,
+                      level, made)  # fmt: skip
 
 
 @dataclass(frozen=True)
 class _Limit:
-    """Limit on a class whose objects have one mass, and the events of it at the scenario's amount."""
+    """Limit on a class of one mass, its events at the scenario's amount, whether the sample says any of it, notes."""
 
     sample: object
     forecast: object
@@ -317,7 +313,8 @@ class _Limit:
         table = {**scenario.lens_class[lens], "mass_function": {"kind": "delta", "M": m}}
         own = scenario.replace(lens_class={**scenario.lens_class, lens: table})
         templates = Templates.of(reweighted(self.forecast, own))
-        data = observed_data(self.sample, templates)
+        data = observed_data(self.sample, templates, only_t_E=True)
         likelihood = Likelihood(templates, data, self.parameter, self.nuisances, Selection(), self.counts)
-        limit = grid_posterior({"base": likelihood}).upper_limit(f"class:{lens}", self.level)
-        return limit, float(templates.expected[:, templates.rows(lens)].sum())
+        found, name = grid_posterior({"base": likelihood}), f"class:{lens}"
+        expected = float(templates.expected[:, templates.rows(lens)].sum())
+        return found.upper_limit(name, self.level), expected, found.learned[name].constrained, found.notes

@@ -95,7 +95,7 @@ def mass_weight(templates, ln_mass, error):
     return np.exp(-0.5 * ((np.asarray(ln_mass)[:, None] - mean) / width) ** 2) / (_ROOT * width)
 
 
-def observed_data(sample, templates, selection=None, executor=None):
+def observed_data(sample, templates, selection=None, executor=None, only_t_E=False):
     """Return the events of a sample that lie in the templates' fields.
 
     Parameters
@@ -105,6 +105,9 @@ def observed_data(sample, templates, selection=None, executor=None):
     selection : Selection, optional
     executor : object with ``map``, optional
         For the events with a parallax or an angular radius, the slow ones.
+    only_t_E : bool
+        Take no value of a parallax or an angular radius: they still make geocentric timescales heliocentric, and say
+        which stage an event reached.
 
     Returns
     -------
@@ -146,7 +149,7 @@ def observed_data(sample, templates, selection=None, executor=None):
         if selection.declared:
             by = {lens: selection.weight(lens, reached) for lens in templates.classes}
             weight[i] = [by[p.lens] for p in templates.parts]
-        if pi is not None or theta is not None:
+        if not only_t_E and (pi is not None or theta is not None):
             known.append((i, (int(field[i]), float(x[i]), float(sigma[i]), pi, theta)))
     values = run_map(_Joints(templates), [job for _, job in known], executor=executor)
     joint = {i: v for (i, _), v in zip(known, values)}

@@ -349,20 +349,24 @@ class Likelihood:
         return best + 0.5 * active.size * np.log(2 * np.pi) - 0.5 * det, nu
 
     def _slopes(self, nu, rate, mu, rate_slope, mu_slope):
-        """Gradient of ln posterior in the free nuisances, and its information matrix (squares of first slopes)."""
+        """Gradient of ln posterior in the free nuisances, and its information matrix.
+
+        Squares of the slopes of each event's share of its field, plus what the field's number says: never negative,
+        however far the numbers are from those expected.
+        """
         active, sd = self.active, self.nuisances.widths
         ln = np.concatenate([self.anchored[self.data.field][None], rate_slope / rate])[active]
         a = np.concatenate([self.anchored[None], mu_slope / mu])[active]
         m, n, width = mu * np.exp(nu[0]), self.n, self.nuisances.field_rate
         if width > 0:
             k = width**-2
-            pull, curve = (k + n) * m / (k + m), (k + n) * m**2 / (k + m) ** 2
+            pull, curve = (k + n) * m / (k + m), (k + n) * k * m / (k + m) ** 2
         else:
-            pull, curve = m, np.zeros_like(m)
-        pull, curve = np.where(self.anchored, pull, n), np.where(self.anchored, curve, n)
+            pull, curve = m, m
+        pull, curve = np.where(self.anchored, pull, n), np.where(self.anchored, curve, 0.0)
         g = ln.sum(axis=1) - a @ pull - np.array(nu)[active] / sd[active] ** 2
-        H = ln @ ln.T - (a * curve) @ a.T + np.diag(1 / sd[active] ** 2)
-        return g, H
+        share = ln - a[:, self.data.field]
+        return g, share @ share.T + (a * curve) @ a.T + np.diag(1 / sd[active] ** 2)
 
 
 def anchors(templates, counts):

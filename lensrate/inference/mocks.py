@@ -1,5 +1,7 @@
 """Samples drawn from templates, as the likelihood sees them."""
 
+import math
+
 import numpy as np
 
 from ..events.fold import LN_T, STEP
@@ -7,11 +9,11 @@ from .data import made, mass_weight
 from .likelihood import moved, resloped
 from .selection import Selection
 
-__all__ = ["mock"]
+__all__ = ["mass_shift", "mock"]
 
 
 def mock(templates, part_weight, rng, sigma=0.05, slope=0.0, shift=0.0, stretch=1.0, mass_error=0.2, measured=None,
-         selection=None, rate=None, seen=None):  # fmt: skip
+         selection=None, rate=None, seen=None, ln_mass=0.0):  # fmt: skip
     """Return the Data of a sample drawn from the templates.
 
     Parameters
@@ -35,6 +37,8 @@ def mock(templates, part_weight, rng, sigma=0.05, slope=0.0, shift=0.0, stretch=
         Factor of each field's number.
     seen : Templates, optional
         Those of the inference, where another scenario is true.
+    ln_mass : float
+        ln of the factor on the masses of neutron stars and black holes.
 
     Returns
     -------
@@ -45,6 +49,8 @@ def mock(templates, part_weight, rng, sigma=0.05, slope=0.0, shift=0.0, stretch=
     stellar, factor = resloped(templates, slope)
     rows[:, templates.stellar] = moved(stellar, shift, stretch)
     dark = np.array([p.lens in ("neutron_star", "black_hole") for p in templates.parts])
+    if ln_mass:
+        rows[:, dark] = math.exp(0.5 * ln_mass) * moved(rows[:, dark], 0.5 * ln_mass, 1.0)
     rows[:, dark] *= factor[:, None, None]
     found = rows * templates.efficiency[:, None, :] * np.asarray(part_weight)[:, None]
     if rate is not None:
@@ -70,8 +76,14 @@ def mock(templates, part_weight, rng, sigma=0.05, slope=0.0, shift=0.0, stretch=
         weight = np.array([by[r] for r in reached]).reshape(x.size, len(target.parts))
         has = reached == "mass"
         mean, spread = (np.array([getattr(q, k) for q in templates.parts])[part[has]] for k in ("ln_mass", "spread"))
-        ln_mass = mean + np.hypot(mass_error, spread) * rng.standard_normal(mean.size)
-        weight[has] *= mass_weight(target, ln_mass, mass_error)
+        mean = mean + ln_mass * dark[part[has]]
+        seen_mass = mean + np.hypot(mass_error, spread) * rng.standard_normal(mean.size)
+        weight[has] *= mass_weight(target, seen_mass, mass_error)
     error = np.full(x.size, float(sigma))
     return made(target, field, x + sigma * rng.standard_normal(x.size), error, weight), lens
 
+
+def mass_shift(parameters, theta):
+    """Return ln of the factor on remnants' masses among parameter values, 0 where it is none of them."""
+    names = [p.name for p in parameters]
+    return float(np.log(theta[names.index("remnant_mass")])) if "remnant_mass" in names else 0.0

@@ -20,6 +20,8 @@ PARAMETERS = {
 }
 #: free shares of the kick bins: many parameters under one name
 BINS = "kick_bins"
+#: where they are defined, if not from 0 on; masses as far as `likelihood` tabulates them
+_POSSIBLE = {"slow_weight": (0.0, 1.0), "remnant_mass": (0.5, 2.0)}
 _FORMS = {"uniform": ("LOW", "HIGH"), "log-uniform": ("LOW", "HIGH"), "normal": ("MEAN", "SIGMA"),
           "lognormal": ("MEDIAN", "DEX")}  # fmt: skip
 _EDGE = 1e-9
@@ -197,8 +199,8 @@ def parse_parameters(names, priors=(), own=()):
             meaning, default = PARAMETERS[name]
         else:
             meaning, default = f"amount of {name[6:]} over the scenario's", "uniform:0,10"
-        high = 1.0 if name == "slow_weight" else np.inf
-        out.append(Parameter(name, meaning, Prior.parse(given.get(name, default), 0.0, high, f"prior of {name}")))
+        low, high = _POSSIBLE.get(name, (0.0, np.inf))
+        out.append(Parameter(name, meaning, Prior.parse(given.get(name, default), low, high, f"prior of {name}")))
     return tuple(out)
 
 

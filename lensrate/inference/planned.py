@@ -7,6 +7,7 @@ import numpy as np
 from scipy.special import ndtr
 
 from .._version import __version__
+from ..errors import InputError
 from ..events.fold import LN_T, STEP
 from ..parallel import run_map
 from .calibrate import no_events
@@ -41,7 +42,7 @@ class Planned:
     seasons : float
     seasons_for_two : dict of str to float
         Seasons of the same kind until the parameter is known to a factor of two at 95 % (infinite where never: the
-        nuisances' priors stand in the way).
+        nuisances' priors stand in the way; nan where its prior is not one of the logarithm).
     events : dict of str to float
         Expected by class.
     measured : dict of str to float
@@ -113,7 +114,8 @@ class Planned:
                 "truth": t, "prior": p.prior.text, "logarithmic": p.prior.logarithmic, "sigma": self.sigma[p.name],
                 "sigma_nuisances_fixed": self.sigma_fixed[p.name], "sigma_prior": self.sigma_prior[p.name],
                 "factor_95": self.factor(p.name) if p.prior.logarithmic else None,
-                "seasons_for_factor_two": self.seasons_for_two[p.name], "words": self.words(p.name),
+                "seasons_for_factor_two": self.seasons_for_two[p.name] if p.prior.logarithmic else None,
+                "words": self.words(p.name),
                 "mocks": None if self.mocks is None else self.mocks[p.name],
             }
             for p, t in zip(self.parameters, self.truth)
@@ -159,6 +161,11 @@ def planned(templates, parameters, nuisances=None, *, sigma=0.05, measured=None,
     -------
     Planned
     """
+    if mocks and measured and any(p.name == "remnant_mass" for p in parameters):
+        raise InputError(
+            "remnant_mass: from mock samples with measured masses it is not inferred, since the values of such events "
+            "hold the scenario's masses; leave out the mock samples (--mocks) or the measured masses (--measured)"
+        )
     probe = Likelihood(templates, no_events(templates), parameters, nuisances, counts=counts)
     truth = tuple(own_values(probe))
     data, prior, n = _information(probe, parameters, truth, sigma, measured or {}, mass_error)
@@ -175,7 +182,8 @@ def planned(templates, parameters, nuisances=None, *, sigma=0.05, measured=None,
     by = {c: float(expected[:, templates.rows(c)].sum()) for c in templates.classes}
     return Planned(
         tuple(parameters), truth, dict(zip(names, map(float, found))), fixed, sd, seasons,
-        {name: seasons * _times_for_two(data, prior, n, i) for i, name in enumerate(names)}, by,
+        {p.name: seasons * _times_for_two(data, prior, n, i) if p.prior.logarithmic else math.nan
+         for i, p in enumerate(parameters)}, by,
         {c: by[c] * (measured or {}).get(c, 0.0) for c in templates.classes},
         {"prior_widths": probe.nuisances.to_dict(), "free": [_NAMES[i] for i in probe.active]},
         _mocks(templates, parameters, nuisances, truth, mocks, seed, points, counts, progress, executor,
@@ -192,8 +200,15 @@ def _information(probe, parameters, truth, sigma, measured, mass_error):
     p = np.array([measured.get(q.lens, 0.0) for q in t.parts])
     width = np.sqrt(mass_error**2 + np.array([q.spread for q in t.parts]) ** 2)
     mean = np.array([q.ln_mass for q in t.parts])
-    density = np.exp(-0.5 * ((_LN_M - mean[:, None]) / width[:, None]) ** 2)
-    density /= density.sum(axis=1, keepdims=True)
+
+    def masses(shift):
+        """Shares of each part's measured ln M, remnants' masses moved."""
+        moved_mean = mean.copy()
+        moved_mean[probe._dark] += shift
+        density = np.exp(-0.5 * ((_LN_M - moved_mean[:, None]) / width[:, None]) ** 2)
+        return density / density.sum(axis=1, keepdims=True)
+
+    own = masses(0.0)
 
     def cells(theta, nu):
         """Expected events by field and cell: timescales of events without a mass, then timescale and mass."""
@@ -201,9 +216,10 @@ def _information(probe, parameters, truth, sigma, measured, mass_error):
         stellar, factor = resloped(t, nu[3])
         rows[:, t.stellar] = moved(stellar, nu[1], math.exp(nu[2]))
         values = dict(zip(probe.names, theta))
-        dark = probe._dark
+        dark, density = probe._dark, own
         if "remnant_mass" in values:
             m = math.log(values["remnant_mass"])
+            density = masses(m)
             rows[:, dark] = math.exp(0.5 * m) * moved(rows[:, dark], 0.5 * m, 1.0)
         rows[:, dark] *= factor[:, None, None]
         rows *= t.efficiency[:, None, :] * probe.part_weights(theta)[:, None] * math.exp(nu[0]) * STEP
@@ -213,8 +229,8 @@ def _information(probe, parameters, truth, sigma, measured, mass_error):
         parts = [plain]
         if p.any():
             some = p > 0
-            shifted = density[some]
-            parts.append(np.einsum("frn,rm->fnm", seen[:, some] * p[some, None], shifted).reshape(len(seen), -1))
+            both = np.einsum("frn,rm->fnm", seen[:, some] * p[some, None], density[some])
+            parts.append(both.reshape(len(seen), -1))
         return np.concatenate(parts, axis=1)
 
     def point(u):
@@ -243,8 +259,8 @@ def _information(probe, parameters, truth, sigma, measured, mass_error):
     some = base.ravel() > 1e-12 * base.max()
     data = (slopes[:, some] / base.ravel()[some]) @ slopes[:, some].T
     w = probe.nuisances.field_rate
-    own = np.where(probe.anchored, w**-2 if w > 0 else 1e12, _FREE)
-    prior = np.concatenate([np.full(len(parameters), _FREE), probe.nuisances.widths[active] ** -2.0, own])
+    factors = np.where(probe.anchored, w**-2 if w > 0 else 1e12, _FREE)
+    prior = np.concatenate([np.full(len(parameters), _FREE), probe.nuisances.widths[active] ** -2.0, factors])
     return data, np.diag(prior), len(parameters)
 
 

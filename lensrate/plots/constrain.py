@@ -243,15 +243,19 @@ def mass_limits(result, ax=None):
     """
     ax = _axes(ax)
     ax.fill_between(result.mass, result.limit, 10 * result.limit.max(), color=_POSTERIOR, alpha=0.25, lw=0)
-    ax.plot(result.mass, result.limit, "o-", color=_POSTERIOR, ms=4, lw=1.5)
+    ax.plot(result.mass, result.limit, "-", color=_POSTERIOR, lw=1.5)
+    ax.plot(result.mass[result.constrained], result.limit[result.constrained], "o", color=_POSTERIOR, ms=4)
+    ax.plot(result.mass[~result.constrained], result.limit[~result.constrained], "o", mec=_POSTERIOR, mfc="white", ms=5)
     ax.axhline(result.amount, color="0.4", lw=0.8, ls=":")
     ax.set_xscale("log")
     ax.set_yscale("log")
     ax.set_ylim(0.5 * result.limit.min(), 2 * result.limit.max())
     ax.set_xlabel(r"lens mass  [$M_\odot$]")
     ax.set_ylabel(f"{result.norm.replace('_', ' ')} excluded at {result.level:.0%}")
-    ax.set_title(f"{result.lens.replace('_', ' ')}; {result.made['campaign']}; scenario {result.made['scenario']} "
-                 f"({result.made['scenario_hash']})\ndotted: the scenario's own", fontsize=8)  # fmt: skip
+    made = result.made
+    title = f"{result.lens.replace('_', ' ')}; {made['campaign']}; scenario {made['scenario']}"
+    title += f" ({made['scenario_hash']})"
+    ax.set_title(f"{title}\ndotted: the scenario's own; open: the prior's, the sample says nothing", fontsize=8)
     return ax
 
 

@@ -1,5 +1,7 @@
 """Inference: parts that add up to forecasts, likelihoods against direct sums and integrals, calibrated posteriors."""
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 from mocks import draw_table
@@ -9,7 +11,7 @@ from lensrate import InputError
 from lensrate.events.fold import LN_T, STEP
 from lensrate.events.observed import Sample
 from lensrate.inference.calibrate import calibrate
-from lensrate.inference.constrain import constrain, mass_limits, timescales_only
+from lensrate.inference.constrain import constrain, mass_limits
 from lensrate.inference.data import _Joint, made, observed_data
 from lensrate.inference.likelihood import Likelihood, Nuisances, moved, resloped
 from lensrate.inference.mocks import mock
@@ -93,6 +95,20 @@ def test_a_fields_own_factor_is_integrated_over_its_gamma_prior(templates):
     whole = integrate.quad(part, 0.5, 1.6, limit=200)[0]
     base = plain.ln([1.0]) + mu
     assert wide.ln([1.0]) == pytest.approx(base + np.log(whole) + top, abs=1e-3)
+
+
+@pytest.mark.parametrize("seasons", [0.25, 1.0, 4.0])
+def test_numbers_far_from_those_expected_move_the_rate(templates, seasons):
+    """A quarter, or four times, of the events that the forecast expects: the search ends at the maximum."""
+    many = Templates.of(templates.forecast, seasons)
+    data = likelihood(templates).data
+    L = Likelihood(many, made(many, data.field, data.x, data.sigma), NUMBERS, Nuisances(0.3, 0.1, 0.0, 0.0, 0.0))
+    ln, nu = L.marginal([1.0])
+    fixed, rates = L.remnants([1.0]), np.linspace(-2.5, 2.5, 5001)
+    rate, mu = L.terms(fixed, np.zeros(4))
+    each = np.array([L._fields(mu, r) + L.ln_prior_nu([r, 0, 0, 0]) for r in rates]) + np.sum(np.log(rate))
+    assert nu[0] == pytest.approx(rates[each.argmax()], abs=0.02)
+    assert ln == pytest.approx(np.log(np.sum(np.exp(each - each.max())) * 1e-3) + each.max(), abs=0.02)
 
 
 def test_laplace_against_quadrature(templates):
@@ -290,7 +306,7 @@ def test_a_sample_from_the_event_sampler(kicked):
     assert result.events == len(sample) and result.expected == pytest.approx(kicked.by_class()[-1], rel=3e-3)
     low, high = result.quantile(0, [0.005, 0.995])
     assert low < 1.0 < high
-    plain = constrain(timescales_only(sample), ["neutron_stars"], forecast=kicked, points=31, counts="shape")
+    plain = constrain(sample, ["neutron_stars"], forecast=kicked, points=31, counts="shape", only_t_E=True)
     assert plain.learned["neutron_stars"].bits < 0.3
     table, draws = result.to_table(), result.samples_table(500)
     assert table.meta["scenario_hash"] == kicked.scenario.hash and len(draws) == 500
@@ -331,6 +347,42 @@ def test_masses_with_measurements_are_refused_and_without_they_move(kicked):
     assert made_.learned["remnant_mass"].bits < 0.5
 
 
+def test_timescales_alone_are_heliocentric_and_know_their_stage(kicked, templates):
+    table = draw_table(kicked, 4, parallax=True)[:30]
+    sample = Sample.from_table(table)
+    events = [replace(e, frame="geocentric", t_0par=63000.0) for e in sample.events]
+    geo = replace(sample, events=tuple(events))
+    whole, alone = observed_data(geo, templates), observed_data(geo, templates, only_t_E=True)
+    np.testing.assert_array_equal(whole.x, alone.x)
+    assert whole.full.any() and not alone.full.any()
+    assert np.abs(alone.x - observed_data(sample, templates).x).max() > 0.01
+    chain = Selection(parallax=dict.fromkeys(templates.classes, 0.2) | {"black_hole": 0.9})
+    weight = observed_data(sample, templates, chain, only_t_E=True).weight
+    holes = templates.rows("black_hole")
+    seen = np.array(["pi_EN" in e.solutions[0].measured for e in sample.events])
+    np.testing.assert_allclose(weight[:, holes[0]], np.where(seen, 0.9, 0.1))
+
+
+def test_masses_of_mock_samples_move(templates):
+    mass, many = parse_parameters(["remnant_mass"]), Templates.of(templates.forecast, 400.0)
+    L = Likelihood(many, made(many, [0], [3.0], [0.05]), mass, counts="absolute")
+    w, rng = L.part_weights([1.0]), np.random.default_rng(2)
+    for factor in (0.6, 1.0, 1.7):
+        _, lens = mock(many, w, rng, ln_mass=float(np.log(factor)))
+        seen, wanted = np.sum(np.isin(lens, ["neutron_star", "black_hole"])), L.remnants([factor])[1].sum()
+        assert abs(seen - wanted) < 4 * np.sqrt(wanted), factor
+    # what masses say of masses, and what cannot be inferred
+    alone, seen = planned(many, mass), planned(many, mass, measured={"neutron_star": 0.5, "black_hole": 0.5})
+    assert seen.sigma["remnant_mass"] < 0.2 * alone.sigma["remnant_mass"]
+    n = 0.5 * (seen.events["neutron_star"] + seen.events["black_hole"])
+    assert seen.sigma["remnant_mass"] < 3 * 0.2 / np.sqrt(n)
+    with pytest.raises(InputError, match="leave out the mock samples"):
+        planned(many, mass, measured={"black_hole": 0.5}, mocks=2)
+    with pytest.raises(InputError, match="reaches outside 0.5 to 2"):
+        parse_parameters(["remnant_mass"], ["remnant_mass=log-uniform:0.2,5"])
+    assert np.isnan(planned(templates, parse_parameters(["slow_weight"])).seasons_for_two["slow_weight"])
+
+
 def test_limits_on_a_class_of_ones_own(kicked):
     scenario = kicked.scenario.replace(
         lens_class={"dark": {"mass_function": {"kind": "delta", "M": 0.1}, "rides_on": "halo", "mass_fraction": 1.0}}
@@ -339,10 +391,13 @@ def test_limits_on_a_class_of_ones_own(kicked):
 
     forecast = reweighted(kicked, scenario)
     sample = Sample.from_table(draw_table(kicked, 6))
-    limits = mass_limits(sample, forecast, "dark", [1e-3, 0.3])
+    limits = mass_limits(sample, forecast, "dark", [1e-3, 0.3, 3e4])
+    # too few to be seen at all: said so, and no more than the whole
+    assert limits.constrained[0] and not limits.constrained[2] and limits.limit[2] == pytest.approx(0.95, abs=0.01)
+    assert limits.made["nuisances"]["rate"] == 0.3 and limits.made["prior"] == "uniform:0,1"
     assert np.all(limits.limit > 0) and np.all(np.isfinite(limits.limit)) and limits.norm == "mass_fraction"
     # three events expected and none seen is the limit of a clean search; this one has a background
-    assert np.all(limits.limit * limits.expected > 2.0)
+    assert np.all((limits.limit * limits.expected)[limits.constrained] > 2.0)
     with pytest.raises(InputError, match="did you mean 'dark'"):
         mass_limits(sample, forecast, "drak", [1.0])
     with pytest.raises(InputError, match="above 0"):
