@@ -139,7 +139,8 @@ def constrain(
         write_table(result.samples_table(seed=seed), samples_file, overwrite)
     click.echo(dump_json(result.to_dict()) if as_json else text)
     if not quiet:
-        for note in dict.fromkeys([*getattr(result, "notes", result.made.get("notes", ())), *result.made.get("warnings", ())]):
+        said = getattr(result, "notes", result.made.get("notes", ()))
+        for note in dict.fromkeys([*said, *result.made.get("warnings", ())]):
             click.echo(wrap(f"note: {note}"), err=True)
 
 
@@ -348,5 +349,6 @@ def report_limits(result):
         for m, x, n, known in zip(result.mass, result.limit, result.expected, result.constrained)
     ]
     head = wrap(f"{result.lens.replace('_', ' ')}: upper limits on {result.norm.replace('_', ' ')} at "
-                f"{result.level:.0%}; the scenario has {result.amount:g}; prior {result.made['prior']} times that")  # fmt: skip
+                f"{result.level:.0%}; the scenario has {result.amount:g}; prior {result.made['prior']} times "
+                "that")  # fmt: skip
     return "\n".join([head, "", columns(["mass [Msun]", "limit", "events at the scenario's"], rows)])
