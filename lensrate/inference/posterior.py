@@ -329,7 +329,7 @@ def made_of(likelihoods):
         "counts": ["absolute" if a else "shape" for a in first.anchored],
         "selection": first.selection.to_dict(),
         "galaxies_used": {k: v.templates.forecast.scenario.hash for k, v in likelihoods.items()},
-        "warnings": list(meta["warnings"]),
+        "warnings": list(dict.fromkeys(w for v in likelihoods.values() for w in v.templates.forecast.warnings)),
     }
 
 

@@ -30,7 +30,7 @@ def reweighed(forecast, scenario):
     keys = ("kicks", "bh_kicks", "ifmr", "imf", "lens_class")
     changes = {k: getattr(scenario, k) for k in keys if getattr(scenario, k) != getattr(old, k)}
     if not changes:
-        return forecast
+        return replace(forecast, scenario=scenario)  # its name may be another
     rows = [
         assembled(forecast.campaign, f.field, f.sightline.reforecast(**changes), f.sources, f.counted, f.rate_factor)
         for f in forecast.fields
