@@ -11,6 +11,7 @@ from .._version import __version__
 from ..errors import InputError, kind_of, one_of
 from ..remnants.fields import GRID_ERROR, Grid
 from ..scenario import Scenario, resolve
+from ..sources.rules import PeakRule, parse_rule
 from ..units import check_range, strip
 from . import distributions, rates
 from .forecast import Lens, assemble, disc_share, integrate, optical_depth_along
@@ -286,7 +287,8 @@ class Sightline:
         ----------
         **changes
             Any of kicks, bh_kicks, ifmr, imf, lens_class, u_0_limit, as in `Scenario`. The source stars stay as they
-            are. Anything else, or a kick where there was none, needs a new `sightline`.
+            are. Anything else, or a kick where there was none, needs a new `sightline`; so does another u_0_limit of
+            ``peak:`` sources, since it decides which stars are magnified enough.
 
         Returns
         -------
@@ -300,6 +302,11 @@ class Sightline:
         for key in changes:
             one_of("reforecast", key, _LINEAR)
         scenario = self.scenario.replace(**changes)
+        if scenario.u_0_limit != self.u_0_limit and isinstance(parse_rule(scenario.sources), PeakRule):
+            raise InputError(
+                f"reforecast: u_0_limit {scenario.u_0_limit:g} given; sources {scenario.sources} were weighed for "
+                f"{self.u_0_limit:g}, the only one allowed here; run a new sightline"
+            )
         if self._model.kicked is None and not scenario.unkicked and scenario.fields:
             raise InputError("reforecast: this forecast is unkicked and holds no fields; run a new sightline")
         model = self._model.changed(scenario)

@@ -1,9 +1,11 @@
 """One sightline under many scenarios: those that differ only in what is linear share their integrals."""
 
 import json
+from functools import partial
 
 from ..lensing.sightline import _LINEAR, sightline
 from ..parallel import run_map
+from ..sources.rules import PeakRule, parse_rule
 
 __all__ = ["forecasts_under", "integral_key"]
 
@@ -25,6 +27,8 @@ def integral_key(scenario, exact=False):
     str
     """
     free = {"name", "title", *_LINEAR} - ({*_STARS} if exact else set())
+    if isinstance(parse_rule(scenario.sources), PeakRule):
+        free -= {"u_0_limit"}  # decides which stars are magnified enough
     kept = {k: v for k, v in scenario.to_dict().items() if k not in free}
     return json.dumps(kept, sort_keys=True, default=str)
 
@@ -49,7 +53,7 @@ def forecasts_under(
     jobs : int
         Local threads, over sets of integrals.
     executor : object with ``map``, optional
-        Instead of local threads.
+        Instead of local threads; what works in other processes sends `each` there and its results back.
     progress : callable, optional
         Called with the share of the work done.
 
@@ -69,25 +73,32 @@ def forecasts_under(
         groups.setdefault(integral_key(s, exact), []).append(i)
     out, done = [None] * len(scenarios), 0
 
-    def run(members):
-        anchor = _anchor([scenarios[i] for i in members], scenarios[0])
-        whole = sightline(l, b, anchor, t_E_range=t_E_range)
-        for i in members:
-            result = _reweighted(whole, scenarios[i], t_E_range)
-            out[i] = result if each is None else each(result)
+    if not scenarios:
+        return out
+    places = list(groups.values())
+    order = iter(places)
 
-    def tell(members, _):
+    def keep(_, results):
         nonlocal done
-        done += len(members)
+        for i, result in zip(next(order), results, strict=True):
+            out[i] = result
+        done += len(results)
         if progress is not None:
             progress(done / len(scenarios))
 
-    todo = list(groups.values())
-    if todo:
-        # the first alone, so that threads do not compile the same kernels at once
-        run_map(run, todo[:1], progress=tell)
-        run_map(run, todo[1:], jobs, executor, progress=tell)
+    todo = [[scenarios[i] for i in members] for members in places]
+    run = partial(_group, l=l, b=b, base=scenarios[0], each=each, t_E_range=t_E_range)
+    # the first alone, so that threads do not compile the same kernels at once
+    run_map(run, todo[:1], progress=keep)
+    run_map(run, todo[1:], jobs, executor, progress=keep)
     return out
+
+
+def _group(members, l, b, base, each, t_E_range):
+    """What `each` makes of every scenario of one set of integrals; a function of its own, so that it can be sent."""
+    whole = sightline(l, b, _anchor(members, base), t_E_range=t_E_range)
+    results = (_reweighted(whole, s, t_E_range) for s in members)
+    return list(results) if each is None else [each(r) for r in results]
 
 
 def _anchor(members, base):

@@ -7,6 +7,7 @@ import matplotlib
 import numpy as np
 import pytest
 from matplotlib.figure import Figure
+from mocks import Posted
 
 import lensrate
 from lensrate.datafiles import names
@@ -147,6 +148,22 @@ def test_threads_and_order_change_nothing():
     assert one == forecasts_under(L, B, scenarios, plain, jobs=2)
     assert shares[-1] == 1.0 and shares == sorted(shares) and one[3]["all"]["rate"] == 0.5 * one[0]["all"]["rate"]
     assert forecasts_under(L, B, []) == []
+    # of other processes only what is returned comes back
+    assert one == forecasts_under(L, B, scenarios, plain, executor=Posted())
+
+
+def test_sources_seen_at_peak_are_weighed_for_their_u_0_limit():
+    wide = DEFAULT.replace(kicks="none", sources="peak:I=19")
+    narrow = wide.replace(u_0_limit=0.1)
+    many, few = forecasts_under(L, B, [wide, narrow])
+    alone = lensrate.sightline(L, B, narrow)
+    assert plain(few) == plain(alone) and few.sources == alone.sources
+    # the fainter stars that only a near passage brings up are farther away
+    assert few.sources["mean_distance_kpc"] > many.sources["mean_distance_kpc"] + 0.1
+    with pytest.raises(InputError, match="u_0_limit 0.1 given.*run a new sightline"):
+        many.reforecast(u_0_limit=0.1)
+    assert plain(many.reforecast(u_0_limit=1.0)) == plain(many)
+    assert integral_key(PLAIN) == integral_key(PLAIN.replace(u_0_limit=0.1))
 
 
 def test_weights_give_mean_and_deviation_of_independent_axes():
