@@ -1,5 +1,6 @@
 """The command line: one file a command, each importing only click until it runs."""
 
+import errno
 import gc
 import os
 import sys
@@ -23,6 +24,9 @@ from .synthesize import synthesize
 from .verify import verify
 
 __all__ = ["cli", "main"]
+
+# what the system answers to writing alone: disk full, file too large, quota used up, read-only
+_WRITING = (errno.ENOSPC, errno.EFBIG, errno.EDQUOT, errno.EROFS)
 
 
 @click.group(cls=Group, context_settings={"help_option_names": ["-h", "--help"]})
@@ -88,11 +92,20 @@ def main(args=None):
         _complain(error)
         sys.exit(1)
     except OSError as error:
-        _complain(f"output could not be written ({error.strerror or error})")
+        _complain(_of_the_system(error))
         sys.exit(1)
     except MemoryError:
         _complain("not enough memory for this run; take fewer sightlines at a time or a larger step_dex")
         sys.exit(1)
+
+
+def _of_the_system(error):
+    """What the system complains of: which file, and that it was one to write only where that is sure."""
+    words = error.strerror or str(error) or type(error).__name__
+    if error.filename is not None:
+        name = os.fsdecode(error.filename) if isinstance(error.filename, bytes) else error.filename
+        return f"{name}: could not be written ({words})" if error.errno in _WRITING else f"{name}: {words}"
+    return f"output could not be written ({words})" if error.errno in _WRITING else words
 
 
 def _complain(text):

@@ -2,7 +2,7 @@
 
 import click
 
-from .base import Command
+from .base import Command, announce
 from .options import dask
 from .text import columns, number, safe, wrap
 
@@ -113,6 +113,7 @@ def campaign(
     from ..surveys.yields import campaign as forecast
 
     family = None if family_name == "none" else Family.read(family_name)
+    announce(quiet)
     with cluster(address) as executor:
         result = forecast(
             survey, base, family=family, exact=exact, jobs=jobs, executor=executor, progress=None if quiet else "fields"

@@ -2,7 +2,7 @@
 
 import click
 
-from .base import Command
+from .base import Command, announce
 from .options import dask
 from .text import columns, number, safe, wrap
 
@@ -90,6 +90,7 @@ def compare(
     curve = Efficiency.read(efficiency_file) if efficiency_file else None
     from ..parallel import cluster
 
+    announce(quiet)
     with cluster(address) as executor:
         result = compare_sample(
             events, scenarios, survey, efficiency=curve, jobs=jobs, executor=executor, counts=counts, fit=fit,

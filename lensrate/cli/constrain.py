@@ -2,7 +2,7 @@
 
 import click
 
-from .base import Command
+from .base import Command, announce
 from .options import dask
 from .text import columns, number, safe, wrap
 
@@ -111,6 +111,7 @@ def constrain(
 
     events = None if plan else Sample.read(sample, frame, t_0par, skip_bad)
     selection = Selection.parse(stages, listed, [*CLASSES, *base.lens_class])
+    announce(quiet)
     with cluster(address) as executor:
         spread = {"jobs": jobs, "executor": executor, "progress": label}
         if plan:

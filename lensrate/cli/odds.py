@@ -49,7 +49,7 @@ def _typed(command):
 @click.option("--hours", type=float, metavar="H", help="Telescope time there is for --rank.")
 @click.option("--as-of", "as_of", metavar="DATE", help="Night that --rank plans from, e.g. 2031-06-15.")
 @click.option("--since", metavar="FILE", help="JSON of an earlier --rank run: tell what changed.")
-@click.option("--seed", type=int, default=1, show_default=True, help="Of simulated outcomes.")
+@click.option("--seed", type=click.IntRange(0), default=1, show_default=True, help="Of simulated outcomes.")
 @click.option("--kick", is_flag=True, help="Birth component and kick of one event's lens, were it a remnant.")
 @click.option("--skip-bad", is_flag=True, help="Leave bad rows out.")
 @click.option("--jobs", type=click.IntRange(1, 256), default=1, show_default=True, help="Threads over events.")

@@ -98,12 +98,15 @@ def spread(
 
         choices["scenario_name"] = Campaign.read(survey).scenario
     scenario = read_scenario(**choices)
+    place = _place(lon, lat, survey, icrs, exact, t_E_range)
     if lens is not None:
-        one_of("--lens", lens, list(dict.fromkeys([*_LENSES, *scenario.lens_class])))
+        own = {**scenario.build_galaxy().lens_class, **scenario.lens_class}
+        one_of("--lens", lens, list(dict.fromkeys([*_LENSES, *own])))
+    if which is not None:
+        one_of(f"--number of a {'sightline' if survey is None else 'campaign'}", which, _numbers(survey))
     from ..surveys.family import Family
     from ..surveys.spread import sightline_spread
 
-    place = _place(lon, lat, survey, icrs, exact, t_E_range)
     family = Family.read(family_name)
     announce(quiet)
     with Progress("spread", quiet) as progress:
@@ -150,6 +153,19 @@ def _place(lon, lat, survey, icrs, exact, t_E_range):
     if idle:
         raise click.UsageError(f"--{idle[0].replace('_', '-')} has no effect with --campaign, which states its own")
     return None
+
+
+def _numbers(survey):
+    """Names of the numbers that there will be."""
+    if survey is None:
+        from ..surveys.spread import SightlineForecast
+
+        return list(SightlineForecast.units)
+    from ..surveys.campaign import Campaign
+    from ..surveys.campaign_spread import CampaignForecasts
+
+    scaled = any(f.observed_events is not None for f in Campaign.read(survey).fields)
+    return [n for n in CampaignForecasts.units if scaled or n != "scaled_to_observed"]
 
 
 def shown(result, which, lens):

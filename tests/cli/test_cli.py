@@ -1,5 +1,7 @@
 """The command line as a user meets it: contract of the JSON, coordinates as typed, files, complaints, exit codes."""
 
+import errno
+import importlib
 import json
 import subprocess
 import sys
@@ -13,8 +15,11 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from lensrate.cli import cli, main
+from lensrate.errors import InputError
+from lensrate.kernels import _jit as kernel_cache
 
 FAST = ["--sources", "distance:8"]
+SAMPLE = "marram_events"
 
 
 def run(*args):
@@ -372,3 +377,46 @@ def test_an_interrupt_inside_compiled_code_is_an_interrupt(monkeypatch, capsys):
     monkeypatch.setattr(command.cli, "main", broken)
     with pytest.raises(SystemError, match="another kind"):
         command.main([])
+
+
+def test_complaints_of_the_system_name_the_file(monkeypatch, capsys):
+    import lensrate.cli as command
+
+    cases = [
+        (PermissionError(errno.EACCES, "Permission denied", "events.csv"), "lensrate: events.csv: Permission denied\n"),
+        (OSError(errno.EIO, "Input/output error"), "lensrate: Input/output error\n"),
+        (OSError(errno.ENOSPC, "No space left on device"),
+         "lensrate: output could not be written (No space left on device)\n"),
+        (OSError(errno.EROFS, "Read-only file system", "/x/a.fits"),
+         "lensrate: /x/a.fits: could not be written (Read-only file system)\n"),
+    ]  # fmt: skip
+    for error, words in cases:
+
+        def fail(*_, error=error, **__):
+            raise error
+
+        monkeypatch.setattr(command.cli, "main", fail)
+        with pytest.raises(SystemExit) as left:
+            command.main([])
+        assert left.value.code == 1 and capsys.readouterr().err == words
+
+
+@pytest.mark.parametrize(
+    "args, where, name",
+    [
+        (["campaign", "marram"], "surveys.yields", "campaign"),
+        (["compare", SAMPLE, "--campaign", "marram"], "events.versus", "compare_sample"),
+        (["constrain", SAMPLE, "--campaign", "marram"], "inference.constrain", "constrain"),
+        (["spread", "1", "-3"], "surveys.spread", "sightline_spread"),
+    ],
+)
+def test_compiling_is_announced_before_it_begins(args, where, name, tmp_path, monkeypatch):
+    def begun(*_, **__):
+        raise InputError("the work has begun")
+
+    monkeypatch.setattr(kernel_cache, "CACHE", tmp_path)
+    monkeypatch.setattr(importlib.import_module(f"lensrate.{where}"), name, begun)
+    code, out, err = run(*args)
+    assert code == 2 and out == ""
+    assert err.index("compiling kernels, once per installation") < err.index("the work has begun")
+    assert "compiling" not in run(*args, "-q")[2]

@@ -116,6 +116,7 @@ def test_samples_of_a_fit(tmp_path):
         (["x.csv", "--icrs"], "--icrs has no effect here: it goes with --at"),
         (["--t-E", "3", "--at", "1", "-2", "--skip-bad"], "--skip-bad has no effect here"),
         (["x.csv", "--u-0-limit", "0.5"], "--u-0-limit has no effect here"),
+        (["x.csv", "--rank", "all", "--seed", "-1"], "-1 is not in the range x>=0"),
         (["x.csv", "--seed", "3"], "--seed has no effect here: it goes with --rank"),
     ],
 )

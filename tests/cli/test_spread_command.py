@@ -4,6 +4,7 @@ import json
 
 import pytest
 from astropy.table import Table
+from mocks import survey
 from test_cli import run
 
 FAST = ["--sources", "distance:8", "--kicks", "none", "1.0", "-3.9"]
@@ -123,3 +124,25 @@ def test_bad_input_is_one_clear_line(args, word, tmp_path, monkeypatch):
     assert code == 2 and out == "" and word in err and "Traceback" not in err
     assert not list(tmp_path.iterdir())
     assert run("spread", "1")[0] == 2
+
+
+@pytest.mark.parametrize(
+    "place, option, word, known",
+    [
+        (["1", "-3.9"], "--number", "events", "mean_t_E, median_t_E, optical_depth, rate, share_of_events"),
+        (["--campaign", "small.toml"], "--number", "rate", "events, share_of_events"),
+        (["--campaign", "small.toml"], "--number", "scaled_to_observed", "events, share_of_events"),
+        (["--campaign", "small.toml"], "--lens", "neutronstar", "did you mean 'neutron_star'"),
+    ],
+)
+def test_numbers_that_there_will_not_be_are_refused_before_the_work(place, option, word, known, tmp_path, monkeypatch):
+    from lensrate.surveys import campaign_spread
+    from lensrate.surveys import spread as module
+
+    survey(tmp_path)
+    (tmp_path / "survey.toml").rename(tmp_path / "small.toml")
+    monkeypatch.chdir(tmp_path)
+    for where, name in ((module, "sightline_spread"), (campaign_spread, "campaign_spread")):
+        monkeypatch.setattr(where, name, lambda *_, **__: pytest.fail("the work began"))
+    code, out, err = run("spread", *place, option, word)
+    assert code == 2 and out == "" and f"'{word}' is not known" in err and known in " ".join(err.split())
