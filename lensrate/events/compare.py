@@ -1,6 +1,6 @@
 """An observed sample against what a scenario says the survey finds: the forecast is folded, the data are left alone."""
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
 import numpy as np
 from scipy.special import gammaln, xlogy
@@ -15,7 +15,7 @@ from .fold import LN_T, STEP, Errors, assign, heliocentric
 from .goodness import Simulated, anderson_darling, deviance, kolmogorov_smirnov, p_value, tail_test
 from .shapes import Parallaxes, Shapes
 
-__all__ = ["COUNTS", "Comparison", "Estimate", "compare", "differences", "with_notes"]
+__all__ = ["COUNTS", "Comparison", "Estimate", "compare", "differences"]
 
 COUNTS = ("auto", "absolute", "shape")
 _BIN = 0.2 * np.log(10.0)
@@ -289,7 +289,8 @@ def _sky_test(mean, n, simulations, rng):
 
 def _magnitudes(folded, events, field, simulations, rng):
     """Source magnitudes observed and expected, and the test of them."""
-    seen = [(int(f), e.solutions[0].plain["I_S"]) for f, e in zip(field, events) if "I_S" in e.solutions[0].plain]
+    plain = [e.best_solution.plain for e in events]
+    seen = [(int(f), p["I_S"]) for f, p in zip(field, plain) if "I_S" in p]
     if len(seen) < _FEW:
         return None, None
     where, magnitude = np.array([f for f, _ in seen]), np.array([m for _, m in seen])
@@ -323,7 +324,7 @@ def _estimates(folded, events, field, x):
     t, said = np.exp(x), []
     efficiency = np.array([folded.curves[f].of(v) for f, v in zip(field, t)])
     if curve.second:
-        plain = [e.solutions[0].plain.get(curve.second, np.nan) for e in events]
+        plain = [e.best_solution.plain.get(curve.second, np.nan) for e in events]
         second = np.abs(np.array(plain))
         known = np.isfinite(second)
         # the mean over the field's sources where an event's own is not known
@@ -366,8 +367,3 @@ def differences(comparisons):
         return 0.0 if a == b else a - b
 
     return [{k: less(c.ln_likelihood[k], best[k]) for k in best} for c in comparisons]
-
-
-def with_notes(comparison, *more):
-    """Return a comparison with further notes."""
-    return replace(comparison, notes=(*comparison.notes, *more))

@@ -349,7 +349,7 @@ def heliocentric(events):
     for i, e in enumerate(events):
         t = e.t_E
         value, size = t.value, None
-        best = min(e.solutions, key=lambda s: s.delta_chi2)
+        best = e.best_solution
         several += len(e.solutions) > 1
         vector = _vector(best)
         if vector is not None:

@@ -33,7 +33,6 @@ MEASURED = {
     "D_S": ("kpc", (1e-3, 1e3), "source distance"),
 }
 _POSITIVE = ("t_E", "theta_E", "mu_rel", "D_S")
-_PAIRS = (("pi_EN", "pi_EE"), ("mu_S_N", "mu_S_E"))
 #: numbers without an error: unit, range, meaning
 PLAIN = {
     "delta_chi2": ("", (0.0, 1e9), "chi2 above the best solution's"),
@@ -124,9 +123,14 @@ class Observed:
     rows: tuple = ()
 
     @property
+    def best_solution(self):
+        """The solution of least chi2, whichever row of the table it stands in; the first of equal ones."""
+        return min(self.solutions, key=lambda s: s.delta_chi2)
+
+    @property
     def t_E(self):
         """Timescale of the best solution, a Measure."""
-        best = min(self.solutions, key=lambda s: s.delta_chi2)
+        best = self.best_solution
         if "t_E" in best.measured:
             return best.measured["t_E"]
         low, middle, high = best.draws.quantiles("t_E")

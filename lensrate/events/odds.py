@@ -295,7 +295,7 @@ def _main(like, line, light=None, hist=None):
 
 def _size(event):
     """Size of the best solution's parallax, or None."""
-    best = min(event.solutions, key=lambda s: s.delta_chi2)
+    best = event.best_solution
     m = best.measured
     if "pi_E" in m:
         return m["pi_E"].value
@@ -310,7 +310,7 @@ def _size(event):
 
 def _reach(event):
     """Lower and upper end of the error bar of that size, or None."""
-    best = min(event.solutions, key=lambda s: s.delta_chi2)
+    best = event.best_solution
     m = best.measured
     if "pi_E" in m:
         return max(m["pi_E"].value - m["pi_E"].lo, 0.0), m["pi_E"].value + m["pi_E"].hi

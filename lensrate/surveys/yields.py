@@ -1,6 +1,6 @@
 """Expected events of a campaign: by field, class and season, absolute and scaled to what was observed."""
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 
 import astropy.units as u
 import numpy as np
@@ -116,7 +116,6 @@ class CampaignForecast:
     masses: object = None  # MassForecast, where facilities were given
     seed: int | None = None
     version: str = __version__
-    kick_yield: object = field(default=None, repr=False)
 
     @property
     def expected(self):

@@ -3,8 +3,8 @@
 import astropy.units as u
 import numpy as np
 import pytest
-from astropy.table import Table
-from mocks import draw_sample, draw_table, two_fields
+from astropy.table import Table, vstack
+from mocks import FIELDS, draw_sample, draw_table, two_fields
 from scipy import stats
 
 import lensrate
@@ -21,6 +21,7 @@ from lensrate.surveys.efficiency import Efficiency
 from lensrate.surveys.yields import campaign
 
 UNKICKED = Scenario.read("default").replace(kicks="none")
+SEASON = {"season": [{"start": "2031-01-01", "end": "2031-12-31"}]}
 
 
 @pytest.fixture(scope="module")
@@ -266,6 +267,25 @@ def test_estimates_take_the_efficiency_of_the_fields_own_sources(tmp_path, forec
     inside = [e for e in c.events]
     assert c.rate.value == pytest.approx(len(inside) / f.efficiency.max() / f.star_years.sum(), rel=1e-6)
     assert any("without I_S" in n for n in c.notes)
+
+
+def test_of_degenerate_solutions_the_best_counts_wherever_it_stands(tmp_path, forecast):
+    t, x = (a.ravel() for a in np.meshgrid([1e-3, 1e5], [0.0, 1.0]))
+    write(tmp_path / "u.ecsv", {"t_E": t, "u_0": x, "efficiency": 1 - 0.9 * x})
+    f = fold_campaign(Campaign.from_dict({**SEASON, "efficiency": {"file": "u.ecsv"}, "field": FIELDS},
+                                         tmp_path / "c.toml"), UNKICKED)  # fmt: skip
+    best, rng = draw_table(forecast, 3), np.random.default_rng(1)
+    best["u_0"], best["I_S"], best["delta_chi2"] = rng.random(len(best)), rng.uniform(15, 20, len(best)), 0.0
+    worse = best.copy()
+    worse["u_0"], worse["I_S"], worse["delta_chi2"] = 0.99, 14.2, 30.0
+    for table in (best, worse):
+        table["solution"] = "best" if table is best else "worse"
+    one, *both = (compare(Sample.from_table(vstack(t)), f, simulations=0)
+                  for t in ([best], [best, worse], [worse, best]))  # fmt: skip
+    for c in both:
+        assert all(len(e.solutions) == 2 and e.best_solution.name == "best" for e in c.events)
+        assert (c.rate, c.optical_depth) == (one.rate, one.optical_depth)
+        assert c.tests["magnitude"].value == one.tests["magnitude"].value
 
 
 def test_an_efficiency_against_u_0_goes_to_the_campaigns_limit(tmp_path):
