@@ -129,10 +129,10 @@ def odds(
     extra = None
     if result.events and (rank or kick):
         if rank:
-            options = (rank, facilities, campaign, hours, as_of, since, seed, outlier, tolerance, quiet)
+            options = (rank, facilities, campaign, hours, as_of, since, seed, outlier, tolerance, keep, jobs, quiet)
             extra = _plan(read, scenario, *options)
         else:
-            extra = _kick(read, scenario, outlier)
+            extra = _kick(read, scenario, outlier, keep)
         if plot:
             from .. import plots
 
@@ -198,7 +198,7 @@ def _check_plan(rank, hours, as_of, since, kick):
         raise click.UsageError("--rank and --kick are two questions; ask one at a time")
 
 
-def _plan(read, scenario, rank, facilities, campaign, hours, as_of, since, seed, outlier, tolerance, quiet):
+def _plan(read, scenario, rank, facilities, campaign, hours, as_of, since, seed, outlier, tolerance, keep, jobs, quiet):
     from ..events.followup import follow_up
     from .followup import read_since
 
@@ -206,17 +206,17 @@ def _plan(read, scenario, rank, facilities, campaign, hours, as_of, since, seed,
     return follow_up(
         read, scenario, as_of=as_of, hours=hours, target=None if rank == "all" else rank, facilities=facilities,
         campaign=campaign, outlier=outlier, seed=seed, tolerance=tolerance, since=before,
-        progress=None if quiet else "follow-up",
+        keep=keep, jobs=jobs, progress=None if quiet else "follow-up",
     )  # fmt: skip
 
 
-def _kick(read, scenario, outlier):
+def _kick(read, scenario, outlier, keep):
     from ..errors import InputError
     from ..events.kick import kick_posterior
 
     if len(read.events) != 1:
         raise InputError(f"--kick: one event at a time, the sample has {len(read.events)}")
-    return kick_posterior(read.events[0], scenario, outlier=outlier)
+    return kick_posterior(read.events[0], scenario, outlier=outlier, keep=keep)
 
 
 def _rows(result, extra):

@@ -72,7 +72,7 @@ def skymap(
     from ..errors import one_of
     from ..io import PICTURES, TABLES, check_target, dump_json, write_table
 
-    _refuse_idle(field_file, lens, plot)
+    _refuse_idle(field_file, lens, plot, visit_time)
     settings = _where(l_range, b_range, step, field_file, icrs)
     fields = settings.pop("fields")
     survey = None if fields is None else fields.survey
@@ -161,12 +161,14 @@ def _rankable(scenario, field_area, visit_time, cadence):
         )
 
 
-def _refuse_idle(field_file, lens, plot):
+def _refuse_idle(field_file, lens, plot, visit_time):
     """Refuse options that were typed and would do nothing."""
     context = click.get_current_context()
     idle = {name: (not lens, "--rank") for name in ("top", "field_area", "visit_time", "cadence", "rank_per")}
     idle |= {"save_ranking": (not lens, "--rank"), "picture": (not plot, "--plot"), "overlay": (not plot, "--plot")}
     idle |= {"icrs": (not field_file, "--fields")}
+    if lens:
+        idle["cadence"] = visit_time is None, "--visit-time"
     for name, (useless, partner) in idle.items():
         if useless and context.get_parameter_source(name).name == "COMMANDLINE":
             raise click.UsageError(f"--{name.replace('_', '-')} has no effect here: it goes with {partner}")

@@ -22,6 +22,7 @@ from ..surveys.sky import Circle, Patch, to_plane
 from ..surveys.stars import field_curve
 from ..surveys.yields import campaign
 from ..units import DAYS_PER_YEAR
+from .observed import size_of_vector
 
 __all__ = ["LN_T", "STEP", "Errors", "Folded", "assign", "fold_campaign", "fold_groups", "grouped", "heliocentric"]
 
@@ -393,9 +394,4 @@ def _vector(solution):
         north, east = (float(np.average(d.columns[c], weights=d.weight)) for c in ("pi_EN", "pi_EE"))
     else:
         return None
-    size = np.hypot(north, east)
-    if size > 0:
-        along = (vn * north**2 + ve * east**2 + 2 * cross * north * east) / size**2
-    else:
-        along = 0.5 * (vn + ve)
-    return north, east, float(np.sqrt(max(along, 1e-12)))
+    return north, east, size_of_vector(north, east, vn, ve, cross)[1]

@@ -27,7 +27,7 @@ _LEAST = 0.005  # bits; less is not worth a visit, our choice
 
 def follow_up(
     sample, scenario="default", *, as_of, hours, target=None, facilities="marram", campaign="marram", outlier=OUTLIER,
-    seed=1, number=128, tolerance=0.05, since=None, progress=None,
+    seed=1, number=128, tolerance=0.05, since=None, keep=None, jobs=1, progress=None,
 ):  # fmt: skip
     """Say which further measurement of which running event is worth the telescope time.
 
@@ -54,6 +54,10 @@ def follow_up(
         Events so near [deg] share a sightline.
     since : list of dict, optional
         Events as an earlier run printed with --json; what changed is told.
+    keep : str or Path, optional
+        Folder that keeps the sightlines' rate densities for later runs, as in `odds.event_rates`.
+    jobs : int
+        Threads over the events of a sightline; the numbers are the same.
     progress : str, optional
         Label of a progress bar.
 
@@ -87,18 +91,20 @@ def follow_up(
 
     def one(group):
         place, members = group
-        line = event_rates(*place, scenario)
+        line = event_rates(*place, scenario, keep)
+        notes.extend(n for n in line.notes if n not in notes)
         if target is not None:
             one_of("rank", target, [c.name for c in line.classes])
-        out = []
-        for i in members:
+
+        def planned(i):
             root = np.random.SeedSequence([seed, *(ord(ch) for ch in events[i].name)])
             try:
                 args = (events[i], line, survey, tools, day, target, outlier, root, number)
-                out.append((i, _event(*args, before.get(events[i].name))))
+                return i, _event(*args, before.get(events[i].name))
             except (InputError, ConvergenceError) as error:
-                out.append((i, error))
-        return out
+                return i, error
+
+        return run_map(planned, members, jobs)
 
     for out in run_map(one, _shared_sightlines(events, tolerance), progress=progress):
         for i, found in out:

@@ -156,7 +156,7 @@ def _layout(model):
     return bases, spectra
 
 
-def kick_posterior(event, scenario="default", *, outlier=OUTLIER):
+def kick_posterior(event, scenario="default", *, outlier=OUTLIER, keep=None):
     """Return where one lens was born and how hard it was kicked, were it a neutron star or a black hole.
 
     Parameters
@@ -166,6 +166,8 @@ def kick_posterior(event, scenario="default", *, outlier=OUTLIER):
         With kick-resolved fields.
     outlier : float
         As in `odds`; enters the probabilities of the classes only.
+    keep : str or Path, optional
+        Folder that keeps the rate densities behind those probabilities, as in `odds.event_rates`.
 
     Returns
     -------
@@ -223,7 +225,7 @@ def kick_posterior(event, scenario="default", *, outlier=OUTLIER):
         law[c], still[c] = (a[c] / norm if norm > 0 else a[c] for a in (law, still))
         flat[c] = flat[c] / flat[c].sum() if flat[c].sum() > 0 else flat[c]
     held = [i for i in range(len(names)) if law[:, i].sum() + flat[:, i].sum() + still[:, i].sum() > 0]
-    found = event_odds(event, event_rates(event.l, event.b, scenario), outlier)
+    found = event_odds(event, event_rates(event.l, event.b, scenario, keep), outlier)
     return KickPosterior(
         event=event.name,
         classes=_CLASSES,

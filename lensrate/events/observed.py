@@ -17,7 +17,7 @@ from ..galaxy.frames import galactic_from_icrs
 from ..io import header_of, read_rows
 from .posterior import Draws, is_posterior, read_draws, reference_epoch
 
-__all__ = ["FRAMES", "MEASURED", "Measure", "Observed", "Problems", "Sample", "Solution"]
+__all__ = ["FRAMES", "MEASURED", "Measure", "Observed", "Problems", "Sample", "Solution", "size_of_vector"]
 
 FRAMES = ("heliocentric", "geocentric")
 #: what may be measured: unit, allowed range, meaning
@@ -64,6 +64,23 @@ class Measure:
         return 0.5 * (self.lo + self.hi)
 
 
+def size_of_vector(north, east, var_n, var_e, cov):
+    """Return the size of a vector and the error of that size, to first order along the vector.
+
+    Parameters
+    ----------
+    north, east : float
+    var_n, var_e, cov : float
+        Variances of the parts and their covariance. A vector of no size has the mean of both variances.
+    """
+    size = float(np.hypot(north, east))
+    if size > 0:
+        along = (var_n * north**2 + var_e * east**2 + 2 * cov * north * east) / size**2
+    else:
+        along = 0.5 * (var_n + var_e)
+    return size, float(np.sqrt(max(along, 1e-12)))
+
+
 @dataclass(frozen=True, eq=False)
 class Solution:
     """One solution of an event: what it measures, or the draws of its posterior.
@@ -94,6 +111,11 @@ class Solution:
         """Return whether all of these are measured, as numbers or draws."""
         drawn = self.draws.columns if self.draws is not None else ()
         return all(name in self.measured or name in drawn for name in names)
+
+    def parallax(self):
+        """Return the size of the measured vector pi_EN, pi_EE and its error."""
+        n, e = self.measured["pi_EN"], self.measured["pi_EE"]
+        return size_of_vector(n.value, e.value, n.err**2, e.err**2, self.pi_E_corr * n.err * e.err)
 
 
 @dataclass(frozen=True, eq=False)

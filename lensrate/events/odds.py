@@ -315,12 +315,8 @@ def _reach(event):
     if "pi_E" in m:
         return max(m["pi_E"].value - m["pi_E"].lo, 0.0), m["pi_E"].value + m["pi_E"].hi
     if "pi_EN" in m:
-        north, east = m["pi_EN"], m["pi_EE"]
-        n, e = north.value * north.err, east.value * east.err
-        size = _size(event)
-        # to first order, along the vector
-        along = np.sqrt(max(n * n + e * e + 2 * best.pi_E_corr * n * e, 0.0)) / size if size > 0 else north.err
-        return max(size - float(along), 0.0), size + float(along)
+        size, along = best.parallax()
+        return max(size - along, 0.0), size + along
     if best.draws is not None and _size(event) is not None:
         c = best.draws.columns
         size = c.get("pi_E", np.hypot(c["pi_EN"], c["pi_EE"]) if "pi_EN" in c else None)

@@ -268,13 +268,11 @@ def _nearest(t, p_N, p_E, chosen):
 
 def _present(latent, t, pi, weight):
     """Inverse errors of ln t_E and pi_E of the fit so far, and the sharpest that the points resolve."""
-    best = min(latent.event.solutions, key=lambda s: s.delta_chi2).measured
+    solution = min(latent.event.solutions, key=lambda s: s.delta_chi2)
+    best = solution.measured
     have = [best["t_E"].value / best["t_E"].err, 0.0]
     if "pi_EN" in best:
-        N_, E_ = best["pi_EN"], best["pi_EE"]
-        size = np.hypot(N_.value, E_.value)
-        along = np.hypot(N_.value * N_.err, E_.value * E_.err) / size if size > 0 else max(N_.err, E_.err)
-        have[1] = 1.0 / along
+        have[1] = 1.0 / solution.parallax()[1]
     elif "pi_E" in best:
         have[1] = 1.0 / best["pi_E"].err
     w = weight / weight.sum()

@@ -15,6 +15,8 @@ from ..kernels._jit import KEY
 
 __all__ = ["Kept", "folder_for"]
 
+#: of the sources of this package, where settings outside the kernels are that change the numbers
+SOURCES = hashlib.sha256(b"".join(f.read_bytes() for f in sorted(Path(__file__).parent.glob("*.py")))).hexdigest()[:12]
 _MARK = b"lensrate sightline rates 1\n"
 _ALIGN = 64
 _MOST = 1 << 33  # bytes that a file may claim
@@ -40,7 +42,7 @@ class Kept:
     folder : str or Path
         Made if there is none.
     made : dict
-        Everything that the numbers depend on; with the version and the kernels' text it names the files.
+        Everything that the numbers depend on; with the version and the text of kernels and lensing it names the files.
 
     Attributes
     ----------
@@ -55,7 +57,7 @@ class Kept:
 
     def __init__(self, folder, made):
         self.folder, self.notes = folder_for(folder), []
-        self.made = json.loads(json.dumps({**made, "version": __version__, "kernels": KEY}))
+        self.made = json.loads(json.dumps({**made, "version": __version__, "kernels": KEY, "lensing": SOURCES}))
 
     def path(self, what):
         """Return the file of one set of arrays."""

@@ -10,6 +10,7 @@ from click.testing import CliRunner
 
 from lensrate.cli.odds import odds
 from lensrate.datafiles import data_folder
+from lensrate.errors import InputError
 from lensrate.io import PICTURES
 
 run = CliRunner().invoke
@@ -137,10 +138,28 @@ def test_usage(args, words):
     ],
 )
 def test_wrong_input(args, words):
-    from lensrate.errors import InputError
-
     result = run(odds, args)
     assert isinstance(result.exception, InputError) and words in str(result.exception)
+
+
+@pytest.mark.parametrize(
+    "question, module, name, wanted",
+    [
+        (["--rank", "all", "--hours", "3", "--as-of", "2031-06-15"], "followup", "follow_up", {"jobs": 2}),
+        (["--kick"], "kick", "kick_posterior", {}),
+    ],
+)
+def test_the_second_question_has_the_folder_and_the_threads(tmp_path, monkeypatch, question, module, name, wanted):
+    given = {}
+
+    def ask(*args, **kwargs):
+        given.update(kwargs)
+        raise InputError("asked")
+
+    monkeypatch.setattr(f"lensrate.events.{module}.{name}", ask)
+    result = run(odds, [*TYPED, *question, "--keep", str(tmp_path), "--jobs", "2", "--quiet"])
+    assert str(result.exception) == "asked"
+    assert {k: given[k] for k in ("keep", *wanted)} == {"keep": str(tmp_path), **wanted}
 
 
 def test_a_night_planned_and_planned_again(tmp_path):

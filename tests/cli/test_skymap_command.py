@@ -106,6 +106,8 @@ def test_fields(tmp_path):
         ([*GRID, "--fields", "x.csv"], "leave it out"),
         ([*GRID, "--rank", "black_holes"], "did you mean 'black_hole'"),
         ([*GRID, "--top", "3"], "goes with --rank"),
+        ([*GRID, "--cadence", "2"], "goes with --rank"),
+        ([*GRID, "--rank", "all", "--cadence", "2"], "--cadence has no effect here: it goes with --visit-time"),
         ([*GRID, "--icrs"], "goes with --fields"),
         ([*GRID, "--picture", "rate_all"], "goes with --plot"),
         ([*GRID, "--plot", "m.png", "--picture", "rate_al"], "did you mean 'rate_all'"),

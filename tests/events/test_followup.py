@@ -10,14 +10,15 @@ from click.testing import CliRunner
 
 from lensrate.cli import cli
 from lensrate.errors import InputError
-from lensrate.events import plans, worth
+from lensrate.events import followup, plans, worth
+from lensrate.events import odds as odds_module
 from lensrate.events.followup import follow_up, greedy
 from lensrate.events.followup_result import EventPlan, Option
 from lensrate.events.latent import latent
 from lensrate.events.observed import Measure, Observed, Solution
 from lensrate.events.odds import event_odds, event_rates
 from lensrate.kernels import followup as kernels
-from lensrate.lensing import rates
+from lensrate.lensing import points, rates
 from lensrate.lensing.quadrature import Numerics
 from lensrate.lensing.sampler import Sampler
 from lensrate.scenario import Scenario, resolve
@@ -251,6 +252,26 @@ def test_a_night_and_what_changed_since():
     assert again.events[0].to_dict() | {"changed": 0} == one.to_dict() | {"changed": 0}
     with pytest.raises(InputError, match="black_hole"):
         follow_up(events, as_of=NIGHT, hours=15.0, target="blak_hole")
+
+
+def test_kept_sightlines_are_taken_and_threads_change_nothing(tmp_path, monkeypatch):
+    """Three places, more than memory holds: no density is gathered again."""
+
+    def planned(e, line, *_):
+        p = event_odds(e, line).probability
+        return replace(_row(e.name, ("x", 1.0, p[0])), classes=tuple(c.name for c in line.classes), probability=p), ()
+
+    monkeypatch.setattr(followup, "_event", planned)
+    scenario = Scenario.read("default").replace(kicks="none", bh_kicks="none")
+    places = [(1.0, -2.0), (1.0, -2.0), (3.0, -3.0), (0.0, 4.0)]
+    events = [replace(event(f"e{k}", t_E=(60.0, 3.0)), l=l, b=b) for k, (l, b) in enumerate(places)]
+    kwargs = {"as_of": NIGHT, "hours": 15.0, "number": 8, "keep": tmp_path}
+    first = follow_up(events, scenario, **kwargs)
+    assert len(list(tmp_path.iterdir())) == 3 and len(first.events) == 4
+    monkeypatch.setattr(odds_module, "_held", type(odds_module._held)())
+    monkeypatch.setattr(points.Mixture, "gathered", None)
+    again = follow_up(events, scenario, **kwargs, jobs=2)
+    assert again.to_dict() == first.to_dict() and again.failed == ()
 
 
 @pytest.mark.parametrize(

@@ -24,9 +24,18 @@ def event(**measured):
 EVENT = event(t_E=(90.0, 5.0), pi_EN=(0.08, 0.01), pi_EE=(0.03, 0.01), theta_E=(1.2, 0.1))
 
 
+FOLDER = []
+
+
+@pytest.fixture(scope="module", autouse=True)
+def folder(tmp_path_factory):
+    FOLDER.append(tmp_path_factory.mktemp("rates"))
+    return FOLDER[0]
+
+
 @cache
 def made(kicks="igoshev2020"):
-    return kick_posterior(EVENT, Scenario.read("default").replace(kicks=kicks))
+    return kick_posterior(EVENT, Scenario.read("default").replace(kicks=kicks), keep=FOLDER[0])
 
 
 def test_a_law_only_reweighs_the_bins():
@@ -74,6 +83,11 @@ def test_sums_are_those_of_the_odds():
         mine = sum(v for c, v in zip(line.classes, found) if c.name[0] == "law" and c.name[1] == name)
         # both thin their Gaussians, by row of different sums
         assert mine == pytest.approx(wanted[names.index(name)], rel=0.02)
+
+
+def test_probabilities_come_from_the_folder(folder):
+    one = made()
+    assert one.scenario.kicks == "igoshev2020" and list(folder.glob("*.rates"))
 
 
 def test_without_fields_there_is_no_kick():

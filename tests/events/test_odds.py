@@ -1,7 +1,10 @@
 """Class probabilities: against importance-sampled events, in both frames, from tables, samples and grids alike."""
 
+import runpy
 from collections import OrderedDict
 from functools import cache
+from pathlib import Path
+from types import SimpleNamespace
 
 import astropy.units as u
 import numpy as np
@@ -13,11 +16,13 @@ from hypothesis import strategies as st
 from lensrate.errors import InputError
 from lensrate.events import likelihood as like_of
 from lensrate.events import odds as module
+from lensrate.events import plans
+from lensrate.events.fold import heliocentric
 from lensrate.events.likelihood import likelihood
 from lensrate.events.observed import Measure, Observed, Sample, Solution
 from lensrate.events.odds import class_probabilities, event_odds, event_rates, odds
 from lensrate.events.posterior import Draws
-from lensrate.lensing import earth, mixtures, rates
+from lensrate.lensing import earth, kept, mixtures, rates
 from lensrate.lensing.masses import fine_masses
 from lensrate.lensing.points import EventRates
 from lensrate.lensing.quadrature import Numerics
@@ -586,6 +591,19 @@ def test_kept_sightlines_give_the_same_numbers(forgotten, tmp_path):
         again(files[0] / "below")
 
 
+def test_kept_sightlines_belong_to_the_code_that_made_them(tmp_path):
+    """A setting changed anywhere in lensing gives another name."""
+    here = Path(kept.__file__).parent
+    for name in ("kept.py", "masses.py", "quadrature.py"):
+        (tmp_path / name).write_bytes((here / name).read_bytes())
+    of = runpy.run_path(str(tmp_path / "kept.py"), run_name="lensrate.lensing.copied")["Kept"]
+    first = of(tmp_path, {"l_deg": 1.0}).path("rates")
+    masses = tmp_path / "masses.py"
+    masses.write_text(masses.read_text() + "_STEP = 0.5\n")
+    of = runpy.run_path(str(tmp_path / "kept.py"), run_name="lensrate.lensing.copied")["Kept"]
+    assert of(tmp_path, {"l_deg": 1.0}).path("rates") != first
+
+
 def test_parallaxes_have_error_bars():
     """Along the vector: the gradient of its size; bars of the picture span them."""
     made = [
@@ -598,6 +616,15 @@ def test_parallaxes_have_error_bars():
     assert result.events[0].pi_E_range == pytest.approx((0.08, 0.13))
     assert result.events[1].pi_E_range == pytest.approx((0.5 - along, 0.5 + along))
     assert result.events[2].pi_E_range is None
+    # a correlation, the same in every use: error of a rotated ellipse along its long axis
+    both = Solution("", {"t_E": m(70.0, 3.0), "pi_EN": m(0.1, 0.02), "pi_EE": m(0.1, 0.02)}, pi_E_corr=0.8)
+    tilted = Observed("t", *PLACE, "heliocentric", None, (both,))
+    size, error = np.hypot(0.1, 0.1), 0.02 * np.sqrt(1.8)
+    assert odds([tilted], UNKICKED).events[0].pi_E_range == pytest.approx((size - error, size + error))
+    assert heliocentric([tilted])[2][0] == pytest.approx((size, error, True))
+    what = SimpleNamespace(event=tilted)
+    present, _ = plans._present(what, np.array([60.0, 80.0]), np.array([0.1, 0.2]), np.ones(2))
+    assert 1.0 / present[1] == pytest.approx(error)
     ax = result.plot()
     bars = [line.get_ydata() for line in ax.lines if len(line.get_xdata()) == 2 and np.ptp(line.get_xdata()) == 0]
     assert [tuple(b) for b in bars] == [pytest.approx(e.pi_E_range) for e in result.events[:2]]
