@@ -56,11 +56,18 @@ def test_campaign_example_runs(tmp_path, monkeypatch):
 def test_commands_and_files_are_there():
     for name in cli.commands:
         assert f"`lensrate {name}" in README, name
+    said = README.split("`--dask ADDRESS`, which")[1].split("have,")[0]
+    having = {name for name, command in cli.commands.items() if any("--dask" in p.opts for p in command.params)}
+    assert set(re.findall("`([a-z]+)`", said)) == having
     for picture in re.findall(r"!\[.*?\]\((.*?)\)", README):
         assert (ROOT / picture).is_file(), picture
     guide = (ROOT / "DEVELOPERS.md").read_text(encoding="utf-8")
     for package in sorted(p.stem for p in (ROOT / "lensrate").glob("[a-z]*")):
         assert f"`{package}`" in guide, f"{package} is missing from the guide's layers"
+    # continuous integration deletes the environment that the README makes
+    removed = re.search(r"^rm -rf (\S+)$", (ROOT / ".ci" / "run").read_text(encoding="utf-8"), re.M)[1]
+    ours = re.search(r"^    python3 -m venv (\S+) ", guide, re.M)[1]
+    assert f"-m venv {removed} " in README and ours != removed
 
 
 def test_every_key_of_a_campaign_is_explained():

@@ -164,11 +164,14 @@ def report(result, by):
     if result.field_mismatch is not None:
         errors = [result.lenses[n].rate_standard_error for n in ("neutron_star", "black_hole")]
         rates = [result.lenses[n].rate for n in ("neutron_star", "black_hole")]
+        grid = result.meta()["fields"]["grid_error"]
+        # known for one grid only
+        grid = "" if grid is None else f"grid {grid:.1%}; "
         parts = [f"{e / r:.1%}" for e, r in zip(errors, rates) if e is not None and r > 0]
         head.append(
             wrap(
                 f"{result.scenario.kick_words()}; sampling error of their rates {', '.join(parts) or 'none'}; "
-                f"grid 0.5%; systematic: fields hold the stars here to {result.field_mismatch:+.1%}"
+                f"{grid}systematic: fields hold the stars here to {result.field_mismatch:+.1%}"
             )
         )
     if result.mass_note:

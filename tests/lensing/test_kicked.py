@@ -5,6 +5,7 @@ import numpy as np
 import pytest
 
 import lensrate
+from lensrate.cli.sightline import report
 from lensrate.errors import InputError
 from lensrate.remnants.kicks import parse_kick
 from lensrate.scenario import Scenario
@@ -16,6 +17,14 @@ DARK = ("neutron_star", "black_hole")
 @pytest.fixture(scope="module")
 def baade():
     return lensrate.sightline(1 * u.deg, -3.9 * u.deg)
+
+
+def test_the_grids_error_is_told_where_it_is_known(baade, monkeypatch):
+    assert "; grid 0.5%; systematic" in " ".join(report(baade, "class").split())
+    monkeypatch.setattr("lensrate.lensing.sightline.Grid", lambda: None)
+    assert baade.to_dict()["fields"]["grid_error"] is None
+    text = " ".join(report(baade, "class").split())
+    assert "grid" not in text and "; systematic: fields hold" in text
 
 
 def test_the_main_job_is_kicked(baade):
