@@ -142,6 +142,11 @@ def _checksum(path, _stamp):
     return _sha256(path)
 
 
+def set_checksum(kind, name):
+    """Return the sha256 of the file that `read_set` reads."""
+    return _sha256(name if str(name).endswith(".toml") else find(f"{kind}/{name}.toml"))
+
+
 def field_checksum(name):
     """Return the sha256 of kick-resolved fields, as listed for shipped ones."""
     listed = checksums().get(f"fields/{name}.fits")

@@ -98,6 +98,10 @@ def report_kick(kick):
     ]
     titles = ["kick [km/s]", *(f"{_SHORT[c]} {p}" for c in kick.classes for p in ("law", "flat"))]
     rows = []
+    if kick.unkicked.sum() > 0:
+        rows.append(["unkicked"])
+        for share in kick.unkicked.sum(axis=1):
+            rows[0] += [_chance(share), "-"]
     for k in range(kick.edges.size - 1):
         row = [f"{kick.edges[k]:g}-{kick.edges[k + 1]:g}"]
         for c in range(len(kick.classes)):
@@ -109,7 +113,7 @@ def report_kick(kick):
     for i, name in enumerate(kick.components):
         row = [name.replace("_", " ")]
         for c in range(len(kick.classes)):
-            row += [_chance(kick.law[c, i].sum()), _chance(kick.flat[c, i].sum())]
+            row += [_chance(kick.law[c, i].sum() + kick.unkicked[c, i]), _chance(kick.flat[c, i].sum())]
         rows.append(row)
     lines += [columns(titles, rows), ""]
     for name in kick.classes:

@@ -4,6 +4,7 @@ from dataclasses import replace
 
 import numpy as np
 
+from ..datafiles import set_checksum
 from ..errors import ConvergenceError, InputError, LensrateError, one_of
 from ..lensing.geometry import magnification
 from ..scenario import Scenario
@@ -134,7 +135,11 @@ def follow_up(
         as_of=day,
         budget=float(hours),
         facilities=str(facilities),
+        facilities_sha256=set_checksum("facilities", facilities),
         campaign=survey.name,
+        campaign_hash=survey.hash,
+        outlier=float(outlier),
+        tolerance=float(tolerance),
         scenario=scenario,
         seed=seed,
         number=number,

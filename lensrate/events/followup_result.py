@@ -141,6 +141,10 @@ class FollowUpPlan:
     seed, number : int
         Of the simulated outcomes; outcomes of each class.
     notes, failed : tuple of str
+    outlier, tolerance : float
+        As given to `follow_up`.
+    facilities_sha256, campaign_hash : str
+        Checksums of the file of facilities, and of the campaign's with all that it names.
     """
 
     events: tuple
@@ -158,6 +162,10 @@ class FollowUpPlan:
     failed: tuple = ()
     references: tuple = ()
     version: str = field(default=__version__)
+    outlier: float | None = None
+    tolerance: float | None = None
+    facilities_sha256: str = ""
+    campaign_hash: str = ""
 
     def to_dict(self):
         """Return plain numbers by name of event; `taken` names the option in the list under the budget."""
@@ -188,7 +196,9 @@ class FollowUpPlan:
             "program": "lensrate", "version": self.version, "header": self.header(), "scenario": self.scenario.name,
             "scenario_hash": self.scenario.hash, "scenario_text": self.scenario.to_toml(), "seed": self.seed,
             "outcomes_per_class": self.number, "as_of_mjd": self.as_of, "budget_h": self.budget,
-            "facilities": self.facilities, "campaign": self.campaign, "invented": self.invented,
+            "outlier": self.outlier, "tolerance_deg": self.tolerance,
+            "facilities": self.facilities, "facilities_sha256": self.facilities_sha256,
+            "campaign": self.campaign, "campaign_hash": self.campaign_hash, "invented": self.invented,
             "warnings": list(self.notes), "references": list(self.references),
         }  # fmt: skip
 
@@ -197,6 +207,8 @@ class FollowUpPlan:
         import astropy.units as u
         from astropy.table import QTable
 
+        chosen = {e.name: e.best.name for e in self.chosen}
+        taken = [o.name == chosen.get(e.name) for e in self.events for o in e.options]
         rows = [
             (e.name, e.order or 0, o.name, o.measures, o.hours, o.per_hour, o.worth.bits, o.worth.bits_error,
              o.worth.target_bits, o.worth.target_error, o.worth.sure, o.worth.target_sure, o.worth.false_alarm,
@@ -213,7 +225,10 @@ class FollowUpPlan:
         table["hours"].unit = u.hour
         for name in ("theta_E_p16", "theta_E_p50", "theta_E_p84"):
             table[name].unit = u.mas
+        table["order"] = np.where(taken, table["order"], 0)
         table["order"].info.description = "place in the list under the budget, 0: not in it"
+        table.add_column(np.array(taken, dtype=bool), 2, "taken")
+        table["taken"].info.description = "the option that the list takes of this event"
         table["last_useful_start"].info.description = "MJD; infinite: no hurry"
         table.meta.update(self.meta())
         return table

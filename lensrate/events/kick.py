@@ -42,6 +42,8 @@ class KickPosterior:
     probability : dict of str to float
         Of each class, from the odds.
     laws : dict of str to str
+    outlier : float
+        Behind `probability`.
     """
 
     event: str
@@ -58,6 +60,7 @@ class KickPosterior:
     notes: tuple = ()
     references: tuple = ()
     version: str = field(default=__version__)
+    outlier: float = OUTLIER
 
     def header(self):
         """Return the line above the table."""
@@ -83,7 +86,7 @@ class KickPosterior:
         return {
             "program": "lensrate", "version": self.version, "header": self.header(), "scenario": self.scenario.name,
             "scenario_hash": self.scenario.hash, "scenario_text": self.scenario.to_toml(), "seed": None,
-            "warnings": list(self.notes), "references": list(self.references),
+            "outlier": self.outlier, "warnings": list(self.notes), "references": list(self.references),
         }  # fmt: skip
 
     def to_dict(self):
@@ -105,18 +108,29 @@ class KickPosterior:
         }  # fmt: skip
 
     def to_table(self):
-        """Return a QTable, a row per class, component and kick bin."""
+        """Return a QTable, a row per class, component and kick bin; before a component's bins its unkicked share.
+
+        Over a class P_law sums to one, and P_flat too. Of the unkicked, where the law has such, both ends are 0 and
+        there is no support.
+        """
         import astropy.units as u
         from astropy.table import QTable
 
-        rows = [
+        still = [
+            [(name, comp, 0.0, 0.0, self.unkicked[c, i], 0.0, np.nan)] * int(self.unkicked[c].sum() > 0)
+            for c, name in enumerate(self.classes) for i, comp in enumerate(self.components)
+        ]  # fmt: skip
+        kicked = [
             (name, comp, self.edges[k], self.edges[k + 1], self.law[c, i, k], self.flat[c, i, k], self.support[c, i, k])
             for c, name in enumerate(self.classes) for i, comp in enumerate(self.components)
             for k in range(self.edges.size - 1)
         ]  # fmt: skip
+        bins = self.edges.size - 1
+        rows = [row for j, first in enumerate(still) for row in (*first, *kicked[j * bins : (j + 1) * bins])]
         table = QTable(rows=rows, names=("lens", "component", "kick_lo", "kick_hi", "P_law", "P_flat", "support"))
         for name in ("kick_lo", "kick_hi"):
             table[name] = table[name] * u.km / u.s
+            table[name].info.description = "ends of the kick bin; both 0: unkicked"
         table.meta.update(self.meta())
         return table
 
@@ -238,6 +252,7 @@ def kick_posterior(event, scenario="default", *, outlier=OUTLIER, keep=None):
         probability={name: found.p(name) for name in _CLASSES},
         laws={"neutron_star": scenario.kicks, "black_hole": scenario.bh_kicks},
         scenario=scenario,
+        outlier=float(outlier),
         notes=model.warnings,
         references=model.references,
     )

@@ -1,10 +1,11 @@
 """How many lens masses a campaign would measure: mock events, its light curves, facilities that follow up."""
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 
 import astropy.units as u
 import numpy as np
 
+from ..datafiles import set_checksum
 from ..errors import InputError, kind_of
 from ..galaxy.frames import icrs_from_galactic
 from ..scenario import resolve
@@ -54,6 +55,8 @@ class MassForecast:
     number, seed : int
         Mock events behind it.
     notes : tuple of str
+    made : dict
+        How the campaign's forecast was made, and the facilities' names and the checksum of their file.
     """
 
     limit: float
@@ -61,6 +64,7 @@ class MassForecast:
     number: int
     seed: int
     notes: tuple = ()
+    made: dict = field(default_factory=dict)
 
     def to_dict(self):
         """Return plain numbers: class to facility to what it measures."""
@@ -91,6 +95,10 @@ class MassForecast:
             "notes": list(self.notes),
         }
 
+    def meta(self):
+        """Return how this was made."""
+        return {**self.made, **self.settings()}
+
     def to_table(self):
         """Return a QTable, a row per facility and class."""
         from astropy.table import QTable
@@ -112,6 +120,7 @@ class MassForecast:
         }
         for name, text in described.items():
             table[name].info.description = text
+        table.meta.update(self.meta())
         return table
 
     def plot(self, ax=None, lens="black_hole"):
@@ -157,8 +166,11 @@ def mass_forecast(forecast, facilities="marram", limit=0.2, number=2000, seed=1,
     kind_of("forecast", forecast, CampaignForecast, "a CampaignForecast, from `campaign`,")
     if not (np.isfinite(limit) and limit > 0):
         raise InputError(f"limit: {limit:g} given, must be above 0")
+    made = {"facilities_file": None, "facilities_sha256": None}
     if isinstance(facilities, str):
-        facilities = [Facility.read(name, facilities) for name in facility_names(facilities)]
+        file = facilities
+        facilities = [Facility.read(name, file) for name in facility_names(file)]
+        made = {"facilities_file": file, "facilities_sha256": set_checksum("facilities", file)}
     survey = forecast.campaign
     draws, notes = [], []
     for f, seed_of_field in zip(forecast.fields, np.random.SeedSequence(seed).spawn(len(forecast.fields))):
@@ -181,7 +193,9 @@ def mass_forecast(forecast, facilities="marram", limit=0.2, number=2000, seed=1,
         raise InputError("masses: nothing is known of the sources' magnitudes; use a source rule with a limit")
     out = [_yield(facility, [_measured(facility, survey, *d, jobs) for d in draws], draws, limit, forecast.classes)
            for facility in facilities]  # fmt: skip
-    masses = MassForecast(float(limit), tuple(out), number * len(forecast.fields), int(seed), tuple(notes))
+    made |= {"facilities": [f.name for f in facilities], "invented_facilities": any(f.invented for f in facilities)}
+    made = {**forecast.meta(), **made}
+    masses = MassForecast(float(limit), tuple(out), number * len(forecast.fields), int(seed), tuple(notes), made)
     return replace(forecast, masses=masses, seed=int(seed), warnings=(*forecast.warnings, *notes))
 
 

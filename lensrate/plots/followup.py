@@ -83,21 +83,27 @@ def kick(made, ax=None):
     ax = _axes(ax, (6.4, 4.2))
     # bins are as wide as they are drawn: probability per bin, bins side by side
     n = made.edges.size - 1
-    x = np.arange(n)
     for c, name in enumerate(made.classes):
         if not made.probability[name] > 1e-4:
             continue
         colour = _colour(name)
         for prior, style, where in (("law", {"alpha": 0.35}, made.law), ("flat", None, made.flat)):
             p = where[c].sum(axis=0)
-            p = p / p.sum() if p.sum() > 0 else p
             label = f"{_label(name)}, {'law ' + made.laws[name] if prior == 'law' else 'flat in bins'}"
             if style:
+                # the unkicked share stands left of the bins
+                p, x = np.append(p, made.unkicked[c].sum()), np.append(np.arange(n), -1)
                 ax.bar(x + 0.5 + 0.22 * (c - 0.5), p, width=0.4, color=colour, label=label, **style)
             else:
                 ax.stairs(p, np.arange(n + 1), color=colour, ls=_style(name), lw=1.4, label=label)
-    ax.set_xticks(np.arange(n + 1), [f"{v:g}" for v in made.edges], rotation=60, fontsize=8)
-    ax.set_xlim(0, n)
+    ticks, words = list(range(n + 1)), [f"{v:g}" for v in made.edges]
+    still = made.unkicked.sum() > 0
+    if still:
+        ticks, words = [-0.5, *ticks], ["unkicked", *words]
+    ax.set_xticks(ticks, words, rotation=60, fontsize=8)
+    if still:
+        ax.get_xticklabels()[0].set_ha("right")
+    ax.set_xlim(-1 if still else 0, n)
     ax.set_ylim(0, None)
     ax.set_xlabel("kick at birth  [km/s]")
     ax.set_ylabel("probability of a bin, given the class")

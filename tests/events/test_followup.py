@@ -9,11 +9,12 @@ import pytest
 from click.testing import CliRunner
 
 from lensrate.cli import cli
+from lensrate.datafiles import checksums
 from lensrate.errors import InputError
 from lensrate.events import followup, plans, worth
 from lensrate.events import odds as odds_module
 from lensrate.events.followup import follow_up, greedy
-from lensrate.events.followup_result import EventPlan, Option
+from lensrate.events.followup_result import EventPlan, FollowUpPlan, Option
 from lensrate.events.latent import latent
 from lensrate.events.observed import Measure, Observed, Solution
 from lensrate.events.odds import event_odds, event_rates
@@ -22,6 +23,7 @@ from lensrate.lensing import points, rates
 from lensrate.lensing.quadrature import Numerics
 from lensrate.lensing.sampler import Sampler
 from lensrate.scenario import Scenario, resolve
+from lensrate.surveys.campaign import Campaign
 from lensrate.surveys.facilities import Facility
 
 PLACE = (359.8613, -1.6210)
@@ -272,6 +274,26 @@ def test_kept_sightlines_are_taken_and_threads_change_nothing(tmp_path, monkeypa
     monkeypatch.setattr(points.Mixture, "gathered", None)
     again = follow_up(events, scenario, **kwargs, jobs=2)
     assert again.to_dict() == first.to_dict() and again.failed == ()
+    made = again.meta()
+    assert made["outlier"] == odds_module.OUTLIER and made["tolerance_deg"] == 0.05
+    assert made["facilities_sha256"] == checksums()["facilities/marram.toml"]
+    assert made["campaign_hash"] == Campaign.read("marram").hash
+
+
+def test_a_table_says_which_option_is_taken():
+    """Both options of a chosen event stand in it; one of them is in the list."""
+    rows = greedy([_row("a", ("quick", 1.0, 0.3), ("long", 5.0, 0.6)), _row("b", ("x", 2.0, 0.2))], 7.0)
+    chosen = [replace(e, order=k + 1) for k, e in enumerate(rows)]
+    events = [replace(e, options=tuple(sorted(e.options, key=lambda o: o.hours))) for e in chosen]
+    plan = FollowUpPlan(
+        tuple(events), tuple(chosen), None, NIGHT, 7.0, "marram", "m", Scenario.read("default"), 1, 8, True
+    )
+    table = plan.to_table()
+    shown = [(r["event"], r["option"], bool(r["taken"]), int(r["order"])) for r in table]
+    first = {e.name: e.order for e in chosen}
+    wanted = [("a", "quick", False, 0), ("a", "long", True, first["a"]), ("b", "x", True, first["b"])]
+    assert sorted(shown) == sorted(wanted)
+    assert table["taken"].dtype == bool
 
 
 @pytest.mark.parametrize(

@@ -1,15 +1,17 @@
 """Kick of one lens: linear in the law's shares, the classes' sums those of the odds."""
 
+from dataclasses import replace
 from functools import cache
 
 import numpy as np
 import pytest
 
+from lensrate.cli.followup import _chance, report_kick
 from lensrate.errors import InputError
 from lensrate.events.kick import kick_posterior
 from lensrate.events.latent import _exact
 from lensrate.events.observed import Measure, Observed, Solution
-from lensrate.events.odds import event_rates
+from lensrate.events.odds import OUTLIER, event_rates
 from lensrate.remnants.kicks import parse_kick
 from lensrate.scenario import Scenario
 
@@ -55,6 +57,31 @@ def test_another_law_from_the_same_support():
     assert other.support[c] == pytest.approx(one.support[c], rel=1e-9)
     assert other.quantiles("neutron_star")["p50"] > one.quantiles("neutron_star")["p50"]
     assert other.quantiles("neutron_star", "flat") == pytest.approx(one.quantiles("neutron_star", "flat"))
+
+
+def test_columns_sum_to_one_with_the_unkicked():
+    """Table, report and picture show the unkicked share, and nothing is scaled to hide it."""
+    one, share = made(), np.array([0.3, 0.6])
+    assert "unkicked" not in report_kick(one) and np.all(one.to_table()["kick_hi"] > 0)
+    # as under a law that leaves these shares unkicked
+    still = share[:, None] * one.law.sum(axis=2)
+    law = one.law * (1 - share)[:, None, None]
+    one = replace(one, law=law, unkicked=still, probability=dict.fromkeys(one.classes, 0.1))
+    table = one.to_table()
+    assert table.meta["outlier"] == one.outlier == OUTLIER
+    ax = one.plot()
+    bars = {x.get_label().split(",")[0]: [b.get_height() for b in x] for x in ax.containers}
+    lines = report_kick(one).splitlines()
+    first = next(k for k, line in enumerate(lines) if line.startswith("kick ["))
+    rows = [line.split() for line in lines[first:]]
+    for c, name in enumerate(one.classes):
+        mine = table[table["lens"] == name]
+        assert mine["P_law"].sum() == pytest.approx(1.0) and mine["P_flat"].sum() == pytest.approx(1.0)
+        still = mine[mine["kick_hi"] == 0]
+        assert still["P_law"].sum() == pytest.approx(share[c])
+        assert sum(bars[name.replace("_", " ")]) == pytest.approx(1.0)
+        (told,) = (r for r in rows if r[:1] == ["unkicked"])
+        assert told[1 + 2 * c] == _chance(share[c]) and told[2 + 2 * c] == "-"
 
 
 def test_quantiles_of_a_flat_bin():

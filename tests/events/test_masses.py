@@ -2,10 +2,12 @@
 
 import numpy as np
 import pytest
+from astropy.table import QTable
 
 from lensrate import InputError, Scenario
 from lensrate.events.masses import image_magnitudes, mass_forecast
 from lensrate.events.mock import mock_events
+from lensrate.io import write_table
 from lensrate.sources.luminosity import clump_magnitude
 from lensrate.surveys.campaign import Campaign
 from lensrate.surveys.facilities import Facility
@@ -64,6 +66,16 @@ def test_the_same_seed_gives_the_same_masses(forecast, masses):
     made = again.to_dict()
     assert again.masses.to_dict() == masses[0.2].to_dict() == made["mass_measured"]
     assert set(made["mass_measured"]) == {*forecast.classes, "all"} and made["mass_settings"]["seed"] == 1
+
+
+def test_a_table_says_how_it_was_made(forecast, masses, tmp_path):
+    table = masses[0.2].to_table()
+    for key in ("version", "scenario_hash", "scenario_text", "campaign_hash", "references"):
+        assert table.meta[key] == forecast.meta()[key]
+    assert table.meta["facilities"] == ["sharp"] and table.meta["invented_facilities"]
+    assert (table.meta["seed"], table.meta["mass_error_limit"], table.meta["mock_events"]) == (1, 0.2, 600)
+    write_table(table, tmp_path / "masses.ecsv")
+    assert QTable.read(tmp_path / "masses.ecsv").meta["scenario_hash"] == forecast.scenario.hash
 
 
 def test_a_source_keeps_its_rank_in_another_band(forecast):
