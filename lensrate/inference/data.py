@@ -158,7 +158,7 @@ def observed_data(sample, templates, selection=None, executor=None, only_t_E=Fal
 
 def _theta(event):
     """Angular Einstein radius [mas] and error of the best solution, also from a measured proper motion; or None."""
-    best = min(event.solutions, key=lambda s: s.delta_chi2)
+    best = event.best_solution
     if "theta_E" in best.measured:
         m = best.measured["theta_E"]
         return m.value, m.err
