@@ -7,10 +7,17 @@ from contextlib import contextmanager
 
 from .errors import InputError, LensrateError
 
-__all__ = ["DaskExecutor", "cluster", "run_map"]
+__all__ = ["DaskExecutor", "cluster", "cores", "run_map"]
 
 _RETRIES = 3  # of a task whose worker was lost or failed
 _WAIT = 30  # s for a scheduler to answer
+
+
+def cores():
+    """Return how many threads may run at once: NUMBA_NUM_THREADS where it is set, else what the system allows."""
+    import numba  # slow to import, and a cluster's address needs none of it
+
+    return numba.config.NUMBA_NUM_THREADS
 
 
 def run_map(func, items, jobs=1, executor=None, progress=None, stop=None):

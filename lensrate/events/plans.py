@@ -127,7 +127,7 @@ class Target:
     @classmethod
     def of(cls, event):
         """Read from an Observed; InputError names what is missing."""
-        best = min(event.solutions, key=lambda s: s.delta_chi2).plain
+        best = event.best_solution.plain
         missing = [name for name in ("t_0", "u_0", "I_S") if name not in best]
         if missing:
             raise InputError(f"{event.name}: no {', '.join(missing)}, so its follow-up cannot be planned")
@@ -268,7 +268,7 @@ def _nearest(t, p_N, p_E, chosen):
 
 def _present(latent, t, pi, weight):
     """Inverse errors of ln t_E and pi_E of the fit so far, and the sharpest that the points resolve."""
-    solution = min(latent.event.solutions, key=lambda s: s.delta_chi2)
+    solution = latent.event.best_solution
     best = solution.measured
     have = [best["t_E"].value / best["t_E"].err, 0.0]
     if "pi_EN" in best:

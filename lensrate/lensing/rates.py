@@ -15,6 +15,7 @@ from .quadrature import Isogrid, legendre, lens_pairs, panel_edges, panel_nodes,
 __all__ = [
     "Line",
     "event_rate_density",
+    "isogrid",
     "kicked_moments",
     "kicked_rate_density",
     "moments",
@@ -290,9 +291,7 @@ def kicked_rate_density(ready, grid):
     # the table itself: a profile at every node would take 200 MB, and most nodes are too faint to be looked at
     table = ready.kicked_table
     places = table.places(1.0 / (grid.pi[row] + 1.0 / D))
-    return rings.rate_density(
-        grid, row, D, src, table.values, kicked.element_of_row, _KICKED_RINGS, 1e-4, places
-    )
+    return rings.rate_density(grid, row, D, src, table.values, kicked.element_of_row, _KICKED_RINGS, 1e-4, places)
 
 
 def _joined(edges):
@@ -317,17 +316,23 @@ def _merged(model, src, two=False):
     return out
 
 
-def _nodes(ready):
-    """Isogrid, node rows and distances, source rows (merged if asked) and lens profile at the nodes."""
-    numerics = ready.numerics
-    fixed = ready.sources.fixed_distance
+def isogrid(ready):
+    """Return the grid of a sightline's rate densities."""
+    step, fixed = ready.numerics.step_dex, ready.sources.fixed_distance
     if fixed:
         # one source distance: nothing averages over the kinks of the lens density, so the rows are finer
-        grid = Isogrid.make(numerics.step_dex, fixed, fixed, fine=4)
+        return Isogrid.make(step, fixed, fixed, fine=4)
+    near = max(ready.D_S[np.argmax(ready.src[0].sum(axis=0) > 1e-6)], 1.0)
+    return Isogrid.make(step, near, ready.edges[-1])
+
+
+def _nodes(ready):
+    """Isogrid, node rows and distances, source rows (merged if asked) and lens profile at the nodes."""
+    numerics, grid = ready.numerics, isogrid(ready)
+    fixed = ready.sources.fixed_distance
+    if fixed:
         row, D, w = np.arange(grid.pi.size), np.full(grid.pi.size, fixed), np.ones(grid.pi.size)
     else:
-        near = max(ready.D_S[np.argmax(ready.src[0].sum(axis=0) > 1e-6)], 1.0)
-        grid = Isogrid.make(numerics.step_dex, near, ready.edges[-1])
         row, D, w = row_nodes(grid.pi, ready.edges, ready.kinks, numerics.nodes)
     src = _source_rows(ready.model, ready.line, ready.sources, D)
     src[0] *= w / ready.norm

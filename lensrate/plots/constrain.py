@@ -148,16 +148,13 @@ def kick_speeds(result, ax=None):
     found = result.kick_shares()
     n = len(found.law)
     places = np.arange(n + 1) - 0.5
-    for q, color, label in ((found.prior_quantiles, _PRIOR, "prior"), (found.quantiles, _POSTERIOR, "posterior")):
-        for low, high, alpha, words in ((0, 4, 0.18, "95 %"), (1, 3, 0.35, "68 %")):
-            if color == _PRIOR:
-                ax.stairs(q[high], places, baseline=q[low], color=color, lw=1.1, ls=(0, (4, 2)) if low else ":",
-                          label=f"{label}, {words}")  # fmt: skip
-            else:
-                ax.stairs(q[high], places, baseline=q[low], color=color, alpha=alpha, fill=True, lw=0,
-                          label=f"{label}, {words}")  # fmt: skip
-        if color == _POSTERIOR:
-            ax.stairs(q[2], places, baseline=None, color=color, lw=1.6, label="posterior, median")
+    for (low, high), dash, alpha, words in (((0, 4), (0, (4, 2)), 0.18, "95 %"), ((1, 3), ":", 0.35, "68 %")):
+        q = found.prior_quantiles
+        ax.stairs(q[high], places, baseline=q[low], color=_PRIOR, lw=1.1, ls=dash, label=f"prior, {words}")
+        q = found.quantiles
+        ax.stairs(q[high], places, baseline=q[low], color=_POSTERIOR, alpha=alpha, fill=True, lw=0,
+                  label=f"posterior, {words}")  # fmt: skip
+    ax.stairs(found.quantiles[2], places, baseline=None, color=_POSTERIOR, lw=1.6, label="posterior, median")
     ax.stairs(found.law, places, baseline=None, color="black", lw=1.2, ls="-.", label="the scenario's law")
     ax.set_yscale("log")
     ax.set_ylim(max(found.law.max() / 500, 1e-4), min(2 * found.prior_quantiles[4].max(), 1.0))
@@ -184,6 +181,7 @@ def _speeds_and_others(result):
         top, below = figure.subfigures(2, 1, height_ratios=[4.8, 2.6])
         for name, ax in zip(others, np.atleast_1d(below.subplots(1, len(others)))):
             marginal(result, name, ax)
+            ax.legend(fontsize=6, frameon=False)
     else:
         top = figure
     kick_speeds(result, top.add_subplot())

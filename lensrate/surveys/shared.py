@@ -3,7 +3,8 @@
 import json
 from functools import partial
 
-from ..lensing.sightline import _LINEAR, sightline
+from ..lensing.sightline import sightline
+from ..lensing.sightline_result import LINEAR
 from ..parallel import run_map
 from ..sources.rules import PeakRule, parse_rule
 
@@ -26,7 +27,7 @@ def integral_key(scenario, exact=False):
     -------
     str
     """
-    free = {"name", "title", *_LINEAR} - ({*_STARS} if exact else set())
+    free = {"name", "title", *LINEAR} - ({*_STARS} if exact else set())
     if isinstance(parse_rule(scenario.sources), PeakRule):
         free -= {"u_0_limit"}  # decides which stars are magnified enough
     kept = {k: v for k, v in scenario.to_dict().items() if k not in free}
@@ -111,7 +112,7 @@ def _anchor(members, base):
 
 def _reweighted(whole, scenario, t_E_range):
     old = whole.scenario
-    changes = {k: getattr(scenario, k) for k in _LINEAR if getattr(scenario, k) != getattr(old, k)}
+    changes = {k: getattr(scenario, k) for k in LINEAR if getattr(scenario, k) != getattr(old, k)}
     if not changes:
         return whole
     if whole.to_dict()["fields"] is None and not scenario.unkicked and scenario.fields:

@@ -21,7 +21,7 @@ def baade():
 
 def test_the_grids_error_is_told_where_it_is_known(baade, monkeypatch):
     assert "; grid 0.5%; systematic" in " ".join(report(baade, "class").split())
-    monkeypatch.setattr("lensrate.lensing.sightline.Grid", lambda: None)
+    monkeypatch.setattr("lensrate.lensing.sightline_result.Grid", lambda: None)
     assert baade.to_dict()["fields"]["grid_error"] is None
     text = " ".join(report(baade, "class").split())
     assert "grid" not in text and "; systematic: fields hold" in text

@@ -187,6 +187,16 @@ def test_any_direction_gives_sound_numbers(l, b, rule):
     assert result.quadrature_error < 0.03
 
 
+@pytest.mark.parametrize("kicks", ["none", "igoshev2020"])
+def test_one_sightline_is_the_same_whatever_the_cores(kicks, monkeypatch):
+    made = []
+    for n in (1, 2):
+        monkeypatch.setattr("lensrate.lensing.forecast.cores", lambda n=n: n)
+        made.append(lensrate.sightline(1 * u.deg, -3 * u.deg, kicks=kicks))
+    assert made[0].to_dict() == made[1].to_dict()
+    assert np.array_equal(made[0].rate_per_ln_t_E, made[1].rate_per_ln_t_E)
+
+
 def test_same_answer_whatever_the_threads():
     from lensrate.lensing.many import sightlines
 
