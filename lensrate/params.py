@@ -42,7 +42,9 @@ class Params:
             if "unit" not in f.metadata:
                 continue
             try:
-                value = u.Quantity(getattr(self, f.name), f.metadata["unit"], dtype=float)
+                # what cannot be held is told below
+                with np.errstate(over="ignore", invalid="ignore"):
+                    value = u.Quantity(getattr(self, f.name), f.metadata["unit"], dtype=float)
             except u.UnitConversionError as error:
                 raise InputError(f"{type(self).__name__}.{f.name}: {error}") from None
             except (TypeError, ValueError):
@@ -119,6 +121,8 @@ def _quantity(entry, where, unit):
         value, given = entry, None
     if isinstance(value, bool) or not isinstance(value, (int, float)):
         raise InputError(f"{where}: {value!r} is not a number")
+    if not (given is None or isinstance(given, str)):
+        raise InputError(f"{where}: unit {given!r} given, must be text, for example '{unit}'")
     try:
         return float(value) * (unit if given is None else _unit(given))
     except (ValueError, TypeError):

@@ -15,6 +15,7 @@ from .census import census
 from .compare import compare
 from .constrain import constrain
 from .events import events
+from .interrupts import held, words_of
 from .odds import odds
 from .scenario import scenario
 from .sightline import sightline
@@ -48,18 +49,9 @@ for command in (
     cli.add_command(command)
 
 
-def _interrupted():
-    _complain("interrupted; nothing half written was left")
+def _interrupted(error):
+    _complain(words_of(error))
     sys.exit(130)
-
-
-def _holds_interrupt(error):
-    """Whether an exception was raised from, or while handling, Ctrl-C."""
-    while error is not None:
-        if isinstance(error, KeyboardInterrupt):
-            return True
-        error = error.__cause__ or error.__context__
-    return False
 
 
 def main(args=None):
@@ -74,13 +66,13 @@ def main(args=None):
     except click.ClickException as error:
         error.show(sys.stderr)
         sys.exit(error.exit_code)
-    except (click.Abort, KeyboardInterrupt):
-        _interrupted()
+    except (click.Abort, KeyboardInterrupt) as error:
+        _interrupted(error)
     except SystemError as error:
         # compiled code that Ctrl-C meets on its way out says so in its own manner
-        if not _holds_interrupt(error):
+        if not held(error):
             raise
-        _interrupted()
+        _interrupted(error)
     except BrokenPipeError:
         # the reader of our output went away, as `head` does
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())

@@ -5,6 +5,7 @@ from pathlib import Path
 import click
 
 from .base import Command, announce
+from .interrupts import keeping
 from .options import assumptions, output, read_scenario, refuse_idle_extinction
 from .text import columns, number, safe, wrap
 
@@ -99,20 +100,19 @@ def skymap(
     announce(quiet)
     beside = target or drawn or ranked_target
     part = None if beside is None else Path(f"{beside}.part")
-    result = _compute(scenario, survey, settings, part, overwrite, jobs, dask, quiet)
-    if result is None:
-        return 130
-    ranking = None
-    if lens:
-        ranking = _ranked(result, lens, top, field_area, visit_time, cadence, rank_per, fields)
-    if target:
-        result.write(target, overwrite)
-    if ranked_target:
-        write_table(ranking, ranked_target, overwrite)
-    if drawn:
-        from ..plots.maps import save_skymap
+    with keeping("finished pixels", part):
+        result = _compute(scenario, survey, settings, part, overwrite, jobs, dask, quiet)
+        ranking = None
+        if lens:
+            ranking = _ranked(result, lens, top, field_area, visit_time, cadence, rank_per, fields)
+        if target:
+            result.write(target, overwrite)
+        if ranked_target:
+            write_table(ranking, ranked_target, overwrite)
+        if drawn:
+            from ..plots.maps import save_skymap
 
-        save_skymap(result, drawn, picture, outlines, overwrite)
+            save_skymap(result, drawn, picture, outlines, overwrite)
     if part is not None:
         part.unlink(missing_ok=True)
     if as_json:
@@ -206,7 +206,7 @@ def _outlines(overlay, icrs):
 
 
 def _compute(scenario, survey, settings, part, overwrite, jobs, dask, quiet):
-    """Run the map; None if it was interrupted."""
+    """Run the map."""
     from ..parallel import cluster
     from ..surveys.skymap import campaign_skymap, count, seconds
     from ..surveys.skymap import skymap as run
@@ -217,22 +217,15 @@ def _compute(scenario, survey, settings, part, overwrite, jobs, dask, quiet):
         time = seconds(scenario, n, "efficiency" in settings, settings["precise"], 1 if dask else jobs)
         text = f"lensrate: {n} {'pixels' if 'step' in settings else 'fields'}: about {duration(time)}"
         click.echo(f"{text} of one thread" if dask else f"{text} on {jobs} thread{'s' * (jobs > 1)}", err=True)
-    try:
-        with cluster(dask) as executor, Progress("skymap", quiet) as progress:
-            running = {
-                "scenario": scenario, "jobs": jobs, "executor": executor, "progress": progress, "checkpoint": part,
-                "restart": overwrite,
-            }  # fmt: skip
-            if survey is not None:
-                kept = {k: v for k, v in settings.items() if k in ("efficiency", "precise")}
-                return campaign_skymap(survey, **running, **kept)
-            return run(**running, **settings)
-    except KeyboardInterrupt:
-        kept = "nothing was kept, since no file is written"
-        if part is not None:
-            kept = f"finished pixels are kept in '{safe(part)}', the same command goes on from there"
-        click.echo(wrap(f"lensrate: interrupted; {kept}"), err=True)
-        return None
+    with cluster(dask) as executor, Progress("skymap", quiet) as progress:
+        running = {
+            "scenario": scenario, "jobs": jobs, "executor": executor, "progress": progress, "checkpoint": part,
+            "restart": overwrite,
+        }  # fmt: skip
+        if survey is not None:
+            kept = {k: v for k, v in settings.items() if k in ("efficiency", "precise")}
+            return campaign_skymap(survey, **running, **kept)
+        return run(**running, **settings)
 
 
 def _ranked(result, lens, top, field_area, visit_time, cadence, per, fields):

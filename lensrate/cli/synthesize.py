@@ -5,6 +5,7 @@ from pathlib import Path
 import click
 
 from .base import Command, announce
+from .interrupts import keeping
 from .options import dask
 from .text import columns, safe, wrap
 
@@ -73,17 +74,13 @@ def synthesize(name, save, tracers, bundles, iterations, seed, jobs, checkpoint,
             f"{duration(need.seconds)} and {size(need.memory)} of memory on {jobs} thread{'s' * (jobs > 1)}"
         )
         click.echo(wrap(text), err=True)
-    try:
+    with keeping("finished pieces", folder):
         with cluster(address) as executor, Progress("synthesize", quiet) as progress:
             field = run(
                 galaxy, potential, settings, jobs=jobs, executor=executor, checkpoint=folder, progress=progress
             )
-    except KeyboardInterrupt:
-        kept = f"finished pieces are kept in '{safe(folder)}', the same command goes on from there"
-        click.echo(wrap(f"lensrate: interrupted; {kept}"), err=True)
-        return 130
-    stated = {"scenario": scenario.name, "scenario_hash": scenario.hash, "scenario_text": scenario.to_toml()}
-    replace(field, provenance={**field.provenance, **stated}).write(target, overwrite)
+        stated = {"scenario": scenario.name, "scenario_hash": scenario.hash, "scenario_text": scenario.to_toml()}
+        replace(field, provenance={**field.provenance, **stated}).write(target, overwrite)
     forget(folder, field)
     click.echo(report(target, field, scenario, size(target.stat().st_size)))
     return 0

@@ -379,6 +379,43 @@ def test_an_interrupt_inside_compiled_code_is_an_interrupt(monkeypatch, capsys):
         command.main([])
 
 
+@pytest.mark.parametrize("how", ["python", "compiled"])
+def test_an_interrupt_says_what_is_kept(how, tmp_path, monkeypatch, capsys):
+    """Wherever in a long run it comes, and only where there is something."""
+    import click
+
+    import lensrate.cli as command
+    from lensrate.cli.interrupts import keeping
+
+    folder = tmp_path / "m.checkpoint"
+
+    def work():
+        if how == "python":
+            raise KeyboardInterrupt
+        try:
+            raise KeyboardInterrupt
+        except KeyboardInterrupt as stop:
+            raise SystemError("returned a result with an exception set") from stop
+
+    def run(path):
+        @click.command()
+        def body():
+            with keeping("finished pieces", path):
+                work()
+
+        monkeypatch.setattr(command, "cli", body)
+        with pytest.raises(SystemExit) as left:
+            command.main([])
+        assert left.value.code == 130
+        return capsys.readouterr().err.strip()
+
+    assert run(folder) == "lensrate: interrupted; nothing half written was left"
+    assert run(None) == "lensrate: interrupted; nothing was kept, since no file is written"
+    folder.mkdir()
+    kept = f"finished pieces are kept in '{folder}', the same command goes on from there"
+    assert run(folder) == f"lensrate: interrupted; {kept}"
+
+
 def test_complaints_of_the_system_name_the_file(monkeypatch, capsys):
     import lensrate.cli as command
 

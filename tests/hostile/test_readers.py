@@ -230,6 +230,16 @@ def test_numbers_of_the_wrong_kind_in_galaxy_and_other_sets(tmp_path):
     path.write_text(toml({**shipped("sources", "dust")[0]}).replace("[", "[[", 1).replace("]", "]]", 1))
     with suppress(LensrateError):
         DustDisc.read(str(path))
+    dust = shipped("sources", "dust")[0]
+    for unit in (np.inf, np.nan, 2, ["mag"]):
+        dust["dust"]["bulge_factor"]["unit"] = unit
+        path.write_text(toml(dust))
+        with pytest.raises(InputError, match="bulge_factor: unit .* must be text"):
+            DustDisc.read(str(path))
+    dust["dust"]["bulge_factor"] = {"value": 1e300, "unit": "1e300"}
+    path.write_text(toml(dust))
+    with pytest.raises(InputError, match="bulge_factor"):
+        DustDisc.read(str(path))
 
 
 def fits_with(key, value, **columns):
