@@ -1,4 +1,4 @@
-"""Inference: time of one likelihood, calibration and coverage of posteriors, power against a wrong kick law.
+"""Inference: calibration and coverage of posteriors, power against a wrong kick law.
 
     python tests/benchmarks/bench_inference.py [SAMPLES]
 
@@ -12,7 +12,6 @@ import os
 os.environ.setdefault("OMP_NUM_THREADS", "1")
 
 import sys
-import time
 from dataclasses import replace
 
 import numpy as np
@@ -36,34 +35,6 @@ TWO = parse_parameters(["kick_scale", "neutron_stars"])
 
 def say(*words):
     print(*words, flush=True)
-
-
-def ten_fields(templates):
-    """The same fields repeated until there are ten."""
-    which = np.arange(10) % len(templates.names)
-    forecast = replace(templates.forecast, fields=tuple(templates.forecast.fields[i] for i in which))
-    return replace(
-        templates, forecast=forecast, rate=templates.rate[which], slope_rate=templates.slope_rate[:, which],
-        slope_factor=templates.slope_factor[:, which], efficiency=templates.efficiency[which],
-        exposure=templates.exposure[which], anchored=templates.anchored[which],
-    )  # fmt: skip
-
-
-def speed(templates):
-    """CPU time of one likelihood against that of the templates' plain sum at every event, in ten fields."""
-    ten = ten_fields(templates)
-    for measured in (None, MEASURED):
-        probe = Likelihood(ten, made(ten, [0], [3.0], [0.05]), TWO)
-        data, _ = mock(ten, probe.part_weights([1.0, 1.0]), np.random.default_rng(1), measured=measured)
-        L = Likelihood(ten, data, TWO)
-        times = []
-        for k in range(40):
-            start = time.process_time()
-            L.ln([1.0 + 0.01 * k, 1.1], [0.05, 0.01, 0.01, 0.1])
-            times.append(time.process_time() - start)
-        some = int(np.sum(np.ptp(data.weight, axis=1) > 0)) if measured else 0
-        middle = 1e3 * np.median(times)
-        say(f"one likelihood, ten fields, {len(data)} events, {some} with declared stages: {middle:.2f} ms of CPU")
 
 
 def coverage(title, made_):
@@ -115,7 +86,6 @@ def main():
     forecast = campaign("marram")
     templates = Templates.of(forecast)
     say(f"Marram: {forecast.by_class()[-1]:.1f} events expected, scenario {forecast.scenario.hash}, {n} samples a line")
-    speed(templates)
     honesty(forecast)
     for name, p in (("timescales", None), ("masses", MEASURED)):
         plan = planned(templates, TWO, measured=p)

@@ -28,12 +28,16 @@ from test_reference import LENSES, mean_speed, nested, ready
 import lensrate
 from lensrate.kernels import rates as kernels
 from lensrate.lensing import rates
-from lensrate.lensing.quadrature import lens_pairs
+from lensrate.lensing.quadrature import lens_pairs, panel_nodes
+from lensrate.lensing.rates import _source_rows
 from lensrate.units import FOUR_G_C2, KAPPA, MAS
+
+#: accuracy asked of scipy, nodes a panel and directions of ours that reach it, aim
+ACCURACIES = ((1e-4, 4, 8, "1000"), (1e-6, 6, 8, "3000"))
 
 
 def against_quad():
-    """The same integrals, one lens and one source component, both ways; seconds, seconds, differences of rate and tau.
+    """The same integrals, one lens and one source component, both ways, at two accuracies.
 
     The optical depth comes along with the rate here; the nested quadrature does it again.
     """
@@ -41,31 +45,39 @@ def against_quad():
     i = LENSES["bulge"]
     galaxy = line.model.galaxy
     alone = replace(galaxy, components=(galaxy.components[i],))
-    start = time.process_time()
-    exact = nested(line, i, [5], lambda theta_E, lens, src: mean_speed(lens, src))
-    slow = time.process_time() - start
-    # pi theta_E^2 n_L D_L^2 is the optical depth's integrand: nested() has 2 theta_E n_L D_L^2 before the term
-    depth = nested(line, i, [5], lambda theta_E, lens, src: 0.5 * np.pi * theta_E)
-    src = np.ascontiguousarray(line.src[:, 5:6])
     element = np.zeros(1, dtype=np.int64)
     out = np.zeros((1, 1)), np.zeros((1, 1)), np.zeros(1)
 
-    def fast():
-        outer, D_L, w_L = lens_pairs(line.D_S, line.edges, line.numerics.nodes + 2)
+    def fast(nodes, directions):
+        D_S, w = panel_nodes(line.edges, nodes)
+        rows = _source_rows(line.model, line.line, line.sources, D_S)
+        src = np.ascontiguousarray(rows[:, 5:6])
+        src[0] *= w / line.norm
+        outer, D_L, w_L = lens_pairs(D_S, line.edges, nodes)
         lens = alone.profile(line.line, D_L)
         for array in out:
             array[:] = 0.0
-        kernels.moments(outer, line.D_S, src, D_L, w_L, lens, element, FOUR_G_C2, KAPPA, MAS, 16, *out)
+        kernels.moments(outer, D_S, src, D_L, w_L, lens, element, FOUR_G_C2, KAPPA, MAS, directions, *out)
+        return out[1][0, 0], out[0][0, 0]
 
-    return slow, median(fast, 25), abs(out[1][0, 0] / exact - 1), abs(out[0][0, 0] / depth - 1)
+    best = fast(14, 32)
+    for rel, nodes, directions, aim in ACCURACIES:
+        start = time.process_time()
+        gamma = nested(line, i, [5], lambda theta_E, lens, src: mean_speed(lens, src), rel)
+        slow = time.process_time() - start
+        # pi theta_E^2 n_L D_L^2 is the optical depth's integrand: nested() has 2 theta_E n_L D_L^2 before the term
+        tau = nested(line, i, [5], lambda theta_E, lens, src: 0.5 * np.pi * theta_E, rel)
+        took = median(lambda n=nodes, d=directions: fast(n, d), 25)
+        row(f"rate and optical depth of one pair to {rel:g}", duration(took), f"nested scipy quad {duration(slow)}",
+            slow / took, aim)  # fmt: skip
+        pairs = fast(nodes, directions), (gamma, tau)
+        ours, theirs = ([abs(x / y - 1) for x, y in zip(pair, best)] for pair in pairs)
+        row("    off the best value", "{:.1e} {:.1e}".format(*ours), "{:.1e} {:.1e}".format(*theirs))
 
 
 def main():
     heading("One sightline", "one thread")
-    slow, fast, *errors = against_quad()
-    row("optical depth and rate of one lens and source", duration(fast), f"nested scipy quad {duration(slow)}",
-        slow / fast, "1000")  # fmt: skip
-    row("    difference of rate, of optical depth", f"{errors[0]:.1e}", f"{errors[1]:.1e}; quad asked for 1e-5")
+    against_quad()
     place = {"l": 1 * u.deg, "b": -3 * u.deg}
     result = lensrate.sightline(**place)
     whole = median(lambda: lensrate.sightline(**place))

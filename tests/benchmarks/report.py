@@ -35,6 +35,8 @@ def _line(*cells):
 
 def duration(seconds):
     """Seconds as text with three digits."""
+    if seconds >= 1000:
+        return f"{seconds:.0f} s"
     for unit, size in (("s", 1.0), ("ms", 1e-3), ("us", 1e-6)):
         if seconds >= size:
             return f"{seconds / size:.3g} {unit}"

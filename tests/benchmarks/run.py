@@ -14,7 +14,7 @@ from pathlib import Path
 HERE = Path(__file__).parent
 #: the quick ones, in the order of the table; the others take their time and keep files of
 #: their own
-PARTS = ("limits", "sightline", "startup", "orbits", "events", "odds", "skymap", "synthesis", "growth")
+PARTS = ("limits", "sightline", "startup", "orbits", "events", "odds", "likelihood", "skymap", "synthesis", "growth")
 OWN = ("calibration", "closure", "coverage", "inference")
 
 

@@ -48,7 +48,7 @@ def density_of_log_speed(mu, lens, src):
     return mu**3 * norm * np.exp(b * mu - a * mu * mu - c0).mean() * 2 * np.pi
 
 
-def nested(line, i, sources, term):
+def nested(line, i, sources, term, rel=1e-5):
     """int dD_S W_S int dD_L n_L D_L^2 2 theta_E term(theta_E, lens, source) by scipy, split at the model's kinks."""
     galaxy = line.model.galaxy
     kinks = [k for k in line.edges if 0 < k < 40]
@@ -67,11 +67,11 @@ def nested(line, i, sources, term):
             return jacobian * lens[0] * D_L**2 * 2 * theta_E * total
 
         points = [np.arcsin(np.sqrt(k / D_S)) for k in kinks if k < D_S]
-        return quad(integrand, 1e-4, np.pi / 2 - 1e-4, points=points or None, epsrel=3e-6, limit=200)[0]
+        return quad(integrand, 1e-4, np.pi / 2 - 1e-4, points=points or None, epsrel=0.3 * rel, limit=200)[0]
 
     total = 0.0
     for low, high in zip([0.05, *kinks], kinks):
-        total += quad(inner, low, high, epsrel=1e-5, epsabs=1e-9 * max(total, 1e-300))[0]
+        total += quad(inner, low, high, epsrel=rel, epsabs=1e-9 * max(total, 1e-300))[0]
     return total * MAS**2 / line.norm
 
 
