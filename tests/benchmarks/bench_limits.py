@@ -28,8 +28,9 @@ from lensrate.kernels import rates as kernels
 from lensrate.kernels.maths import fexp, mean_abs
 from lensrate.kernels.orbits import follow
 from lensrate.kernels.potential import HOMEOIDS, LANES, MIYAMOTO_NAGAI, NFW
+from lensrate.kernels.rings import lay, major_axis, order_for
 from lensrate.kernels.speeds import ROUND, SLOW
-from lensrate.lensing import rates
+from lensrate.lensing import rates, rings
 from lensrate.lensing.sampler import Sampler
 from lensrate.remnants.orbits import step
 from lensrate.units import FOUR_G_C2, KAPPA, KPC_PER_MYR, MAS
@@ -160,6 +161,60 @@ def kicked(line, best):
     return taken, speeds(best, evaluations), evaluations
 
 
+@numba.njit(error_model="numpy")
+def _laid(row, geometry, src, lens, start, stop, K, ends, orders, x, x_w, accuracy, per_kappa, per_log, log_mu, W, cuts,
+          n):  # fmt: skip
+    """The loop of `rings.rate_density` for one lens row, its table counted instead of applied: adds to n the Gaussians'
+    nodes and the table's multiply-adds."""
+    m = W.shape[0] // K
+    low, high = W.shape[0], 0
+    for p in range(start, stop):
+        for s in range(src.shape[1]):
+            w = geometry[p] * lens[0, p] * src[0, s, p]
+            if w > cuts:
+                ll, lb, bb = lens[3, p] + src[3, s, p], lens[4, p] + src[4, s, p], lens[5, p] + src[5, s, p]
+                small, _, _, beyond = major_axis(ll, lb, bb)
+                n[0] += orders[order_for(small, beyond, accuracy, orders)]
+                a, b = lay(
+                    w, lens[1, p] - src[1, s, p], lens[2, p] - src[2, s, p], ll, lb, bb, accuracy, orders, x, x_w,
+                    per_kappa, per_log, log_mu, W,
+                )  # fmt: skip
+                low, high = min(low, a), max(high, b)
+    for f in range(low, high):
+        shift = f // m - K
+        for i in range(0, ends.size, 4):
+            if np.any(W[f, i + 1 : i + 5] != 0.0):
+                n[1] += 4 * max(min(ends[min(i + 4, ends.size) - 1], K - shift) - max(0, -shift), 0)
+        W[f] = 0.0
+
+
+def isogrid(line, best):
+    """Rate density of the stars; all its Gaussians' nodes and multiply-adds."""
+    grid, row_of, D, src, lens = rates._nodes(line)
+    n = line.numerics
+    element = np.arange(lens.shape[1])
+    taken = median(
+        lambda: rings.rate_density(grid, row_of, D, src, lens, element, float(n.directions), float(n.weight_cut))
+    )
+    geometry = np.empty(D.size)
+    kernels.node_weights(grid.pi, row_of, D, KAPPA, MAS, geometry)
+    made = rings._rings(grid.h, grid.mu.size, float(n.directions))
+    K, m = grid.mu.size, made.table.shape[0]
+    light = src[0].sum(axis=0) * geometry
+    peak = (light * lens[0]).max(axis=1)
+    peak = np.maximum(peak, 1e-3 * peak.max())
+    W, counts = np.zeros((K * m, made.table.shape[1] + 1)), np.zeros(2, dtype=np.int64)
+    edges = np.concatenate([[0], np.flatnonzero(np.diff(row_of)) + 1, [row_of.size]])
+    for e in element:
+        for start, stop in zip(edges, edges[1:]):
+            _laid(row_of, geometry, src, np.ascontiguousarray(lens[:, e]), start, stop, K, made.ends, rings._ORDERS,
+                  *rings._rules(), made.accuracy, made.per_kappa, m / grid.h, math.log(grid.mu[0]), W,
+                  n.weight_cut * peak[e], counts)  # fmt: skip
+    # a node by its text: a root, two divisions and 50 multiply-adds (weights of 4 x 4 places)
+    floor = least(best, root=counts[0], divide=2 * counts[0], add=50 * counts[0] + counts[1])
+    return taken, floor, counts
+
+
 def orbits(best):
     potential = Potential.read("default").for_orbits()
     kinds, pars = potential.packed
@@ -210,6 +265,9 @@ def main():
         ("optical depth and rate, all kicks", kicked(line, best)),
     ):
         row(name, duration(taken), f"{duration(floor)}, {n / 1e6:.2f} million directions", floor / taken, "1")
+    taken, floor, (nodes, added) = isogrid(line, best)
+    words = f"{duration(floor)}, {nodes / 1e6:.2f} million nodes, {added / 1e6:.0f} of the table"
+    row("rate density, stars", duration(taken), words, floor / taken, "1")
     taken, floor, shells = orbits(best)
     row("orbit step of one body", duration(taken), f"{duration(floor)}, {shells} shells of the bar", floor / taken, "1")
     taken, floor = draws(result, best)
