@@ -11,7 +11,24 @@ from .errors import InputError, did_you_mean
 __all__ = ["Params", "param"]
 
 
-def param(unit, doc, **kwargs):
+#: unit, least and largest size of what is not 0; beyond lies nothing of a Galaxy, but numbers in another unit do
+_SIZES = (
+    ("kpc", 1e-5, 1e9), ("km/s", 1e-3, 3e5), ("Msun", 1e-3, 1e16), ("Msun / kpc3", 1.0, 1e18),
+    ("Msun / kpc2", 1.0, 1e16), ("deg", 1e-9, 1e4), ("", 1e-30, 1e30),
+)  # fmt: skip
+
+
+@lru_cache(maxsize=64)
+def _sizes(unit):
+    """Least and largest size in a unit, by the kind of thing it measures."""
+    for name, low, high in _SIZES:
+        like = u.Unit(name)
+        if unit.is_equivalent(like):
+            return low * like.to(unit), high * like.to(unit)
+    return 1e-30, 1e30
+
+
+def param(unit, doc, span=None, **kwargs):
     """Declare one field of a `Params` record.
 
     Parameters
@@ -20,6 +37,8 @@ def param(unit, doc, **kwargs):
         Internal unit, "" for a pure number.
     doc : str
         One line of meaning.
+    span : (float, float), optional
+        Least and largest value, in `unit`.
     **kwargs
         Passed to `dataclasses.field`, for example ``default``.
 
@@ -27,7 +46,21 @@ def param(unit, doc, **kwargs):
     -------
     dataclasses.Field
     """
-    return field(metadata={"unit": u.Unit(unit), "doc": doc}, **kwargs)
+    return field(metadata={"unit": u.Unit(unit), "doc": doc, "span": span}, **kwargs)
+
+
+def _check_size(where, value, span):
+    """Refuse what no Galaxy holds, mostly a number in another unit than was meant."""
+    if span is None:
+        (low, high), size, first = _sizes(value.unit), abs(value.value), "0 or "
+    else:
+        (low, high), size, first = span, value.value, ""
+    if not (low <= size <= high or (first and size == 0.0)):
+        unit = f" {value.unit}".rstrip()
+        raise InputError(
+            f"{where}: {value:g} given, must be {first}between {low:g} and {high:g}{unit}; a number without a unit is "
+            "taken in this one"
+        )
 
 
 @dataclass(frozen=True)
@@ -51,6 +84,7 @@ class Params:
                 raise InputError(f"{type(self).__name__}.{f.name}: {getattr(self, f.name)!r} is not a number") from None
             if not np.isfinite(value.value):
                 raise InputError(f"{type(self).__name__}.{f.name}: {value} is not finite")
+            _check_size(f"{type(self).__name__}.{f.name}", value, f.metadata["span"])
             object.__setattr__(self, f.name, value)
 
     def pack(self):

@@ -140,7 +140,10 @@ def constrain(
         write_table(result.samples_table(seed=seed), samples_file, overwrite)
     click.echo(dump_json(result.to_dict()) if as_json else text)
     if not quiet:
-        said = getattr(result, "notes", result.made.get("notes", ()))
+        if hasattr(result, "cautions"):
+            said = result.cautions()
+        else:
+            said = getattr(result, "notes", result.made.get("notes", ()))
         for note in dict.fromkeys([*said, *result.made.get("warnings", ())]):
             click.echo(wrap(f"note: {note}"), err=True)
 

@@ -1,5 +1,7 @@
 """``lensrate odds``: the class of lens behind each observed event."""
 
+import math
+
 import click
 
 from .base import Command, announce
@@ -72,7 +74,7 @@ def odds(
     Columns of a table (units of the file, else d, mas, mas/yr, kpc, deg, mag, MJD; empty: not measured):
       event, or name or id; l, b or ra, dec; t_E
       pi_E, or pi_EN and pi_EE (with pi_E_corr); theta_E; mu_rel; mu_S_N, mu_S_E; D_S
-      each of these with _err, or _lo and _hi
+      each of these with _err, or _lo and _hi, without which it is refused
       frame, t_0par (of geocentric numbers); solution, delta_chi2 (rows of one event)
       I_lens_limit; samples (a file beside the table)
       for --rank also I_S, source_fraction, u_0, t_0
@@ -102,6 +104,11 @@ def odds(
     ]
     if not typed and lone:
         raise click.UsageError(f"--{lone[0].replace('_', '-')} belongs to an event typed with --t-E, not to SAMPLE")
+    for name, value in {**values, **{f"{k}_err": v for k, v in errors.items()}, "lens_limit": lens_limit}.items():
+        if value is not None and not math.isfinite(value):
+            raise click.UsageError(
+                f"--{name.replace('_', '-')}: {value} given, a finite number is needed; leave out what is not measured"
+            )
     if typed and not at:
         raise click.UsageError("--at L B is needed: where on the sky is the event?")
     if save:

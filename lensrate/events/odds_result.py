@@ -98,6 +98,8 @@ class EventOdds:
     def says(self):
         """Return one plain line on what the answer rests on."""
         rests = set(self.rests)
+        if self.outlier_weight > 0.5 and rests - {"t_E"}:
+            return "the measured values do not fit together: probabilities rest on t_E alone"
         if "theta_E" in rests and "pi_E" in rests:
             q = self.quantiles("mass_msun")
             return f"theta_E and pi_E are measured: the lens's mass decides, about {q['p50']:.3g} Msun"
@@ -120,7 +122,8 @@ class EventOdds:
             if abs(moved - top) > 0.1:
                 out.append(f"{self.name}: with an outlier share {factor:g} times as large it is {moved:.2f}")
         if self.outlier_weight > 0.3:
-            out.append(f"{self.name}: more likely than {self.outlier_weight:.0%} the fit is wrong (outlier branch)")
+            p = f"{self.outlier_weight:.2f}" if self.outlier_weight < 0.995 else "more than 0.99"
+            out.append(f"{self.name}: the fit is wrong (outlier branch) with probability {p}; check values and units")
         return out
 
     def to_dict(self):

@@ -139,7 +139,7 @@ def _texts(table, name):
     mask = np.asarray(getattr(column, "mask", np.zeros(len(table), bool)))
     cells = np.asarray(column)
     if cells.dtype.kind == "S":
-        cells = np.char.decode(cells, "utf-8")
+        cells = np.char.decode(cells, "utf-8", "replace")
     return ["" if m else str(c).strip() for c, m in zip(cells, mask)]
 
 
@@ -152,19 +152,18 @@ def _numbers(table, name, unit, span, problems, needed=False, above=False):
     mask = np.asarray(getattr(column, "mask", np.zeros(n, bool))).copy()
     filled = column.filled() if hasattr(column, "filled") else column
     value = np.full(n, np.nan)
+    factor = _factor(column.unit, unit, name, problems.where)
     try:
-        value[:] = np.asarray(u.Quantity(filled, column.unit or unit).to_value(unit), dtype=float)
-    except u.UnitConversionError:
-        raise InputError(f"{problems.where}: column {name} is in '{column.unit}', must be in '{unit}'") from None
+        value[:] = factor * np.asarray(filled, dtype=float)
     except (TypeError, ValueError):
         # some cell is text: find out which
         for i, cell in enumerate(np.asarray(filled)):
-            text = cell.decode() if isinstance(cell, bytes) else str(cell)
+            text = cell.decode("utf-8", "replace") if isinstance(cell, bytes) else str(cell)
             if mask[i] or text.strip() in ("", "--", "nan"):
                 mask[i] = True
                 continue
             try:
-                value[i] = float(text)
+                value[i] = factor * float(text)
             except ValueError:
                 problems.add(i + 1, name, f"'{text}' is not a number")
                 mask[i] = True
@@ -184,6 +183,20 @@ def _numbers(table, name, unit, span, problems, needed=False, above=False):
         problems.add(i + 1, name, f"{value[i]:g} {unit}".strip() + f" given, must be {first} and at most {high:g}")
         value[i] = np.nan
     return value
+
+
+def _factor(stated, unit, name, where):
+    """By what the numbers of a column are multiplied, from the unit it states, if any, to ours."""
+    if stated is None:
+        return 1.0
+    given = u.Unit(str(stated), parse_strict="silent")
+    wanted = f"'{unit}'" if unit else "no unit"
+    if isinstance(given, u.UnrecognizedUnit):
+        raise InputError(f"{where}: column {name} has unit '{stated}', which is not known; take {wanted}")
+    try:
+        return float(given.to(unit))
+    except (u.UnitConversionError, u.UnitTypeError, TypeError):
+        raise InputError(f"{where}: column {name} is in '{stated}', must be in {wanted}") from None
 
 
 def _measure(table, name, problems):

@@ -29,11 +29,11 @@ _ICRS_TO_GALACTIC = np.array(
 class Sun(Params):
     """Place and velocity of the observer; velocity toward the centre, along rotation, toward the north pole."""
 
-    R0: u.Quantity = param("kpc", "distance from the Galactic centre")
-    z: u.Quantity = param("kpc", "height above the plane")
-    U: u.Quantity = param("km/s", "velocity toward the Galactic centre")
-    V: u.Quantity = param("km/s", "total velocity along the disc's rotation")
-    W: u.Quantity = param("km/s", "velocity toward the north Galactic pole")
+    R0: u.Quantity = param("kpc", "distance from the Galactic centre", (1.0, 30.0))
+    z: u.Quantity = param("kpc", "height above the plane", (-1.0, 1.0))
+    U: u.Quantity = param("km/s", "velocity toward the Galactic centre", (-1000.0, 1000.0))
+    V: u.Quantity = param("km/s", "total velocity along the disc's rotation", (-1000.0, 1000.0))
+    W: u.Quantity = param("km/s", "velocity toward the north Galactic pole", (-1000.0, 1000.0))
 
     def tilt(self):
         """Return the rotation heliocentric -> Galactocentric axes, shape (3, 3)."""

@@ -16,6 +16,7 @@ __all__ = ["LEVELS", "Learned", "Posterior", "grid_posterior"]
 LEVELS = (0.025, 0.16, 0.5, 0.84, 0.975)
 GRID = {1: 81, 2: 31, 3: 15}  # points a parameter, by their number
 _SILENT = 0.1  # bits below which a parameter counts as not constrained
+_END = 0.05  # share of a prior that counts as its end
 _BINS = 25  # of the prior's shares, where there are samples only
 
 
@@ -128,6 +129,23 @@ class Posterior:
             )  # fmt: skip
         return out
 
+    def cautions(self):
+        """Return the notes, and which bounds are the prior's: where the posterior does not fall toward its end."""
+        out = list(self.notes)
+        for i, p in enumerate(self.parameters):
+            if "uniform" not in p.prior.kind or not self.learned[p.name].constrained:
+                continue
+            values, weight = self.marginal(i)
+            share = p.prior.share(values)
+            for end, bound, at in (("lower", p.prior.a, share < _END), ("upper", p.prior.b, share > 1 - _END)):
+                before = self.prior_weight[i][at].sum() if self.draws is None else _END
+                if weight[at].sum() > before:
+                    out.append(
+                        f"{p.name}: the posterior does not fall toward the {end} end of its prior, {bound:g}: its "
+                        f"{end} bound is the prior's"
+                    )
+        return out
+
     def upper_limit(self, name, level=0.95):
         """Return the value of a parameter below which a share of the posterior lies."""
         from ..errors import one_of
@@ -184,7 +202,7 @@ class Posterior:
             "cases": self.cases,
             "events": self.events,
             "expected": self.expected,
-            "notes": list(self.notes),
+            "notes": self.cautions(),
         }
 
     def to_table(self):
@@ -222,7 +240,7 @@ class Posterior:
         return {
             "parameters": rows, "nuisances": self.nuisances, "galaxies": self.cases, "ln_evidence": self.ln_evidence,
             **({} if speeds is None else {"kick_shares": speeds.to_rows()}),
-            "events": self.events, "expected": self.expected, "notes": list(self.notes), **self.made,
+            "events": self.events, "expected": self.expected, "notes": self.cautions(), **self.made,
             "version": self.version,
         }  # fmt: skip
 

@@ -171,6 +171,10 @@ class Sightline:
         dark = (f"{n.replace('_', ' ')}s: {words[self.lenses[n].kinematics]}" for n in ("neutron_star", "black_hole"))
         return "; ".join([stars, *dark])
 
+    def kick_words(self):
+        """Return the kick laws in a few words."""
+        return f"kicks {self.scenario.kicks}, black holes {self.scenario.bh_kicks}"
+
     def _fields(self):
         """Name and checksum of the kick-resolved fields in use, or None."""
         if self._model is None or self._model.kicked is None:
@@ -195,7 +199,7 @@ class Sightline:
             "version": self.version,
             "l_deg": float(self.l.to_value(u.deg)),
             "b_deg": float(self.b.to_value(u.deg)),
-            "header": self.header(),
+            "header": f"{self.header()}; {self.kick_words()}",
             **self.scenario.made(),
             "seed": None,
             "fields": self._fields(),
@@ -384,7 +388,7 @@ class Sightline:
         l, b = self.l.to_value(u.deg), self.b.to_value(u.deg)
         name = escape(self.scenario.name)
         where = f"l = {l:g}, b = {b:g} deg, scenario {name} ({self.scenario.hash})"
-        head = f"<p>lensrate: {where}<br>{escape(self.header())}</p>"
+        head = f"<p>lensrate: {where}; {escape(self.kick_words())}<br>{escape(self.header())}</p>"
         return head + _rounded(self.to_table())._repr_html_()
 
     def __repr__(self):

@@ -15,6 +15,7 @@ from .saving import blank, write_figure
 __all__ = ["overview_maps", "save_skymap", "skymap"]
 
 _MAP = "cividis"  # perceptually even for colour-blind readers too, and in grey
+_LINED = 4  # pixels a side, from which lines of equal value are drawn
 _LOG_FROM = 8.0  # largest over smallest value from which the colours are logarithmic
 _WORDS = {
     "optical_depth": (r"optical depth $\tau$", ""),
@@ -178,7 +179,7 @@ def _size(extent):
 
 def _contours(ax, result, image, norm):
     """A few lines of equal value, which survive a copy in black and white; None where there are none."""
-    if min(image.shape) < 4 or not np.isfinite(image).all():
+    if min(image.shape) < _LINED or not np.isfinite(image).all():
         return None
     low, high = norm.vmin, norm.vmax
     levels = np.geomspace(low, high, 7)[1:-1] if isinstance(norm, LogNorm) else np.linspace(low, high, 7)[1:-1]
@@ -244,7 +245,9 @@ def _title(result):
     s = result.scenario
     kinds = {result.kinematics.get(n) for n in ("neutron_star", "black_hole")} - {None, "stellar"}
     note = f"; neutron stars and black holes {' or '.join(sorted(kinds))}" if kinds else ""
-    lines = "; the bar marks the values of the lines" if result.grid is not None else ""
+    # `_contours` draws none on so few pixels
+    lined = result.grid is not None and min(result.grid.shape) >= _LINED
+    lines = "; the bar marks the values of the lines" if lined else ""
     return f"scenario {s.name} ({s.hash}); {result.header()}{note}{lines}"
 
 

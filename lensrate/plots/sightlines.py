@@ -69,8 +69,8 @@ def _smooth(t, f, fine=8):
 def _title(result):
     l, b = result.l.to_value("deg"), result.b.to_value("deg")
     kinds = {result.lenses[n].kinematics for n in ("neutron_star", "black_hole") if n in result.lenses}
-    note = f"; NS, BH {' or '.join(sorted(kinds))}" if kinds else ""
-    what = f"{result.sources['rule']}, u₀ < {result.u_0_limit:g}, {result.frame}{note}"
+    note = f" (NS, BH {' or '.join(sorted(kinds))})" if kinds else ""
+    what = f"{result.sources['rule']}, u₀ < {result.u_0_limit:g}, {result.frame}; {result.kick_words()}{note}"
     return f"l = {l:g}°, b = {b:g}°, scenario {result.scenario.name} ({result.scenario.hash})\n{what}"
 
 

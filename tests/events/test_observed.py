@@ -51,6 +51,21 @@ def test_units_of_the_file(tmp_path):
         Sample.from_table(t)
 
 
+def test_units_that_are_unknown_or_stand_over_text():
+    """A unit is never dropped: hours are no days, and text in years is years."""
+    t = table()
+    t["t_E"].unit, t["t_E_err"].unit = "hours", "hours"
+    with pytest.raises(InputError, match="column t_E has unit 'hours', which is not known; take 'd'"):
+        Sample.from_table(t)
+    t = table()
+    t["t_E"] = [str(x / 365.25) for x in t["t_E"]]
+    t["t_E"].unit = "yr"
+    assert Sample.from_table(t).events[0].t_E.value == pytest.approx(120.0)
+    t["t_E"].unit = "kpc"
+    with pytest.raises(InputError, match="t_E is in 'kpc', must be in 'd'"):
+        Sample.from_table(t)
+
+
 def test_icrs_and_split_errors():
     t = table(t_E_lo=[3.0, 1.0], t_E_hi=[9.0, 1.0])
     t.remove_columns(["l", "b", "t_E_err"])

@@ -7,6 +7,7 @@ from astropy.coordinates import SkyCoord
 from reference_frame import galactocentric
 
 from lensrate.errors import InputError
+from lensrate.galaxy.density import Bar, IsothermalDisc, PowerHalo
 from lensrate.galaxy.frames import Sightline3D, Sun, galactic_from_icrs, icrs_from_galactic
 
 SUN = Sun(8.178, 0.0208, 11.1, 248.5, 8.5)
@@ -79,3 +80,19 @@ def test_special_distances():
 def test_refusals(l, b, words):
     with pytest.raises(InputError, match=words):
         icrs_from_galactic(l, b)
+
+
+@pytest.mark.parametrize(
+    ("build", "words"),
+    [
+        (lambda: Sun(8.178 * u.pc, 0.02, 11.1, 248.5, 8.5), "Sun.R0: .* between 1 and 30 kpc"),
+        (lambda: Sun(8.178, 20.8, 11.1, 248.5, 8.5), "Sun.z: .* between -1 and 1 kpc"),
+        (lambda: PowerHalo(0.0079, 2.0, 1.0, 5.0), "PowerHalo.rho_sun: .*a number without a unit is taken in this"),
+        (lambda: Bar(0.7, 0.4, 0.2, 27.0, mass=1.2 * u.kg), "Bar.mass: .* must be 0 or between"),
+        (lambda: IsothermalDisc(1.7e6, 2.6, 4.0, 2e-304, 4.7e7, 0.28, 1.3e7, 1.0), "IsothermalDisc.sigma_W"),
+    ],
+)
+def test_numbers_that_must_be_in_another_unit(build, words):
+    """Convertible and finite, and far from anything that a Galaxy holds."""
+    with pytest.raises(InputError, match=words):
+        build()

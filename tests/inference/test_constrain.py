@@ -223,6 +223,20 @@ def test_no_information_is_said_so(templates):
     np.testing.assert_allclose(got.quantiles, got.prior_quantiles, rtol=1e-2)
 
 
+def test_bounds_of_the_prior_are_named(templates):
+    """A prior that ends where the sample still allows everything, and one that does not."""
+    many = Templates.of(templates.forecast, 60.0)
+    for prior, wanted in (("log-uniform:0.01,0.7", ["upper"]), ("log-uniform:0.01,100", [])):
+        parameters = parse_parameters(["neutron_stars"], [f"neutron_stars={prior}"])
+        probe = Likelihood(many, made(many, [0], [3.0], [0.05]), NUMBERS)
+        data, _ = mock(many, probe.part_weights([1.0]), np.random.default_rng(3), measured=MEASURED)
+        found = grid_posterior({"a": Likelihood(many, data, parameters)})
+        assert found.learned["neutron_stars"].constrained
+        said = [n for n in found.cautions() if n.startswith("neutron_stars: the posterior does not fall")]
+        assert [end for end in ("lower", "upper") if any(f"{end} end" in n for n in said)] == wanted
+        assert found.to_dict()["notes"] == found.cautions() == found.meta()["notes"]
+
+
 def test_timescales_alone_hardly_see_neutron_stars_and_masses_do(templates):
     """5,000 events: what stars known perfectly would give is not what a sample gives."""
     many = Templates.of(templates.forecast, 5000 / templates.forecast.by_class()[-1])
