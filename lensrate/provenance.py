@@ -52,6 +52,8 @@ def read_made(path):
         raise InputError(f"'{path}': {size} bytes, at most {most} are looked into")
     if ending not in known and ending in (".txt", "", ".out", ".log"):
         ending = ".json"  # what was redirected from --json may be called anything
+    if ending == ".toml":
+        raise InputError(f"'{path}': a scenario file is shown by  lensrate scenario {path}")
     if ending not in known:
         raise InputError(f"'{path}': ending '{ending}' is not one of ours (known: {', '.join(known)})")
     try:

@@ -9,7 +9,7 @@ from .text import columns, number, safe, wrap
 _DEFAULT_EVENTS = 20000
 
 
-@click.command(cls=Command)
+@click.command(cls=Command, short_help="Expected events of a survey, by lens class and field.")
 @click.argument("file", metavar="FILE")
 @click.option("--scenario", "scenario_name", metavar="NAME|FILE", help="Instead of the campaign's own scenario.")
 @click.option("--kicks", metavar="LAW", help="Kick law of neutron stars: a published set or maxwell:265.")

@@ -7,7 +7,7 @@ from .options import output, read_scenario
 from .text import columns, number, safe, wrap
 
 
-@click.command(cls=Command)
+@click.command(cls=Command, short_help="Count the Galaxy by lens class: born, bound, escaped.")
 @click.option(
     "--scenario",
     "scenario_name",

@@ -13,7 +13,7 @@ _NAMES = {
 }  # fmt: skip
 
 
-@click.command(cls=Command)
+@click.command(cls=Command, short_help="Compare observed events with what scenarios expect.")
 @click.argument("sample", metavar="SAMPLE")
 @click.option("--campaign", "campaign_file", metavar="FILE",
               help="Whose fields, sources and efficiency apply: a campaign file or 'marram' (invented).")

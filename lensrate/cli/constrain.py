@@ -10,7 +10,7 @@ _MOST_CASES = 8  # that a table names
 _WIDTHS = ("rate", "field_rate", "shift", "stretch", "slope")
 
 
-@click.command(cls=Command)
+@click.command(cls=Command, short_help="Kick laws and numbers of remnants from observed events.")
 @click.argument("sample", metavar="[SAMPLE]", required=False)
 @click.option("--from", "plan", metavar="CAMPAIGN", help="No sample: the constraint that this campaign would give.")
 @click.option("--campaign", "campaign_file", metavar="FILE",

@@ -8,7 +8,7 @@ from .sightline import direction
 from .text import columns, number, safe, wrap
 
 
-@click.command(cls=Command)
+@click.command(cls=Command, short_help="Mock events of a sightline or a campaign.")
 @click.argument("lon", metavar="[L B]", required=False)
 @click.argument("lat", metavar="", required=False)
 @click.option("--campaign", "campaign_file", metavar="FILE", help="A campaign instead: its TOML file, or 'marram'.")

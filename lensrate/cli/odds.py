@@ -29,7 +29,7 @@ def _typed(command):
     return command
 
 
-@click.command(cls=Command)
+@click.command(cls=Command, short_help="Lens-class odds of observed events; plans of follow-up.")
 @click.argument("sample", metavar="[SAMPLE]", required=False)
 @click.option("--at", nargs=2, metavar="L B", help="Place of a typed event (degrees; RA Dec with --icrs).")
 @click.option("--icrs", is_flag=True, help="--at is RA Dec.")

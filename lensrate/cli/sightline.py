@@ -9,7 +9,7 @@ from .text import columns, number, safe, wrap
 _PICTURES = ("overview", "timescales", "stacked", "depth", "pi_E", "theta_E")
 
 
-@click.command(cls=Command)
+@click.command(cls=Command, short_help="Optical depth, event rate and timescales by lens class.")
 @click.argument("lon", metavar="[L B]", required=False)
 @click.argument("lat", metavar="", required=False)
 @click.option(

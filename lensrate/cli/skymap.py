@@ -12,7 +12,7 @@ from .text import columns, number, safe, wrap
 _SHOWN = 40  # fields that are listed one by one
 
 
-@click.command(cls=Command)
+@click.command(cls=Command, short_help="Map optical depth, rates and sources; rank pointings.")
 @click.option("--l", "l_range", type=float, nargs=2, metavar="START END", help="First and last longitude.")
 @click.option("--b", "b_range", type=float, nargs=2, metavar="START END", help="First and last latitude.")
 @click.option("--step", type=float, metavar="DEG", help="From pixel to pixel, in l and b.")

@@ -27,7 +27,7 @@ _LENSES = [*_SHORT, "all"]
 _WIDEST = 23  # letters of an alternative's name
 
 
-@click.command(cls=Command)
+@click.command(cls=Command, short_help="Spread of a forecast over a family of assumptions.")
 @click.argument("lon", metavar="L", required=False)
 @click.argument("lat", metavar="B", required=False)
 @click.option("--campaign", "survey", metavar="FILE", help="A campaign instead of L B: its file, or 'marram'.")

@@ -10,7 +10,7 @@ from .options import dask
 from .text import columns, safe, wrap
 
 
-@click.command(cls=Command)
+@click.command(cls=Command, short_help="Synthesise where remnants are and how they move.")
 @click.option(
     "--scenario", "name", metavar="NAME|FILE", default="default", show_default=True, help="Named scenario or TOML file."
 )

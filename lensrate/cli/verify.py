@@ -8,7 +8,7 @@ from .base import Command, announce
 from .text import columns, number, wrap
 
 
-@click.command(cls=Command)
+@click.command(cls=Command, short_help="Recompute published values and show both.")
 @click.option("--group", metavar="NAME", help="One group only: lensing, galaxy, ..., surveys, events, files.")
 @click.option("--json", "as_json", is_flag=True, help="Print JSON.")
 @click.option("--save", metavar="FILE", help="Write a table: .ecsv .csv (# begins comments) .fits .vot .json.")

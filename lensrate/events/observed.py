@@ -365,6 +365,9 @@ def check_columns(table, where):
     strangers = []
     for name in table.colnames:
         if name not in known:
+            bare = name.split("[")[0].split("(")[0].strip()
+            if bare != name and bare in known:
+                raise InputError(f"{where}: column '{name}': name it '{bare}'; units belong into the file's header")
             near = did_you_mean(name, known)
             if near and name.lower().replace("_", "") in {k.lower().replace("_", "") for k in known}:
                 raise InputError(f"{where}: column '{name}' is not known{near}")

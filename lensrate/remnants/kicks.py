@@ -241,7 +241,7 @@ def parse_kick(text):
     given = rest.split(",") if rest else []
     usage = form + (":" + ",".join(wanted) if wanted else "")
     if len(given) != len(wanted):
-        raise InputError(f"kicks: '{text}' has {len(given)} numbers, '{usage}' is needed")
+        raise InputError(f"kicks: '{text}' has {len(given)} numbers, '{usage}' is needed (speeds in km/s)")
     try:
         values = tuple(float(g) for g in given)
     except ValueError:

@@ -157,7 +157,7 @@ def _centre(where, table):
     for key, (low, high) in zip(given[0], ((-360.0, 360.0), (-90.0, 90.0))):
         value = table.get(key)
         if isinstance(value, bool) or not isinstance(value, (int, float)) or not low <= value <= high:
-            raise InputError(f"{where}.{key}: {value!r} given, must be between {low:g} and {high:g} degrees")
+            raise InputError(f"{where}.{key}: {value!r} given, must be a number of degrees, {low:g} to {high:g}")
         values.append(float(value))
     turn = pairs[given[0]]
     if turn is not None:

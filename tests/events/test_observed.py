@@ -66,6 +66,16 @@ def test_units_that_are_unknown_or_stand_over_text():
         Sample.from_table(t)
 
 
+def test_names_in_bytes_that_are_no_text_and_units_in_names():
+    t = table()
+    t["event"] = np.array([b"\xf0", b"A"])
+    assert [e.name for e in Sample.from_table(t)] == ["\ufffd", "A"]
+    t = table()
+    t.rename_column("t_E", "t_E [d]")
+    with pytest.raises(InputError, match="column 't_E \\[d\\]': name it 't_E'"):
+        Sample.from_table(t)
+
+
 def test_icrs_and_split_errors():
     t = table(t_E_lo=[3.0, 1.0], t_E_hi=[9.0, 1.0])
     t.remove_columns(["l", "b", "t_E_err"])
