@@ -135,8 +135,10 @@ class Params:
         try:
             return cls(**values)
         except InputError as error:
-            # what a record says of its own numbers lacks where they stand
-            raise InputError(f"{where}: {error}") from None
+            # a record names its own numbers after itself; the reader of a file knows where they stand
+            own, text = f"{cls.__name__}.", str(error)
+            text = f"{where}.{text.removeprefix(own)}" if text.startswith(own) else f"{where}: {text}"
+            raise InputError(text) from None
 
 
 _unit = lru_cache(maxsize=256)(u.Unit)  # the same few words again and again, each of which takes half a millisecond
