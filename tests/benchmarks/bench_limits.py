@@ -265,8 +265,8 @@ def main():
         ("optical depth and rate, all kicks", kicked(line, best)),
     ):
         row(name, duration(taken), f"{duration(floor)}, {n / 1e6:.2f} million directions", floor / taken, "1")
-    taken, floor, (nodes, added) = isogrid(line, best)
-    words = f"{duration(floor)}, {nodes / 1e6:.2f} million nodes, {added / 1e6:.0f} of the table"
+    taken, floor, (_, added) = isogrid(line, best)
+    words = f"{duration(floor)}, {added / 1e6:.0f} million of its table"
     row("rate density, stars", duration(taken), words, floor / taken, "1")
     taken, floor, shells = orbits(best)
     row("orbit step of one body", duration(taken), f"{duration(floor)}, {shells} shells of the bar", floor / taken, "1")
