@@ -56,10 +56,10 @@ def _check_size(where, value, span):
     else:
         (low, high), size, first = span, value.value, ""
     if not (low <= size <= high or (first and size == 0.0)):
-        unit = f" {value.unit}".rstrip()
+        unit = f" {value.unit}".rstrip().replace("solMass", "Msun")
         raise InputError(
-            f"{where}: {value:g} given, must be {first}between {low:g} and {high:g}{unit}; a number without a unit is "
-            "taken in this one"
+            f"{where}: {value.value:g}{unit} given, must be {first}between {low:g} and {high:g}{unit}; a number without "
+            "a unit is taken in this one"
         )
 
 
