@@ -58,8 +58,8 @@ def _check_size(where, value, span):
     if not (low <= size <= high or (first and size == 0.0)):
         unit = f" {value.unit}".rstrip().replace("solMass", "Msun")
         raise InputError(
-            f"{where}: {value.value:g}{unit} given, must be {first}between {low:g} and {high:g}{unit}; a number without "
-            "a unit is taken in this one"
+            f"{where}: {value.value:g}{unit} given, must be {first}between {low:g} and {high:g}{unit}; a number "
+            "without a unit is taken in this one"
         )
 
 
