@@ -225,7 +225,7 @@ def test_no_information_is_said_so(templates):
 
 def test_bounds_of_the_prior_are_named(templates):
     """A prior that ends where the sample still allows everything, and one that does not."""
-    many = Templates.of(templates.forecast, 60.0)
+    many = Templates.of(templates.forecast, 20.0)
     for prior, wanted in (("log-uniform:0.01,0.7", ["upper"]), ("log-uniform:0.01,100", [])):
         parameters = parse_parameters(["neutron_stars"], [f"neutron_stars={prior}"])
         probe = Likelihood(many, made(many, [0], [3.0], [0.05]), NUMBERS)
