@@ -457,3 +457,9 @@ def test_compiling_is_announced_before_it_begins(args, where, name, tmp_path, mo
     assert code == 2 and out == ""
     assert err.index("compiling kernels, once per installation") < err.index("the work has begun")
     assert "compiling" not in run(*args, "-q")[2]
+
+
+@pytest.mark.parametrize("option", ["--theta-E", "--pi-E-err", "--lens-limit"])
+def test_a_typed_number_that_is_none_is_refused(option):
+    code, out, err = run("odds", "--t-E", "20", "--pi-E", "0.1", "--at", "1", "-3", option, "nan")
+    assert code == 2 and out == "" and f"{option}: nan given, a finite number is needed" in " ".join(err.split())
